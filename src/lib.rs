@@ -1,0 +1,9 @@
+//! thalweg walks molecules along their potential-energy surfaces.
+//!
+//! Modules, each of which may use those before it:
+//! [`units`], [`elements`] ← [`molecule`] ← [`basis`].
+
+pub mod basis;
+pub mod elements;
+pub mod molecule;
+pub mod units;
