@@ -5,5 +5,6 @@
 
 pub mod basis;
 pub mod elements;
+pub mod integrals;
 pub mod molecule;
 pub mod units;
