@@ -221,7 +221,7 @@ pub(crate) mod samples {
 
     /// Points and weights of a trapezoid grid on a cube, spectrally accurate for Gaussians.
     pub(crate) fn integrate(mut f: impl FnMut(&Vector3<f64>, f64)) {
-        let (step, reach) = (0.28, 7.0);
+        let (step, reach) = (0.3, 8.1);
         let count = (2.0 * reach / step) as usize;
         let at = |i: usize| i as f64 * step - reach;
         for i in 0..=count {
