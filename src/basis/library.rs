@@ -376,6 +376,56 @@ mod tests {
         assert_eq!(functions("cc-pVTZ", &benzene), 264);
     }
 
+    /// Shell records and primitives of the collection's data (set version 1; 0 for 6-311G**) as
+    /// counted by an independent reader whose energies serve as references elsewhere. Nothing in
+    /// these sets is merged, so shells here are records there.
+    #[test]
+    fn val_shell_and_primitive_counts() {
+        type Counts = (&'static str, usize, usize);
+        let cases: [(&str, &[Counts]); 10] = [
+            (
+                "STO-3G",
+                &[("H", 1, 3), ("Li", 2, 6), ("O", 2, 6), ("C", 2, 6)],
+            ),
+            (
+                "3-21G",
+                &[("O", 3, 6), ("H", 2, 3), ("C", 3, 6), ("F", 3, 6)],
+            ),
+            ("6-31G", &[("H", 2, 4), ("O", 3, 10)]),
+            (
+                "6-31G*",
+                &[
+                    ("H", 2, 4),
+                    ("Li", 4, 11),
+                    ("O", 4, 11),
+                    ("N", 4, 11),
+                    ("C", 4, 11),
+                ],
+            ),
+            (
+                "6-31G**",
+                &[("H", 3, 5), ("F", 4, 11), ("N", 4, 11), ("O", 4, 11)],
+            ),
+            ("6-311G**", &[("He", 4, 6), ("H", 4, 6), ("O", 5, 12)]),
+            (
+                "cc-pVDZ",
+                &[("O", 3, 14), ("H", 2, 5), ("C", 3, 14), ("N", 3, 14)],
+            ),
+            ("cc-pVTZ", &[("H", 3, 8), ("F", 4, 18), ("O", 4, 18)]),
+            ("aug-cc-pVDZ", &[("O", 6, 17), ("H", 4, 7), ("C", 6, 17)]),
+            ("def2-SVP", &[("O", 6, 12), ("H", 3, 5), ("N", 6, 12)]),
+        ];
+        for (name, counts) in cases {
+            for &(symbol, records, primitives) in counts {
+                let element = Element::from_symbol(symbol).unwrap();
+                let shells = find(name).unwrap().shells(element, None).unwrap();
+                assert_eq!(shells.len(), records, "{name} {symbol}");
+                let exponents: usize = shells.iter().map(|s| s.exponents.len()).sum();
+                assert_eq!(exponents, primitives, "{name} {symbol}");
+            }
+        }
+    }
+
     #[test]
     fn missing_elements_are_all_named_with_the_sets_that_have_them() {
         let error = find("6-31+G*")
