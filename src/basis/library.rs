@@ -236,6 +236,11 @@ fn parse(name: &'static str, text: &str) -> Result<BasisSet, BasisError> {
             problem: format!("no line '{key}'"),
         })
     };
+    let set_kind = kind(field("kind")?).ok_or_else(|| BasisError::Embedded {
+        set: name,
+        line: 1,
+        problem: "unknown kind".to_string(),
+    })?;
     debug_assert!(
         shells
             .values()
@@ -245,7 +250,7 @@ fn parse(name: &'static str, text: &str) -> Result<BasisSet, BasisError> {
     Ok(BasisSet::new(
         field("name")?.to_string(),
         field("description")?.to_string(),
-        kind(field("kind")?).unwrap_or(FunctionKind::Spherical),
+        set_kind,
         format!(
             "{}, set version {}",
             field("collection")?,
