@@ -1,0 +1,3 @@
+//! Molecular integrals over contracted Gaussian functions.
+
+pub mod boys;
