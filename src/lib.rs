@@ -5,6 +5,7 @@
 
 pub mod basis;
 pub mod elements;
+pub mod gradient;
 pub mod integrals;
 pub mod molecule;
 pub mod scan;
