@@ -5,6 +5,7 @@
 
 pub mod basis;
 pub mod elements;
+pub mod integrals;
 pub mod molecule;
 pub mod scan;
 pub mod scf;
