@@ -4,6 +4,8 @@
 //! [`Surface`] is implemented by Hartree–Fock and by closed-form model surfaces whose
 //! answers are known, so that walks, journals, reports and figures are tested in milliseconds.
 
+pub mod model;
+
 use nalgebra::Vector3;
 use serde::{Deserialize, Serialize};
 
@@ -15,7 +17,7 @@ pub trait Surface: Sync {
     /// What a point leaves behind for its neighbours to start from.
     type Seed: Clone + Send + Sync;
     /// What is kept from one point to the next to save work.
-    type Workspace: Send;
+    type Workspace: Clone + Send;
 
     /// An empty workspace.
     fn workspace(&self) -> Self::Workspace;
