@@ -475,6 +475,7 @@ mod tests {
         let error = run(
             &surface,
             &scan(50, 0, SeedKind::Previous, Passes::One),
+            &pool(2),
             &stop,
             &mut |event| {
                 if matches!(event, Event::Evaluated(_)) {
