@@ -6,4 +6,5 @@
 pub mod basis;
 pub mod elements;
 pub mod molecule;
+pub mod plot;
 pub mod units;
