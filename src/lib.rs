@@ -7,6 +7,7 @@ pub mod basis;
 pub mod elements;
 pub mod integrals;
 pub mod molecule;
+pub mod plot;
 pub mod scan;
 pub mod scf;
 pub mod surface;
