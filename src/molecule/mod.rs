@@ -8,7 +8,9 @@ pub mod inertia;
 pub mod internal;
 mod label;
 pub mod motion;
+mod motion_error;
 mod rows;
+mod side;
 pub mod zmatrix;
 
 use crate::elements::Element;
