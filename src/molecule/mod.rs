@@ -11,6 +11,8 @@ pub mod motion;
 mod motion_error;
 mod rows;
 mod side;
+#[cfg(test)]
+mod test_molecules;
 pub mod zmatrix;
 
 use crate::elements::Element;
