@@ -1,5 +1,7 @@
 //! Molecules: labelled atoms in space, charge and spin multiplicity.
 
+pub mod nuclear;
+
 use crate::elements::Element;
 use nalgebra::Vector3;
 
