@@ -5,6 +5,7 @@
 //! answers are known, so that walks, journals, reports and figures are tested in milliseconds.
 
 mod hartree_fock;
+pub mod model;
 
 pub use crate::scf::StopReason;
 pub use hartree_fock::{HartreeFock, Workspace};
@@ -19,7 +20,7 @@ pub trait Surface: Sync {
     /// What a point leaves behind for its neighbours to start from.
     type Seed: Clone + Send + Sync;
     /// What is kept from one point to the next to save work.
-    type Workspace: Send;
+    type Workspace: Clone + Send;
 
     /// An empty workspace.
     fn workspace(&self) -> Self::Workspace;
