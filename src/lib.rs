@@ -1,12 +1,13 @@
 //! thalweg walks molecules along their potential-energy surfaces.
 //!
 //! Modules, each of which may use those before it:
-//! [`units`], [`elements`] ← [`molecule`] ← [`basis`] ← [`scf`] ← [`surface`] ← [`scan`].
+//! [`units`], [`elements`] ← [`molecule`] ← [`basis`] ← [`scf`] ← [`surface`] ← [`scan`] ← [`spec`].
 
 pub mod basis;
 pub mod elements;
 pub mod molecule;
 pub mod scan;
 pub mod scf;
+pub mod spec;
 pub mod surface;
 pub mod units;
