@@ -1,7 +1,7 @@
 //! thalweg walks molecules along their potential-energy surfaces.
 //!
 //! Modules, each of which may use those before it:
-//! [`units`], [`elements`] ← [`molecule`] ← [`basis`] ← [`scf`] ← [`surface`] ← [`scan`].
+//! [`units`], [`elements`] ← [`molecule`] ← [`basis`] ← [`scf`] ← [`surface`] ← [`scan`] ← [`spec`].
 
 pub mod basis;
 pub mod elements;
@@ -10,5 +10,6 @@ pub mod molecule;
 pub mod plot;
 pub mod scan;
 pub mod scf;
+pub mod spec;
 pub mod surface;
 pub mod units;
