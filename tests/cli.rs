@@ -17,7 +17,9 @@ struct Ran {
 
 impl Place {
     fn new() -> Self {
-        Self { folder: tempfile::tempdir().unwrap() }
+        Self {
+            folder: tempfile::tempdir().unwrap(),
+        }
     }
 
     fn path(&self, name: &str) -> PathBuf {
@@ -94,7 +96,10 @@ fn a_scan_leaves_every_file_and_a_table() {
         "summary.json",
     ] {
         let names = place.names("runs/h2");
-        assert!(names.iter().any(|n| n == file), "{file} is not among {names:?}");
+        assert!(
+            names.iter().any(|n| n == file),
+            "{file} is not among {names:?}"
+        );
     }
     assert!(ran.out.contains("RHF/STO-3G"));
     let table = place.read("runs/h2/points.csv");
@@ -110,8 +115,12 @@ fn a_scan_leaves_every_file_and_a_table() {
     for point in points {
         let atoms = point["geometry_angstrom"].as_array().unwrap();
         let z = |k: usize| -> Vec<f64> { (1..4).map(|c| atoms[k][c].as_f64().unwrap()).collect() };
-        let distance =
-            z(0).iter().zip(z(1)).map(|(a, b)| (a - b).powi(2)).sum::<f64>().sqrt();
+        let distance = z(0)
+            .iter()
+            .zip(z(1))
+            .map(|(a, b)| (a - b).powi(2))
+            .sum::<f64>()
+            .sqrt();
         assert!((distance - point["values"][0].as_f64().unwrap()).abs() < 1e-10);
     }
 }
@@ -128,11 +137,16 @@ fn json_on_stdout_is_the_summary() {
 #[test]
 fn the_same_run_again_reports_and_another_spec_is_refused() {
     let other = HYDROGEN.replace("to = 1.5", "to = 1.6");
-    let place = Place::new().with("h2.toml", HYDROGEN).with("other.toml", other);
+    let place = Place::new()
+        .with("h2.toml", HYDROGEN)
+        .with("other.toml", other);
     assert_eq!(place.run(&["scan", "h2.toml", "--out", "run"]).status, 0);
     let table = place.read("run/points.csv");
     let again = place.run(&["scan", "h2.toml", "--out", "run"]);
-    assert_eq!((again.status, place.read("run/points.csv")), (0, table.clone()));
+    assert_eq!(
+        (again.status, place.read("run/points.csv")),
+        (0, table.clone())
+    );
     let refused = place.run(&["scan", "other.toml", "--out", "run"]);
     assert_eq!(refused.status, 2);
     assert!(refused.err.contains("another spec") && refused.err.contains("--fresh"));
@@ -147,9 +161,15 @@ fn the_same_run_again_reports_and_another_spec_is_refused() {
 fn the_resolved_spec_gives_the_same_run() {
     let place = Place::new().with("h2.toml", HYDROGEN);
     assert_eq!(place.run(&["scan", "h2.toml", "--out", "one"]).status, 0);
-    assert_eq!(place.run(&["scan", "one/spec.toml", "--out", "two"]).status, 0);
+    assert_eq!(
+        place.run(&["scan", "one/spec.toml", "--out", "two"]).status,
+        0
+    );
     assert_eq!(place.read("one/points.csv"), place.read("two/points.csv"));
-    assert_eq!(place.read("one/geometries.xyz"), place.read("two/geometries.xyz"));
+    assert_eq!(
+        place.read("one/geometries.xyz"),
+        place.read("two/geometries.xyz")
+    );
 }
 
 #[test]
@@ -175,7 +195,14 @@ fn a_point_that_does_not_converge_has_no_number_and_status_3() {
         assert_eq!(point["findings"][0], "not-converged");
     }
     assert!(ran.out.contains("not converged"));
-    assert!(place.read("run/points.csv").lines().nth(1).unwrap().contains(",,,false,1,"));
+    assert!(
+        place
+            .read("run/points.csv")
+            .lines()
+            .nth(1)
+            .unwrap()
+            .contains(",,,false,1,")
+    );
 }
 
 #[test]
@@ -197,14 +224,22 @@ fn every_broken_spec_has_its_message_and_leaves_nothing() {
         let place_in_file = ran.err.lines().any(|line| {
             let mut parts = line.split(':');
             parts.next().is_some_and(|p| p.ends_with(&name))
-                && parts.next().is_some_and(|p| p.trim().parse::<usize>().is_ok())
-                && parts.next().is_some_and(|p| p.trim().parse::<usize>().is_ok())
+                && parts
+                    .next()
+                    .is_some_and(|p| p.trim().parse::<usize>().is_ok())
+                && parts
+                    .next()
+                    .is_some_and(|p| p.trim().parse::<usize>().is_ok())
         });
         assert!(place_in_file, "{name}: no file:line:column in {}", ran.err);
         assert_eq!(place.names("."), [name.clone()], "{name} left files");
         messages.insert(ran.err.replace(&name, ""));
     }
-    assert!(messages.len() >= 30, "only {} different messages", messages.len());
+    assert!(
+        messages.len() >= 30,
+        "only {} different messages",
+        messages.len()
+    );
 }
 
 #[test]
@@ -214,7 +249,13 @@ fn input_that_is_no_spec_is_refused_in_words() {
         .with("empty.toml", "")
         .with("binary.toml", [0xff, 0xfe, 0x00, 0x80])
         .with("garbage.toml", garbage);
-    for name in ["missing.toml", "empty.toml", "binary.toml", "garbage.toml", "."] {
+    for name in [
+        "missing.toml",
+        "empty.toml",
+        "binary.toml",
+        "garbage.toml",
+        ".",
+    ] {
         for command in ["scan", "check"] {
             let ran = place.run(&[command, name]);
             assert_eq!(ran.status, 2, "{command} {name}: {}", ran.err);
@@ -276,7 +317,9 @@ fn the_schema_is_json_and_completions_name_the_commands() {
 
 #[test]
 fn one_thread_and_two_give_the_same_table() {
-    let spec = HYDROGEN.replace("\"rhf\"", "\"uhf\"").replace("\"sto-3g\"", "\"6-31g**\"");
+    let spec = HYDROGEN
+        .replace("\"rhf\"", "\"uhf\"")
+        .replace("\"sto-3g\"", "\"6-31g**\"");
     let place = Place::new().with("h2.toml", spec);
     for threads in ["1", "2", "4"] {
         let ran = place.run(&["scan", "h2.toml", "--threads", threads, "--out", threads]);

@@ -6,8 +6,10 @@ use std::path::PathBuf;
 /// Walks a molecule along its potential-energy surface: scans bonds, angles and dihedrals from a TOML spec.
 #[derive(Debug, Parser)]
 #[command(name = "thalweg", version, disable_help_subcommand = true)]
-#[command(after_help = "Exit status: 0 done; 1 could not finish; 2 the spec or command line is wrong, or the folder holds \
-another spec's run; 3 finished, but some point did not converge; 130 interrupted, journal intact.")]
+#[command(
+    after_help = "Exit status: 0 done; 1 could not finish; 2 the spec or command line is wrong, or the folder holds \
+another spec's run; 3 finished, but some point did not converge; 130 interrupted, journal intact."
+)]
 pub(crate) struct Arguments {
     #[command(subcommand)]
     pub(crate) command: Command,

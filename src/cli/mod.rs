@@ -60,11 +60,16 @@ pub fn run(
         Command::Report(report) => scan::report(&report, &mut streams),
         Command::Check(check) => check::run(&check, &mut streams),
         Command::Basis { name } => basis(name.as_deref(), &mut streams),
-        Command::Schema => writeln!(streams.out, "{}", spec::schema::json_schema())
+        Command::Schema => writeln!(streams.out, "{:#}", spec::schema())
             .map(|()| Status::Done)
             .map_err(Failure::from),
         Command::Completions { shell } => {
-            clap_complete::generate(shell, &mut Arguments::command(), "thalweg", &mut streams.out);
+            clap_complete::generate(
+                shell,
+                &mut Arguments::command(),
+                "thalweg",
+                &mut streams.out,
+            );
             Ok(Status::Done)
         }
     };
@@ -87,12 +92,18 @@ pub(crate) struct Failure {
 impl Failure {
     /// The user's input or choice is at fault.
     pub(crate) fn usage(message: impl ToString) -> Self {
-        Self { message: format!("error: {}", message.to_string()), status: Status::WrongInput }
+        Self {
+            message: format!("error: {}", message.to_string()),
+            status: Status::WrongInput,
+        }
     }
 
     /// Something outside failed.
     pub(crate) fn system(message: impl ToString) -> Self {
-        Self { message: format!("error: {}", message.to_string()), status: Status::Failed }
+        Self {
+            message: format!("error: {}", message.to_string()),
+            status: Status::Failed,
+        }
     }
 }
 
@@ -112,10 +123,10 @@ fn load(path: &Path) -> Result<Spec, Failure> {
 
 fn basis(name: Option<&str>, streams: &mut Streams<'_>) -> Result<Status, Failure> {
     match name {
-        None => describe::list(streams.out)?,
+        None => describe::write_list(streams.out)?,
         Some(name) => {
             let set = crate::basis::library::find(name).map_err(Failure::usage)?;
-            describe::one(set, streams.out)?;
+            describe::write_set(set, streams.out)?;
         }
     }
     Ok(Status::Done)
@@ -123,7 +134,15 @@ fn basis(name: Option<&str>, streams: &mut Streams<'_>) -> Result<Status, Failur
 
 fn refuse_arguments(message: &clap::Error, out: &mut dyn Write, err: &mut dyn Write) -> Status {
     let asked_for = !message.use_stderr();
-    let target = if asked_for { out } else { err };
-    let _ = write!(target, "{}", message.render());
-    if asked_for { Status::Done } else { Status::WrongInput }
+    let text = message.render().to_string();
+    let _ = if asked_for {
+        write!(out, "{text}")
+    } else {
+        write!(err, "{text}")
+    };
+    if asked_for {
+        Status::Done
+    } else {
+        Status::WrongInput
+    }
 }

@@ -23,7 +23,10 @@ pub(super) struct Progress<'a> {
 enum Shown<'a> {
     Nothing,
     Bar(ProgressBar),
-    Lines { err: &'a mut dyn Write, last: Option<Instant> },
+    Lines {
+        err: &'a mut dyn Write,
+        last: Option<Instant>,
+    },
 }
 
 impl<'a> Progress<'a> {
@@ -33,20 +36,36 @@ impl<'a> Progress<'a> {
             Shown::Nothing
         } else if streams.terminal {
             let bar = ProgressBar::with_draw_target(None, ProgressDrawTarget::stderr());
-            if let Ok(style) = ProgressStyle::with_template("{msg} [{bar:32}] {pos}/{len} points, {eta} left") {
+            if let Ok(style) =
+                ProgressStyle::with_template("{msg} [{bar:32}] {pos}/{len} points, {eta} left")
+            {
                 bar.set_style(style.progress_chars("━╸ "));
             }
             Shown::Bar(bar)
         } else {
-            Shown::Lines { err: streams.err, last: None }
+            Shown::Lines {
+                err: streams.err,
+                last: None,
+            }
         };
-        Self { shown, level: String::new(), done: 0, planned: 0, lost: 0, begin: Instant::now() }
+        Self {
+            shown,
+            level: String::new(),
+            done: 0,
+            planned: 0,
+            lost: 0,
+            begin: Instant::now(),
+        }
     }
 
     /// Takes note of an event.
     pub(super) fn on(&mut self, event: &JobEvent<'_>) {
         match event {
-            JobEvent::Walk { name, event: Event::Started { planned, .. }, .. } => {
+            JobEvent::Walk {
+                name,
+                event: Event::Started { planned, .. },
+                ..
+            } => {
                 self.level = (*name).to_owned();
                 (self.done, self.planned, self.lost) = (0, *planned, 0);
                 self.begin = Instant::now();
@@ -56,7 +75,10 @@ impl<'a> Progress<'a> {
                     bar.set_message(self.level.clone());
                 }
             }
-            JobEvent::Walk { event: Event::Evaluated(entry), .. } => {
+            JobEvent::Walk {
+                event: Event::Evaluated(entry),
+                ..
+            } => {
                 self.done += 1;
                 self.lost += usize::from(entry.record.energy.is_none());
                 if let Shown::Bar(bar) = &self.shown {
@@ -65,13 +87,19 @@ impl<'a> Progress<'a> {
                     self.line(false);
                 }
             }
-            JobEvent::Walk { event: Event::Extended { added }, .. } => {
+            JobEvent::Walk {
+                event: Event::Extended { added },
+                ..
+            } => {
                 self.planned += added;
                 if let Shown::Bar(bar) = &self.shown {
                     bar.set_length(self.planned as u64);
                 }
             }
-            JobEvent::Walk { event: Event::Finished, .. } => self.line(true),
+            JobEvent::Walk {
+                event: Event::Finished,
+                ..
+            } => self.line(true),
             JobEvent::LevelDone(_) => {}
         }
     }
@@ -84,7 +112,9 @@ impl<'a> Progress<'a> {
     }
 
     fn line(&mut self, last_of_level: bool) {
-        let Shown::Lines { err, last } = &mut self.shown else { return };
+        let Shown::Lines { err, last } = &mut self.shown else {
+            return;
+        };
         let now = Instant::now();
         let due = last.is_none_or(|t| now - t >= PLAIN_INTERVAL);
         if !(due || last_of_level) {

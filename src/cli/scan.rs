@@ -10,7 +10,6 @@ use crate::report::{self, figures};
 use crate::scan::Event;
 use crate::scan::journal::{self, Journal, JournalError, LevelEntry, Line};
 use crate::spec::Spec;
-use std::io::Write;
 use std::sync::atomic::AtomicBool;
 
 impl From<JournalError> for Failure {
@@ -21,7 +20,11 @@ impl From<JournalError> for Failure {
 
 impl From<FolderError> for Failure {
     fn from(error: FolderError) -> Self {
-        if error.is_refusal() { Self::usage(error) } else { Self::system(error) }
+        if error.is_refusal() {
+            Self::usage(error)
+        } else {
+            Self::system(error)
+        }
     }
 }
 
@@ -34,7 +37,10 @@ impl From<PlotError> for Failure {
 impl From<JobError> for Failure {
     fn from(error: JobError) -> Self {
         if error.is_interruption() {
-            Self { message: error.to_string(), status: Status::Interrupted }
+            Self {
+                message: error.to_string(),
+                status: Status::Interrupted,
+            }
         } else {
             Self::usage(error)
         }
@@ -85,7 +91,12 @@ fn existing(
     let occupant = folder.occupant()?;
     if fresh && occupant != Occupant::Nothing {
         if let Some(aside) = folder.move_aside()? {
-            writeln!(streams.err, "moved {} to {}", folder.path().display(), aside.display())?;
+            writeln!(
+                streams.err,
+                "moved {} to {}",
+                folder.path().display(),
+                aside.display()
+            )?;
         }
         return Ok(None);
     }
@@ -137,9 +148,14 @@ fn walk(
     let mut lost_journal: Option<JournalError> = None;
     let result = job::run(spec, &pool, stop, &mut |event| {
         let line = match event {
-            JobEvent::Walk { level, event: Event::Evaluated(entry), .. } => {
-                Some(Line::Point(LevelEntry { level: *level, entry: (**entry).clone() }))
-            }
+            JobEvent::Walk {
+                level,
+                event: Event::Evaluated(entry),
+                ..
+            } => Some(Line::Point(LevelEntry {
+                level: *level,
+                entry: (**entry).clone(),
+            })),
             JobEvent::LevelDone(end) => Some(Line::Complete(end.clone())),
             JobEvent::Walk { .. } => None,
         };
@@ -169,17 +185,28 @@ fn finish(
         folder.write(&name, &bytes)?;
     }
     if common.json {
-        streams.out.write_all(report::summary::render(&result).as_bytes())?;
+        streams
+            .out
+            .write_all(report::summary::render(&result).as_bytes())?;
     } else {
-        streams.out.write_all(report::text::render(&result, spec.output.energy).as_bytes())?;
+        streams
+            .out
+            .write_all(report::text::render(&result, spec.output.energy).as_bytes())?;
     }
     streams.out.flush()?;
     if !common.quiet {
         writeln!(streams.err, "results in {}", folder.path().display())?;
     }
-    Ok(if all_converged(&result) { Status::Done } else { Status::Unconverged })
+    Ok(if all_converged(&result) {
+        Status::Done
+    } else {
+        Status::Unconverged
+    })
 }
 
 fn all_converged(result: &JobResult) -> bool {
-    result.levels.iter().all(|l| l.points.iter().all(|p| p.record.energy.is_some()))
+    result
+        .levels
+        .iter()
+        .all(|l| l.points.iter().all(|p| p.record.energy.is_some()))
 }

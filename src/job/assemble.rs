@@ -156,20 +156,34 @@ impl PointResult {
 /// If a point of the grid has no geometry.
 pub fn assemble(spec: &Spec, record: &JobRecord) -> Result<JobResult, super::JobError> {
     let scan = scan_of(spec)?;
-    let labels: Vec<String> = spec.molecule.atoms.iter().map(|a| a.label.clone()).collect();
+    let labels: Vec<String> = spec
+        .molecule
+        .atoms
+        .iter()
+        .map(|a| a.label.clone())
+        .collect();
     let levels = spec
         .levels
         .iter()
         .enumerate()
         .map(|(number, level)| {
-            let entries: Vec<&Entry> =
-                record.entries.iter().filter(|e| e.level == number).map(|e| &e.entry).collect();
+            let entries: Vec<&Entry> = record
+                .entries
+                .iter()
+                .filter(|e| e.level == number)
+                .map(|e| &e.entry)
+                .collect();
             level_result(spec, level, &scan, &entries)
         })
         .collect();
     Ok(JobResult {
         title: spec.title.clone(),
-        symbols: spec.molecule.atoms.iter().map(|a| a.element.symbol()).collect(),
+        symbols: spec
+            .molecule
+            .atoms
+            .iter()
+            .map(|a| a.element.symbol())
+            .collect(),
         sweeps: spec
             .sweeps
             .iter()
@@ -177,10 +191,14 @@ pub fn assemble(spec: &Spec, record: &JobRecord) -> Result<JobResult, super::Job
                 let coordinate = &sweep.motion.coordinate;
                 SweepResult {
                     kind: coordinate.kind_word(),
-                    atoms: coordinate.atoms().iter().map(|&a| labels[a].clone()).collect(),
+                    atoms: coordinate
+                        .atoms()
+                        .iter()
+                        .map(|&a| labels[a].clone())
+                        .collect(),
                     unit: coordinate.unit_word(),
                     values: sweep.values.clone(),
-                    column: sweep.column_name(&labels),
+                    column: sweep.column_name(&spec.molecule),
                 }
             })
             .collect(),
@@ -209,8 +227,9 @@ fn cost(record: &JobRecord) -> Cost {
 
 fn level_result(spec: &Spec, level: &Level, scan: &Scan, entries: &[&Entry]) -> LevelResult {
     let molecule = level.molecule(&spec.molecule);
-    let mut points: Vec<PointResult> =
-        (0..scan.grid.len()).filter_map(|point| kept(scan, point, entries)).collect();
+    let mut points: Vec<PointResult> = (0..scan.grid.len())
+        .filter_map(|point| kept(scan, point, entries))
+        .collect();
     let findings = findings(&points, level);
     for finding in &findings {
         for point in &mut points {
@@ -228,7 +247,12 @@ fn level_result(spec: &Spec, level: &Level, scan: &Scan, entries: &[&Entry]) -> 
         name: level.name.clone(),
         method: level.method.name().to_lowercase(),
         basis: level.basis_name.clone(),
-        basis_functions: level.shells_of_atom.iter().flatten().map(|s| s.functions()).sum(),
+        basis_functions: level
+            .shells_of_atom
+            .iter()
+            .flatten()
+            .map(|s| s.functions())
+            .sum(),
         electrons: molecule.electrons().map_or(0, |(alpha, beta)| alpha + beta),
         points,
         findings,
@@ -266,7 +290,12 @@ fn kept(scan: &Scan, point: usize, entries: &[&Entry]) -> Option<PointResult> {
 }
 
 fn findings(points: &[PointResult], level: &Level) -> Vec<Finding> {
-    let functions: usize = level.shells_of_atom.iter().flatten().map(|s| s.functions()).sum();
+    let functions: usize = level
+        .shells_of_atom
+        .iter()
+        .flatten()
+        .map(|s| s.functions())
+        .sum();
     let which = |test: &dyn Fn(&PointResult) -> bool| -> Vec<usize> {
         points.iter().filter(|p| test(p)).map(|p| p.point).collect()
     };
@@ -286,7 +315,11 @@ fn findings(points: &[PointResult], level: &Level) -> Vec<Finding> {
     }
     let dependent = which(&|p| p.record.functions_kept < functions);
     if !dependent.is_empty() {
-        let kept = points.iter().map(|p| p.record.functions_kept).min().unwrap_or(functions);
+        let kept = points
+            .iter()
+            .map(|p| p.record.functions_kept)
+            .min()
+            .unwrap_or(functions);
         findings.push(Finding {
             kind: FindingKind::NearDependentBasis,
             text: format!(

@@ -10,8 +10,8 @@ pub use finding::{Finding, FindingKind};
 use crate::scan::journal::{LevelEnd, LevelEntry};
 use crate::scan::{Event, Grid, Scan, ScanError, WalkStart, grid, runner};
 use crate::spec::Spec;
+use crate::surface::HartreeFock;
 use crate::surface::Surface;
-use crate::surface::hartree_fock::HartreeFock;
 use crate::{molecule::motion::MotionError, surface::SurfaceError};
 use rayon::ThreadPool;
 use std::sync::atomic::AtomicBool;
@@ -50,7 +50,13 @@ impl JobError {
     /// Whether the job ended because it was asked to.
     #[must_use]
     pub fn is_interruption(&self) -> bool {
-        matches!(self, Self::Scan { source: ScanError::Interrupted { .. }, .. })
+        matches!(
+            self,
+            Self::Scan {
+                source: ScanError::Interrupted { .. },
+                ..
+            }
+        )
     }
 }
 
@@ -90,7 +96,7 @@ pub fn scan_of(spec: &Spec) -> Result<Scan, JobError> {
     let mut positions = Vec::with_capacity(grid.len());
     for point in 0..grid.len() {
         let values = grid::values_at(&spec.sweeps, &grid, point);
-        match grid::positions_at(&spec.sweeps, &grid, input, point) {
+        match spec.positions_at(&values) {
             Ok(places) => positions.push(places),
             Err(source) => return Err(JobError::Geometry { values, source }),
         }
@@ -135,8 +141,20 @@ pub fn run(
             level.method,
             spec.scf.clone(),
         )
-        .map_err(|source| JobError::Level { level: level.name.clone(), source })?;
-        walk_level(&surface, &scan, number, &level.name, pool, stop, observer, &mut record)?;
+        .map_err(|source| JobError::Level {
+            level: level.name.clone(),
+            source,
+        })?;
+        walk_level(
+            &surface,
+            &scan,
+            number,
+            &level.name,
+            pool,
+            stop,
+            observer,
+            &mut record,
+        )?;
     }
     Ok(record)
 }
@@ -159,8 +177,13 @@ pub fn walk_level<S: Surface>(
     let entries = runner::run(surface, scan, pool, stop, &mut |event| {
         observer(&JobEvent::Walk { level, name, event });
     })
-    .map_err(|source| JobError::Scan { level: name.to_owned(), source })?;
-    record.entries.extend(entries.into_iter().map(|entry| LevelEntry { level, entry }));
+    .map_err(|source| JobError::Scan {
+        level: name.to_owned(),
+        source,
+    })?;
+    record
+        .entries
+        .extend(entries.into_iter().map(|entry| LevelEntry { level, entry }));
     let end = LevelEnd {
         level,
         wall_seconds: begin.elapsed().as_secs_f64(),

@@ -48,7 +48,10 @@ fn row(spec: &Spec, level: &LevelResult, point: &PointResult, zero: Option<f64>)
     fields.extend(point.values.iter().map(f64::to_string));
     fields.push(number(record.energy));
     fields.push(number(
-        record.energy.zip(zero).map(|(e, zero)| (e - zero) * spec.output.energy.per_hartree()),
+        record
+            .energy
+            .zip(zero)
+            .map(|(e, zero)| (e - zero) * spec.output.energy.per_hartree()),
     ));
     let converged = record.energy.is_some();
     // What belongs to a density that is not a solution is left empty too.

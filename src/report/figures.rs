@@ -34,8 +34,11 @@ fn draw(spec: &Spec, result: &JobResult) -> Result<Vec<(String, Figure)>, PlotEr
             .enumerate()
             .map(|(k, level)| {
                 // The first level's figure has the plain name; further ones are numbered from 2.
-                let name =
-                    if k == 0 { "surface".to_owned() } else { format!("surface-{}", k + 1) };
+                let name = if k == 0 {
+                    "surface".to_owned()
+                } else {
+                    format!("surface-{}", k + 1)
+                };
                 Ok((name, surface(spec, result, level).draw()?))
             })
             .collect(),
@@ -53,7 +56,10 @@ fn axis(result: &JobResult, sweep: usize) -> Axis {
 }
 
 fn relative(spec: &Spec, point: &PointResult, zero: f64) -> Option<f64> {
-    point.record.energy.map(|e| (e - zero) * spec.output.energy.per_hartree())
+    point
+        .record
+        .energy
+        .map(|e| (e - zero) * spec.output.energy.per_hartree())
 }
 
 fn curve(spec: &Spec, result: &JobResult) -> CurveFigure {
@@ -63,7 +69,11 @@ fn curve(spec: &Spec, result: &JobResult) -> CurveFigure {
         sweep: axis(result, 0),
         energy_unit: spec.output.energy.symbol().to_owned(),
         zero: result.zero_words(),
-        levels: result.levels.iter().map(|level| curve_level(spec, result, level)).collect(),
+        levels: result
+            .levels
+            .iter()
+            .map(|level| curve_level(spec, result, level))
+            .collect(),
     }
 }
 
@@ -78,11 +88,25 @@ fn curve_level(spec: &Spec, result: &JobResult, level: &LevelResult) -> CurveLev
         .collect();
     CurveLevel {
         name: level.name.clone(),
-        points: level.points.iter().map(|p| (p.values[0], relative(spec, p, zero))).collect(),
-        second_solution: if second.iter().any(|(_, e)| e.is_some()) { second } else { Vec::new() },
+        points: level
+            .points
+            .iter()
+            .map(|p| (p.values[0], relative(spec, p, zero)))
+            .collect(),
+        second_solution: if second.iter().any(|(_, e)| e.is_some()) {
+            second
+        } else {
+            Vec::new()
+        },
         minima: level
             .lowest()
-            .and_then(|p| Some(CurveMark { x: p.values[0], energy: relative(spec, p, zero)?, text: None }))
+            .and_then(|p| {
+                Some(CurveMark {
+                    x: p.values[0],
+                    energy: relative(spec, p, zero)?,
+                    text: None,
+                })
+            })
             .into_iter()
             .collect(),
         findings: (0..level.points.len())
@@ -114,7 +138,12 @@ fn surface(spec: &Spec, result: &JobResult, level: &LevelResult) -> SurfaceFigur
         cap: None,
         minima: level
             .lowest()
-            .map(|p| SurfaceMark { x: p.values[0], y: p.values[1], energy: 0.0, text: None })
+            .map(|p| SurfaceMark {
+                x: p.values[0],
+                y: p.values[1],
+                energy: 0.0,
+                text: None,
+            })
             .into_iter()
             .collect(),
         saddles: Vec::new(),

@@ -68,7 +68,9 @@ impl RunFolder {
     /// A folder that may or may not exist yet; nothing is touched.
     #[must_use]
     pub fn at(path: &Path) -> Self {
-        Self { path: path.to_path_buf() }
+        Self {
+            path: path.to_path_buf(),
+        }
     }
 
     /// Where it is.
@@ -98,7 +100,11 @@ impl RunFolder {
             return Ok(Occupant::Other);
         }
         let mut inside = std::fs::read_dir(&self.path).map_err(|e| self.io(&self.path, e))?;
-        Ok(if inside.next().is_none() { Occupant::Nothing } else { Occupant::Other })
+        Ok(if inside.next().is_none() {
+            Occupant::Nothing
+        } else {
+            Occupant::Other
+        })
     }
 
     /// Creates the folder and those above it.
@@ -117,7 +123,12 @@ impl RunFolder {
         if !self.path.exists() {
             return Ok(None);
         }
-        let name = self.path.file_name().unwrap_or_default().to_string_lossy().into_owned();
+        let name = self
+            .path
+            .file_name()
+            .unwrap_or_default()
+            .to_string_lossy()
+            .into_owned();
         let mut number = 1_u32;
         let aside = loop {
             let candidate = self.path.with_file_name(format!("{name}.{number}"));
@@ -151,7 +162,10 @@ impl RunFolder {
     }
 
     fn io(&self, path: &Path, source: std::io::Error) -> FolderError {
-        FolderError::Io { path: path.to_path_buf(), source }
+        FolderError::Io {
+            path: path.to_path_buf(),
+            source,
+        }
     }
 }
 
@@ -173,7 +187,9 @@ mod tests {
         assert_eq!(folder.move_aside().unwrap(), None);
         for number in 1..=2 {
             folder.create().unwrap();
-            folder.write("points.csv", format!("{number}").as_bytes()).unwrap();
+            folder
+                .write("points.csv", format!("{number}").as_bytes())
+                .unwrap();
             assert_eq!(folder.occupant().unwrap(), Occupant::Other);
             let aside = folder.move_aside().unwrap().unwrap();
             assert_eq!(aside, place.path().join(format!("run.{number}")));

@@ -9,7 +9,9 @@ use std::fmt::Write;
 #[must_use]
 pub fn render(result: &JobResult) -> String {
     let mut text = String::new();
-    let Some(level) = result.levels.first() else { return text };
+    let Some(level) = result.levels.first() else {
+        return text;
+    };
     for point in &level.points {
         let _ = writeln!(text, "{}", point.positions.len());
         let values: Vec<String> = result
@@ -18,10 +20,10 @@ pub fn render(result: &JobResult) -> String {
             .zip(&point.values)
             .map(|(sweep, value)| format!("{}={value}", sweep.column))
             .collect();
-        let energy = point
-            .record
-            .energy
-            .map_or_else(|| "not converged".to_owned(), |e| format!("energy_hartree={e}"));
+        let energy = point.record.energy.map_or_else(
+            || "not converged".to_owned(),
+            |e| format!("energy_hartree={e}"),
+        );
         let _ = writeln!(text, "{} {energy}", values.join(" "));
         for (symbol, position) in result.symbols.iter().zip(&point.positions) {
             let [x, y, z] = [position.x, position.y, position.z].map(|v| v * ANGSTROM_PER_BOHR);

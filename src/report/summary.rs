@@ -63,7 +63,12 @@ pub fn render(result: &JobResult) -> String {
         sweeps: result
             .sweeps
             .iter()
-            .map(|s| Sweep { kind: s.kind, atoms: &s.atoms, unit: s.unit, values: &s.values })
+            .map(|s| Sweep {
+                kind: s.kind,
+                atoms: &s.atoms,
+                unit: s.unit,
+                values: &s.values,
+            })
             .collect(),
         levels: result.levels.iter().map(|l| level(result, l)).collect(),
         cost: &result.cost,

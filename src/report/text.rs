@@ -28,11 +28,27 @@ fn table(text: &mut String, result: &JobResult, level: &LevelResult, unit: Energ
     let rows = shown(result, level);
     let zero = result.zero_of(level);
     for sweep in &result.sweeps {
-        let _ = write!(text, "{:>18}", format!("{} {}", sweep.kind, sweep.atoms.join("–")));
+        let _ = write!(
+            text,
+            "{:>18}",
+            format!("{} {}", sweep.kind, sweep.atoms.join("–"))
+        );
     }
-    let _ = writeln!(text, "{:>19}{:>14}{:>10}{:>8}", "energy", "relative", "⟨S²⟩", "builds");
+    let _ = writeln!(
+        text,
+        "{:>19}{:>14}{:>10}{:>8}",
+        "energy", "relative", "⟨S²⟩", "builds"
+    );
     for sweep in &result.sweeps {
-        let _ = write!(text, "{:>18}", if sweep.unit == "angstrom" { "Å" } else { "degree" });
+        let _ = write!(
+            text,
+            "{:>18}",
+            if sweep.unit == "angstrom" {
+                "Å"
+            } else {
+                "degree"
+            }
+        );
     }
     let _ = writeln!(text, "{:>19}{:>14}", "hartree", unit.symbol());
     for point in rows {
@@ -48,7 +64,11 @@ fn table(text: &mut String, result: &JobResult, level: &LevelResult, unit: Energ
                 let _ = write!(text, "{:>10.4}{builds:>8}", point.record.s_squared);
             }
             _ => {
-                let _ = write!(text, "{:>19}{:>14}{:>10}{builds:>8}", "not converged", "", "");
+                let _ = write!(
+                    text,
+                    "{:>19}{:>14}{:>10}{builds:>8}",
+                    "not converged", "", ""
+                );
             }
         }
         let words: Vec<&str> = point.findings.iter().map(|f| f.word()).collect();
@@ -62,10 +82,20 @@ fn shown<'a>(result: &JobResult, level: &'a LevelResult) -> Vec<&'a PointResult>
     match *result.grid.shape() {
         [rows, _] => (0..rows)
             .filter_map(|i| {
-                let row = || level.points.iter().filter(move |p| p.index.first() == Some(&i));
+                let row = || {
+                    level
+                        .points
+                        .iter()
+                        .filter(move |p| p.index.first() == Some(&i))
+                };
                 row()
                     .filter(|p| p.record.energy.is_some())
-                    .min_by(|a, b| a.record.energy.partial_cmp(&b.record.energy).unwrap_or(std::cmp::Ordering::Equal))
+                    .min_by(|a, b| {
+                        a.record
+                            .energy
+                            .partial_cmp(&b.record.energy)
+                            .unwrap_or(std::cmp::Ordering::Equal)
+                    })
                     .or_else(|| row().next())
             })
             .collect(),
@@ -88,7 +118,11 @@ fn summary(text: &mut String, result: &JobResult, level: &LevelResult) {
         if place.is_empty() {
             let _ = writeln!(text, "energy {energy:.9} hartree");
         } else {
-            let _ = writeln!(text, "lowest point {energy:.9} hartree at {}", place.join(", "));
+            let _ = writeln!(
+                text,
+                "lowest point {energy:.9} hartree at {}",
+                place.join(", ")
+            );
         }
     }
     if let Some(mean) = level.mean_fock_builds {
@@ -102,7 +136,11 @@ fn summary(text: &mut String, result: &JobResult, level: &LevelResult) {
 fn cost(text: &mut String, result: &JobResult) {
     let cost = &result.cost;
     let all = cost.integrals_computed + cost.integrals_reused;
-    let share = if all == 0 { 0.0 } else { 100.0 * cost.integrals_reused as f64 / all as f64 };
+    let share = if all == 0 {
+        0.0
+    } else {
+        100.0 * cost.integrals_reused as f64 / all as f64
+    };
     let _ = writeln!(
         text,
         "\n{:.2} s, {} threads, {} Fock builds, {:.3e} repulsion integrals computed, {share:.0} % of all taken over",
