@@ -242,3 +242,6 @@ pub fn set_all(
         rounds += 1;
     }
 }
+
+#[cfg(test)]
+mod tests;
