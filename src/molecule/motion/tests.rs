@@ -481,6 +481,19 @@ fn hydrogen_cyanide_bends_and_straightens_in_one_plane() {
 }
 
 #[test]
+fn a_grid_may_end_at_180_degrees_with_its_rounding() {
+    let molecule = water();
+    let opening = angle(&molecule, ["H1", "O", "H2"]);
+    let motion = resolve(opening, &molecule, None).unwrap();
+    for degrees in [180.0, 180.0 + 3e-14, -1e-14] {
+        let mut positions = molecule.positions.clone();
+        let value = opening.from_reported(degrees);
+        set_all(&[(motion.clone(), value)], &mut positions).unwrap();
+        assert!((opening.reported_value(&positions) - degrees).abs() < 1e-12);
+    }
+}
+
+#[test]
 fn acetylene_bends_at_both_ends_in_one_plane() {
     let molecule = from_zmatrix("C1\nC2 C1 1.2\nH1 C1 1.06 C2 180\nH2 C2 1.06 C1 180 H1 0");
     let ends = [["H1", "C1", "C2"], ["C1", "C2", "H2"]]
