@@ -181,7 +181,7 @@ impl Coordinate {
                 u.cross(&v).norm().atan2(u.dot(&v))
             }
             Self::Dihedral(atoms) => {
-                let (_, g, _, normal_first, normal_last) = blondel_karplus(positions, atoms);
+                let [_, g, _, normal_first, normal_last] = blondel_karplus(positions, atoms);
                 let sine =
                     normal_last.cross(&normal_first).dot(&g) / g.norm().max(f64::MIN_POSITIVE);
                 let value = sine.atan2(normal_first.dot(&normal_last));
@@ -244,7 +244,7 @@ impl Coordinate {
                 vec![(a, first), (b, -first - last), (c, last)]
             }
             Self::Dihedral([a, b, c, d]) => {
-                let (f, g, h, normal_first, normal_last) = blondel_karplus(positions, [a, b, c, d]);
+                let [f, g, h, normal_first, normal_last] = blondel_karplus(positions, [a, b, c, d]);
                 let length = g.norm();
                 let first = -normal_first * (length / normal_first.norm_squared());
                 let last = normal_last * (length / normal_last.norm_squared());
@@ -264,20 +264,11 @@ impl Coordinate {
 
 /// The letters of Blondel and Karplus for atoms i, j, k, l: F = r_i − r_j, G = r_j − r_k, H = r_l − r_k,
 /// A = F × G, B = H × G.
-fn blondel_karplus(
-    positions: &[Vector3<f64>],
-    [i, j, k, l]: [usize; 4],
-) -> (
-    Vector3<f64>,
-    Vector3<f64>,
-    Vector3<f64>,
-    Vector3<f64>,
-    Vector3<f64>,
-) {
+fn blondel_karplus(positions: &[Vector3<f64>], [i, j, k, l]: [usize; 4]) -> [Vector3<f64>; 5] {
     let f = positions[i] - positions[j];
     let g = positions[j] - positions[k];
     let h = positions[l] - positions[k];
-    (f, g, h, f.cross(&g), h.cross(&g))
+    [f, g, h, f.cross(&g), h.cross(&g)]
 }
 
 /// Unit vector about which the angle at `b` opens: right-handed turns carry the arm to `a` towards the arm to `c`.

@@ -64,7 +64,7 @@ impl Motion {
     /// A bond that is not positive, an angle outside [0, π], a value that is not finite; atoms on one spot; a dihedral
     /// of three atoms on one line. The positions are then untouched.
     pub fn set(&self, positions: &mut [Vector3<f64>], value: f64) -> Result<(), MotionError> {
-        self.check_value(value)?;
+        let value = self.checked_value(value)?;
         self.coordinate.check(positions)?;
         let change = self
             .coordinate
@@ -157,19 +157,23 @@ impl Motion {
         }
     }
 
-    fn check_value(&self, value: f64) -> Result<(), MotionError> {
+    /// The value itself, or why it cannot be set. An angle outside its range by no more than the rounding of a grid
+    /// (start + i · step) is taken for the end of the range.
+    fn checked_value(&self, value: f64) -> Result<f64, MotionError> {
+        const ROUNDING: f64 = 1e-13;
         let value_degree = value.to_degrees();
         match self.coordinate {
             Coordinate::Bond(_) if !(value.is_finite() && value > 0.0) => {
                 Err(MotionError::BondRange { value })
             }
-            Coordinate::Angle(_) if !(0.0..=PI).contains(&value) => {
+            Coordinate::Angle(_) if !(-ROUNDING..=PI + ROUNDING).contains(&value) => {
                 Err(MotionError::AngleRange { value_degree })
             }
+            Coordinate::Angle(_) => Ok(value.clamp(0.0, PI)),
             Coordinate::Dihedral(_) if !value.is_finite() => {
                 Err(MotionError::DihedralRange { value_degree })
             }
-            _ => Ok(()),
+            _ => Ok(value),
         }
     }
 
@@ -242,3 +246,6 @@ pub fn set_all(
         rounds += 1;
     }
 }
+
+#[cfg(test)]
+mod tests;
