@@ -133,7 +133,11 @@ pub fn hessian_products(
 /// Tangents Γ = C_empty κ of the frame.
 #[must_use]
 pub fn tangents(orbitals: &[Canonical], kappa: &[DMatrix<f64>]) -> Vec<DMatrix<f64>> {
-    orbitals.iter().zip(kappa).map(|(o, k)| &o.empty * k).collect()
+    orbitals
+        .iter()
+        .zip(kappa)
+        .map(|(o, k)| &o.empty * k)
+        .collect()
 }
 
 /// The determinant reached by a rotation.

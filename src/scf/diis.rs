@@ -251,8 +251,7 @@ impl EnergyInterpolation {
             .iter()
             .map(|it| it.energy)
             .fold(f64::INFINITY, f64::min);
-        let linear =
-            DVector::from_iterator(m, self.iterates.iter().map(|it| it.energy - lowest));
+        let linear = DVector::from_iterator(m, self.iterates.iter().map(|it| it.energy - lowest));
         let coefficients = simplex_minimum(&linear, &coupling)?;
         let mut combined: Vec<DMatrix<f64>> = self
             .iterates
@@ -347,7 +346,8 @@ mod tests {
 
     #[test]
     fn simplex_minimum_finds_interior_edge_and_vertex() {
-        let interior = simplex_minimum(&DVector::from_vec(vec![0.0, 0.0]), &DMatrix::identity(2, 2));
+        let interior =
+            simplex_minimum(&DVector::from_vec(vec![0.0, 0.0]), &DMatrix::identity(2, 2));
         assert!((interior.expect("one")[0] - 0.5).abs() < 1e-14);
         let vertex = simplex_minimum(&DVector::from_vec(vec![0.0, 9.0]), &DMatrix::identity(2, 2));
         assert!((vertex.expect("one")[0] - 1.0).abs() < 1e-14);
@@ -364,6 +364,9 @@ mod tests {
         let b = DMatrix::from_row_slice(2, 2, &[7.0, 8.0, 8.0, 9.0]);
         let packed = pack_symmetric(&[a.clone(), b.clone()]);
         assert_eq!(packed.len(), 9);
-        assert_eq!(unpack_symmetric(&packed, &[a.clone(), b.clone()]), vec![a, b]);
+        assert_eq!(
+            unpack_symmetric(&packed, &[a.clone(), b.clone()]),
+            vec![a, b]
+        );
     }
 }

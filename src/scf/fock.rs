@@ -231,8 +231,16 @@ impl<'a> Field<'a> {
             let error = &product - product.transpose();
             if !error.is_empty() {
                 // amax() would let NaN pass unseen.
-                let largest = error.iter().fold(0.0, |m: f64, x| if x.is_nan() { f64::NAN } else { m.max(x.abs()) });
-                commutator = if largest.is_nan() { largest } else { commutator.max(largest) };
+                let largest =
+                    error.iter().fold(
+                        0.0,
+                        |m: f64, x| if x.is_nan() { f64::NAN } else { m.max(x.abs()) },
+                    );
+                commutator = if largest.is_nan() {
+                    largest
+                } else {
+                    commutator.max(largest)
+                };
             }
             focks.push(fock);
             errors.push(error);
@@ -315,7 +323,10 @@ fn contract(integrals: &dyn CoulombExchange, densities: &[DMatrix<f64>]) -> Vec<
             for other in &several[1..] {
                 coulomb += &other.coulomb;
             }
-            several.iter().map(|pair| &coulomb - &pair.exchange).collect()
+            several
+                .iter()
+                .map(|pair| &coulomb - &pair.exchange)
+                .collect()
         }
     }
 }

@@ -53,7 +53,11 @@ pub fn tangent_part(y: &DMatrix<f64>, matrix: &DMatrix<f64>) -> DMatrix<f64> {
 pub fn exponential(y: &DMatrix<f64>, gamma: &DMatrix<f64>) -> Result<DMatrix<f64>, ScfError> {
     let cosine = root_function(gram(gamma), f64::cos)?;
     let sinc = root_function(gram(gamma), |x| {
-        if x < 1e-4 { 1.0 - x * x / 6.0 } else { x.sin() / x }
+        if x < 1e-4 {
+            1.0 - x * x / 6.0
+        } else {
+            x.sin() / x
+        }
     })?;
     // Rounding would leave the columns orthonormal to 1e-15 only; many steps would add up.
     orthonormalised(&(y * cosine + gamma * sinc))
@@ -63,10 +67,7 @@ pub fn exponential(y: &DMatrix<f64>, gamma: &DMatrix<f64>) -> Result<DMatrix<f64
 ///
 /// # Errors
 /// [`ScfError::Eigenproblem`].
-pub fn logarithm(
-    from: &DMatrix<f64>,
-    to: &DMatrix<f64>,
-) -> Result<Option<DMatrix<f64>>, ScfError> {
+pub fn logarithm(from: &DMatrix<f64>, to: &DMatrix<f64>) -> Result<Option<DMatrix<f64>>, ScfError> {
     if from.ncols() == 0 {
         return Ok(Some(DMatrix::zeros(from.nrows(), 0)));
     }
@@ -78,7 +79,11 @@ pub fn logarithm(
     };
     let steep = tangent_part(from, &(to * inverse));
     let flatten = root_function(gram(&steep), |x| {
-        if x < 1e-4 { 1.0 - x * x / 3.0 } else { x.atan() / x }
+        if x < 1e-4 {
+            1.0 - x * x / 3.0
+        } else {
+            x.atan() / x
+        }
     })?;
     Ok(Some(steep * flatten))
 }
@@ -127,7 +132,8 @@ mod tests {
         let gamma = tangent_part(&a, &space(1.3)) * 1e-9;
         let b = exponential(&a, &gamma).expect("small");
         let again = logarithm(&a, &b).expect("small").expect("near");
-        assert!((again - &gamma).amax() < 1e-15);
+        // Rounding of the space itself, of order one, is all that may be lost.
+        assert!((again - &gamma).amax() < 1e-14);
     }
 
     #[test]

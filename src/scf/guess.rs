@@ -27,7 +27,16 @@ const SUBSHELL_WIDTH: f64 = 1e-6;
 fn configuration(element: Element) -> [usize; 3] {
     let mut left = usize::from(element.atomic_number());
     let mut electrons = [0; 3];
-    for (l, room) in [(0, 2), (0, 2), (1, 6), (0, 2), (1, 6), (0, 2), (2, 10), (1, 6)] {
+    for (l, room) in [
+        (0, 2),
+        (0, 2),
+        (1, 6),
+        (0, 2),
+        (1, 6),
+        (0, 2),
+        (2, 10),
+        (1, 6),
+    ] {
         let placed = left.min(room);
         electrons[l] += placed;
         left -= placed;
@@ -87,7 +96,10 @@ pub fn atomic_density(
     repulsion: &dyn CoulombExchange,
     dependence: f64,
 ) -> Result<DMatrix<f64>, ScfError> {
-    let nucleus = [(element.nuclear_charge(), *basis.centres().first().unwrap_or(&Vector3::zeros()))];
+    let nucleus = [(
+        element.nuclear_charge(),
+        *basis.centres().first().unwrap_or(&Vector3::zeros()),
+    )];
     let core = integrals::kinetic(basis) + integrals::attraction(basis, &nucleus);
     let frame = Orthogonal::new(&integrals::overlap(basis), dependence, None)?;
     let configuration = configuration(element);
@@ -98,7 +110,10 @@ pub fn atomic_density(
         let filled = occupations(orbitals.energies.as_slice(), configuration);
         let projector = spread(&orbitals, &filled);
         density = frame.transform(&projector);
-        let Some(pair) = repulsion.coulomb_exchange(std::slice::from_ref(&density)).pop() else {
+        let Some(pair) = repulsion
+            .coulomb_exchange(std::slice::from_ref(&density))
+            .pop()
+        else {
             break;
         };
         let fock = frame.transform(&(&core + pair.coulomb * 2.0 - pair.exchange));

@@ -95,23 +95,30 @@ pub struct Solution {
 
 /// Occupied orbitals of Fock matrices: the lowest, or those that overlap most with `follow` (A. T. B.
 /// Gilbert, N. A. Besley, P. M. W. Gill, J. Phys. Chem. A 112, 13164 (2008), with a fixed reference).
-fn occupy(orbitals: &[Orbitals], counts: &[usize], follow: Option<&[DMatrix<f64>]>) -> Vec<DMatrix<f64>> {
+fn occupy(
+    orbitals: &[Orbitals],
+    counts: &[usize],
+    follow: Option<&[DMatrix<f64>]>,
+) -> Vec<DMatrix<f64>> {
     orbitals
         .iter()
         .zip(counts)
         .enumerate()
-        .map(|(block, (o, &count))| match follow.and_then(|f| f.get(block)) {
-            Some(reference) if count > 0 => {
-                let overlap = reference.transpose() * &o.vectors;
-                let shares: Vec<f64> = overlap.column_iter().map(|c| c.norm_squared()).collect();
-                let mut order: Vec<usize> = (0..shares.len()).collect();
-                order.sort_by(|&i, &j| shares[j].total_cmp(&shares[i]).then(i.cmp(&j)));
-                let mut chosen = order[..count].to_vec();
-                chosen.sort_unstable();
-                o.vectors.select_columns(&chosen)
-            }
-            _ => o.lowest(count),
-        })
+        .map(
+            |(block, (o, &count))| match follow.and_then(|f| f.get(block)) {
+                Some(reference) if count > 0 => {
+                    let overlap = reference.transpose() * &o.vectors;
+                    let shares: Vec<f64> =
+                        overlap.column_iter().map(|c| c.norm_squared()).collect();
+                    let mut order: Vec<usize> = (0..shares.len()).collect();
+                    order.sort_by(|&i, &j| shares[j].total_cmp(&shares[i]).then(i.cmp(&j)));
+                    let mut chosen = order[..count].to_vec();
+                    chosen.sort_unstable();
+                    o.vectors.select_columns(&chosen)
+                }
+                _ => o.lowest(count),
+            },
+        )
         .collect()
 }
 
@@ -227,7 +234,11 @@ pub fn converge(
         history.record(&here.focks, &here.errors);
         if is_converged(field, &here, last.map(|l| l.0), &plan.thresholds)? {
             let orbitals = field.diagonalise(&history.suggest(&here.focks))?;
-            let refined = occupy(&orbitals, &counts, Some(plan.follow.unwrap_or(&here.occupied)));
+            let refined = occupy(
+                &orbitals,
+                &counts,
+                Some(plan.follow.unwrap_or(&here.occupied)),
+            );
             return Ok(Solution {
                 evaluation: here,
                 refined,
@@ -254,8 +265,7 @@ pub fn converge(
         let stalled = since_best >= PATIENCE;
         match rung {
             Rung::Extrapolated if good_seed => {
-                newton |= rung_builds >= SEEDED_RUNG
-                    || here.energy > lowest_energy + SEEDED_RISE;
+                newton |= rung_builds >= SEEDED_RUNG || here.energy > lowest_energy + SEEDED_RISE;
             }
             Rung::Extrapolated if stalled || rung_builds >= FIRST_RUNG => {
                 rung = Rung::Shifted;
@@ -273,7 +283,11 @@ pub fn converge(
             Rung::Extrapolated => {}
         }
         if newton && plan.follow.is_none() {
-            let start = if plan.newton { here } else { lowest.unwrap_or(here) };
+            let start = if plan.newton {
+                here
+            } else {
+                lowest.unwrap_or(here)
+            };
             let (evaluation, stop) =
                 second_order::minimise(field, start, &plan.thresholds, plan.limit)?;
             return Ok(Solution {

@@ -62,7 +62,11 @@ pub fn symmetric_eigen(matrix: DMatrix<f64>) -> Result<(DVector<f64>, DMatrix<f6
     let mut vectors = DMatrix::zeros(order, order);
     for (column, &i) in places.iter().enumerate() {
         let vector = eigen.eigenvectors.column(i);
-        let sign = if vector[vector.icamax()] < 0.0 { -1.0 } else { 1.0 };
+        let sign = if vector[vector.icamax()] < 0.0 {
+            -1.0
+        } else {
+            1.0
+        };
         vectors.column_mut(column).copy_from(&(vector * sign));
     }
     Ok((values, vectors))
@@ -206,7 +210,15 @@ mod tests {
             3,
             3,
             &[
-                1.0, 0.4, 0.1, 0.4, 1.0, 1.0 - dependent, 0.1, 1.0 - dependent, 1.0,
+                1.0,
+                0.4,
+                0.1,
+                0.4,
+                1.0,
+                1.0 - dependent,
+                0.1,
+                1.0 - dependent,
+                1.0,
             ],
         )
     }
@@ -231,7 +243,9 @@ mod tests {
         assert_eq!(dropped.kept(), 2);
         let kept = Orthogonal::new(&s, 1e-7, Some(3)).expect("a small matrix");
         assert_eq!(kept.kept(), 3);
-        let orbitals = dropped.eigen(&dropped.transform(&s)).expect("a small matrix");
+        let orbitals = dropped
+            .eigen(&dropped.transform(&s))
+            .expect("a small matrix");
         assert_eq!(orbitals.energies.len(), 2);
         assert!(orbitals.energies.iter().all(|e| (e - 1.0).abs() < 1e-8));
     }

@@ -23,7 +23,11 @@ pub fn charge_centre(molecule: &Molecule) -> Vector3<f64> {
         sum += position * atom.charge();
         charge += atom.charge();
     }
-    if charge > 0.0 { sum / charge } else { Vector3::zeros() }
+    if charge > 0.0 {
+        sum / charge
+    } else {
+        Vector3::zeros()
+    }
 }
 
 /// Dipole moment in e·bohr about `origin` from a total density and the dipole integrals about the same origin.
@@ -61,7 +65,8 @@ pub fn mulliken_populations(
     function_atoms: &[usize],
     atoms: usize,
 ) -> Vec<f64> {
-    let diagonal = (0..density.nrows()).map(|m| dot(density.column(m).as_slice(), overlap.column(m).as_slice()));
+    let diagonal = (0..density.nrows())
+        .map(|m| dot(density.column(m).as_slice(), overlap.column(m).as_slice()));
     sum_by_atom(diagonal, function_atoms, atoms)
 }
 

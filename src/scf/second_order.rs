@@ -123,12 +123,15 @@ fn path(
 
 /// The last point of a path within the trust region, with its product; where the path leaves the region,
 /// the point on the boundary.
-fn cut(path: &Path, gradient: &[DMatrix<f64>], metric: &[DMatrix<f64>], radius: f64) -> (Kappa, Kappa) {
+fn cut(
+    path: &Path,
+    gradient: &[DMatrix<f64>],
+    metric: &[DMatrix<f64>],
+    radius: f64,
+) -> (Kappa, Kappa) {
     let zero = scaled(gradient, 0.0);
     let mut here = (zero.clone(), zero);
-    let ends = path.points.iter().cloned().map(|(k, p)| {
-        (k, p, false)
-    });
+    let ends = path.points.iter().cloned().map(|(k, p)| (k, p, false));
     for (kappa, product, _) in ends {
         if inner(&kappa, &multiplied(&kappa, metric)).sqrt() > radius {
             let direction = combined(&kappa, -1.0, &here.0);

@@ -97,10 +97,7 @@ fn block_likeness(
 ///
 /// # Errors
 /// [`ScfError::Eigenproblem`].
-pub fn is_swapped(
-    occupied: &[DMatrix<f64>],
-    reference: &[DMatrix<f64>],
-) -> Result<bool, ScfError> {
+pub fn is_swapped(occupied: &[DMatrix<f64>], reference: &[DMatrix<f64>]) -> Result<bool, ScfError> {
     let ([alpha, beta], [ref_alpha, ref_beta]) = (occupied, reference) else {
         return Ok(false);
     };
@@ -134,7 +131,12 @@ fn polynomial_weights(points: &[&[f64]], target: &[f64], degree: usize) -> Optio
     let dimensions = target.len();
     // Scaled offsets from the target keep the system well conditioned.
     let scales: Vec<f64> = (0..dimensions)
-        .map(|d| points.iter().map(|p| (p[d] - target[d]).abs()).fold(0.0, f64::max))
+        .map(|d| {
+            points
+                .iter()
+                .map(|p| (p[d] - target[d]).abs())
+                .fold(0.0, f64::max)
+        })
         .collect();
     let active: Vec<usize> = (0..dimensions).filter(|&d| scales[d] > 0.0).collect();
     let offset = |point: &[f64], d: usize| (point[d] - target[d]) / scales[d];
@@ -191,7 +193,11 @@ fn polynomial_weights(points: &[&[f64]], target: &[f64], degree: usize) -> Optio
 /// Points (newest first) whose polynomial of the given degree is asked for: as many as it has terms in one
 /// coordinate, all in more.
 fn points_for(degree: usize, dimensions: usize, available: usize) -> usize {
-    if dimensions == 1 { degree + 1 } else { available }
+    if dimensions == 1 {
+        degree + 1
+    } else {
+        available
+    }
 }
 
 /// Tangent at the newest point towards the target for one degree.
@@ -248,7 +254,11 @@ pub fn predict(points: &[(&[f64], &Seed)], target: &[f64]) -> Result<Option<Pred
         let fits = at.len() == target.len()
             && state.kept == newest.state().kept
             && state.occupied.len() == base.len()
-            && state.occupied.iter().zip(base).all(|(a, b)| a.shape() == b.shape());
+            && state
+                .occupied
+                .iter()
+                .zip(base)
+                .all(|(a, b)| a.shape() == b.shape());
         // Across the onset of spin polarisation nothing is smooth.
         if !fits || seed.is_polarised() != polarised {
             break;
@@ -465,7 +475,8 @@ mod tests {
         // The oldest points belong to another state; the newest two differ little.
         let seeds = [seed(5.0), seed(9.0), seed(1.0), seed(1.02)];
         let at = [[0.0], [0.1], [0.2], [0.3]];
-        let points: Vec<(&[f64], &Seed)> = at.iter().zip(&seeds).map(|(a, s)| (&a[..], s)).collect();
+        let points: Vec<(&[f64], &Seed)> =
+            at.iter().zip(&seeds).map(|(a, s)| (&a[..], s)).collect();
         let prediction = predict(&points, &[0.4]).expect("small").expect("points");
         assert!(prediction.order <= 1);
     }

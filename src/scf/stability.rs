@@ -56,7 +56,11 @@ impl CarriedVectors {
     pub fn of(orbitals: &[Canonical], pairs: &Eigenpairs) -> Self {
         Self {
             occupied: orbitals.iter().map(|o| o.occupied.clone()).collect(),
-            tangents: pairs.vectors.iter().map(|k| tangents(orbitals, k)).collect(),
+            tangents: pairs
+                .vectors
+                .iter()
+                .map(|k| tangents(orbitals, k))
+                .collect(),
         }
     }
 
@@ -208,9 +212,7 @@ pub fn lowest_eigenpairs(
                     residual
                         .iter()
                         .zip(&gaps)
-                        .map(|(r, g)| {
-                            r.zip_map(g, |r, gap| r / (gap - value).max(0.05))
-                        })
+                        .map(|(r, g)| r.zip_map(g, |r, gap| r / (gap - value).max(0.05)))
                         .collect(),
                 );
             }
@@ -254,7 +256,10 @@ pub fn downhill(
     let largest = direction
         .iter()
         .flat_map(|k| k.iter().copied())
-        .fold(0.0, |m: f64, x| if x.abs() > m.abs() + 1e-6 { x } else { m });
+        .fold(
+            0.0,
+            |m: f64, x| if x.abs() > m.abs() + 1e-6 { x } else { m },
+        );
     let sign = if largest < 0.0 { -1.0 } else { 1.0 };
     let mut length = FIRST;
     let (plus, minus) = (at(sign * length)?, at(-sign * length)?);

@@ -38,7 +38,7 @@ pub struct HartreeFock {
 }
 
 /// Repulsion integrals kept from one point to the next.
-#[derive(Debug, Default)]
+#[derive(Debug, Clone, Default)]
 pub struct Workspace {
     list: Option<RepulsionList>,
 }
@@ -113,7 +113,11 @@ impl HartreeFock {
     /// Number of basis functions.
     #[must_use]
     pub fn functions(&self) -> usize {
-        self.shells_of_atom.iter().flatten().map(Shell::functions).sum()
+        self.shells_of_atom
+            .iter()
+            .flatten()
+            .map(Shell::functions)
+            .sum()
     }
 
     fn check_positions(&self, positions: &[Vector3<f64>]) -> Result<(), SurfaceError> {
@@ -192,7 +196,10 @@ impl HartreeFock {
                 });
                 let placed: Vec<Shell> = shells
                     .iter()
-                    .map(|s| Shell { atom: 0, ..s.clone() })
+                    .map(|s| Shell {
+                        atom: 0,
+                        ..s.clone()
+                    })
                     .collect();
                 let basis = Basis::new(placed, vec![Vector3::zeros()]);
                 if atom.ghost || basis.is_empty() {
@@ -412,10 +419,10 @@ impl HartreeFock {
         let evaluation = &settled.solution.evaluation;
         let finite = settled.solution.stop != StopReason::NotFinite;
         let densities = field.densities(&evaluation.occupied);
-        let total = densities
-            .iter()
-            .fold(DMatrix::zeros(geometry.basis.len(), geometry.basis.len()), |sum, p| sum + p)
-            * field.occupation().weight();
+        let total = densities.iter().fold(
+            DMatrix::zeros(geometry.basis.len(), geometry.basis.len()),
+            |sum, p| sum + p,
+        ) * field.occupation().weight();
         let atoms = geometry.molecule.atoms.len();
         let places = geometry.basis.function_atoms();
         let charges = |populations: Vec<f64>| -> Vec<f64> {
@@ -430,7 +437,9 @@ impl HartreeFock {
         let mulliken = properties::mulliken_populations(&total, &geometry.overlap, &places, atoms);
         let electrons = mulliken.iter().sum();
         let spins = match densities.as_slice() {
-            [alpha, beta] => properties::loewdin_populations(&(alpha - beta), &geometry.frame, &places, atoms),
+            [alpha, beta] => {
+                properties::loewdin_populations(&(alpha - beta), &geometry.frame, &places, atoms)
+            }
             _ => vec![0.0; atoms],
         };
         let s_squared = match evaluation.occupied.as_slice() {
