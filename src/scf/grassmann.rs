@@ -132,7 +132,8 @@ mod tests {
         let gamma = tangent_part(&a, &space(1.3)) * 1e-9;
         let b = exponential(&a, &gamma).expect("small");
         let again = logarithm(&a, &b).expect("small").expect("near");
-        assert!((again - &gamma).amax() < 1e-15);
+        // Rounding of the space itself, of order one, is all that may be lost.
+        assert!((again - &gamma).amax() < 1e-14);
     }
 
     #[test]
