@@ -571,7 +571,7 @@ impl CurveLevel {
         for minimum in &self.minima {
             let at = frame.px((minimum.x, minimum.energy));
             if frame.area.holds(at) {
-                minimum_mark(canvas, at, style.colour);
+                legend::minimum(canvas, at, style.colour);
                 occupied.add_box(
                     Rect {
                         left: at.0,
@@ -584,12 +584,6 @@ impl CurveLevel {
             }
         }
     }
-}
-
-/// The mark of a minimum: a diamond of the level's colour around white.
-pub(super) fn minimum_mark(canvas: &mut Canvas, at: Px, colour: Rgb) {
-    canvas.marker(at, 5.0, Marker::Diamond, colour);
-    canvas.marker(at, 2.0, Marker::Diamond, PAPER);
 }
 
 /// Pieces per interval that make a run look smooth: about 3 px each.

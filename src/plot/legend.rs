@@ -20,7 +20,10 @@ pub(super) const DOT: f64 = 0.7;
 #[derive(Debug, Clone, Copy)]
 pub(super) enum Sample {
     Line(Stroke, Option<Marker>),
-    Marker(Marker, Rgb),
+    /// minimum
+    Minimum(Rgb),
+    /// words alone
+    None,
     /// point without a converged energy
     Tick(Rgb),
     /// finding
@@ -104,7 +107,8 @@ pub(super) fn draw_sample(canvas: &mut Canvas, sample: Sample, (x, y): Px) {
                 canvas.marker(middle, 3.2, marker, stroke.colour);
             }
         }
-        Sample::Marker(marker, colour) => canvas.marker(middle, 5.0, marker, colour),
+        Sample::Minimum(colour) => minimum(canvas, middle, colour),
+        Sample::None => {}
         Sample::Tick(colour) => failure_tick(canvas, (middle.0, y + 4.0), colour),
         Sample::Ring => finding_ring(canvas, middle),
         Sample::Hatch => hatch(
@@ -130,6 +134,12 @@ pub(super) fn failure_tick(canvas: &mut Canvas, foot: Px, colour: Rgb) {
 pub(super) fn finding_ring(canvas: &mut Canvas, centre: Px) {
     canvas.ring(centre, 7.0, Stroke::new(PAPER, 3.2));
     canvas.ring(centre, 7.0, Stroke::new(INK, 1.4));
+}
+
+/// The mark of a minimum: a diamond around white.
+pub(super) fn minimum(canvas: &mut Canvas, at: Px, colour: Rgb) {
+    canvas.marker(at, 5.2, Marker::Diamond, colour);
+    canvas.marker(at, 2.0, Marker::Diamond, PAPER);
 }
 
 /// The mark of a saddle point: a cross with a pale casing.

@@ -12,30 +12,30 @@
 //! Conventions: a point without a converged energy is a tick on the horizontal axis and interrupts
 //! its line; a point with a finding has a ring; a line that leaves the frame ends in an arrowhead.
 
-//mod audit;
+mod audit;
 mod axis;
 mod canvas;
 mod colour;
 mod curve;
-//mod density;
+mod density;
 mod font;
 mod frame;
 mod interpolate;
 mod isoline;
 mod legend;
-//mod panels;
+mod panels;
 mod place;
 mod range;
 mod style;
 mod surface;
-//mod vibration;
+mod vibration;
 
-//pub use audit::{AuditFigure, AuditLevel};
+pub use audit::{AuditFigure, AuditLevel};
 pub use axis::Axis;
 pub use curve::{CurveFigure, CurveFit, CurveLevel, CurveLimit, CurveMark};
-//pub use density::{DensityFigure, DensityTrace};
+pub use density::{DensityFigure, DensityTrace};
 pub use surface::{SurfaceFigure, SurfaceMark};
-//pub use vibration::{VibrationFigure, VibrationState};
+pub use vibration::{VibrationFigure, VibrationState};
 
 /// A finished figure as SVG text.
 #[derive(Debug, Clone, PartialEq, Eq)]

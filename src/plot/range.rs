@@ -47,9 +47,9 @@ pub(super) fn cap_and_step(heights: &[f64], wanted: Option<f64>) -> (f64, f64) {
         Some(cap) if cap > 0.0 && cap.is_finite() => cap,
         _ => {
             let bulk = sorted
-                .get(sorted.len().saturating_sub(1) * 80 / 100)
-                .map_or(0.0, |q| 1.25 * q);
-            if top <= 1.3 * bulk || bulk <= 0.0 {
+                .get(sorted.len().saturating_sub(1) * 85 / 100)
+                .map_or(0.0, |q| 1.15 * q);
+            if top <= 1.2 * bulk || bulk <= 0.0 {
                 top
             } else {
                 bulk

@@ -8,7 +8,7 @@ use super::frame::{Frame, Rect, X_AXIS_ROOM, heading, y_axis_room};
 use super::isoline::{FineGrid, Region, regions};
 use super::legend::{self, Entry, Sample};
 use super::place::{Occupied, gap_to};
-use super::style::{INK, LABEL_SIZE, MARGIN, Marker, NOTE_SIZE, PAPER, PATH, SLATE, TICK_SIZE};
+use super::style::{INK, LABEL_SIZE, MARGIN, NOTE_SIZE, PAPER, PATH, SLATE, TICK_SIZE};
 use super::{Figure, PlotError, curve, range, require_finite};
 
 /// Height of the data area, px; its width follows the sweeps.
@@ -127,9 +127,10 @@ impl SurfaceFigure {
         }
         let mut occupied = Occupied::default();
         self.note_marks(&frame, &mut occupied);
-        draw_isolines(&mut canvas, &frame, &lines, &bands, &failed, &mut occupied);
+        let lettered = draw_isolines(&mut canvas, &frame, &lines, &bands, &failed, &mut occupied);
         frame_axes(&mut canvas, &frame, &y_ticks, self);
-        self.draw_marks(&mut canvas, &frame, &sorted, &mut occupied);
+        self.draw_points(&mut canvas, &frame, &sorted, &lettered);
+        self.draw_marks(&mut canvas, &frame, &mut occupied);
         draw_bar(&mut canvas, &frame, &bands, &bar_labels, &self.energy_unit);
         if known.is_empty() {
             canvas.text(
@@ -293,25 +294,23 @@ impl SurfaceFigure {
         }
     }
 
-    fn draw_marks(
-        &self,
-        canvas: &mut Canvas,
-        frame: &Frame,
-        sorted: &Sorted,
-        occupied: &mut Occupied,
-    ) {
-        if self.shows_points() {
-            // The computed points themselves, so that the reader sees what is interpolated.
-            for (k, value) in sorted.energies.iter().enumerate() {
-                if value.is_some() {
-                    let at = (sorted.x[k / sorted.y.len()], sorted.y[k % sorted.y.len()]);
-                    canvas.disc(frame.px(at), legend::DOT, INK);
-                }
+    /// The computed points themselves, so that the reader sees what is interpolated; none beside
+    /// an isoline's number, where a dot would read as a decimal point.
+    fn draw_points(&self, canvas: &mut Canvas, frame: &Frame, sorted: &Sorted, lettered: &[Rect]) {
+        if !self.shows_points() {
+            return;
+        }
+        for (k, value) in sorted.energies.iter().enumerate() {
+            let at = frame.px((sorted.x[k / sorted.y.len()], sorted.y[k % sorted.y.len()]));
+            if value.is_some() && !lettered.iter().any(|r| r.grown(3.0).holds(at)) {
+                canvas.disc(at, legend::DOT, INK);
             }
         }
-        let path: Vec<(f64, f64)> = self.path.clone();
+    }
+
+    fn draw_marks(&self, canvas: &mut Canvas, frame: &Frame, occupied: &mut Occupied) {
         for (colour, width) in [(PAPER, 4.4), (PATH, 2.2)] {
-            for piece in frame.clipped(&path) {
+            for piece in frame.clipped(&self.path) {
                 canvas.line(&piece, Stroke::new(colour, width));
             }
         }
@@ -325,7 +324,7 @@ impl SurfaceFigure {
             legend::saddle(canvas, frame.px((mark.x, mark.y)));
         }
         for mark in self.minima.iter().filter(inside) {
-            minimum_mark(canvas, frame.px((mark.x, mark.y)));
+            legend::minimum(canvas, frame.px((mark.x, mark.y)), INK);
         }
         for mark in self.saddles.iter().chain(&self.minima).filter(inside) {
             let at = frame.px((mark.x, mark.y));
@@ -380,7 +379,7 @@ impl SurfaceFigure {
             entries.push(Entry::new(Sample::Dot, "computed point"));
         }
         if !self.minima.is_empty() {
-            entries.push(Entry::new(Sample::Marker(Marker::Diamond, INK), "minimum"));
+            entries.push(Entry::new(Sample::Minimum(INK), "minimum"));
         }
         if !self.saddles.is_empty() {
             entries.push(Entry::new(Sample::Saddle, "saddle point"));
@@ -594,6 +593,7 @@ fn filled(sorted: &Sorted) -> Option<Vec<f64>> {
     Some(values.into_iter().flatten().collect())
 }
 
+/// Draws the isolines with their numbers; returns the boxes of the numbers.
 fn draw_isolines(
     canvas: &mut Canvas,
     frame: &Frame,
@@ -601,7 +601,7 @@ fn draw_isolines(
     bands: &Bands,
     failed: &[Rect],
     occupied: &mut Occupied,
-) {
+) -> Vec<Rect> {
     for rect in failed {
         occupied.add_box(*rect);
     }
@@ -640,6 +640,7 @@ fn draw_isolines(
             }
         }
     }
+    labels.into_iter().flatten().collect()
 }
 
 /// The best place for a label on the isolines of one threshold: on a long line, free of everything
@@ -717,11 +718,6 @@ fn frame_axes(
         &figure.y.label(),
         Lettering::new(LABEL_SIZE, INK, Anchor::Start),
     );
-}
-
-fn minimum_mark(canvas: &mut Canvas, at: Px) {
-    canvas.marker(at, 5.4, Marker::Diamond, INK);
-    canvas.marker(at, 2.0, Marker::Diamond, PAPER);
 }
 
 fn draw_bar(
