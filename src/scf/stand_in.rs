@@ -81,3 +81,10 @@ impl CoulombExchange for RepulsionList {
         out
     }
 }
+impl RepulsionList {
+    /// Bytes.
+    pub fn bytes_needed(n: usize) -> u64 {
+        let p = (n * (n + 1) / 2) as u64;
+        p * (p + 1) * 4
+    }
+}
