@@ -16,12 +16,18 @@ mod one_electron;
 pub mod overlap;
 pub mod recurrence;
 pub mod reference;
+pub mod repulsion;
+pub mod screening;
 pub mod values;
 
 pub use attraction::attraction;
 pub use dipole::dipole;
 pub use kinetic::kinetic;
 pub use overlap::{overlap, overlap_between};
+pub use repulsion::{
+    CoulombExchange, CoulombExchangePair, DirectRepulsion, IntegralCounts, RepulsionList,
+    RepulsionSettings,
+};
 pub use values::basis_values;
 
 #[cfg(test)]
