@@ -12,6 +12,7 @@ pub mod guess;
 pub mod iteration;
 pub mod orthogonal;
 pub mod properties;
+pub mod quasi_newton;
 pub mod second_order;
 pub mod seed;
 mod settings;

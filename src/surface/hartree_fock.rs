@@ -293,6 +293,7 @@ impl HartreeFock {
         field: &mut Field<'_>,
     ) -> Result<Settled, SurfaceError> {
         let (beginning, carried) = self.beginning(request, geometry)?;
+        let newest = start_points(&request.start).last().map(|p| p.seed.state());
         let follow = request
             .follow
             .filter(|seed| self.fits(seed, geometry.basis.len()))
@@ -302,7 +303,8 @@ impl HartreeFock {
             limit: self.settings.iterations,
             carried,
             follow,
-            newton: false,
+            soft: newest.and_then(|s| s.internal.as_ref()),
+            downhill: false,
         };
         let mut solution = iteration::converge(field, beginning, &plan)?;
         let mut settled = Settled {
@@ -316,7 +318,6 @@ impl HartreeFock {
         if request.stability == StabilityDemand::None {
             return Ok(settled);
         }
-        let newest = start_points(&request.start).last().map(|p| p.seed.state());
         let mut internal = newest.and_then(|s| s.internal.clone());
         let mut triplet = newest.and_then(|s| s.triplet.clone());
         let mut products = 0;
@@ -396,17 +397,17 @@ impl HartreeFock {
         saddle: f64,
         plan: &mut Plan<'_>,
     ) -> Result<Solution, ScfError> {
-        plan.newton = false;
+        plan.downhill = false;
         let start = Beginning::Occupied(lower.occupied.clone());
         let solution = iteration::converge(field, start.clone(), plan)?;
         let below = lower.energy.min(saddle) + 1e-9;
         if solution.stop == StopReason::Converged && solution.evaluation.energy <= below {
             return Ok(solution);
         }
-        plan.newton = true;
+        plan.downhill = true;
         plan.limit = field.builds() + field.products() + self.settings.iterations;
         let monotone = iteration::converge(field, start, plan);
-        plan.newton = false;
+        plan.downhill = false;
         monotone
     }
 
