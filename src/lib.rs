@@ -1,11 +1,18 @@
 //! thalweg walks molecules along their potential-energy surfaces.
 //!
 //! Modules, each of which may use those before it:
-//! [`units`], [`elements`] ← [`molecule`] ← [`basis`] ← [`scf`] ← [`surface`] ← [`scan`] ← [`spec`].
+//!
+//! [`units`], [`elements`] ← [`molecule`] ← [`basis`] ← [`integrals`] ← [`scf`] ← [`surface`] ← [`scan`] ← [`spec`]
+//! ← [`job`] ← [`report`], [`plot`] ← [`cli`].
 
 pub mod basis;
+pub mod cli;
 pub mod elements;
+pub mod integrals;
+pub mod job;
 pub mod molecule;
+pub mod plot;
+pub mod report;
 pub mod scan;
 pub mod scf;
 pub mod spec;

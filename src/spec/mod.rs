@@ -19,8 +19,10 @@ pub use schema::schema;
 
 use crate::basis::{Basis, FunctionKind, Shell};
 use crate::molecule::Molecule;
-use crate::molecule::motion::{Motion, MotionError, set_all};
+use crate::molecule::motion::MotionError;
 use crate::scan::WalkSettings;
+use crate::scan::sweep::positions_at;
+pub use crate::scan::sweep::{Sweep, SweepValues};
 use crate::scf::{Method, ScfSettings};
 use crate::units::{EnergyUnit, LengthUnit};
 use nalgebra::Vector3;
@@ -67,6 +69,15 @@ pub struct Spec {
 }
 
 impl Spec {
+    /// Takes title, fits, vibrational states and output from another spec: what a report may change without a calculation.
+    pub fn take_reporting_from(&mut self, other: Self) {
+        self.title = other.title;
+        self.fits = other.fits;
+        self.vibration = other.vibration;
+        self.output = other.output;
+        self.text = resolved::text(self);
+    }
+
     /// Sixteen hexadecimal digits that differ between specs whose points differ: geometry, masses, basis functions, levels,
     /// sweeps, walk, SCF settings and whether gradients are computed. Title, fits, vibrational states, separated parts
     /// and output do not change a point and do not count.
@@ -87,27 +98,8 @@ impl Spec {
     /// # Errors
     /// Values that the coordinates cannot take; never for values of the grid.
     pub fn positions_at(&self, values: &[f64]) -> Result<Vec<Vector3<f64>>, MotionError> {
-        positions_at(&self.molecule, &self.sweeps, values)
+        positions_at(&self.molecule.positions, &self.sweeps, values)
     }
-}
-
-fn positions_at(
-    molecule: &Molecule,
-    sweeps: &[Sweep],
-    values: &[f64],
-) -> Result<Vec<Vector3<f64>>, MotionError> {
-    let mut positions = molecule.positions.clone();
-    let targets: Vec<(Motion, f64)> = sweeps
-        .iter()
-        .zip(values)
-        .flat_map(|(sweep, &value)| {
-            sweep
-                .motions()
-                .map(move |m| (m.clone(), m.coordinate.from_reported(value)))
-        })
-        .collect();
-    set_all(&targets, &mut positions)?;
-    Ok(positions)
 }
 
 /// A level of theory: method, basis, charge and multiplicity.
@@ -147,98 +139,6 @@ impl Level {
     pub fn basis(&self, molecule: &Molecule) -> Basis {
         Basis::of_molecule(&self.shells_of_atom, molecule)
     }
-}
-
-/// How the values of a sweep were written, in the spec's unit or degrees.
-#[derive(Debug, Clone, PartialEq)]
-pub enum SweepValues {
-    /// from, from + step, …, `to` included
-    Step {
-        /// first value
-        from: f64,
-        /// last value
-        to: f64,
-        /// difference of neighbours
-        step: f64,
-    },
-    /// evenly spaced, both ends included
-    Points {
-        /// first value
-        from: f64,
-        /// last value
-        to: f64,
-        /// number of values
-        points: usize,
-    },
-    /// one by one
-    List(Vec<f64>),
-}
-
-/// One swept internal coordinate and its values.
-#[derive(Debug, Clone, PartialEq)]
-pub struct Sweep {
-    /// The coordinate and the atoms that move.
-    pub motion: Motion,
-    /// Coordinates of the same kind moved in step, to the same value.
-    pub also: Vec<Motion>,
-    /// Values in ångström or degree, ascending, at least one.
-    pub values: Vec<f64>,
-    /// The values as they were written.
-    pub written: SweepValues,
-}
-
-impl Sweep {
-    /// `bond`, `angle` or `dihedral`.
-    #[must_use]
-    pub fn kind(&self) -> &'static str {
-        self.motion.coordinate.kind_word()
-    }
-
-    /// `angstrom` or `degree`.
-    #[must_use]
-    pub fn unit(&self) -> &'static str {
-        self.motion.coordinate.unit_word()
-    }
-
-    /// The coordinate itself and those moved in step.
-    pub fn motions(&self) -> impl Iterator<Item = &Motion> {
-        std::iter::once(&self.motion).chain(&self.also)
-    }
-
-    /// Labels of the coordinate's atoms.
-    #[must_use]
-    pub fn labels<'m>(&self, molecule: &'m Molecule) -> Vec<&'m str> {
-        labels(self.motion.coordinate.atoms(), molecule)
-    }
-
-    /// Name of the column of its values, such as `bond_O_H1_angstrom`.
-    #[must_use]
-    pub fn column_name(&self, molecule: &Molecule) -> String {
-        format!(
-            "{}_{}_{}",
-            self.kind(),
-            self.labels(molecule).join("_"),
-            self.unit()
-        )
-    }
-
-    /// Text for an axis, such as `O–H1 = O–H2 / Å`.
-    #[must_use]
-    pub fn axis_label(&self, molecule: &Molecule) -> String {
-        let names: Vec<String> = self
-            .motions()
-            .map(|m| labels(m.coordinate.atoms(), molecule).join("–"))
-            .collect();
-        let unit = if self.unit() == "degree" { "°" } else { "Å" };
-        format!("{} / {unit}", names.join(" = "))
-    }
-}
-
-fn labels<'m>(atoms: &[usize], molecule: &'m Molecule) -> Vec<&'m str> {
-    atoms
-        .iter()
-        .map(|&i| molecule.atoms.get(i).map_or("?", |a| a.label.as_str()))
-        .collect()
 }
 
 /// Parts into which the molecule dissociates.

@@ -42,7 +42,7 @@ fn written(x: f64, unit: LengthUnit) -> Option<f64> {
     .find(|length| unit.to_bohr(*length).to_bits() == x.to_bits())
 }
 
-fn text(spec: &Spec) -> String {
+pub(super) fn text(spec: &Spec) -> String {
     let mut out = String::new();
     // Writing to a string cannot fail.
     let _ = write_all(spec, &mut out);
@@ -212,7 +212,7 @@ fn coordinate(motion: &Motion, molecule: &Molecule) -> String {
 }
 
 fn labels(atoms: &[usize], molecule: &Molecule) -> String {
-    let labels: Vec<String> = super::labels(atoms, molecule)
+    let labels: Vec<String> = crate::scan::sweep::labels(atoms, molecule)
         .into_iter()
         .map(string)
         .collect();

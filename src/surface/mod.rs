@@ -4,6 +4,11 @@
 //! [`Surface`] is implemented by Hartree–Fock and by closed-form model surfaces whose
 //! answers are known, so that walks, journals, reports and figures are tested in milliseconds.
 
+mod hartree_fock;
+pub mod model;
+
+pub use crate::scf::StopReason;
+pub use hartree_fock::{HartreeFock, Workspace};
 use nalgebra::Vector3;
 use serde::{Deserialize, Serialize};
 
@@ -15,7 +20,7 @@ pub trait Surface: Sync {
     /// What a point leaves behind for its neighbours to start from.
     type Seed: Clone + Send + Sync;
     /// What is kept from one point to the next to save work.
-    type Workspace: Send;
+    type Workspace: Clone + Send;
 
     /// An empty workspace.
     fn workspace(&self) -> Self::Workspace;
@@ -96,18 +101,6 @@ pub struct PointOutcome<S> {
     pub record: PointRecord,
     /// What a neighbour may start from.
     pub seed: Option<S>,
-}
-
-/// Why a self-consistent field calculation stopped.
-#[derive(Debug, Clone, Copy, PartialEq, Eq, Serialize, Deserialize)]
-#[serde(rename_all = "kebab-case")]
-pub enum StopReason {
-    /// both thresholds met
-    Converged,
-    /// as many Fock builds as allowed
-    IterationLimit,
-    /// energy or density stopped being finite numbers
-    NotFinite,
 }
 
 /// Lowest eigenvalues of the orbital Hessians, hartree; negative: unstable.
@@ -208,6 +201,15 @@ pub enum SurfaceError {
         functions: usize,
         /// occupied orbitals of one spin
         occupied: usize,
+    },
+    /// Charge and multiplicity do not fit the molecule.
+    #[error(transparent)]
+    Electrons(crate::molecule::ElectronCountError),
+    /// Restricted orbitals for unpaired electrons.
+    #[error("restricted Hartree–Fock treats closed shells only, not multiplicity {multiplicity}")]
+    OpenShell {
+        /// multiplicity asked for
+        multiplicity: u32,
     },
     /// The eigenvalue iteration did not end.
     #[error("a matrix of order {order} could not be diagonalised")]

@@ -6,10 +6,11 @@ use crate::molecule::cartesian::check_distances;
 use crate::molecule::connectivity::Connectivity;
 use crate::molecule::internal::{Coordinate, CoordinateError};
 use crate::molecule::motion::{Motion, MotionError};
+use crate::scan::sweep::positions_at;
 use crate::spec::diagnostic::{Problems, all_of};
 use crate::spec::raw::{RawLabels, RawSweep, RawTied};
 use crate::spec::read::{Field, Given};
-use crate::spec::{MAX_POINTS, Sweep, positions_at};
+use crate::spec::{MAX_POINTS, Sweep};
 use crate::units::LengthUnit;
 use std::ops::Range;
 
@@ -335,7 +336,7 @@ fn grid(
             *value = sweep.values[rest % sweep.values.len()];
             rest /= sweep.values.len();
         }
-        let problem = match positions_at(molecule, sweeps, &at) {
+        let problem = match positions_at(&molecule.positions, sweeps, &at) {
             Ok(positions) => match check_distances(&molecule.atoms, &positions) {
                 Ok(()) => continue,
                 Err(near) => (near.to_string(), None),
