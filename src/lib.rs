@@ -5,5 +5,6 @@
 
 pub mod basis;
 pub mod elements;
+pub mod fit;
 pub mod molecule;
 pub mod units;
