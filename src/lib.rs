@@ -8,3 +8,4 @@ pub mod elements;
 pub mod fit;
 pub mod molecule;
 pub mod units;
+pub mod vibration;

@@ -12,7 +12,7 @@ use super::extrema::Extremum;
 use std::ops::Range;
 
 /// A trial is acceptable when its predicted error of k is below this share of k …
-const ACCEPTABLE_ERROR: f64 = 2e-3;
+const ACCEPTABLE_ERROR: f64 = 1e-3;
 /// … or below this multiple of the smallest predicted error.
 const ACCEPTABLE_MULTIPLE: f64 = 5.0;
 
@@ -34,8 +34,8 @@ pub(super) struct Choice {
     pub(super) best: usize,
     /// Indices of all acceptable trials, the best among them.
     pub(super) acceptable: Vec<usize>,
-    /// Half range of k over the acceptable trials, or the predicted error of the best where that is
-    /// larger, divided by the best k.
+    /// Half range of k over the acceptable trials, or two leave-one-out standard errors of the best
+    /// where that is larger (a form that is exact leaves nothing but noise), divided by the best k.
     pub(super) spread: f64,
 }
 
@@ -68,7 +68,7 @@ pub(super) fn assess<M>(trials: &[Trial<M>], best: usize) -> Option<Choice> {
         low = low.min(trials[i].force_constant);
         high = high.max(trials[i].force_constant);
     }
-    let spread = (0.5 * (high - low)).max(trials[best].error) / k;
+    let spread = (0.5 * (high - low)).max(2.0 * trials[best].error) / k;
     Some(Choice {
         best,
         acceptable,
@@ -151,6 +151,9 @@ impl Growth {
             size += 1 + size / 13;
         }
         sizes.push(most);
-        sizes.into_iter().map(|n| self.nested[n - 1].clone()).collect()
+        sizes
+            .into_iter()
+            .map(|n| self.nested[n - 1].clone())
+            .collect()
     }
 }

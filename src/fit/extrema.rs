@@ -71,7 +71,11 @@ pub(super) fn check_curve(x: &[f64], energies: &[f64]) -> Result<(), FitError> {
             energies: energies.len(),
         });
     }
-    if let Some(at) = x.iter().zip(energies).position(|(a, b)| !(a + b).is_finite()) {
+    if let Some(at) = x
+        .iter()
+        .zip(energies)
+        .position(|(a, b)| !(a + b).is_finite())
+    {
         return Err(FitError::NotFinite { index: at });
     }
     match x.windows(2).position(|w| w[1] <= w[0]) {
@@ -210,7 +214,11 @@ fn turning_points(energies: &[f64], prominence: f64) -> Vec<(Kind, usize)> {
         }
     }
     if let Some(falling) = falling {
-        let kind = if falling { Kind::Minimum } else { Kind::Maximum };
+        let kind = if falling {
+            Kind::Minimum
+        } else {
+            Kind::Maximum
+        };
         found.push((kind, energies.len() - 1));
     }
     found
@@ -314,7 +322,10 @@ mod tests {
         let (x, e) = sample(|q| 0.3 / q, 1.0, 3.0, 21);
         let found = list(&x, &e, None);
         assert_eq!(found.len(), 2);
-        assert_eq!((found[0].kind, found[0].place), (Kind::Maximum, Place::Start));
+        assert_eq!(
+            (found[0].kind, found[0].place),
+            (Kind::Maximum, Place::Start)
+        );
         assert_eq!((found[1].kind, found[1].place), (Kind::Minimum, Place::End));
     }
 

@@ -45,7 +45,11 @@ impl Fourier {
         // From the highest multiple down: the constant may be a total energy.
         let mut sum = 0.0;
         for n in (1..self.cosines.len()).rev() {
-            sum += term(n, self.cosines[n], self.sines.get(n - 1).copied().unwrap_or(0.0));
+            sum += term(
+                n,
+                self.cosines[n],
+                self.sines.get(n - 1).copied().unwrap_or(0.0),
+            );
         }
         if m == 0 {
             sum += self.cosines.first().copied().unwrap_or(0.0);
@@ -58,7 +62,10 @@ impl Fourier {
     pub fn terms(&self) -> Vec<TorsionTerm> {
         (1..self.cosines.len())
             .map(|n| {
-                let (a, b) = (self.cosines[n], self.sines.get(n - 1).copied().unwrap_or(0.0));
+                let (a, b) = (
+                    self.cosines[n],
+                    self.sines.get(n - 1).copied().unwrap_or(0.0),
+                );
                 TorsionTerm {
                     multiple: n,
                     height: 2.0 * a.hypot(b),
@@ -100,7 +107,11 @@ impl Fourier {
                 }
             }
             let angle = 0.5 * (low + high);
-            let kind = if left < 0.0 { Kind::Minimum } else { Kind::Maximum };
+            let kind = if left < 0.0 {
+                Kind::Minimum
+            } else {
+                Kind::Maximum
+            };
             // An angle a rounding error below 2π is 0.
             let wrapped = (angle + 1e-12).rem_euclid(TAU) - 1e-12;
             found.push((kind, wrapped.max(0.0), self.derivative(angle, 0)));
@@ -172,7 +183,10 @@ fn whole_turn(x: &[f64], energies: &[f64], settings: &FitSettings) -> Result<Tur
         .collect();
     folded.sort_by(|a, b| a.0.total_cmp(&b.0));
     folded.dedup_by(|a, b| (a.0 - b.0).abs() < 1e-9);
-    let step = folded.windows(2).map(|w| w[1].0 - w[0].0).fold(0.0, f64::max);
+    let step = folded
+        .windows(2)
+        .map(|w| w[1].0 - w[0].0)
+        .fold(0.0, f64::max);
     let mut full: Vec<(f64, f64)> = folded
         .iter()
         .rev()
@@ -234,11 +248,24 @@ pub(super) fn fit(
         if x.len() < columns + 3 {
             break;
         }
-        let rows: Vec<_> = x.iter().map(|&a| row(a, order, !even, 0).transpose()).collect();
+        let rows: Vec<_> = x
+            .iter()
+            .map(|&a| row(a, order, !even, 0).transpose())
+            .collect();
         let linear = LinearFit::new(DMatrix::from_rows(&rows), &values)?;
-        let mut cosines: Vec<f64> = linear.coefficients.iter().take(order + 1).copied().collect();
+        let mut cosines: Vec<f64> = linear
+            .coefficients
+            .iter()
+            .take(order + 1)
+            .copied()
+            .collect();
         cosines[0] += floor;
-        let sines = linear.coefficients.iter().skip(order + 1).copied().collect();
+        let sines = linear
+            .coefficients
+            .iter()
+            .skip(order + 1)
+            .copied()
+            .collect();
         let series = Fourier { cosines, sines };
         for (place, found) in minima.iter().zip(&mut trials) {
             let Some(angle) = series.minimum_near(*place, 2.0 * step) else {
@@ -347,7 +374,9 @@ fn describe(
         parameters.insert("barrier_down_hartree".to_owned(), down.2 - energy);
     }
     let notes = if even {
-        vec!["the points cover half a turn: the torsion is taken to be even in the angle".to_owned()]
+        vec![
+            "the points cover half a turn: the torsion is taken to be even in the angle".to_owned(),
+        ]
     } else {
         Vec::new()
     };
@@ -432,7 +461,8 @@ mod tests {
         };
         for m in 0..4 {
             let h = 1e-4;
-            let numeric = (series.derivative(0.9 + h, m) - series.derivative(0.9 - h, m)) / (2.0 * h);
+            let numeric =
+                (series.derivative(0.9 + h, m) - series.derivative(0.9 - h, m)) / (2.0 * h);
             assert!((numeric - series.derivative(0.9, m + 1)).abs() < 1e-6);
         }
     }

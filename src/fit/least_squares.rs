@@ -85,7 +85,11 @@ impl LinearFit {
     pub fn leave_one_out(&self) -> DVector<f64> {
         self.residuals.zip_map(&self.leverage, |e, h| {
             let rest = 1.0 - h;
-            if rest > 1e-10 { e / rest } else { f64::INFINITY }
+            if rest > 1e-10 {
+                e / rest
+            } else {
+                f64::INFINITY
+            }
         })
     }
 
@@ -150,8 +154,8 @@ mod tests {
         let fit = LinearFit::new(design.clone(), &values).unwrap();
         let loo = fit.leave_one_out();
         for i in 0..9 {
-            let less =
-                LinearFit::new(design.clone().remove_row(i), &values.clone().remove_row(i)).unwrap();
+            let less = LinearFit::new(design.clone().remove_row(i), &values.clone().remove_row(i))
+                .unwrap();
             let predicted = (design.row(i) * &less.coefficients)[0];
             assert!((values[i] - predicted - loo[i]).abs() < 1e-13);
         }

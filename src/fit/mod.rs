@@ -3,9 +3,9 @@
 //! Coordinates in bohr or radian, energies in hartree, results in atomic units; [`constant`] turns a
 //! second derivative into the units of the model that will use it.
 
-mod choice;
 #[cfg(test)]
 mod checks;
+mod choice;
 pub mod constant;
 mod curve;
 pub mod extrema;
@@ -13,6 +13,7 @@ pub mod fourier;
 pub mod least_squares;
 pub mod morse;
 pub mod polynomial;
+pub mod spline;
 
 pub use constant::{Convention, Coordinate, ForceConstant, Verdict, verdict};
 pub use extrema::{ExtremaSettings, Extremum, Kind, Place, extrema};
@@ -95,6 +96,14 @@ pub enum FitError {
         /// number of energies
         energies: usize,
     },
+    /// Too few points for the form.
+    #[error("{points} points are too few, {needed} are needed")]
+    TooFewPoints {
+        /// points given
+        points: usize,
+        /// points needed
+        needed: usize,
+    },
     /// A coordinate or energy is NaN or infinite.
     #[error("point {index} is not finite")]
     NotFinite {
@@ -124,7 +133,9 @@ pub enum FitError {
         to: usize,
     },
     /// The curve has no minimum between its ends.
-    #[error("the lowest of {points} points lies at an end of the curve: there is no minimum to fit")]
+    #[error(
+        "the lowest of {points} points lies at an end of the curve: there is no minimum to fit"
+    )]
     NoMinimum {
         /// points of the curve
         points: usize,
@@ -237,8 +248,8 @@ pub struct Fit {
     pub third_derivative: Option<f64>,
     /// Fourth derivative, where the form gives it.
     pub fourth_derivative: Option<f64>,
-    /// Half range of the force constant over all acceptable orders and windows (at least the
-    /// leave-one-out error of the chosen one), divided by the force constant.
+    /// Half range of the force constant over all acceptable orders and windows (at least two
+    /// leave-one-out standard errors of the chosen one), divided by the force constant.
     pub spread: f64,
     /// Orders and windows whose leave-one-out error is acceptable: those the spread runs over.
     pub trials_accepted: usize,

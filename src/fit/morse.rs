@@ -217,7 +217,10 @@ fn attempt(
     }
     let mut morse = problem.morse();
     let inside = morse.equilibrium > x[0] && morse.equilibrium < x[x.len() - 1];
-    if !inside || morse.exponents[0].is_nan() || morse.exponents[0] <= 0.0 || !morse.depth.is_finite()
+    if !inside
+        || morse.exponents[0].is_nan()
+        || morse.exponents[0] <= 0.0
+        || !morse.depth.is_finite()
     {
         return None;
     }
@@ -318,7 +321,10 @@ pub(super) fn fit(
     let (depth_error, exponent_error) = if settings.morse_depth.is_some() {
         (0.0, error_of(&[(LOG_K, 0.5 * b0)]))
     } else {
-        let depth = [(LOG_K, morse.depth), (FIRST_EXPONENT, -2.0 * morse.depth / b0)];
+        let depth = [
+            (LOG_K, morse.depth),
+            (FIRST_EXPONENT, -2.0 * morse.depth / b0),
+        ];
         (error_of(&depth), error_of(&[(FIRST_EXPONENT, 1.0)]))
     };
     let mut parameters = BTreeMap::from([
@@ -339,7 +345,10 @@ pub(super) fn fit(
         parameters.insert(name, *b);
     }
     let half_range = |value: fn(&Morse) -> f64| {
-        let values = choice.acceptable.iter().map(|&i| value(&trials[i].model.morse));
+        let values = choice
+            .acceptable
+            .iter()
+            .map(|&i| value(&trials[i].model.morse));
         let (low, high) = values.fold((f64::INFINITY, f64::NEG_INFINITY), |(l, h), v| {
             (l.min(v), h.max(v))
         });
@@ -347,7 +356,10 @@ pub(super) fn fit(
     };
     let parameter_spreads = BTreeMap::from([
         ("depth_hartree".to_owned(), half_range(|m| m.depth)),
-        ("exponent_per_bohr".to_owned(), half_range(|m| m.exponents[0])),
+        (
+            "exponent_per_bohr".to_owned(),
+            half_range(|m| m.exponents[0]),
+        ),
     ]);
     let top = curve.energies[trial.range.clone()]
         .iter()
@@ -356,7 +368,8 @@ pub(super) fn fit(
     let mut notes = Vec::new();
     if settings.morse_depth.is_none() && top - morse.floor < 0.8 * morse.depth {
         notes.push(
-            "the depth is an extrapolation: the points used rise to less than 80 % of it".to_owned(),
+            "the depth is an extrapolation: the points used rise to less than 80 % of it"
+                .to_owned(),
         );
     }
     if trial.order > 0 {
@@ -413,8 +426,8 @@ mod tests {
             - 0.15 * at(-2)
             + at(-3) / 90.0)
             / (h * h);
-        let third = ((at(3) - at(-3)) * -0.125 + (at(2) - at(-2)) - 1.625 * (at(1) - at(-1)))
-            / h.powi(3);
+        let third =
+            ((at(3) - at(-3)) * -0.125 + (at(2) - at(-2)) - 1.625 * (at(1) - at(-1))) / h.powi(3);
         let [k, f3, _] = m.derivatives();
         assert!((k - second).abs() < 1e-8 * k);
         assert!((f3 - third).abs() < 1e-4 * f3.abs());
@@ -449,7 +462,8 @@ mod tests {
                 let (mut up, mut down) = (parameters.clone(), parameters.clone());
                 up[j] += h;
                 down[j] -= h;
-                let numeric = (problem(&down).differences() - problem(&up).differences()) / (2.0 * h);
+                let numeric =
+                    (problem(&down).differences() - problem(&up).differences()) / (2.0 * h);
                 for i in 0..x.len() {
                     assert!((analytic[(i, j)] - numeric[i]).abs() < 1e-9);
                 }

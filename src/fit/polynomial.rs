@@ -66,7 +66,10 @@ impl Series {
         let (centre, half) = Self::frame(x);
         let mut design = DMatrix::zeros(x.len(), order + 1);
         for (i, &v) in x.iter().enumerate() {
-            for (j, t) in chebyshev((v - centre) / half, order, 0)[0].iter().enumerate() {
+            for (j, t) in chebyshev((v - centre) / half, order, 0)[0]
+                .iter()
+                .enumerate()
+            {
                 design[(i, j)] = *t;
             }
         }
@@ -102,7 +105,10 @@ impl Series {
     fn gradient(&self, x: f64, derivative: usize) -> DVector<f64> {
         let table = chebyshev((x - self.centre) / self.half, self.order(), derivative);
         let scale = self.half.powi(derivative as i32);
-        DVector::from_iterator(self.order() + 1, table[derivative].iter().map(|t| t / scale))
+        DVector::from_iterator(
+            self.order() + 1,
+            table[derivative].iter().map(|t| t / scale),
+        )
     }
 
     /// Value and derivatives at x, `highest + 1` numbers.
@@ -184,8 +190,7 @@ fn attempt(
     let d = series.derivatives(equilibrium, 3);
     let (k, third) = (d[2], d[3]);
     // k is taken at the fit's own minimum, which moves with the data: δk = δf″ − (f‴/f″) δf′.
-    let gradient =
-        series.gradient(equilibrium, 2) - series.gradient(equilibrium, 1) * (third / k);
+    let gradient = series.gradient(equilibrium, 2) - series.gradient(equilibrium, 1) * (third / k);
     let error = linear.jackknife_error(&gradient, noise);
     (k > 0.0 && error.is_finite()).then_some(Trial {
         order,
@@ -219,7 +224,13 @@ pub(super) fn fit(
     let mut trials = Vec::new();
     for order in from.max(2)..=to {
         for range in growth.windows(order + 3) {
-            trials.extend(attempt(curve, minimum, order, range, settings.noise_hartree));
+            trials.extend(attempt(
+                curve,
+                minimum,
+                order,
+                range,
+                settings.noise_hartree,
+            ));
         }
     }
     let choice = choose(&trials).ok_or(FitError::NoFit {
