@@ -14,6 +14,7 @@ pub mod least_squares;
 pub mod morse;
 pub mod polynomial;
 pub mod spline;
+pub mod surface;
 
 pub use constant::{Convention, Coordinate, ForceConstant, Verdict, verdict};
 pub use extrema::{ExtremaSettings, Extremum, Kind, Place, extrema};

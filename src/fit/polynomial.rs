@@ -22,7 +22,7 @@ pub struct Series {
 /// m-th derivatives of T_0 … T_order at t, `table[m][j]`, for m = 0 … `derivatives`, by
 /// T_{j+1}^{(m)} = 2t T_j^{(m)} + 2m T_j^{(m−1)} − T_{j−1}^{(m)}
 /// (the three-term recurrence differentiated m times).
-fn chebyshev(t: f64, order: usize, derivatives: usize) -> Vec<Vec<f64>> {
+pub(super) fn chebyshev(t: f64, order: usize, derivatives: usize) -> Vec<Vec<f64>> {
     let mut table = vec![vec![0.0; order + 1]; derivatives + 1];
     table[0][0] = 1.0;
     if order >= 1 {

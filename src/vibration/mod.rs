@@ -4,13 +4,16 @@
 
 #[cfg(test)]
 mod checks;
+pub mod diatomic;
 pub mod elements;
 pub mod frequency;
+pub mod harmonic;
 pub mod potential;
 pub mod states;
 
 pub use frequency::wavenumber_per_cm;
-pub use potential::Potential;
+pub use harmonic::{HarmonicAnalysis, NormalMode, harmonic_analysis};
+pub use potential::{Domain, Potential};
 pub use states::{State, States, StatesSettings, states};
 
 /// Why there are no vibrational states or frequencies.

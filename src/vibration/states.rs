@@ -227,6 +227,9 @@ pub(super) fn sorted_eigen(
     matrix: DMatrix<f64>,
 ) -> Result<(Vec<f64>, DMatrix<f64>), VibrationError> {
     let size = matrix.nrows();
+    if size == 0 {
+        return Ok((Vec::new(), matrix));
+    }
     let eigen = SymmetricEigen::try_new(matrix, f64::EPSILON, 100 * size.max(10))
         .ok_or(VibrationError::Eigenvalues { size })?;
     let mut order: Vec<usize> = (0..size).collect();
