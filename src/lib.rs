@@ -2,6 +2,7 @@
 //!
 //! Modules, each of which may use those before it:
 //! [`units`], [`elements`] ← [`molecule`] ← [`basis`].
+//! [`fit`] ← [`vibration`] use units and plain arrays only.
 
 pub mod basis;
 pub mod elements;

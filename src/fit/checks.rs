@@ -428,3 +428,40 @@ fn curves_without_a_minimum_say_so() {
     .unwrap();
     assert!(few.fits.is_empty() && few.failures.len() == 1);
 }
+
+#[test]
+fn the_spread_stays_honest_whatever_the_orders() {
+    // Orders too low for the curve: the constants are bad, and the spread must say so. A tenth of
+    // slack covers the rare case in which all windows err alike.
+    for orders in [
+        (2, 2),
+        (3, 3),
+        (4, 4),
+        (5, 5),
+        (6, 6),
+        (8, 8),
+        (2, 4),
+        (2, 6),
+    ] {
+        let mut found = 0;
+        for case in &cases() {
+            let mut s = settings(case);
+            s.orders = orders;
+            let fits = fit_curve(&case.x, &case.e, Form::Polynomial, case.coordinate, &s).unwrap();
+            let near = |f: &&Fit| (f.equilibrium - case.minimum).abs() < 0.1;
+            let Some(fit) = fits.fits.iter().find(near) else {
+                continue;
+            };
+            found += 1;
+            let error = (fit.force_constant / case.k - 1.0).abs();
+            assert!(
+                error <= 1.1 * fit.spread,
+                "{orders:?} {}: {error} {}",
+                case.name,
+                fit.spread
+            );
+            assert_eq!(fit.spread > 0.01, !fit.notes.is_empty());
+        }
+        assert!(found > 55, "{orders:?}: {found}");
+    }
+}

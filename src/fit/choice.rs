@@ -23,7 +23,7 @@ pub(super) struct Trial<M> {
     /// Points used, as indices.
     pub(super) range: Range<usize>,
     pub(super) force_constant: f64,
-    /// Leave-one-out error of the force constant, in its unit.
+    /// Model error of the force constant as leaving out points predicts it, in its unit.
     pub(super) error: f64,
     pub(super) model: M,
 }
@@ -34,8 +34,8 @@ pub(super) struct Choice {
     pub(super) best: usize,
     /// Indices of all acceptable trials, the best among them.
     pub(super) acceptable: Vec<usize>,
-    /// Half range of k over the acceptable trials, or two leave-one-out standard errors of the best
-    /// where that is larger (a form that is exact leaves nothing but noise), divided by the best k.
+    /// Half range of k over the acceptable trials, or the model error of the best where that is
+    /// larger, divided by the best k.
     pub(super) spread: f64,
 }
 
@@ -68,7 +68,7 @@ pub(super) fn assess<M>(trials: &[Trial<M>], best: usize) -> Option<Choice> {
         low = low.min(trials[i].force_constant);
         high = high.max(trials[i].force_constant);
     }
-    let spread = (0.5 * (high - low)).max(2.0 * trials[best].error) / k;
+    let spread = (0.5 * (high - low)).max(trials[best].error) / k;
     Some(Choice {
         best,
         acceptable,

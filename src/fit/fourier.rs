@@ -279,7 +279,7 @@ pub(super) fn fit(
                 order,
                 range: 0..x.len(),
                 force_constant: k,
-                error: linear.jackknife_error(&gradient, settings.noise_hartree),
+                error: linear.model_error(&gradient, settings.noise_hartree),
                 model: (series.clone(), linear.clone(), angle),
             });
         }

@@ -132,6 +132,18 @@ impl LinearFit {
             .sum::<f64>()
             .sqrt()
     }
+
+    /// Model error of a function of the coefficients with gradient `gradient`: Σ |∂f/∂y_i| |d_i| plus
+    /// the effect of independent `noise`.
+    ///
+    /// What a model lacks pulls neighbouring points the same way, so its effects add up instead of averaging
+    /// out, and many points on too wide a window must not look better than they are.
+    #[must_use]
+    pub fn model_error(&self, gradient: &DVector<f64>, noise: f64) -> f64 {
+        let sensitivity = self.sensitivity(gradient);
+        let shifts = sensitivity.component_mul(&self.leave_one_out());
+        shifts.lp_norm(1) + noise * sensitivity.norm()
+    }
 }
 
 fn rms(v: &DVector<f64>) -> f64 {

@@ -249,10 +249,10 @@ pub struct Fit {
     pub third_derivative: Option<f64>,
     /// Fourth derivative, where the form gives it.
     pub fourth_derivative: Option<f64>,
-    /// Half range of the force constant over all acceptable orders and windows (at least two
-    /// leave-one-out standard errors of the chosen one), divided by the force constant.
+    /// Half range of the force constant over all acceptable orders and windows (at least the
+    /// model error predicted for the chosen one), divided by the force constant.
     pub spread: f64,
-    /// Orders and windows whose leave-one-out error is acceptable: those the spread runs over.
+    /// Orders and windows whose predicted model error is acceptable: those the spread runs over.
     pub trials_accepted: usize,
     /// Orders and windows tried.
     pub trials: usize,
@@ -327,9 +327,31 @@ pub fn fit_curve(
     match (form, coordinate) {
         (Form::Morse, Coordinate::Angle) => return Err(FitError::NeedsLength),
         (Form::Fourier, Coordinate::Length) => return Err(FitError::NeedsAngle),
-        (Form::Fourier, Coordinate::Angle) => return fourier::fit(x, energies, settings),
         _ => {}
     }
+    let mut fits = match form {
+        Form::Fourier => fourier::fit(x, energies, settings)?,
+        _ => fit_minima(x, energies, form, coordinate, settings)?,
+    };
+    for fit in fits.fits.iter_mut().filter(|f| f.spread > WIDE_SPREAD) {
+        fit.notes.push(format!(
+            "the force constant is uncertain by {:.1} %: a finer step, higher orders or points further beyond the minimum are needed",
+            100.0 * fit.spread
+        ));
+    }
+    Ok(fits)
+}
+
+/// A larger spread of a force constant is worth a sentence.
+const WIDE_SPREAD: f64 = 0.01;
+
+fn fit_minima(
+    x: &[f64],
+    energies: &[f64],
+    form: Form,
+    coordinate: Coordinate,
+    settings: &FitSettings,
+) -> Result<CurveFits, FitError> {
     let curve = Curve::new(x, energies, &settings.extrema)?;
     let mut fits = CurveFits::default();
     for minimum in curve.minima() {

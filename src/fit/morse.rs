@@ -233,7 +233,7 @@ fn attempt(
     }
     let mut gradient = DVector::zeros(problem.parameters.len());
     gradient[LOG_K] = k;
-    let error = linear.jackknife_error(&gradient, settings.noise_hartree);
+    let error = linear.model_error(&gradient, settings.noise_hartree);
     morse.floor += floor;
     error.is_finite().then_some(Trial {
         order: terms,

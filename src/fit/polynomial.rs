@@ -183,15 +183,15 @@ fn attempt(
 ) -> Option<Trial<Solved>> {
     let x = &curve.x[range.clone()];
     let (series, linear) = Series::fit(x, &curve.energies[range.clone()], order).ok()?;
-    // The minimum of the fit may wander a step from the points' own, not further.
-    let lower = curve.x[minimum.index.saturating_sub(2)].max(x[0]);
-    let upper = curve.x[(minimum.index + 2).min(curve.x.len() - 1)].min(x[x.len() - 1]);
+    // The points bracket their minimum: a fit that has it elsewhere is none.
+    let lower = curve.x[minimum.index.saturating_sub(1)].max(x[0]);
+    let upper = curve.x[(minimum.index + 1).min(curve.x.len() - 1)].min(x[x.len() - 1]);
     let equilibrium = series.stationary(minimum.x, lower, upper)?;
     let d = series.derivatives(equilibrium, 3);
     let (k, third) = (d[2], d[3]);
     // k is taken at the fit's own minimum, which moves with the data: δk = δf″ − (f‴/f″) δf′.
     let gradient = series.gradient(equilibrium, 2) - series.gradient(equilibrium, 1) * (third / k);
-    let error = linear.jackknife_error(&gradient, noise);
+    let error = linear.model_error(&gradient, noise);
     (k > 0.0 && error.is_finite()).then_some(Trial {
         order,
         range,

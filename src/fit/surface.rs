@@ -88,8 +88,8 @@ pub struct QuadraticField {
     pub k12: f64,
     /// ∂²E/∂q₂².
     pub k22: f64,
-    /// Half range of k₁₁, k₁₂, k₂₂ over the acceptable orders and windows (at least two leave-one-out
-    /// standard errors), in their units.
+    /// Half range of k₁₁, k₁₂, k₂₂ over the acceptable orders and windows (at least the predicted
+    /// model error), in their units.
     pub half_ranges: [f64; 3],
     /// The largest of these, each divided by √(kᵢᵢkⱼⱼ).
     pub spread: f64,
@@ -281,7 +281,7 @@ fn attempt(
                 gradient.axpy(-f3 * inverse[(l, n)], slope, 1.0);
             }
         }
-        linear.jackknife_error(&gradient, noise)
+        linear.model_error(&gradient, noise)
     });
     let scales = scales(&constants);
     let worst = (0..3).map(|c| errors[c] / scales[c]).fold(0.0, f64::max);
@@ -391,7 +391,7 @@ pub fn quadratic_field(
         let (low, high) = values.fold((f64::INFINITY, f64::NEG_INFINITY), |(l, h), v| {
             (l.min(v), h.max(v))
         });
-        (0.5 * (high - low)).max(2.0 * best.errors[c])
+        (0.5 * (high - low)).max(best.errors[c])
     });
     let scales = scales(&best.constants);
     Ok(QuadraticField {

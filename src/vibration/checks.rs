@@ -65,7 +65,7 @@ fn val_harmonic_levels() {
 fn val_morse_levels_on_both_grids() {
     let (d, a, r0, mu) = (0.17, 1.03, 1.4, 918.0);
     let v = |r: f64| d * (1.0 - (-a * (r - r0)).exp()).powi(2) - 1.0;
-    let omega = a * (2.0 * d / mu as f64).sqrt();
+    let omega = a * (2.0 * d / mu).sqrt();
     let x = a * a / (2.0 * mu);
     let exact: Vec<f64> = (0..8)
         .map(|n| f64::from(n) + 0.5)
@@ -347,4 +347,23 @@ fn a_varying_mass_is_a_change_of_coordinate() {
         .map(|v| omega * (f64::from(v) + 0.5) + c * c / (8.0 * mass))
         .collect();
     close(&found, &exact, 1e-7);
+}
+
+#[test]
+fn val_torsional_levels_of_hydrogen_peroxide() {
+    // R. H. Hunt, R. A. Leacock, C. W. Peters, K. T. Hecht, J. Chem. Phys. 42, 1931 (1965), from memory: V = 993 cos φ + 636
+    // cos 2φ + 44 cos 3φ and 40.28 cm⁻¹ for the kinetic term; observed levels 11.4, 254.2, 370.7 cm⁻¹ above
+    // the lowest. They let the kinetic term vary with the angle, hence 3 %.
+    let cm = 1.0 / PER_CM_PER_HARTREE;
+    let x: Vec<f64> = (0..72).map(|i| TAU * f64::from(i) / 72.0).collect();
+    let v = |a: f64| (993.0 * a.cos() + 636.0 * (2.0 * a).cos() + 44.0 * (3.0 * a).cos()) * cm;
+    let e: Vec<f64> = x.iter().map(|&a| v(a)).collect();
+    let well = Potential::of_torsion(&x, &e).unwrap();
+    let found = states(&well, 2.0 * 40.28 * cm, &wanted(4)).unwrap();
+    for (s, level) in found.states[1..].iter().zip([11.44, 254.2, 370.7]) {
+        let above = (s.energy - found.states[0].energy) / cm;
+        assert!((above - level).abs() < 0.03 * level, "{above}");
+    }
+    let split = found.multiplets(2, v(PI));
+    assert!((split[0].width / cm - 11.44).abs() < 0.35);
 }
