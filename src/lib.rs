@@ -1,12 +1,23 @@
 //! thalweg walks molecules along their potential-energy surfaces.
 //!
 //! Modules, each of which may use those before it:
-//! [`units`], [`elements`] ← [`molecule`] ← [`basis`].
-//! [`fit`] ← [`vibration`] use units and plain arrays only.
+//!
+//! [`units`], [`elements`] ← [`molecule`] ← [`basis`] ← [`integrals`] ← [`scf`] ← [`surface`] ← [`scan`] ← [`spec`]
+//! ← [`job`] ← [`report`], [`plot`] ← [`cli`].
+//! [`fit`] ← [`vibration`] use units and plain arrays only; job calls them.
 
 pub mod basis;
+pub mod cli;
 pub mod elements;
 pub mod fit;
+pub mod integrals;
+pub mod job;
 pub mod molecule;
+pub mod plot;
+pub mod report;
+pub mod scan;
+pub mod scf;
+pub mod spec;
+pub mod surface;
 pub mod units;
 pub mod vibration;

@@ -8,10 +8,17 @@
 //!
 //! Every function has unit norm, each Cartesian monomial separately.
 
+pub mod describe;
+pub mod error;
+mod file;
+pub mod library;
+pub mod set;
 pub mod shell;
 
 use crate::molecule::Molecule;
+pub use error::BasisError;
 use nalgebra::Vector3;
+pub use set::BasisSet;
 pub use shell::{Contraction, FunctionKind, Shell};
 
 /// Shells placed on the atoms of a molecule.
