@@ -4,10 +4,12 @@
 //!
 //! [`units`], [`elements`] ← [`molecule`] ← [`basis`] ← [`integrals`] ← [`scf`] ← [`surface`] ← [`scan`] ← [`spec`]
 //! ← [`job`] ← [`report`], [`plot`] ← [`cli`].
+//! [`fit`] ← [`vibration`] use units and plain arrays only; job calls them.
 
 pub mod basis;
 pub mod cli;
 pub mod elements;
+pub mod fit;
 pub mod integrals;
 pub mod job;
 pub mod molecule;
@@ -18,3 +20,4 @@ pub mod scf;
 pub mod spec;
 pub mod surface;
 pub mod units;
+pub mod vibration;
