@@ -6,6 +6,7 @@
 pub mod basis;
 pub mod elements;
 pub mod integrals;
+pub mod minimise;
 pub mod molecule;
 pub mod scan;
 pub mod scf;
