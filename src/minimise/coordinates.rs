@@ -10,7 +10,7 @@ use super::primitive::Primitive;
 use crate::molecule::Molecule;
 use crate::molecule::connectivity::Connectivity;
 use crate::molecule::frame::{fixed_perpendicular, sine_between};
-use crate::molecule::inertia::Inertia;
+use crate::molecule::inertia::{self, Inertia};
 use crate::molecule::internal::Coordinate;
 use nalgebra::{DMatrix, DVector, SymmetricEigen, Vector3};
 use std::f64::consts::PI;
@@ -39,7 +39,8 @@ pub struct InternalSet {
 /// Wilson's B matrix at one geometry and what follows from it: m coordinates, 3N positions, r independent ones.
 #[derive(Debug, Clone)]
 pub struct Frame {
-    /// B, m × 3N: derivatives of the coordinates by the positions.
+    /// B, m × 3N: derivatives of the coordinates by the positions, without what turns and shifts of the whole
+    /// molecule do to coordinates whose directions are fixed in space.
     pub b: DMatrix<f64>,
     /// Moore–Penrose inverse of B, 3N × m.
     pub inverse: DMatrix<f64>,
@@ -142,12 +143,7 @@ impl InternalSet {
 
     /// Follows a straight chain from `b` over `next` to the first atom that is not in the middle of one; returns the
     /// atom before it and that atom. None if `b` is itself in the middle of a chain.
-    fn far_end(
-        &self,
-        positions: &[Vector3<f64>],
-        b: usize,
-        next: usize,
-    ) -> Option<(usize, usize)> {
+    fn far_end(&self, positions: &[Vector3<f64>], b: usize, next: usize) -> Option<(usize, usize)> {
         if self.is_middle(positions, b) {
             return None;
         }
@@ -247,10 +243,12 @@ impl InternalSet {
     /// B, its inverse and the space it spans.
     ///
     /// # Errors
-    /// When the eigenvalue iteration does not end.
+    /// When the eigenvalue iteration does not end, or positions are not finite.
     pub fn frame(&self, positions: &[Vector3<f64>]) -> Result<Frame, MinimiseError> {
         let b = self.b_matrix(positions);
         let order = b.ncols();
+        let rigid = inertia::rigid_motions(&vec![1.0; positions.len()], positions)?;
+        let b = &b - &b * &rigid * rigid.transpose();
         let eigen = SymmetricEigen::try_new(b.transpose() * &b, f64::EPSILON, 1000)
             .ok_or(MinimiseError::Eigenproblem { order })?;
         let kept: Vec<usize> = (0..order)
@@ -350,7 +348,8 @@ pub(super) fn shift(positions: &mut [Vector3<f64>], step: &DVector<f64>, scale: 
 fn across(positions: &[Vector3<f64>], [a, b, c]: [usize; 3]) -> [Vector3<f64>; 2] {
     let along = (positions[c] - positions[a]).normalize();
     // A bend that is there already is taken as the first direction, so that it stays in its plane.
-    let bend = (positions[a] - positions[b]).normalize() + (positions[c] - positions[b]).normalize();
+    let bend =
+        (positions[a] - positions[b]).normalize() + (positions[c] - positions[b]).normalize();
     let bend = bend - along * along.dot(&bend);
     let first = if bend.norm() > 1e-3 {
         bend.normalize()

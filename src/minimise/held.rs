@@ -52,9 +52,10 @@ pub(super) fn conditions(
 pub(super) fn rest(conditions: &[Condition], positions: &[Vector3<f64>]) -> DVector<f64> {
     DVector::from_iterator(
         conditions.len(),
-        conditions
-            .iter()
-            .map(|c| c.primitive.difference(c.value, c.primitive.value(positions))),
+        conditions.iter().map(|c| {
+            c.primitive
+                .difference(c.value, c.primitive.value(positions))
+        }),
     )
 }
 

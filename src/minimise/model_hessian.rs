@@ -17,11 +17,7 @@ const EXPONENT: [[f64; 3]; 3] = [
     [0.3949, 0.28, 0.28],
 ];
 /// Reference distances in bohr by rows, from the same table (from memory).
-const REFERENCE_BOHR: [[f64; 3]; 3] = [
-    [1.35, 2.10, 2.53],
-    [2.10, 2.87, 3.40],
-    [2.53, 3.40, 3.40],
-];
+const REFERENCE_BOHR: [[f64; 3]; 3] = [[1.35, 2.10, 2.53], [2.10, 2.87, 3.40], [2.53, 3.40, 3.40]];
 /// Force constants of a stretch, bend and torsion where all weights are 1, hartree/bohr² or hartree/radian² (eq. 1 and
 /// text of the same paper, from memory).
 const STRETCH: f64 = 0.45;

@@ -121,6 +121,10 @@ struct Descent<'a, T> {
     stability: StabilityDemand,
     conditions: Vec<Condition>,
     curvature: Curvature,
+    /// What the Hessian was before any step: the model, made anew at each point, or one that was carried here.
+    base: Option<DMatrix<f64>>,
+    /// Changes of coordinates and of the gradient in them, step by step.
+    pairs: Vec<(DVector<f64>, DVector<f64>)>,
     /// Places of the held coordinates in the set.
     held: Vec<usize>,
     trust: f64,
@@ -162,6 +166,8 @@ impl<'a, T: Clone> Descent<'a, T> {
         let rest = DMatrix::identity(set.primitives.len(), set.primitives.len()) - spanned;
         let hessian = known + rest.transpose() * model * rest;
         let hessian = (&hessian + hessian.transpose()) * 0.5;
+        self.base = Some(hessian.clone());
+        self.pairs.clear();
         self.curvature = Curvature { set, hessian };
         Ok(())
     }
@@ -171,11 +177,7 @@ impl<'a, T: Clone> Descent<'a, T> {
         let Some(point) = self.point.take() else {
             return Ok(());
         };
-        if !self
-            .curvature
-            .set
-            .is_sound(&point.positions, &self.held)
-        {
+        if !self.curvature.set.is_sound(&point.positions, &self.held) {
             self.describe_anew(&point.positions)?;
         }
         let frame = self.curvature.set.frame(&point.positions)?;
@@ -233,7 +235,15 @@ impl<'a, T: Clone> Descent<'a, T> {
         let change = set.differences(&set.values(&new.positions), &set.values(&old.positions));
         let bend =
             here.inverse.transpose() * &new.gradient - frame.inverse.transpose() * &old.gradient;
-        step::update(&mut self.curvature.hessian, &change, &bend);
+        self.pairs.push((change.clone(), bend));
+        let mut hessian = match &self.base {
+            Some(base) => base.clone(),
+            None => model_hessian(&self.molecule, &new.positions, set),
+        };
+        for (change, bend) in &self.pairs {
+            step::update(&mut hessian, change, bend);
+        }
+        self.curvature.hessian = hessian;
         let rise = new.energy - old.energy;
         let length = change.amax();
         let ratio = if ahead.predicted < -1e-14 {
@@ -326,7 +336,8 @@ impl<'a, S: Surface> Solver<&'a Evaluator<'a, S>, State> for Descent<'a, S::Seed
                 break;
             };
             let found = problem.problem("gradient_calls", |e| {
-                e.point(positions, StabilityDemand::None).map_err(Error::new)
+                e.point(positions, StabilityDemand::None)
+                    .map_err(Error::new)
             })?;
             match found {
                 Ok(point) => new = Some(point),
@@ -410,7 +421,13 @@ pub(super) fn run<S: Surface>(
     settings: &MinimiseSettings,
     workspace: &mut S::Workspace,
 ) -> Result<Minimum<S::Seed>, MinimiseError> {
-    let (molecule, conditions, curvature, held) = prepare(&task)?;
+    let Prepared {
+        molecule,
+        conditions,
+        curvature,
+        base,
+        held,
+    } = prepare(&task)?;
     let evaluator = Evaluator {
         surface,
         coordinates: task.coordinates,
@@ -431,6 +448,8 @@ pub(super) fn run<S: Surface>(
         stability: task.stability,
         conditions,
         curvature,
+        base,
+        pairs: Vec::new(),
         held,
         trust: settings.trust,
         point: None,
@@ -452,7 +471,11 @@ pub(super) fn run<S: Surface>(
         };
         let (record, seed) = evaluator.evaluate(&point.positions, descent.stability, false)?;
         let left = record.stability.is_some_and(|s| s.left > 0);
-        if left && record.energy.is_some_and(|e| e < point.energy - SAME_SOLUTION) {
+        if left
+            && record
+                .energy
+                .is_some_and(|e| e < point.energy - SAME_SOLUTION)
+        {
             descent.molecule.positions.clone_from(&point.positions);
             descent.point = None;
             descent.ahead = None;
@@ -488,7 +511,13 @@ fn descend<'a, S: Surface>(
     }
 }
 
-type Prepared = (Molecule, Vec<Condition>, Curvature, Vec<usize>);
+struct Prepared {
+    molecule: Molecule,
+    conditions: Vec<Condition>,
+    curvature: Curvature,
+    base: Option<DMatrix<f64>>,
+    held: Vec<usize>,
+}
 
 /// Coordinates, Hessian and a start at which the held coordinates have their values.
 fn prepare<T>(task: &Task<'_, T>) -> Result<Prepared, MinimiseError> {
@@ -505,13 +534,19 @@ fn prepare<T>(task: &Task<'_, T>) -> Result<Prepared, MinimiseError> {
         None => (InternalSet::of(&molecule, &required), None),
     };
     let held = places(&mut set, &conditions);
-    let hessian = match hessian {
-        Some(hessian) if hessian.nrows() == set.primitives.len() => hessian,
-        _ => model_hessian(&molecule, &molecule.positions, &set),
-    };
+    let base = hessian.filter(|h| h.nrows() == set.primitives.len());
+    let hessian = base
+        .clone()
+        .unwrap_or_else(|| model_hessian(&molecule, &molecule.positions, &set));
     let curvature = Curvature { set, hessian };
     approach(&curvature, &held, &conditions, &mut molecule.positions)?;
-    Ok((molecule, conditions, curvature, held))
+    Ok(Prepared {
+        molecule,
+        conditions,
+        curvature,
+        base,
+        held,
+    })
 }
 
 /// Brings the held coordinates to their values while the others follow as the Hessian lets them: the change that

@@ -102,17 +102,19 @@ pub fn step(
         rational_root(&eigen.eigenvalues, &along).min(lowest - POSITIVE)
     };
     let mut change = at(shift);
-    let bounded = change.amax() > trust.largest;
+    // Positions may move twice as far as coordinates: a poorly conditioned set must not fling atoms about.
+    let size = |change: &DVector<f64>| change.amax().max(0.5 * (&frame.inverse * change).amax());
+    let bounded = size(&change) > trust.largest;
     if bounded {
         // The largest change falls as the shift is lowered: bracket, then halve.
         let (mut high, mut low) = (shift, shift - 0.1);
-        while at(low).amax() > trust.largest && low > -1e6 {
+        while size(&at(low)) > trust.largest && low > -1e6 {
             high = low;
             low = shift + 4.0 * (low - shift);
         }
         for _ in 0..60 {
             let middle = 0.5 * (low + high);
-            if at(middle).amax() > trust.largest {
+            if size(&at(middle)) > trust.largest {
                 high = middle;
             } else {
                 low = middle;
