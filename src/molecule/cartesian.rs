@@ -258,8 +258,8 @@ pub fn cartesian_text(entries: &[Entry]) -> String {
     text
 }
 
-/// One frame of an XYZ file: count, comment (its line breaks made spaces), symbols and positions (given in bohr) in ångström to
-/// ten decimals.
+/// One frame of an XYZ file: count, comment (its line breaks made spaces), symbols, and the positions (given in bohr)
+/// in ångström to ten decimals.
 #[must_use]
 pub fn xyz_frame(atoms: &[Atom], positions: &[Vector3<f64>], comment: &str) -> String {
     let comment = comment.replace(['\n', '\r'], " ");
@@ -275,4 +275,174 @@ pub fn xyz_frame(atoms: &[Atom], positions: &[Vector3<f64>], comment: &str) -> S
         );
     }
     text
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use proptest::prelude::*;
+
+    fn problems(text: &str, errors: Vec<GeometryError>) -> Vec<(&str, GeometryProblem)> {
+        errors
+            .into_iter()
+            .map(|error| (&text[error.span], error.problem))
+            .collect()
+    }
+
+    fn labels(entries: &[Entry]) -> Vec<&str> {
+        entries.iter().map(|(label, _, _)| label.as_str()).collect()
+    }
+
+    #[test]
+    fn a_block_is_read_with_numbered_symbols() {
+        let text = "# water\nO 0.0 0.0 0.1173\nH 0 .7572 -4.692e-1 # one\n\nH 0 -0.7572 -0.4692\n";
+        let entries = parse_cartesian(text).unwrap();
+        assert_eq!(labels(&entries), ["O", "H1", "H2"]);
+        assert_eq!(
+            entries[1].2.map(f64::to_bits),
+            [0.0, 0.7572, -0.4692].map(f64::to_bits)
+        );
+        let rows: Vec<&str> = row_spans(text)
+            .into_iter()
+            .map(|span| &text[span])
+            .collect();
+        assert_eq!(rows[1], "H 0 .7572 -4.692e-1");
+        let positions = positions_of(&entries, LengthUnit::Angstrom);
+        assert!((positions[1].y * crate::units::ANGSTROM_PER_BOHR - 0.7572).abs() < 1e-15);
+        assert!((positions_of(&entries, LengthUnit::Bohr)[1].y - 0.7572).abs() < 1e-15);
+    }
+
+    #[test]
+    fn every_mistake_of_a_block_is_found_with_its_place() {
+        let text = "H1 0 0 0\nH1 1 0 0\nX 2 0 zero\nCl 3 0\nN 0 4 0 5 6";
+        let found = problems(text, parse_cartesian(text).unwrap_err());
+        let places: Vec<&str> = found.iter().map(|(place, _)| *place).collect();
+        assert_eq!(places, ["H1", "X", "zero", "Cl 3 0", "5 6"]);
+        assert_eq!(
+            found[3].1.to_string(),
+            "row 4 has 3 words, but needs 4: LABEL x y z"
+        );
+        assert_eq!(
+            parse_cartesian("").unwrap_err()[0].problem,
+            GeometryProblem::NoAtoms
+        );
+    }
+
+    #[test]
+    fn an_xyz_file_is_read() {
+        let text = "\u{feff}3\r\n  a comment # kept \r\nO 0 0 0.1\r\nH 0 0.7 -0.4 0.33 ignored\r\nH 0 -0.7 -0.4\r\n\r\n";
+        let (entries, comment) = parse_xyz(text).unwrap();
+        assert_eq!(comment, "a comment # kept");
+        assert_eq!(labels(&entries), ["O", "H1", "H2"]);
+        let (entries, _) = parse_xyz("2\n\nCL 0 0 0\nCO 0 0 2").unwrap();
+        assert_eq!(
+            entries.iter().map(|e| e.1.symbol()).collect::<Vec<_>>(),
+            ["Cl", "Co"]
+        );
+    }
+
+    #[test]
+    fn mistakes_of_xyz_files_are_told_apart() {
+        let of = |text: &str| -> Vec<GeometryProblem> {
+            let errors = parse_xyz(text).unwrap_err();
+            for error in &errors {
+                assert!(text.get(error.span.clone()).is_some(), "{error}");
+            }
+            errors.into_iter().map(|e| e.problem).collect()
+        };
+        assert_eq!(
+            of("H 0 0 0"),
+            [GeometryProblem::XyzCount {
+                found: "H 0 0 0".to_owned()
+            }]
+        );
+        assert_eq!(
+            of(""),
+            [GeometryProblem::XyzCount {
+                found: String::new()
+            }]
+        );
+        assert_eq!(of("0\n\n"), [GeometryProblem::NoAtoms]);
+        assert_eq!(
+            of("3\n\nH 0 0 0\nH 0 0 1\n"),
+            [GeometryProblem::XyzTooFewRows {
+                announced: 3,
+                found: 2
+            }]
+        );
+        assert_eq!(
+            of("1\n\nH 0 0 0\nH 0 0 1\n"),
+            [GeometryProblem::XyzTooManyRows { announced: 1 }]
+        );
+        assert_eq!(
+            of("1\n\nH 0 0 0\n1\n\nH 0 0 1\n"),
+            [GeometryProblem::XyzSecondFrame]
+        );
+        assert_eq!(
+            of("2\n\nH 0 0 x\nQ 0 0 1\n"),
+            [
+                GeometryProblem::NotANumber {
+                    word: "x".to_owned(),
+                    what: "a coordinate"
+                },
+                GeometryProblem::UnknownElement {
+                    label: "Q".to_owned()
+                }
+            ]
+        );
+    }
+
+    #[test]
+    fn coincident_atoms_are_named() {
+        let entries = parse_cartesian("O 0 0 0\nH 0 0 0.9\nH 0 0.05 0.95").unwrap();
+        let atoms = atoms_of(&entries);
+        let error =
+            check_distances(&atoms, &positions_of(&entries, LengthUnit::Angstrom)).unwrap_err();
+        assert_eq!(error.atoms, [1, 2]);
+        assert_eq!(
+            error.to_string(),
+            "H1 and H2 are 0.071 Å apart; atoms nearer than 0.1 Å are taken for a mistake"
+        );
+        let bohr = positions_of(&entries[..2], LengthUnit::Bohr);
+        assert_eq!(check_distances(&atoms, &bohr), Ok(()));
+    }
+
+    proptest! {
+        #[test]
+        fn text_comes_back_bit_for_bit(points in prop::collection::vec(prop::array::uniform3(-1e3..1e3_f64), 1..6)) {
+            let mut text = String::new();
+            for [x, y, z] in &points {
+                text += &format!("H {x:?} {y:e} {z}\n");
+            }
+            let entries = parse_cartesian(&text).unwrap();
+            prop_assert_eq!(&parse_cartesian(&cartesian_text(&entries)).unwrap(), &entries);
+            for (entry, point) in entries.iter().zip(&points) {
+                prop_assert_eq!(entry.2.map(f64::to_bits), point.map(f64::to_bits));
+            }
+        }
+
+        #[test]
+        fn frames_are_read_back_to_their_decimals(points in prop::collection::vec(prop::array::uniform3(-90.0..90.0_f64), 1..6)) {
+            let text: String = points.iter().map(|[x, y, z]| format!("C {x} {y} {z}\n")).collect();
+            let entries = parse_cartesian(&text).unwrap();
+            let positions = positions_of(&entries, LengthUnit::Bohr);
+            let frame = xyz_frame(&atoms_of(&entries), &positions, "two\nlines");
+            let (back, comment) = parse_xyz(&frame).unwrap();
+            prop_assert_eq!(comment, "two lines");
+            for (one, two) in positions.iter().zip(positions_of(&back, LengthUnit::Angstrom)) {
+                // Half a unit of the tenth decimal in ångström.
+                prop_assert!((one - two).iter().all(|x| x.abs() < 0.95e-10));
+            }
+        }
+
+        #[test]
+        fn any_text_is_read_or_refused_with_spans_inside_it(text in "[1-3HOC .\né-]{0,60}") {
+            for result in [parse_cartesian(&text).map(|_| ()), parse_xyz(&text).map(|_| ())] {
+                for error in result.err().unwrap_or_default() {
+                    prop_assert!(text.get(error.span.clone()).is_some());
+                    let _ = error.help();
+                }
+            }
+        }
+    }
 }

@@ -158,3 +158,64 @@ impl Connectivity {
         reached_from
     }
 }
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use crate::molecule::test_molecules::{ethane, peroxide, ring, water};
+    use proptest::prelude::*;
+
+    #[test]
+    fn ordinary_molecules_have_their_bonds() {
+        assert_eq!(Connectivity::of(&water()).bonds(), [[0, 1], [0, 2]]);
+        assert_eq!(
+            Connectivity::of(&peroxide()).bonds(),
+            [[0, 1], [0, 2], [1, 3]]
+        );
+        let ethane = Connectivity::of(&ethane());
+        assert_eq!(ethane.bonds().len(), 7);
+        assert_eq!(ethane.neighbours(0), [1, 2, 3, 4]);
+        assert!(ethane.bonded(5, 1) && !ethane.bonded(5, 0) && !ethane.bonded(5, 6));
+        let cyclopropane = Connectivity::of(&ring(3, 1.51, 2));
+        assert_eq!(cyclopropane.bonds().len(), 9);
+    }
+
+    #[test]
+    fn ghosts_are_bonded_like_atoms() {
+        let mut molecule = water();
+        molecule.atoms[1].ghost = true;
+        assert!(Connectivity::of(&molecule).bonded(0, 1));
+    }
+
+    #[test]
+    fn paths_avoid_what_is_taken_out() {
+        let ring = Connectivity::from_bonds(5, &[[0, 1], [1, 2], [2, 3], [3, 0], [3, 4]]);
+        assert_eq!(ring.path(0, 1, Cut::Nothing), Some(vec![0, 1]));
+        assert_eq!(ring.path(0, 1, Cut::Bond(1, 0)), Some(vec![0, 3, 2, 1]));
+        assert_eq!(ring.path(0, 4, Cut::Atom(3)), None);
+        assert_eq!(ring.component(4, Cut::Bond(3, 4)), [4]);
+        assert_eq!(ring.component(0, Cut::Atom(3)), [0, 1, 2]);
+        assert_eq!(ring.path(0, 9, Cut::Nothing), None);
+        assert_eq!(ring.path(9, 0, Cut::Nothing), None);
+    }
+
+    proptest! {
+        #[test]
+        fn components_part_the_atoms(pairs in prop::collection::vec([0..9_usize, 0..9_usize], 0..12)) {
+            let bonds: Vec<[usize; 2]> = pairs.into_iter().map(|pair: [usize; 2]| pair).collect();
+            let connectivity = Connectivity::from_bonds(9, &bonds);
+            let components = connectivity.components();
+            let mut all: Vec<usize> = components.iter().flatten().copied().collect();
+            all.sort_unstable();
+            prop_assert_eq!(all, (0..9).collect::<Vec<_>>());
+            for (place, component) in components.iter().enumerate() {
+                for &i in component {
+                    for &j in connectivity.neighbours(i) {
+                        prop_assert!(components[place].contains(&j));
+                    }
+                    prop_assert!(connectivity.path(component[0], i, Cut::Nothing).is_some());
+                }
+            }
+        }
+    }
+}

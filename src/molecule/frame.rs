@@ -9,14 +9,15 @@ use nalgebra::Vector3;
 pub const COLLINEAR_SINE: f64 = 1e-6;
 
 /// A unit vector perpendicular to `direction` (any non-zero length) that depends on nothing else: the
-/// Cartesian axis least along it, the first of equals, made orthogonal.
+/// Cartesian axis least along it, the first of (nearly) equals, made orthogonal.
 #[must_use]
 pub fn fixed_perpendicular(direction: &Vector3<f64>) -> Vector3<f64> {
     let unit = direction.normalize();
     let mut least = 0;
     for axis in 1..3 {
-        // The margin keeps rounding from choosing between two axes that lie equally far off.
-        if unit[axis].abs() < unit[least].abs() - 1e-9 {
+        // The margin keeps the choice where it is when the direction tilts a little, as it does while a molecule
+        // along z begins to bend.
+        if unit[axis].abs() < unit[least].abs() - 0.01 {
             least = axis;
         }
     }

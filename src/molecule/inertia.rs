@@ -204,3 +204,183 @@ fn check(masses_u: &[f64], positions: &[Vector3<f64>]) -> Result<(), InertiaErro
     }
     Ok(())
 }
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use crate::molecule::frame::turn;
+    use crate::molecule::internal::Coordinate;
+    use crate::molecule::test_molecules::{clouds, ethane, hydrogen_cyanide, ring, water};
+    use crate::molecule::{Molecule, test_molecules};
+    use proptest::prelude::*;
+
+    fn masses(molecule: &Molecule) -> Vec<f64> {
+        molecule
+            .atoms
+            .iter()
+            .map(|atom| atom.element.mass_u())
+            .collect()
+    }
+
+    /// K. P. Huber, G. Herzberg, *Constants of Diatomic Molecules*, Van Nostrand Reinhold, 1979 (as in the NIST
+    /// Chemistry WebBook, SRD 69): r_e and B_e of the ground states. B goes with the square of the length, so half a
+    /// unit of the last digit of r_e is a whole relative unit of B.
+    #[test]
+    fn val_rotational_constants_of_diatomic_molecules() {
+        for (atoms, length_angstrom, expected, last_digit) in [
+            ("N1\nN2 N1", 1.097_685, 1.998_241, 1e-6),
+            ("C\nO C", 1.128_323, 1.931_280_87, 1e-6),
+            ("H\nCl H", 1.274_552, 10.593_416, 1e-6),
+            ("Li\nH Li", 1.5957, 7.5131, 1e-4),
+        ] {
+            let molecule = test_molecules::from_zmatrix(&format!("{atoms} {length_angstrom}"));
+            let inertia = Inertia::of(&masses(&molecule), &molecule.positions).unwrap();
+            assert_eq!(inertia.rotor, Rotor::Linear);
+            let constants = inertia.rotational_constants_per_cm();
+            assert_eq!(constants.len(), 1);
+            // The fundamental constants and masses of 1979, and r_e from a B_e of another fit, differ by parts in 1e5.
+            let tolerance = expected * (last_digit / length_angstrom + 5e-5);
+            assert!(
+                (constants[0] - expected).abs() < tolerance,
+                "{atoms}: {}",
+                constants[0]
+            );
+        }
+    }
+
+    #[test]
+    fn a_linear_molecule_agrees_with_the_closed_form() {
+        // Sum over pairs m_i m_j r_ij² / M (Lagrange's identity for the moment about the centre of mass).
+        let molecule = hydrogen_cyanide();
+        let masses = masses(&molecule);
+        let inertia = Inertia::of(&masses, &molecule.positions).unwrap();
+        let mut moment = 0.0;
+        for j in 0..3 {
+            for i in 0..j {
+                let length = Coordinate::Bond([i, j]).value(&molecule.positions);
+                moment += masses[i] * masses[j] * length * length;
+            }
+        }
+        moment /= masses.iter().sum::<f64>();
+        assert_eq!(inertia.rotor, Rotor::Linear);
+        assert!((inertia.moments_u_bohr2[2] / moment - 1.0).abs() < 1e-13);
+        assert!(inertia.moments_u_bohr2[0] < 1e-12);
+    }
+
+    #[test]
+    fn water_lies_in_a_plane_and_ethane_and_benzene_are_tops() {
+        let water = water();
+        let [a, b, c] = Inertia::of(&masses(&water), &water.positions)
+            .unwrap()
+            .moments_u_bohr2;
+        assert!((a + b - c).abs() < 1e-12 * c);
+        let ethane = ethane();
+        let [a, b, c] = Inertia::of(&masses(&ethane), &ethane.positions)
+            .unwrap()
+            .moments_u_bohr2;
+        assert!(a < 0.5 * b && (b - c).abs() < 1e-10 * c);
+        let benzene = ring(6, 1.39, 1);
+        let [a, b, c] = Inertia::of(&masses(&benzene), &benzene.positions)
+            .unwrap()
+            .moments_u_bohr2;
+        assert!((a - b).abs() < 1e-10 * c && (a + b - c).abs() < 1e-10 * c);
+    }
+
+    #[test]
+    fn one_atom_only_translates() {
+        let inertia = Inertia::of(&[4.0], &[Vector3::new(1.0, 2.0, 3.0)]).unwrap();
+        assert_eq!(inertia.rotor, Rotor::Atom);
+        assert!(inertia.rotational_constants_per_cm().is_empty());
+        assert_eq!(rigid_motions(&[4.0], &[Vector3::x()]).unwrap().ncols(), 3);
+    }
+
+    #[test]
+    fn wrong_input_is_refused() {
+        let spot = [Vector3::zeros()];
+        assert_eq!(Inertia::of(&[], &[]), Err(InertiaError::Empty));
+        assert_eq!(
+            Inertia::of(&[1.0, 1.0], &spot),
+            Err(InertiaError::Counts {
+                masses: 2,
+                atoms: 1
+            })
+        );
+        for mass_u in [0.0, -1.0, f64::INFINITY] {
+            assert_eq!(
+                Inertia::of(&[mass_u], &spot),
+                Err(InertiaError::Mass { atom: 0, mass_u })
+            );
+        }
+        assert_eq!(
+            Inertia::of(&[1.0], &[Vector3::new(f64::NAN, 0.0, 0.0)]),
+            Err(InertiaError::Position { atom: 0 })
+        );
+    }
+
+    proptest! {
+        #[test]
+        fn moments_do_not_see_translation_and_rotation(
+            positions in clouds(5),
+            masses in prop::array::uniform5(1.0..80.0_f64),
+            axis in prop::array::uniform3(0.1..1.0_f64),
+            angle in -3.0..3.0_f64,
+        ) {
+            let axis = Vector3::from(axis).normalize();
+            let moved: Vec<Vector3<f64>> =
+                positions.iter().map(|p| p + turn(&axis, angle, p) + axis * 7.0).collect();
+            let one = Inertia::of(&masses, &positions).unwrap();
+            let two = Inertia::of(&masses, &moved).unwrap();
+            for (a, b) in one.moments_u_bohr2.iter().zip(&two.moments_u_bohr2) {
+                prop_assert!((a - b).abs() < 1e-11 * one.moments_u_bohr2[2]);
+            }
+            prop_assert!((one.axes.determinant() - 1.0).abs() < 1e-12);
+            let constants = one.rotational_constants_per_cm();
+            prop_assert!(constants.windows(2).all(|pair| pair[0] >= pair[1]));
+        }
+
+        #[test]
+        fn rigid_motions_are_orthonormal_and_change_no_distance(
+            positions in clouds(5),
+            masses in prop::array::uniform5(1.0..80.0_f64),
+        ) {
+            let motions = rigid_motions(&masses, &positions).unwrap();
+            prop_assert_eq!(motions.ncols(), 6);
+            let overlap = motions.transpose() * &motions;
+            prop_assert!((overlap - DMatrix::identity(6, 6)).norm() < 1e-12);
+            for column in motions.column_iter() {
+                let step = |i: usize| {
+                    Vector3::from_fn(|axis, _| column[3 * i + axis]) / masses[i].sqrt()
+                };
+                for j in 0..5 {
+                    for i in 0..j {
+                        let rate = (positions[j] - positions[i]).dot(&(step(j) - step(i)));
+                        prop_assert!(rate.abs() < 1e-12);
+                    }
+                }
+            }
+        }
+    }
+
+    #[test]
+    fn a_molecule_straight_to_minimisation_has_five_rigid_motions() {
+        let mut molecule = hydrogen_cyanide();
+        for off in [0.0, 1e-9, 1e-4] {
+            molecule.positions[1].x = off;
+            let motions = rigid_motions(&masses(&molecule), &molecule.positions).unwrap();
+            assert_eq!(motions.ncols(), 5);
+            // A norm shows what is not a number, unlike a largest element.
+            let overlap = motions.transpose() * &motions;
+            assert!((overlap - DMatrix::identity(5, 5)).norm() < 1e-12);
+            // Each turn moves the atoms across the line.
+            for column in motions.columns(3, 2).column_iter() {
+                for atom in 0..3 {
+                    assert!(column[3 * atom + 2].abs() < 2e-4);
+                }
+                assert!(column[0].hypot(column[1]) > 0.1);
+            }
+        }
+        molecule.positions[1].x = 0.05;
+        let bent = rigid_motions(&masses(&molecule), &molecule.positions).unwrap();
+        assert_eq!(bent.ncols(), 6);
+    }
+}

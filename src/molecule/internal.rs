@@ -181,7 +181,7 @@ impl Coordinate {
                 u.cross(&v).norm().atan2(u.dot(&v))
             }
             Self::Dihedral(atoms) => {
-                let (_, g, _, normal_first, normal_last) = blondel_karplus(positions, atoms);
+                let [_, g, _, normal_first, normal_last] = blondel_karplus(positions, atoms);
                 let sine =
                     normal_last.cross(&normal_first).dot(&g) / g.norm().max(f64::MIN_POSITIVE);
                 let value = sine.atan2(normal_first.dot(&normal_last));
@@ -244,7 +244,7 @@ impl Coordinate {
                 vec![(a, first), (b, -first - last), (c, last)]
             }
             Self::Dihedral([a, b, c, d]) => {
-                let (f, g, h, normal_first, normal_last) = blondel_karplus(positions, [a, b, c, d]);
+                let [f, g, h, normal_first, normal_last] = blondel_karplus(positions, [a, b, c, d]);
                 let length = g.norm();
                 let first = -normal_first * (length / normal_first.norm_squared());
                 let last = normal_last * (length / normal_last.norm_squared());
@@ -264,20 +264,11 @@ impl Coordinate {
 
 /// The letters of Blondel and Karplus for atoms i, j, k, l: F = r_i − r_j, G = r_j − r_k, H = r_l − r_k,
 /// A = F × G, B = H × G.
-fn blondel_karplus(
-    positions: &[Vector3<f64>],
-    [i, j, k, l]: [usize; 4],
-) -> (
-    Vector3<f64>,
-    Vector3<f64>,
-    Vector3<f64>,
-    Vector3<f64>,
-    Vector3<f64>,
-) {
+fn blondel_karplus(positions: &[Vector3<f64>], [i, j, k, l]: [usize; 4]) -> [Vector3<f64>; 5] {
     let f = positions[i] - positions[j];
     let g = positions[j] - positions[k];
     let h = positions[l] - positions[k];
-    (f, g, h, f.cross(&g), h.cross(&g))
+    [f, g, h, f.cross(&g), h.cross(&g)]
 }
 
 /// Unit vector about which the angle at `b` opens: right-handed turns carry the arm to `a` towards the arm to `c`.
@@ -290,5 +281,279 @@ pub(super) fn angle_axis(positions: &[Vector3<f64>], [a, b, c]: [usize; 3]) -> V
     } else {
         u.cross(&bending_direction(&positions[b], &u, positions))
             .normalize()
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use crate::molecule::frame::turn;
+    use crate::molecule::test_molecules::{clouds, hydrogen_cyanide, indices, peroxide, water};
+    use proptest::prelude::*;
+
+    const ALL: [Coordinate; 3] = [
+        Coordinate::Bond([2, 0]),
+        Coordinate::Angle([1, 3, 0]),
+        Coordinate::Dihedral([0, 1, 2, 3]),
+    ];
+
+    /// Central differences of fourth order, the short way round for dihedrals.
+    fn by_differences(
+        coordinate: Coordinate,
+        positions: &[Vector3<f64>],
+        step: f64,
+    ) -> Vec<Vector3<f64>> {
+        let centre = coordinate.value(positions);
+        (0..positions.len())
+            .map(|atom| {
+                Vector3::from_fn(|axis, _| {
+                    let at = |steps: f64| {
+                        let mut moved = positions.to_vec();
+                        moved[atom][axis] += steps * step;
+                        coordinate.difference(coordinate.value(&moved), centre)
+                    };
+                    (8.0 * (at(1.0) - at(-1.0)) - (at(2.0) - at(-2.0))) / (12.0 * step)
+                })
+            })
+            .collect()
+    }
+
+    fn assert_derivative(
+        coordinate: Coordinate,
+        positions: &[Vector3<f64>],
+        step: f64,
+        tolerance: f64,
+    ) -> Result<(), TestCaseError> {
+        let expected = by_differences(coordinate, positions, step);
+        let row = coordinate.derivative(positions);
+        let atoms: Vec<usize> = row.iter().map(|(atom, _)| *atom).collect();
+        prop_assert_eq!(&atoms[..], coordinate.atoms());
+        let largest = row.iter().map(|(_, d)| d.norm()).fold(1.0, f64::max);
+        for (atom, derivative) in row {
+            let off = (derivative - expected[atom]).norm();
+            prop_assert!(
+                off < tolerance * largest,
+                "{coordinate:?} atom {atom}: {off:e}"
+            );
+        }
+        Ok(())
+    }
+
+    /// Smallest sine of the angles inside a coordinate; 1 for a bond.
+    fn smallest_sine(coordinate: Coordinate, positions: &[Vector3<f64>]) -> f64 {
+        coordinate
+            .atoms()
+            .windows(3)
+            .map(|t| {
+                sine_between(
+                    &(positions[t[0]] - positions[t[1]]),
+                    &(positions[t[2]] - positions[t[1]]),
+                )
+            })
+            .fold(1.0, f64::min)
+    }
+
+    proptest! {
+        #[test]
+        fn derivatives_are_those_of_the_values(positions in clouds(4)) {
+            for coordinate in ALL {
+                // The value varies over a length of the sine times a bond; the step stays far inside.
+                let sine = smallest_sine(coordinate, &positions);
+                prop_assume!(sine > 1e-3);
+                assert_derivative(coordinate, &positions, 1e-3 * sine, 1e-8)?;
+            }
+        }
+
+        #[test]
+        fn derivatives_hold_near_straight_and_folded_angles(
+            exponent in -4.0..-2.0_f64,
+            folded in any::<bool>(),
+            arm in 0.5..3.0_f64,
+        ) {
+            let bend = 10.0_f64.powf(exponent);
+            let sign = if folded { -1.0 } else { 1.0 };
+            let positions = [
+                Vector3::new(0.3, -2.0, 0.1),
+                Vector3::new(0.3, 0.0, 0.1),
+                Vector3::new(0.3, sign * arm * bend.cos(), 0.1 + arm * bend.sin()),
+            ];
+            // An angle of sine s is known to 1e-16 but varies over lengths of s.
+            assert_derivative(Coordinate::Angle([0, 1, 2]), &positions, 1e-3 * bend, 1e-7)?;
+        }
+
+        #[test]
+        fn derivatives_hold_across_the_cut_of_the_dihedral(off in -1e-3..1e-3_f64) {
+            let mut positions = peroxide().positions;
+            let turned = turn(&Vector3::z(), PI + off, &Vector3::new(1.7, 0.0, 0.2));
+            positions[0] = Vector3::zeros();
+            positions[1] = Vector3::z() * 2.5;
+            positions[2] = Vector3::new(1.7, 0.0, -0.2);
+            positions[3] = positions[1] + turned;
+            let dihedral = Coordinate::Dihedral([2, 0, 1, 3]);
+            prop_assert!(dihedral.value(&positions).abs() > PI - 2e-3);
+            assert_derivative(dihedral, &positions, 1e-3, 1e-8)?;
+        }
+
+        #[test]
+        fn values_and_rows_do_not_see_translation_and_rotation(
+            positions in clouds(4),
+            axis in prop::array::uniform3(0.1..1.0_f64),
+            angle in -3.0..3.0_f64,
+            shift in prop::array::uniform3(-5.0..5.0_f64),
+        ) {
+            let axis = Vector3::from(axis).normalize();
+            let moved: Vec<Vector3<f64>> = positions
+                .iter()
+                .map(|p| p + turn(&axis, angle, p) + Vector3::from(shift))
+                .collect();
+            for coordinate in ALL {
+                prop_assume!(smallest_sine(coordinate, &positions) > 1e-3);
+                let difference =
+                    coordinate.difference(coordinate.value(&moved), coordinate.value(&positions));
+                prop_assert!(difference.abs() < 1e-11);
+                let row = coordinate.derivative(&positions);
+                let force: Vector3<f64> = row.iter().map(|(_, d)| d).sum();
+                let torque: Vector3<f64> = row.iter().map(|(i, d)| positions[*i].cross(d)).sum();
+                let largest = row.iter().map(|(_, d)| d.norm()).fold(1.0, f64::max);
+                prop_assert!(force.norm() < 1e-13 * largest);
+                prop_assert!(torque.norm() < 1e-11 * largest);
+            }
+        }
+
+        #[test]
+        fn reversing_the_atoms_changes_nothing_and_a_mirror_only_the_sign_of_a_dihedral(positions in clouds(4)) {
+            let mirrored: Vec<Vector3<f64>> =
+                positions.iter().map(|p| Vector3::new(p.x, p.y, -p.z)).collect();
+            for (coordinate, reversed) in ALL.into_iter().zip([
+                Coordinate::Bond([0, 2]),
+                Coordinate::Angle([0, 3, 1]),
+                Coordinate::Dihedral([3, 2, 1, 0]),
+            ]) {
+                prop_assume!(smallest_sine(coordinate, &positions) > 1e-3);
+                let value = coordinate.value(&positions);
+                prop_assert!(coordinate.difference(reversed.value(&positions), value).abs() < 1e-12);
+                let expected = if let Coordinate::Dihedral(_) = coordinate { -value } else { value };
+                prop_assert!(coordinate.difference(coordinate.value(&mirrored), expected).abs() < 1e-12);
+            }
+        }
+    }
+
+    #[test]
+    fn values_are_those_of_the_z_matrix() {
+        let molecule = peroxide();
+        let [o1, o2, h1, h2] = indices(&molecule, ["O1", "O2", "H1", "H2"]);
+        for (coordinate, expected) in [
+            (Coordinate::Bond([o1, o2]), 1.45),
+            (Coordinate::Angle([h1, o1, o2]), 100.0),
+            (Coordinate::Dihedral([h1, o1, o2, h2]), 115.0),
+            (Coordinate::Dihedral([h2, o2, o1, h1]), 115.0),
+        ] {
+            let value = coordinate.reported_value(&molecule.positions);
+            assert!((value - expected).abs() < 1e-12, "{coordinate:?}: {value}");
+        }
+    }
+
+    #[test]
+    fn a_dihedral_is_positive_clockwise_along_its_axis() {
+        // Looking along +z with x to the right, +y is down (right-handed), so clockwise from +x is +y.
+        let positions = [
+            Vector3::x(),
+            Vector3::zeros(),
+            Vector3::z(),
+            Vector3::new(0.0, 1.0, 1.0),
+        ];
+        let value = Coordinate::Dihedral([0, 1, 2, 3]).value(&positions);
+        assert!((value - PI / 2.0).abs() < 1e-15);
+    }
+
+    #[test]
+    fn half_a_turn_is_plus_180() {
+        let flat = [
+            Vector3::x(),
+            Vector3::zeros(),
+            Vector3::z(),
+            Vector3::new(-1.0, 0.0, 1.0),
+        ];
+        for y in [0.0, -0.0, 1e-300, -1e-300] {
+            let mut positions = flat;
+            positions[3].y = y;
+            let value = Coordinate::Dihedral([0, 1, 2, 3]).value(&positions);
+            assert!(value > 3.0 && value <= PI, "{value} for {y}");
+        }
+        let half = Coordinate::Dihedral([0, 1, 2, 3]).difference(-PI / 2.0, PI / 2.0);
+        assert!((half - PI).abs() < 1e-15);
+    }
+
+    #[test]
+    fn a_straight_angle_has_the_row_of_bends_in_one_plane() {
+        let molecule = hydrogen_cyanide();
+        let angle = Coordinate::Angle([0, 1, 2]);
+        assert!((angle.reported_value(&molecule.positions) - 180.0).abs() < 1e-12);
+        let row = angle.derivative(&molecule.positions);
+        // From exactly straight, a step down the row lowers the angle at the rate that the row says.
+        let rate: f64 = row.iter().map(|(_, d)| d.norm_squared()).sum();
+        assert!(rate > 0.1);
+        let step = 1e-6;
+        let mut bent = molecule.positions.clone();
+        for (atom, derivative) in &row {
+            bent[*atom] -= derivative * step;
+        }
+        let fall = PI - angle.value(&bent);
+        assert!((fall / (rate * step) - 1.0).abs() < 1e-6);
+        // And the bent molecule has the same row.
+        for ((_, straight), (_, bent)) in row.iter().zip(angle.derivative(&bent)) {
+            assert!((straight - bent).norm() < 1e-5);
+        }
+    }
+
+    #[test]
+    fn undefined_coordinates_are_errors_and_never_nan() {
+        let line: Vec<Vector3<f64>> = (0..4).map(|i| Vector3::z() * f64::from(i)).collect();
+        let dihedral = Coordinate::Dihedral([0, 1, 2, 3]);
+        assert_eq!(
+            dihedral.check(&line),
+            Err(CoordinateError::Collinear { atoms: [0, 1, 2] })
+        );
+        let spot = [Vector3::x(); 4];
+        for coordinate in ALL {
+            assert!(matches!(
+                coordinate.check(&spot),
+                Err(CoordinateError::Coincident { .. })
+            ));
+            for positions in [&line[..], &spot[..]] {
+                assert!(coordinate.value(positions).is_finite());
+                let row = coordinate.derivative(positions);
+                assert!(row.iter().all(|(_, d)| d.iter().all(|x| x.is_finite())));
+            }
+        }
+    }
+
+    #[test]
+    fn atoms_must_exist_and_differ() {
+        assert!(Coordinate::Angle([0, 1, 2]).validate(3).is_ok());
+        assert_eq!(
+            Coordinate::Angle([0, 1, 0]).validate(3),
+            Err(CoordinateError::Repeated {
+                kind: "angle",
+                atom: 0
+            })
+        );
+        assert_eq!(
+            Coordinate::Bond([0, 3]).validate(3),
+            Err(CoordinateError::NoSuchAtom { atom: 3, atoms: 3 })
+        );
+    }
+
+    #[test]
+    fn reported_values_come_back() {
+        for coordinate in ALL {
+            for value in [0.1, 1.7, 3.0] {
+                let back = coordinate.from_reported(coordinate.to_reported(value));
+                assert!((back - value).abs() < 1e-15);
+            }
+        }
+        let molecule = water();
+        let angle = Coordinate::Angle([1, 0, 2]);
+        assert_eq!(angle.describe(&molecule.atoms), "angle H1–O–H2");
     }
 }

@@ -8,8 +8,12 @@ pub mod inertia;
 pub mod internal;
 mod label;
 pub mod motion;
+mod motion_error;
 pub mod nuclear;
 mod rows;
+mod side;
+#[cfg(test)]
+mod test_molecules;
 pub mod zmatrix;
 
 use crate::elements::Element;

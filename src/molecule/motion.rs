@@ -1,9 +1,11 @@
 //! Rigid motions: one side of a bond, vertex or axis moves so that one internal coordinate takes a value.
 
 use super::Molecule;
-use super::connectivity::{Connectivity, Cut};
+use super::connectivity::Connectivity;
 use super::frame::{COLLINEAR_SINE, sine_between, turn};
 use super::internal::{Coordinate, CoordinateError, angle_axis};
+pub use super::motion_error::MotionError;
+use super::side::{default_side, requested_side};
 use nalgebra::Vector3;
 use std::f64::consts::PI;
 
@@ -19,140 +21,6 @@ pub struct Motion {
     pub coordinate: Coordinate,
     /// Indices of the atoms that move, ascending: exactly one end of the coordinate is among them.
     pub moves: Vec<usize>,
-}
-
-/// Why a coordinate cannot be set. Atoms are labels.
-#[derive(Debug, Clone, PartialEq, thiserror::Error)]
-pub enum MotionError {
-    /// The coordinate itself means nothing.
-    #[error(transparent)]
-    Coordinate(#[from] CoordinateError),
-    /// No side can move by itself: a ring, or ends that are joined some other way.
-    #[error(
-        "{coordinate} has no side that can move by itself: {first} and {second} are {}",
-        joined(.cut.as_deref(), .path)
-    )]
-    Joined {
-        /// kind and labels
-        coordinate: String,
-        /// what was taken out: `the bond C1–C2`, `atom C2`; nothing if the ends of the cut are not bonded
-        cut: Option<String>,
-        /// label of one end
-        first: String,
-        /// label of the other end
-        second: String,
-        /// labels of the atoms between the ends on a shortest way
-        path: Vec<String>,
-    },
-    /// The atoms asked to move hold neither end.
-    #[error("the atoms that move must hold one end of {coordinate}: {first} or {second}")]
-    MovesNoEnd {
-        /// kind and labels
-        coordinate: String,
-        /// label of one end
-        first: String,
-        /// label of the other end
-        second: String,
-    },
-    /// The atoms asked to move hold both ends.
-    #[error(
-        "the atoms that move hold both ends of {coordinate}, {first} and {second}, so it would not change"
-    )]
-    MovesBothEnds {
-        /// kind and labels
-        coordinate: String,
-        /// label of one end
-        first: String,
-        /// label of the other end
-        second: String,
-    },
-    /// The atoms asked to move hold the vertex or the wrong atom of the axis.
-    #[error("{atom} must stay where {moving} moves, because {coordinate} turns about it")]
-    MovesPivot {
-        /// kind and labels
-        coordinate: String,
-        /// label of the atom
-        atom: String,
-        /// label of the end that moves
-        moving: String,
-    },
-    /// An atom asked to move stands twice or does not exist.
-    #[error("the atoms that move are listed wrongly: atom number {} {}", atom + 1, if *twice { "stands twice" } else { "does not exist" })]
-    MovesList {
-        /// index of the atom
-        atom: usize,
-        /// stands twice, or else does not exist
-        twice: bool,
-    },
-    /// A bond length that is not positive and finite.
-    #[error("a bond cannot be set to {value} bohr")]
-    BondRange {
-        /// bohr
-        value: f64,
-    },
-    /// An angle outside 0–180°.
-    #[error("an angle cannot be set to {value_degree}°: it lies between 0° and 180°")]
-    AngleRange {
-        /// degree
-        value_degree: f64,
-    },
-    /// A dihedral that is not a finite number.
-    #[error("a dihedral cannot be set to {value_degree}°")]
-    DihedralRange {
-        /// degree
-        value_degree: f64,
-    },
-    /// Several coordinates that do not fit together.
-    #[error(
-        "the coordinates cannot be set together: after {rounds} rounds the {kind} number {} of them is still off by {off:.3e} {unit}",
-        place + 1
-    )]
-    Contradiction {
-        /// place of the coordinate in the list
-        place: usize,
-        /// `bond`, `angle` or `dihedral`
-        kind: &'static str,
-        /// how far it is off, ångström or degree
-        off: f64,
-        /// `angstrom` or `degree`
-        unit: &'static str,
-        /// how often all were set
-        rounds: usize,
-    },
-}
-
-fn joined(cut: Option<&str>, path: &[String]) -> String {
-    let still = if cut.is_some() {
-        "still joined"
-    } else {
-        "joined"
-    };
-    let through = if path.is_empty() {
-        String::new()
-    } else {
-        format!(" through {}", path.join(", "))
-    };
-    let without = cut.map_or_else(String::new, |cut| format!(" when {cut} is taken out"));
-    format!("{still}{through}{without}")
-}
-
-impl MotionError {
-    /// How to mend it, where there is more to say than the message says.
-    #[must_use]
-    pub fn help(&self) -> Option<String> {
-        match self {
-            Self::Joined { second, .. } => Some(format!(
-                "list the atoms that are to move, for example moves = [\"{second}\"]"
-            )),
-            Self::Coordinate(CoordinateError::Collinear { .. }) => {
-                Some("take a dihedral about another axis".to_owned())
-            }
-            Self::Contradiction { .. } => {
-                Some("set fewer coordinates, or let other atoms move with `moves`".to_owned())
-            }
-            _ => None,
-        }
-    }
 }
 
 impl Motion {
@@ -196,7 +64,7 @@ impl Motion {
     /// A bond that is not positive, an angle outside [0, π], a value that is not finite; atoms on one spot; a dihedral
     /// of three atoms on one line. The positions are then untouched.
     pub fn set(&self, positions: &mut [Vector3<f64>], value: f64) -> Result<(), MotionError> {
-        self.check_value(value)?;
+        let value = self.checked_value(value)?;
         self.coordinate.check(positions)?;
         let change = self
             .coordinate
@@ -289,19 +157,23 @@ impl Motion {
         }
     }
 
-    fn check_value(&self, value: f64) -> Result<(), MotionError> {
+    /// The value itself, or why it cannot be set. An angle outside its range by no more than the rounding of a grid
+    /// (start + i · step) is taken for the end of the range.
+    fn checked_value(&self, value: f64) -> Result<f64, MotionError> {
+        const ROUNDING: f64 = 1e-13;
         let value_degree = value.to_degrees();
         match self.coordinate {
             Coordinate::Bond(_) if !(value.is_finite() && value > 0.0) => {
                 Err(MotionError::BondRange { value })
             }
-            Coordinate::Angle(_) if !(0.0..=PI).contains(&value) => {
+            Coordinate::Angle(_) if !(-ROUNDING..=PI + ROUNDING).contains(&value) => {
                 Err(MotionError::AngleRange { value_degree })
             }
+            Coordinate::Angle(_) => Ok(value.clamp(0.0, PI)),
             Coordinate::Dihedral(_) if !value.is_finite() => {
                 Err(MotionError::DihedralRange { value_degree })
             }
-            _ => Ok(()),
+            _ => Ok(value),
         }
     }
 
@@ -375,131 +247,5 @@ pub fn set_all(
     }
 }
 
-/// First and last atom of a coordinate.
-fn ends(coordinate: Coordinate) -> (usize, usize) {
-    match coordinate {
-        Coordinate::Bond([a, b]) => (a, b),
-        Coordinate::Angle([a, _, c]) => (a, c),
-        Coordinate::Dihedral([a, _, _, d]) => (a, d),
-    }
-}
-
-fn requested_side(
-    coordinate: Coordinate,
-    molecule: &Molecule,
-    atoms: &[usize],
-) -> Result<Vec<usize>, MotionError> {
-    let label = |i: usize| molecule.atoms[i].label.clone();
-    let mut moves = atoms.to_vec();
-    moves.sort_unstable();
-    if let Some(&atom) = moves.iter().find(|&&i| i >= molecule.atoms.len()) {
-        return Err(MotionError::MovesList { atom, twice: false });
-    }
-    if let Some(pair) = moves.windows(2).find(|pair| pair[0] == pair[1]) {
-        return Err(MotionError::MovesList {
-            atom: pair[0],
-            twice: true,
-        });
-    }
-    let (first, last) = ends(coordinate);
-    let described = coordinate.describe(&molecule.atoms);
-    let moving = match (moves.contains(&first), moves.contains(&last)) {
-        (false, true) => last,
-        (true, false) => first,
-        (holds, _) => {
-            let (first, second) = (label(first), label(last));
-            return Err(if holds {
-                MotionError::MovesBothEnds {
-                    coordinate: described,
-                    first,
-                    second,
-                }
-            } else {
-                MotionError::MovesNoEnd {
-                    coordinate: described,
-                    first,
-                    second,
-                }
-            });
-        }
-    };
-    // An axis atom beside the moving end may be listed: it is part of that side and on the axis, so it stays anyway.
-    let pivot = match coordinate {
-        Coordinate::Bond(_) => None,
-        Coordinate::Angle([_, b, _]) => Some(b),
-        Coordinate::Dihedral([_, b, c, _]) => Some(if moving == last { b } else { c }),
-    };
-    match pivot {
-        Some(atom) if moves.contains(&atom) => Err(MotionError::MovesPivot {
-            coordinate: described,
-            atom: label(atom),
-            moving: label(moving),
-        }),
-        _ => Ok(moves),
-    }
-}
-
-fn default_side(
-    coordinate: Coordinate,
-    molecule: &Molecule,
-    connectivity: &Connectivity,
-    functions_per_atom: &[usize],
-) -> Result<Vec<usize>, MotionError> {
-    let label = |i: usize| molecule.atoms[i].label.clone();
-    let cut = match coordinate {
-        Coordinate::Bond([a, b]) => Cut::Bond(a, b),
-        Coordinate::Angle([_, b, _]) => Cut::Atom(b),
-        Coordinate::Dihedral([_, b, c, _]) => axis_cut(molecule, connectivity, b, c),
-    };
-    let (first, last) = ends(coordinate);
-    if let Some(path) = connectivity.path(first, last, cut) {
-        return Err(MotionError::Joined {
-            coordinate: coordinate.describe(&molecule.atoms),
-            cut: match cut {
-                Cut::Bond(i, j) if connectivity.bonded(i, j) => {
-                    Some(format!("the bond {}–{}", label(i), label(j)))
-                }
-                Cut::Atom(i) => Some(format!("atom {}", label(i))),
-                Cut::Bond(..) | Cut::Nothing => None,
-            },
-            first: label(first),
-            second: label(last),
-            path: path[1..path.len() - 1].iter().map(|&i| label(i)).collect(),
-        });
-    }
-    let functions = |side: &[usize]| -> usize {
-        side.iter()
-            .map(|&i| functions_per_atom.get(i).copied().unwrap_or(0))
-            .sum()
-    };
-    let first_side = connectivity.component(first, cut);
-    let last_side = connectivity.component(last, cut);
-    Ok(if functions(&last_side) <= functions(&first_side) {
-        last_side
-    } else {
-        first_side
-    })
-}
-
-/// The bond to take out for a turn about the axis b–c: their own, or where they are joined through atoms that all lie
-/// on the axis, the first bond of that way.
-fn axis_cut(molecule: &Molecule, connectivity: &Connectivity, b: usize, c: usize) -> Cut {
-    let own = Cut::Bond(b, c);
-    if connectivity.bonded(b, c) {
-        return own;
-    }
-    let Some(path) = connectivity.path(b, c, Cut::Nothing) else {
-        return own;
-    };
-    // Atoms this near the axis turn with it as good as in place.
-    const ON_AXIS_SINE: f64 = 1e-3;
-    let axis = molecule.positions[c] - molecule.positions[b];
-    let straight = path[1..path.len() - 1].iter().all(|&i| {
-        sine_between(&(molecule.positions[i] - molecule.positions[b]), &axis) < ON_AXIS_SINE
-    });
-    if straight {
-        Cut::Bond(path[0], path[1])
-    } else {
-        own
-    }
-}
+#[cfg(test)]
+mod tests;

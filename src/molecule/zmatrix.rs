@@ -328,3 +328,204 @@ impl fmt::Display for ZMatrix {
         Ok(())
     }
 }
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use crate::molecule::test_molecules::{from_zmatrix, trees};
+    use proptest::prelude::*;
+
+    fn problems(text: &str) -> Vec<(&str, GeometryProblem)> {
+        parse(text)
+            .expect_err("a wrong z-matrix")
+            .into_iter()
+            .map(|error| (&text[error.span], error.problem))
+            .collect()
+    }
+
+    fn distances(positions: &[Vector3<f64>]) -> Vec<f64> {
+        (0..positions.len())
+            .flat_map(|j| (0..j).map(move |i| (i, j)))
+            .map(|(i, j)| (positions[i] - positions[j]).norm())
+            .collect()
+    }
+
+    proptest! {
+        #[test]
+        fn values_come_back_from_positions(tree in trees(1..9, 10.0..170.0)) {
+            let rows = parse(&tree.text).unwrap();
+            let positions = &tree.molecule.positions;
+            let back = rows.with_values_of(positions, LengthUnit::Angstrom);
+            for (atom, (row, again)) in rows.rows.iter().zip(&back.rows).enumerate() {
+                for (place, (one, two)) in row.references.iter().zip(&again.references).enumerate() {
+                    prop_assert_eq!(one.row, two.row);
+                    // A dihedral is as sharp as the angle of its references is far from straight.
+                    let sharpness = match (place, &row.references[..]) {
+                        (2, [b, c, d]) => sine_between(
+                            &(positions[b.row] - positions[c.row]),
+                            &(positions[d.row] - positions[c.row]),
+                        ),
+                        _ => 1.0,
+                    };
+                    let off = (two.value - one.value).abs();
+                    let off = if place == 2 { off.min((off - 360.0).abs()) } else { off };
+                    prop_assert!(off * sharpness < 1e-10, "atom {atom} place {place}: {off:e}");
+                }
+            }
+            let again = back.positions(LengthUnit::Angstrom).unwrap();
+            for (one, two) in distances(positions).iter().zip(distances(&again)) {
+                prop_assert!((one - two).abs() < 1e-8);
+            }
+        }
+
+        #[test]
+        fn text_comes_back_bit_for_bit(tree in trees(1..9, 10.0..170.0)) {
+            let rows = parse(&tree.text).unwrap();
+            let again = parse(&rows.to_string()).unwrap();
+            for (one, two) in rows.rows.iter().zip(&again.rows) {
+                prop_assert_eq!(&one.label, &two.label);
+                prop_assert_eq!(one.element, two.element);
+                prop_assert_eq!(&one.references, &two.references);
+            }
+        }
+
+        #[test]
+        fn any_text_is_read_or_refused_with_spans_inside_it(text in "[HCOlx12 0-9.#\n-]{0,80}") {
+            if let Err(errors) = parse(&text) {
+                prop_assert!(!errors.is_empty());
+                for error in errors {
+                    prop_assert!(text.get(error.span.clone()).is_some());
+                    prop_assert!(!error.to_string().is_empty());
+                    let _ = error.help();
+                }
+            }
+        }
+    }
+
+    #[test]
+    fn units_scale_lengths_only() {
+        let rows = parse("O\nH1 O 0.96\nH2 O 0.96 H1 104.5").unwrap();
+        let angstrom = rows.positions(LengthUnit::Angstrom).unwrap();
+        let bohr = rows.positions(LengthUnit::Bohr).unwrap();
+        for (one, two) in angstrom.iter().zip(&bohr) {
+            assert!((one - two / crate::units::ANGSTROM_PER_BOHR).norm() < 1e-14);
+        }
+        assert!((bohr[2].norm() - 0.96).abs() < 1e-15);
+    }
+
+    #[test]
+    fn straight_molecules_lie_exactly_on_the_axis() {
+        for text in [
+            "H\nC H 1.066\nN C 1.153 H 180",
+            "C\nO1 C 1.16\nO2 C 1.16 O1 180",
+            "C1\nC2 C1 1.2\nH1 C1 1.06 C2 180\nH2 C2 1.06 C1 180 H1 0",
+            "C1\nC2 C1 1.2\nC3 C2 1.37 C1 180\nC4 C3 1.2 C2 180 C1 77\nH1 C1 1.06 C2 180 C3 0\nH2 C4 1.06 C3 180 C2 12",
+        ] {
+            let molecule = from_zmatrix(text);
+            for position in &molecule.positions {
+                let off = position.x.hypot(position.y);
+                assert!(off.abs() < f64::MIN_POSITIVE, "{text}: {off:e}");
+            }
+        }
+    }
+
+    #[test]
+    fn the_first_atom_off_a_line_needs_no_dihedral() {
+        let text = "C1\nC2 C1 1.2\nH1 C1 1.06 C2 180\nH2 C2 1.06 C1 130 H1 33";
+        let molecule = from_zmatrix(text);
+        let angle = Coordinate::Angle([3, 1, 0]).value(&molecule.positions);
+        assert!((angle.to_degrees() - 130.0).abs() < 1e-12);
+        // What could not be measured keeps its value.
+        let rows = parse(text).unwrap();
+        let back = rows.with_values_of(&molecule.positions, LengthUnit::Angstrom);
+        assert!((back.rows[3].references[2].value - 33.0).abs() < f64::EPSILON);
+    }
+
+    #[test]
+    fn a_chain_may_go_straight_on_from_a_line() {
+        // The oxygen is off the line, the last atom on it: its dihedral is undefined and does not matter.
+        let molecule = from_zmatrix(
+            "C1\nC2 C1 1.2\nC3 C2 1.45 C1 180\nO C3 1.2 C2 120 C1 0\nH C1 1.06 C2 180 C3 50",
+        );
+        let straight = Coordinate::Angle([4, 0, 1]).value(&molecule.positions);
+        assert!((straight.to_degrees() - 180.0).abs() < 1e-12);
+    }
+
+    #[test]
+    fn a_dihedral_about_a_line_is_refused_where_it_matters() {
+        let text =
+            "C1\nC2 C1 1.2\nC3 C2 1.45 C1 180\nO C3 1.2 C2 120 C1 0\nH1 C1 1.06 C2 150 C3 50";
+        let error = parse(text)
+            .unwrap()
+            .positions(LengthUnit::Angstrom)
+            .unwrap_err();
+        assert_eq!(&text[error.span.clone()], "H1 C1 1.06 C2 150 C3 50");
+        assert_eq!(
+            error.to_string(),
+            "`H1` cannot be placed: C1, C2 and C3 are on one line, so the dihedral is undefined"
+        );
+        assert!(error.help().is_some());
+    }
+
+    #[test]
+    fn references_on_one_spot_are_refused() {
+        let text = "C1\nC2 C1 1.2\nC3 C1 1.2 C2 0\nH C2 1 C3 100 C1 0";
+        let error = parse(text)
+            .unwrap()
+            .positions(LengthUnit::Angstrom)
+            .unwrap_err();
+        assert!(matches!(
+            error.problem,
+            GeometryProblem::CoincidentReferences { .. }
+        ));
+    }
+
+    #[test]
+    fn every_mistake_is_found_with_its_place() {
+        let text =
+            "O\nH O 0.96 # fine\nH O nought Q 190\nXe H -1 O inf Z9 60\nC1 O 1 O 90 C1 5 9 # nine";
+        let found = problems(text);
+        let places: Vec<&str> = found.iter().map(|(place, _)| *place).collect();
+        assert_eq!(
+            places,
+            [
+                "H", "nought", "Q", "190", "Xe", "-1", "inf", "Z9", "9", "O", "C1"
+            ]
+        );
+        assert_eq!(
+            found[0].1,
+            GeometryProblem::DuplicateLabel {
+                label: "H".to_owned(),
+                first: 2
+            }
+        );
+        assert_eq!(
+            found[2].1,
+            GeometryProblem::UnknownReference {
+                label: "Q".to_owned(),
+                known: vec!["O".to_owned(), "H".to_owned()]
+            }
+        );
+        assert!(matches!(
+            found[10].1,
+            GeometryProblem::LaterReference { own: true, .. }
+        ));
+        assert!(matches!(
+            found[9].1,
+            GeometryProblem::RepeatedReference { .. }
+        ));
+    }
+
+    #[test]
+    fn a_short_row_says_what_it_needs() {
+        let found = problems("O\nH1 O 0.96\nH2 O 0.96");
+        assert_eq!(found.len(), 1);
+        assert_eq!(found[0].0, "H2 O 0.96");
+        assert_eq!(
+            found[0].1.to_string(),
+            "row 3 has 3 words, but needs 5: LABEL REF distance REF angle"
+        );
+        assert_eq!(problems("O\nH1 H2 1\nH2 O 1 H1 90")[0].0, "H2");
+        assert_eq!(problems(" # nothing\n")[0].1, GeometryProblem::NoAtoms);
+    }
+}

@@ -1,52 +1,6 @@
-//! Sweeps and the grid of points they span.
+//! The grid of points that sweeps span.
 
-use crate::molecule::motion::{Motion, MotionError, set_all};
-use nalgebra::Vector3;
-
-/// One swept internal coordinate and its values.
-#[derive(Debug, Clone, PartialEq)]
-pub struct Sweep {
-    /// The coordinate and the atoms that move.
-    pub motion: Motion,
-    /// Coordinates set to the same value.
-    pub also: Vec<Motion>,
-    /// Values in ångström or degree, in the order of the spec.
-    pub values: Vec<f64>,
-}
-
-impl Sweep {
-    /// Number of the value nearest the coordinate's value at `positions` (bohr).
-    #[must_use]
-    pub fn nearest(&self, positions: &[Vector3<f64>]) -> usize {
-        let coordinate = &self.motion.coordinate;
-        let here = coordinate.value(positions);
-        let away = |value: f64| {
-            coordinate
-                .difference(coordinate.from_reported(value), here)
-                .abs()
-        };
-        (0..self.values.len())
-            .min_by(|&a, &b| away(self.values[a]).total_cmp(&away(self.values[b])))
-            .unwrap_or(0)
-    }
-
-    /// Name of the sweep's column: kind, labels and unit, such as `bond_O_H1_angstrom`.
-    #[must_use]
-    pub fn column_name(&self, labels: &[String]) -> String {
-        let coordinate = &self.motion.coordinate;
-        let atoms: Vec<&str> = coordinate
-            .atoms()
-            .iter()
-            .map(|&a| labels[a].as_str())
-            .collect();
-        format!(
-            "{}_{}_{}",
-            coordinate.kind_word(),
-            atoms.join("_"),
-            coordinate.unit_word()
-        )
-    }
-}
+use super::sweep::Sweep;
 
 /// The product of the values of zero, one or two sweeps; points are numbered with the last sweep fastest.
 #[derive(Debug, Clone, PartialEq, Eq)]
@@ -144,28 +98,6 @@ pub fn values_at(sweeps: &[Sweep], grid: &Grid, point: usize) -> Vec<f64> {
         .zip(sweeps)
         .map(|(&i, s)| s.values[i])
         .collect()
-}
-
-/// Positions (bohr) at a point: the input geometry with every swept coordinate, and those tied to it,
-/// set by rigid motions. Atoms that no sweep moves keep their positions bit for bit.
-///
-/// # Errors
-/// [`MotionError`] if the coordinates cannot take these values together.
-pub fn positions_at(
-    sweeps: &[Sweep],
-    grid: &Grid,
-    input: &[Vector3<f64>],
-    point: usize,
-) -> Result<Vec<Vector3<f64>>, MotionError> {
-    let mut settings = Vec::new();
-    for (sweep, value) in sweeps.iter().zip(values_at(sweeps, grid, point)) {
-        for motion in std::iter::once(&sweep.motion).chain(&sweep.also) {
-            settings.push((motion.clone(), motion.coordinate.from_reported(value)));
-        }
-    }
-    let mut positions = input.to_vec();
-    set_all(&settings, &mut positions)?;
-    Ok(positions)
 }
 
 #[cfg(test)]

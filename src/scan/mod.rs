@@ -6,10 +6,12 @@ mod heal;
 pub mod journal;
 pub mod runner;
 mod settings;
+pub mod sweep;
 pub mod walk;
 
 pub use event::{Entry, Event};
-pub use grid::{Grid, Sweep};
+pub use grid::Grid;
 pub use heal::SAME_SOLUTION;
 pub use runner::{Scan, ScanError};
 pub use settings::{Others, Passes, SeedKind, StateChoice, WalkSettings, WalkStart};
+pub use sweep::Sweep;

@@ -4,8 +4,11 @@
 //! [`Surface`] is implemented by Hartree–Fock and by closed-form model surfaces whose
 //! answers are known, so that walks, journals, reports and figures are tested in milliseconds.
 
+mod hartree_fock;
 pub mod model;
 
+pub use crate::scf::StopReason;
+pub use hartree_fock::{HartreeFock, Workspace};
 use nalgebra::Vector3;
 use serde::{Deserialize, Serialize};
 
@@ -98,18 +101,6 @@ pub struct PointOutcome<S> {
     pub record: PointRecord,
     /// What a neighbour may start from.
     pub seed: Option<S>,
-}
-
-/// Why a self-consistent field calculation stopped.
-#[derive(Debug, Clone, Copy, PartialEq, Eq, Serialize, Deserialize)]
-#[serde(rename_all = "kebab-case")]
-pub enum StopReason {
-    /// both thresholds met
-    Converged,
-    /// as many Fock builds as allowed
-    IterationLimit,
-    /// energy or density stopped being finite numbers
-    NotFinite,
 }
 
 /// Lowest eigenvalues of the orbital Hessians, hartree; negative: unstable.
@@ -210,6 +201,15 @@ pub enum SurfaceError {
         functions: usize,
         /// occupied orbitals of one spin
         occupied: usize,
+    },
+    /// Charge and multiplicity do not fit the molecule.
+    #[error(transparent)]
+    Electrons(crate::molecule::ElectronCountError),
+    /// Restricted orbitals for unpaired electrons.
+    #[error("restricted Hartree–Fock treats closed shells only, not multiplicity {multiplicity}")]
+    OpenShell {
+        /// multiplicity asked for
+        multiplicity: u32,
     },
     /// The eigenvalue iteration did not end.
     #[error("a matrix of order {order} could not be diagonalised")]

@@ -1,0 +1,195 @@
+//! One job end to end: every level of a spec walked over its grid, and all results made from the
+//! finished evaluations alone, so that a journal can give them again.
+
+pub mod assemble;
+pub mod finding;
+
+pub use assemble::{Cost, JobResult, LevelResult, PointResult, SweepResult, assemble};
+pub use finding::{Finding, FindingKind};
+
+use crate::scan::journal::{LevelEnd, LevelEntry};
+use crate::scan::{Event, Grid, Scan, ScanError, WalkStart, grid, runner};
+use crate::spec::Spec;
+use crate::surface::HartreeFock;
+use crate::surface::Surface;
+use crate::{molecule::motion::MotionError, surface::SurfaceError};
+use rayon::ThreadPool;
+use std::sync::atomic::AtomicBool;
+use std::time::Instant;
+
+/// Why a job could not be finished.
+#[derive(Debug, thiserror::Error)]
+pub enum JobError {
+    /// A walk ended early.
+    #[error("level {level}: {source}")]
+    Scan {
+        /// name of the level
+        level: String,
+        /// what happened
+        source: ScanError,
+    },
+    /// A level that cannot be set up.
+    #[error("level {level}: {source}")]
+    Level {
+        /// name of the level
+        level: String,
+        /// what is wrong
+        source: SurfaceError,
+    },
+    /// A geometry of the grid that cannot be reached.
+    #[error("point {values:?}: {source}")]
+    Geometry {
+        /// values of the sweeps, ångström or degree
+        values: Vec<f64>,
+        /// what is wrong
+        source: MotionError,
+    },
+}
+
+impl JobError {
+    /// Whether the job ended because it was asked to.
+    #[must_use]
+    pub fn is_interruption(&self) -> bool {
+        matches!(
+            self,
+            Self::Scan {
+                source: ScanError::Interrupted { .. },
+                ..
+            }
+        )
+    }
+}
+
+/// Something that happened in a job.
+#[derive(Debug)]
+pub enum JobEvent<'a> {
+    /// A level's walk tells something.
+    Walk {
+        /// number of the level
+        level: usize,
+        /// its name
+        name: &'a str,
+        /// what happened
+        event: &'a Event,
+    },
+    /// A level is complete.
+    LevelDone(LevelEnd),
+}
+
+/// What a job leaves: all evaluations and how long each level took.
+#[derive(Debug, Clone, Default)]
+pub struct JobRecord {
+    /// Evaluations of all levels.
+    pub entries: Vec<LevelEntry>,
+    /// Ends of the levels that are complete.
+    pub ends: Vec<LevelEnd>,
+}
+
+/// The walk that a spec asks for.
+///
+/// # Errors
+/// If a point of the grid has no geometry.
+pub fn scan_of(spec: &Spec) -> Result<Scan, JobError> {
+    let grid = Grid::of(&spec.sweeps);
+    let input = &spec.molecule.positions;
+    let mut coordinates = Vec::with_capacity(grid.len());
+    let mut positions = Vec::with_capacity(grid.len());
+    for point in 0..grid.len() {
+        let values = grid::values_at(&spec.sweeps, &grid, point);
+        match spec.positions_at(&values) {
+            Ok(places) => positions.push(places),
+            Err(source) => return Err(JobError::Geometry { values, source }),
+        }
+        coordinates.push(values);
+    }
+    let start_index: Vec<usize> = spec
+        .sweeps
+        .iter()
+        .map(|sweep| match spec.walk.start {
+            WalkStart::First => 0,
+            WalkStart::Last => sweep.values.len() - 1,
+            WalkStart::Geometry => sweep.nearest(input),
+        })
+        .collect();
+    Ok(Scan {
+        start: grid.point(&start_index),
+        grid,
+        coordinates,
+        positions,
+        settings: spec.walk.clone(),
+        gradients: spec.output.gradients,
+        memory_bytes: spec.scf.memory_mib << 20,
+    })
+}
+
+/// Runs every level of a spec, telling `observer` of each finished evaluation.
+///
+/// # Errors
+/// [`JobError`]; what was finished until then has been told.
+pub fn run(
+    spec: &Spec,
+    pool: &ThreadPool,
+    stop: &AtomicBool,
+    observer: &mut dyn FnMut(&JobEvent<'_>),
+) -> Result<JobRecord, JobError> {
+    let scan = scan_of(spec)?;
+    let mut record = JobRecord::default();
+    for (number, level) in spec.levels.iter().enumerate() {
+        let surface = HartreeFock::new(
+            &level.molecule(&spec.molecule),
+            level.shells_of_atom.clone(),
+            level.method,
+            spec.scf.clone(),
+        )
+        .map_err(|source| JobError::Level {
+            level: level.name.clone(),
+            source,
+        })?;
+        walk_level(
+            &surface,
+            &scan,
+            number,
+            &level.name,
+            pool,
+            stop,
+            observer,
+            &mut record,
+        )?;
+    }
+    Ok(record)
+}
+
+/// Walks one level over any surface and adds what it gives to `record`.
+///
+/// # Errors
+/// [`JobError::Scan`].
+pub fn walk_level<S: Surface>(
+    surface: &S,
+    scan: &Scan,
+    level: usize,
+    name: &str,
+    pool: &ThreadPool,
+    stop: &AtomicBool,
+    observer: &mut dyn FnMut(&JobEvent<'_>),
+    record: &mut JobRecord,
+) -> Result<(), JobError> {
+    let begin = Instant::now();
+    let entries = runner::run(surface, scan, pool, stop, &mut |event| {
+        observer(&JobEvent::Walk { level, name, event });
+    })
+    .map_err(|source| JobError::Scan {
+        level: name.to_owned(),
+        source,
+    })?;
+    record
+        .entries
+        .extend(entries.into_iter().map(|entry| LevelEntry { level, entry }));
+    let end = LevelEnd {
+        level,
+        wall_seconds: begin.elapsed().as_secs_f64(),
+        threads: pool.current_num_threads(),
+    };
+    observer(&JobEvent::LevelDone(end.clone()));
+    record.ends.push(end);
+    Ok(())
+}

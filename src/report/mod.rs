@@ -1,0 +1,23 @@
+//! Results → files and text. Every format is one small file; writers are passed in.
+
+pub mod csv;
+pub mod figures;
+pub mod folder;
+pub mod geometries;
+pub mod summary;
+pub mod text;
+
+use crate::job::JobResult;
+use crate::spec::Spec;
+use folder::{FolderError, RunFolder};
+
+/// Writes every file that is made from results, each whole or not at all.
+///
+/// # Errors
+/// [`FolderError`] if one cannot be written.
+pub fn write_all(folder: &RunFolder, spec: &Spec, result: &JobResult) -> Result<(), FolderError> {
+    folder.write("spec.toml", spec.text.as_bytes())?;
+    folder.write("geometries.xyz", geometries::render(result).as_bytes())?;
+    folder.write("points.csv", &csv::render(spec, result))?;
+    folder.write("summary.json", summary::render(result).as_bytes())
+}

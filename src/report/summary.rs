@@ -1,0 +1,128 @@
+//! `summary.json`: everything a run has to say, for programs.
+
+use super::csv::dipole_debye;
+use crate::job::{Cost, Finding, FindingKind, JobResult, LevelResult, PointResult};
+use crate::units::ANGSTROM_PER_BOHR;
+use serde::Serialize;
+
+#[derive(Serialize)]
+struct Summary<'a> {
+    thalweg: &'static str,
+    title: &'a str,
+    sweeps: Vec<Sweep<'a>>,
+    levels: Vec<Level<'a>>,
+    cost: &'a Cost,
+}
+
+#[derive(Serialize)]
+struct Sweep<'a> {
+    kind: &'a str,
+    atoms: &'a [String],
+    unit: &'a str,
+    values: &'a [f64],
+}
+
+#[derive(Serialize)]
+struct Level<'a> {
+    name: &'a str,
+    method: &'a str,
+    basis: &'a str,
+    basis_functions: usize,
+    electrons: usize,
+    mean_fock_builds_per_further_point: Option<f64>,
+    points: Vec<Point<'a>>,
+    findings: &'a [Finding],
+}
+
+#[derive(Serialize)]
+struct Point<'a> {
+    index: &'a [usize],
+    values: &'a [f64],
+    geometry_angstrom: Vec<(&'a str, f64, f64, f64)>,
+    energy_hartree: Option<f64>,
+    converged: bool,
+    fock_builds: usize,
+    s_squared: Option<f64>,
+    homo_hartree: Option<f64>,
+    lumo_hartree: Option<f64>,
+    dipole_debye: Option<f64>,
+    charges_mulliken: Option<&'a [f64]>,
+    charges_loewdin: Option<&'a [f64]>,
+    spins_loewdin: Option<&'a [f64]>,
+    bond_orders: Option<Vec<(&'a str, &'a str, f64)>>,
+    electrons: Option<f64>,
+    findings: &'a [FindingKind],
+}
+
+/// The summary as indented JSON.
+#[must_use]
+pub fn render(result: &JobResult) -> String {
+    let summary = Summary {
+        thalweg: env!("CARGO_PKG_VERSION"),
+        title: &result.title,
+        sweeps: result
+            .sweeps
+            .iter()
+            .map(|s| Sweep {
+                kind: s.kind,
+                atoms: &s.atoms,
+                unit: s.unit,
+                values: &s.values,
+            })
+            .collect(),
+        levels: result.levels.iter().map(|l| level(result, l)).collect(),
+        cost: &result.cost,
+    };
+    // Plain structs of numbers and strings: serialisation has no way to fail.
+    serde_json::to_string_pretty(&summary).unwrap_or_default() + "\n"
+}
+
+fn level<'a>(result: &'a JobResult, level: &'a LevelResult) -> Level<'a> {
+    Level {
+        name: &level.name,
+        method: &level.method,
+        basis: &level.basis,
+        basis_functions: level.basis_functions,
+        electrons: level.electrons,
+        mean_fock_builds_per_further_point: level.mean_fock_builds,
+        points: level.points.iter().map(|p| point(result, p)).collect(),
+        findings: &level.findings,
+    }
+}
+
+fn point<'a>(result: &'a JobResult, point: &'a PointResult) -> Point<'a> {
+    let record = &point.record;
+    let converged = record.energy.is_some();
+    Point {
+        index: &point.index,
+        values: &point.values,
+        geometry_angstrom: result
+            .symbols
+            .iter()
+            .zip(&point.positions)
+            .map(|(&symbol, p)| {
+                let [x, y, z] = [p.x, p.y, p.z].map(|v| v * ANGSTROM_PER_BOHR);
+                (symbol, x, y, z)
+            })
+            .collect(),
+        energy_hartree: record.energy,
+        converged,
+        fock_builds: record.fock_builds,
+        s_squared: converged.then_some(record.s_squared),
+        homo_hartree: record.homo.filter(|_| converged),
+        lumo_hartree: record.lumo.filter(|_| converged),
+        dipole_debye: converged.then(|| dipole_debye(record.dipole)),
+        charges_mulliken: converged.then_some(&record.charges_mulliken),
+        charges_loewdin: converged.then_some(&record.charges_loewdin),
+        spins_loewdin: converged.then_some(&record.spins_loewdin),
+        bond_orders: converged.then(|| {
+            record
+                .bond_orders
+                .iter()
+                .map(|&(i, j, order)| (&*result.labels[i], &*result.labels[j], order))
+                .collect()
+        }),
+        electrons: converged.then_some(record.electrons),
+        findings: &point.findings,
+    }
+}
