@@ -4,10 +4,12 @@
 //!
 //! [`units`], [`elements`] ← [`molecule`] ← [`basis`] ← [`integrals`] ← [`scf`] ← [`surface`] ← [`minimise`] ← [`scan`] ← [`spec`]
 //! ← [`job`] ← [`report`], [`plot`] ← [`cli`].
+//! [`fit`] ← [`vibration`] use units and plain arrays only; job calls them.
 
 pub mod basis;
 pub mod cli;
 pub mod elements;
+pub mod fit;
 pub mod integrals;
 pub mod job;
 pub mod minimise;
@@ -19,3 +21,4 @@ pub mod scf;
 pub mod spec;
 pub mod surface;
 pub mod units;
+pub mod vibration;
