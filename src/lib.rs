@@ -2,7 +2,7 @@
 //!
 //! Modules, each of which may use those before it:
 //!
-//! [`units`], [`elements`] ← [`molecule`] ← [`basis`] ← [`integrals`] ← [`scf`] ← [`surface`] ← [`scan`] ← [`spec`]
+//! [`units`], [`elements`] ← [`molecule`] ← [`basis`] ← [`integrals`] ← [`scf`] ← [`surface`] ← [`minimise`] ← [`scan`] ← [`spec`]
 //! ← [`job`] ← [`report`], [`plot`] ← [`cli`].
 //! [`fit`] ← [`vibration`] use units and plain arrays only; job calls them.
 
@@ -12,6 +12,7 @@ pub mod elements;
 pub mod fit;
 pub mod integrals;
 pub mod job;
+pub mod minimise;
 pub mod molecule;
 pub mod plot;
 pub mod report;
