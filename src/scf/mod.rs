@@ -17,7 +17,6 @@ pub mod second_order;
 pub mod seed;
 mod settings;
 pub mod stability;
-pub mod stand_in;
 
 use serde::{Deserialize, Serialize};
 pub use settings::{FirstDensity, Method, ScfSettings};
