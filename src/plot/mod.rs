@@ -30,6 +30,7 @@ mod map_grid;
 mod panels;
 mod place;
 mod range;
+mod series;
 mod style;
 mod surface;
 mod vibration;
