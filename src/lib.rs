@@ -1,7 +1,7 @@
 //! thalweg walks molecules along their potential-energy surfaces.
 //!
 //! Modules, each of which may use those before it:
-//! [`units`], [`elements`] ← [`molecule`] ← [`basis`].
+//! [`units`], [`elements`] ← [`molecule`] ← [`basis`]; [`plot`] uses plain arrays only.
 
 pub mod basis;
 pub mod elements;

@@ -9,7 +9,7 @@ use super::legend::{self, Entry, Sample};
 use super::place::Occupied;
 use super::series::SeriesDrawing;
 use super::style::{
-    DOTS, FIT_DASH, INK, LABEL_SIZE, MARGIN, Marker, SLATE, SeriesStyle, TICK_SIZE, WHOLE, series,
+    DOTS, FIT_DASHES, INK, LABEL_SIZE, MARGIN, Marker, SLATE, SeriesStyle, TICK_SIZE, WHOLE, series,
 };
 use super::{Figure, PlotError, interpolate, range, require_finite};
 
@@ -178,6 +178,13 @@ impl CurveFigure {
                 level.minima.iter().flat_map(|m| [m.x, m.energy]),
             )?;
             require_finite(
+                &format!("fits of {name}"),
+                level
+                    .fits
+                    .iter()
+                    .flat_map(|f| f.points.iter().flat_map(|p| [p.0, p.1])),
+            )?;
+            require_finite(
                 &format!("limit or onset of {name}"),
                 level.limit.iter().map(|l| l.energy).chain(level.onset),
             )?;
@@ -324,13 +331,13 @@ impl CurveFigure {
                     format!("{}, second solution", level.name),
                 ));
             }
-            for fit in level.fits.iter().filter(|f| f.points.len() > 1) {
+            for (f, fit) in level.fits.iter().enumerate() {
                 let words = if self.levels.len() > 1 {
                     format!("{}, {}", level.name, fit.name)
                 } else {
                     fit.name.clone()
                 };
-                entries.push(Entry::new(Sample::Line(fit_stroke(style), None), words));
+                entries.push(Entry::new(Sample::Line(fit_stroke(style, f), None), words));
             }
         }
         let mut limits = self.levels.iter().filter_map(|l| l.limit.as_ref());
@@ -409,8 +416,10 @@ fn second_stroke(style: SeriesStyle) -> Stroke {
 }
 
 /// Broad and pale, so that a good fit shows although it lies on its points.
-fn fit_stroke(style: SeriesStyle) -> Stroke {
-    Stroke::new(style.colour, 5.5).faint(0.38).dashed(FIT_DASH)
+fn fit_stroke(style: SeriesStyle, index: usize) -> Stroke {
+    Stroke::new(style.colour, 5.5)
+        .faint(0.38)
+        .dashed(FIT_DASHES[index % FIT_DASHES.len()])
 }
 
 impl CurveLevel {
@@ -448,8 +457,8 @@ impl CurveLevel {
                 occupied.add_line(&piece);
             }
         };
-        for fit in &self.fits {
-            draw(canvas, occupied, &fit.points, fit_stroke(style));
+        for (k, fit) in self.fits.iter().enumerate() {
+            draw(canvas, occupied, &fit.points, fit_stroke(style, k));
         }
         for run in interpolate::runs(&self.second_solution, &[]) {
             let line = interpolate::smooth(&run, pieces(frame, &run));
