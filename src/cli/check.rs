@@ -4,8 +4,6 @@ use super::args::CheckArgs;
 use super::{Failure, Status, Streams, load};
 use crate::integrals::repulsion::RepulsionList;
 use crate::job;
-use crate::integrals::repulsion::RepulsionList;
-use crate::job;
 use crate::scan::SeedKind;
 use crate::spec::{Level, Spec};
 use std::io::Write;
