@@ -2,14 +2,18 @@
 //!
 //! Modules, each of which may use those before it:
 //!
-//! [`units`], [`elements`] ← [`molecule`] ← [`basis`] ← [`integrals`] ← [`scf`] ← [`surface`] ← [`scan`] ← [`spec`]
+//! [`units`], [`elements`] ← [`molecule`] ← [`basis`] ← [`integrals`] ← [`scf`] ← [`surface`] ← [`minimise`] ← [`scan`] ← [`spec`]
 //! ← [`job`] ← [`report`], [`plot`] ← [`cli`].
+//! [`fit`] ← [`vibration`] use units and plain arrays only; job calls them.
 
 pub mod basis;
 pub mod cli;
 pub mod elements;
+pub mod fit;
+pub mod gradient;
 pub mod integrals;
 pub mod job;
+pub mod minimise;
 pub mod molecule;
 pub mod plot;
 pub mod report;
@@ -18,3 +22,4 @@ pub mod scf;
 pub mod spec;
 pub mod surface;
 pub mod units;
+pub mod vibration;

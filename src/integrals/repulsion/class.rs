@@ -131,7 +131,7 @@ fn one_direction(i: usize, j: usize) -> Vec<(usize, usize, usize, usize, usize, 
     let mut terms = Vec::new();
     for m in 0..=i {
         for n in 0..=j {
-            let sign = if (i - m) % 2 == 0 { 1.0 } else { -1.0 };
+            let sign = if (i - m).is_multiple_of(2) { 1.0 } else { -1.0 };
             let c = sign * binomial(i, m) * binomial(j, n);
             for (t, &h) in power_in_hermites(m + n).iter().enumerate() {
                 if h != 0.0 {
@@ -350,7 +350,7 @@ impl PairClass {
                 let degree: usize = hermite_powers()[class.hermites[u].0].iter().sum();
                 class
                     .ket_signs
-                    .push(if degree % 2 == 0 { 1.0 } else { -1.0 });
+                    .push(if degree.is_multiple_of(2) { 1.0 } else { -1.0 });
                 class.terms.extend(terms);
                 class.term_ends.push(class.terms.len() as u32);
             }

@@ -195,7 +195,7 @@ impl PairSet {
                     let plan = *plan_index
                         .entry((&classes.0.key, &classes.1.key))
                         .or_insert_with(|| {
-                            plans.push(QuartetPlan::new(classes.0, classes.1));
+                            plans.push(QuartetPlan::get(classes.0, classes.1));
                             plans.len() - 1
                         });
                     let step = QUARTETS_PER_TASK.div_ceil(groups[ket].members.len());
@@ -354,7 +354,7 @@ fn set_norms(mut pairs: Vec<&mut ShellPair>) {
         .par_iter_mut()
         .for_each_init(Walker::default, |walker, four| {
             let class = &four[0].class;
-            let plan = QuartetPlan::new(class, class);
+            let plan = QuartetPlan::get(class, class);
             let lanes = [0, 1, 2, 3].map(|l: usize| &*four[l.min(four.len() - 1)]);
             walker.bra.pack(lanes, Side::Bra);
             walker.ket_mixed.pack(lanes, Side::Ket);

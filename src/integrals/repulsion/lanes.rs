@@ -279,10 +279,14 @@ mod avx2 {
         }
         #[inline(always)]
         fn transposed(rows: [&CellPolynomial; 4]) -> [Self; 8] {
-            // SAFETY: features as said at the type; each row holds eight doubles.
-            unsafe {
-                let half = |offset: usize| {
-                    let [a, b, c, d] = rows.map(|row| _mm256_loadu_pd(row.as_ptr().add(offset)));
+            // No closures here: they would be functions of their own, without the features, into which
+            // the intrinsics cannot be inlined.
+            macro_rules! half {
+                ($offset:literal) => {{
+                    let a = _mm256_loadu_pd(rows[0].as_ptr().add($offset));
+                    let b = _mm256_loadu_pd(rows[1].as_ptr().add($offset));
+                    let c = _mm256_loadu_pd(rows[2].as_ptr().add($offset));
+                    let d = _mm256_loadu_pd(rows[3].as_ptr().add($offset));
                     let ab_even = _mm256_unpacklo_pd(a, b);
                     let ab_odd = _mm256_unpackhi_pd(a, b);
                     let cd_even = _mm256_unpacklo_pd(c, d);
@@ -293,9 +297,12 @@ mod avx2 {
                         Self(_mm256_permute2f128_pd::<0x31>(ab_even, cd_even)),
                         Self(_mm256_permute2f128_pd::<0x31>(ab_odd, cd_odd)),
                     ]
-                };
-                let [a, b, c, d] = half(0);
-                let [e, f, g, h] = half(4);
+                }};
+            }
+            // SAFETY: features as said at the type; each row holds eight doubles.
+            unsafe {
+                let [a, b, c, d] = half!(0);
+                let [e, f, g, h] = half!(4);
                 [a, b, c, d, e, f, g, h]
             }
         }

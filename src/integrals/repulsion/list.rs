@@ -82,6 +82,12 @@ impl RepulsionList {
         self.counts
     }
 
+    /// Evaluates all integrals once more at the geometry that the list has, with the shell pairs that it
+    /// has: what the benchmark times.
+    pub fn refill(&mut self) {
+        self.fill(&vec![true; self.basis.centres().len()], true);
+    }
+
     /// Unique integrals evaluated and taken over by the last [`Self::compute`] or [`Self::update`].
     #[must_use]
     pub fn counts(&self) -> IntegralCounts {

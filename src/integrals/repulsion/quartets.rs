@@ -9,7 +9,7 @@
 //! Hermite functions of bra and ket enter R by their sum only, so that stages 2 and 3 hold each number
 //! once for each pair of scalars, and are plain products over contiguous ranges of degrees.
 
-use super::class::{PairClass, ScalarGroup};
+use super::class::{ClassKey, PairClass, ScalarGroup};
 use super::hermite::scratch_len;
 use super::lanes::{Four, dispatch};
 use super::pairs::PairBlock;
@@ -17,7 +17,8 @@ use super::primitives::{PRIMITIVES, field};
 use super::products::{Contraction, SparseProduct};
 use crate::integrals::boys::{self, BoysTable};
 use crate::integrals::recurrence::{hermite_count, hermite_index, hermite_powers};
-use std::sync::Arc;
+use std::collections::HashMap;
+use std::sync::{Arc, Mutex, OnceLock, PoisonError};
 
 /// Most ket primitives between two contractions.
 const KET_BATCH: usize = 8;
@@ -64,7 +65,18 @@ struct BraStep {
 }
 
 impl QuartetPlan {
-    pub(super) fn new(bra: &Arc<PairClass>, ket: &Arc<PairClass>) -> Self {
+    /// The plan for two classes, made on first use.
+    pub(super) fn get(bra: &Arc<PairClass>, ket: &Arc<PairClass>) -> Arc<Self> {
+        static PLANS: OnceLock<Mutex<HashMap<[ClassKey; 2], Arc<QuartetPlan>>>> = OnceLock::new();
+        let plans = PLANS.get_or_init(Mutex::default);
+        let mut plans = plans.lock().unwrap_or_else(PoisonError::into_inner);
+        let plan = plans
+            .entry([bra.key.clone(), ket.key.clone()])
+            .or_insert_with(|| Arc::new(Self::new(bra, ket)));
+        Arc::clone(plan)
+    }
+
+    fn new(bra: &Arc<PairClass>, ket: &Arc<PairClass>) -> Self {
         let degree = bra.degree + ket.degree;
         let mut half = Vec::new();
         let mut half_len = 0;
