@@ -22,7 +22,11 @@ pub fn energy_gradient(
     energy_weighted: &DMatrix<f64>,
 ) -> Vec<Vector3<f64>> {
     let total = alpha + beta;
-    let charges: Vec<f64> = molecule.atoms.iter().map(crate::molecule::Atom::charge).collect();
+    let charges: Vec<f64> = molecule
+        .atoms
+        .iter()
+        .map(crate::molecule::Atom::charge)
+        .collect();
     let mut gradient = nuclear::repulsion_gradient(molecule);
     let parts = [
         kinetic_gradient(basis, &total),

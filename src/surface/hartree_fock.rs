@@ -528,8 +528,8 @@ fn gradient(geometry: &Geometry, field: &Field<'_>, evaluation: &Evaluation) -> 
     for (y, fock) in evaluation.occupied.iter().zip(&evaluation.focks) {
         // tr over occupied orbitals, in whatever combination they are: Y (YᵀFY) Yᵀ.
         let energies = y.transpose() * (fock * y);
-        weighted += geometry.frame.transform(&(y * energies * y.transpose()))
-            * field.occupation().weight();
+        weighted +=
+            geometry.frame.transform(&(y * energies * y.transpose())) * field.occupation().weight();
     }
     // A single block stands for both spins.
     let (Some(alpha), Some(beta)) = (densities.first(), densities.last()) else {
@@ -627,7 +627,7 @@ impl Surface for HartreeFock {
             }
         }
         let mut record = self.record(&geometry, &field, &settled)?;
-        record.integrals = direct.map_or(integrals, |d| counts(d.counts()));
+        record.integrals = direct.as_ref().map_or(integrals, |d| counts(d.counts()));
         record.scf_seconds = scf_seconds;
         record.seconds = clock.elapsed().as_secs_f64();
         if request.gradient && record.energy.is_some() {
