@@ -6,6 +6,7 @@ pub mod basis;
 pub mod cli;
 pub mod elements;
 pub mod fit;
+pub mod gradient;
 pub mod integrals;
 pub mod job;
 pub mod minimise;

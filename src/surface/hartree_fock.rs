@@ -5,6 +5,7 @@ use super::{
     StabilityRecord, Start, Surface, SurfaceError,
 };
 use crate::basis::{Basis, Shell};
+use crate::gradient::energy_gradient;
 use crate::integrals;
 use crate::integrals::repulsion::{DirectRepulsion, RepulsionList, RepulsionSettings};
 use crate::molecule::{ElectronCountError, Molecule, nuclear};
@@ -521,6 +522,25 @@ impl HartreeFock {
     }
 }
 
+fn gradient(geometry: &Geometry, field: &Field<'_>, evaluation: &Evaluation) -> Vec<[f64; 3]> {
+    let densities = field.densities(&evaluation.occupied);
+    let mut weighted = DMatrix::zeros(geometry.basis.len(), geometry.basis.len());
+    for (y, fock) in evaluation.occupied.iter().zip(&evaluation.focks) {
+        // tr over occupied orbitals, in whatever combination they are: Y (YᵀFY) Yᵀ.
+        let energies = y.transpose() * (fock * y);
+        weighted +=
+            geometry.frame.transform(&(y * energies * y.transpose())) * field.occupation().weight();
+    }
+    // A single block stands for both spins.
+    let (Some(alpha), Some(beta)) = (densities.first(), densities.last()) else {
+        return Vec::new();
+    };
+    energy_gradient(&geometry.molecule, &geometry.basis, alpha, beta, &weighted)
+        .into_iter()
+        .map(Into::into)
+        .collect()
+}
+
 fn counts(counts: integrals::repulsion::IntegralCounts) -> IntegralCounts {
     IntegralCounts {
         computed: counts.computed,
@@ -607,9 +627,13 @@ impl Surface for HartreeFock {
             }
         }
         let mut record = self.record(&geometry, &field, &settled)?;
-        record.integrals = direct.map_or(integrals, |d| counts(d.counts()));
+        record.integrals = direct.as_ref().map_or(integrals, |d| counts(d.counts()));
         record.scf_seconds = scf_seconds;
         record.seconds = clock.elapsed().as_secs_f64();
+        if request.gradient && record.energy.is_some() {
+            record.gradient = Some(gradient(&geometry, &field, &settled.solution.evaluation));
+            record.seconds = clock.elapsed().as_secs_f64();
+        }
         let seed = record.energy.is_some().then(|| {
             Seed::new(SeedState {
                 occupied: settled.solution.refined,
