@@ -5,7 +5,7 @@ use super::{
     StabilityRecord, Start, Surface, SurfaceError,
 };
 use crate::basis::{Basis, Shell};
-use crate::gradient::energy_gradient;
+use crate::gradient::{GradientSettings, hartree_fock_gradient};
 use crate::integrals;
 use crate::integrals::repulsion::{DirectRepulsion, RepulsionList, RepulsionSettings};
 use crate::molecule::{ElectronCountError, Molecule, nuclear};
@@ -535,10 +535,17 @@ fn gradient(geometry: &Geometry, field: &Field<'_>, evaluation: &Evaluation) -> 
     let (Some(alpha), Some(beta)) = (densities.first(), densities.last()) else {
         return Vec::new();
     };
-    energy_gradient(&geometry.molecule, &geometry.basis, alpha, beta, &weighted)
-        .into_iter()
-        .map(Into::into)
-        .collect()
+    hartree_fock_gradient(
+        &geometry.molecule,
+        &geometry.basis,
+        alpha,
+        beta,
+        &weighted,
+        &GradientSettings::default(),
+    )
+    .into_iter()
+    .map(Into::into)
+    .collect()
 }
 
 fn counts(counts: integrals::repulsion::IntegralCounts) -> IntegralCounts {

@@ -348,7 +348,8 @@ impl<'a> SharedList<'a> {
         lane: usize,
         strides: [usize; 2],
     ) {
-        let (Some(&last_row), Some(&last_column)) = (rows.iter().max(), columns.iter().max()) else {
+        let (Some(&last_row), Some(&last_column)) = (rows.iter().max(), columns.iter().max())
+        else {
             return;
         };
         assert!(pair_count(last_row as usize) + (last_column as usize) < self.len);
