@@ -1,15 +1,14 @@
 //! thalweg walks molecules along their potential-energy surfaces.
 //!
 //! Modules, each of which may use those before it:
-//!
-//! [`units`], [`elements`] ← [`molecule`] ← [`basis`] ← [`integrals`] ← [`scf`] ← [`surface`] ← [`scan`] ← [`spec`]
-//! ← [`job`] ← [`report`], [`plot`] ← [`cli`].
 
 pub mod basis;
 pub mod cli;
 pub mod elements;
+pub mod fit;
 pub mod integrals;
 pub mod job;
+pub mod minimise;
 pub mod molecule;
 pub mod plot;
 pub mod report;
@@ -18,3 +17,4 @@ pub mod scf;
 pub mod spec;
 pub mod surface;
 pub mod units;
+pub mod vibration;

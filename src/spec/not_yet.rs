@@ -23,11 +23,7 @@ pub(super) enum Feature {
 
 /// The features that are not built.
 const NOT_YET: &[Feature] = &[
-    Feature::SeedExtrapolated,
-    Feature::PassesBoth,
     Feature::OthersOptimised,
-    Feature::StateFollow,
-    Feature::Stability,
     Feature::Dissociation,
     Feature::Fit,
     Feature::Vibration,
