@@ -1,15 +1,12 @@
 //! thalweg walks molecules along their potential-energy surfaces.
 //!
 //! Modules, each of which may use those before it:
-//!
-//! [`units`], [`elements`] ← [`molecule`] ← [`basis`] ← [`integrals`] ← [`scf`] ← [`surface`] ← [`minimise`] ← [`scan`] ← [`spec`]
-//! ← [`job`] ← [`report`], [`plot`] ← [`cli`].
-//! [`fit`] ← [`vibration`] use units and plain arrays only; job calls them.
 
 pub mod basis;
 pub mod cli;
 pub mod elements;
 pub mod fit;
+pub mod gradient;
 pub mod integrals;
 pub mod job;
 pub mod minimise;

@@ -2,9 +2,9 @@
 
 use super::args::CheckArgs;
 use super::{Failure, Status, Streams, load};
+use crate::integrals::repulsion::RepulsionList;
 use crate::job;
-use crate::scan::{SeedKind, walk};
-use crate::scf::stand_in::RepulsionList;
+use crate::scan::SeedKind;
 use crate::spec::{Level, Spec};
 use std::io::Write;
 
@@ -59,13 +59,7 @@ pub(super) fn run(args: &CheckArgs, streams: &mut Streams<'_>) -> Result<Status,
             moving.join(", ")
         )?;
     }
-    let evaluations = walk::plan(
-        &scan.grid,
-        scan.start,
-        spec.walk.seed,
-        spec.walk.passes == crate::scan::Passes::Both,
-    )
-    .len();
+    let evaluations = scan.plan().len();
     let mut total = 0.0;
     for level in &spec.levels {
         let seconds = estimate(&spec, level, evaluations);

@@ -9,6 +9,7 @@
 
 pub mod attraction;
 pub mod boys;
+pub mod derivative;
 pub mod dipole;
 pub mod harmonics;
 pub mod kinetic;
@@ -16,12 +17,18 @@ mod one_electron;
 pub mod overlap;
 pub mod recurrence;
 pub mod reference;
+pub mod repulsion;
+pub mod screening;
 pub mod values;
 
 pub use attraction::attraction;
 pub use dipole::dipole;
 pub use kinetic::kinetic;
 pub use overlap::{overlap, overlap_between};
+pub use repulsion::{
+    CoulombExchange, CoulombExchangePair, DirectRepulsion, IntegralCounts, RepulsionList,
+    RepulsionSettings,
+};
 pub use values::basis_values;
 
 #[cfg(test)]

@@ -1,8 +1,11 @@
 //! Evaluations → results: the kept solution of every point, findings and cost.
 
-use super::finding::{Finding, FindingKind};
 use super::{JobRecord, scan_of};
-use crate::scan::{Entry, Grid, Scan};
+use crate::basis::Shell;
+use crate::scan::audit::{Audited, audit};
+use crate::scan::kept::keep;
+use crate::scan::{Entry, Finding, FindingKind, Grid, Likeness, Scan};
+use crate::scf::Method;
 use crate::spec::{Level, Spec};
 use crate::surface::PointRecord;
 use nalgebra::Vector3;
@@ -59,6 +62,8 @@ pub struct LevelResult {
     pub points: Vec<PointResult>,
     /// What a person should see.
     pub findings: Vec<Finding>,
+    /// How alike the kept solutions of neighbouring points are.
+    pub likeness: Vec<Likeness>,
     /// Mean Fock builds of the kept solutions, all points but the first; none for a single point.
     pub mean_fock_builds: Option<f64>,
 }
@@ -173,7 +178,9 @@ pub fn assemble(spec: &Spec, record: &JobRecord) -> Result<JobResult, super::Job
                 .filter(|e| e.level == number)
                 .map(|e| &e.entry)
                 .collect();
-            level_result(spec, level, &scan, &entries)
+            let end = record.ends.iter().find(|e| e.level == number);
+            let likeness = end.map_or(&[][..], |e| &e.likeness);
+            level_result(spec, level, &scan, &entries, likeness)
         })
         .collect();
     Ok(JobResult {
@@ -225,19 +232,52 @@ fn cost(record: &JobRecord) -> Cost {
     cost
 }
 
-fn level_result(spec: &Spec, level: &Level, scan: &Scan, entries: &[&Entry]) -> LevelResult {
+fn level_result(
+    spec: &Spec,
+    level: &Level,
+    scan: &Scan,
+    entries: &[&Entry],
+    likeness: &[Likeness],
+) -> LevelResult {
     let molecule = level.molecule(&spec.molecule);
-    let mut points: Vec<PointResult> = (0..scan.grid.len())
-        .filter_map(|point| kept(scan, point, entries))
+    let (alpha, beta) = molecule.electrons().unwrap_or_default();
+    let spin = 0.5 * (alpha as f64 - beta as f64);
+    let functions = level
+        .shells_of_atom
+        .iter()
+        .flatten()
+        .map(Shell::functions)
+        .sum();
+    let kept = keep(
+        entries.iter().copied(),
+        scan.grid.len(),
+        scan.settings.state,
+    );
+    let findings = audit(&Audited {
+        grid: &scan.grid,
+        coordinates: &scan.coordinates,
+        kept: &kept,
+        likeness,
+        pure_s_squared: spin * (spin + 1.0),
+        functions,
+        restricted: level.method == Method::Rhf,
+    });
+    let points: Vec<PointResult> = kept
+        .iter()
+        .enumerate()
+        .filter_map(|(point, kept)| {
+            let kept = kept.as_ref()?;
+            Some(PointResult {
+                point,
+                index: scan.grid.index(point),
+                values: scan.coordinates[point].clone(),
+                positions: scan.positions[point].clone(),
+                record: kept.entry.record.clone(),
+                second_energy: kept.second_energy,
+                findings: kinds_at(point, &findings),
+            })
+        })
         .collect();
-    let findings = findings(&points, level);
-    for finding in &findings {
-        for point in &mut points {
-            if finding.points.contains(&point.point) {
-                point.findings.push(finding.kind);
-            }
-        }
-    }
     let further: Vec<f64> = points
         .iter()
         .filter(|p| p.point != scan.start && p.record.energy.is_some())
@@ -247,88 +287,24 @@ fn level_result(spec: &Spec, level: &Level, scan: &Scan, entries: &[&Entry]) -> 
         name: level.name.clone(),
         method: level.method.name().to_lowercase(),
         basis: level.basis_name.clone(),
-        basis_functions: level
-            .shells_of_atom
-            .iter()
-            .flatten()
-            .map(|s| s.functions())
-            .sum(),
-        electrons: molecule.electrons().map_or(0, |(alpha, beta)| alpha + beta),
+        basis_functions: functions,
+        electrons: alpha + beta,
         points,
         findings,
+        likeness: likeness.to_vec(),
         mean_fock_builds: (!further.is_empty())
             .then(|| further.iter().sum::<f64>() / further.len() as f64),
     }
 }
 
-/// The lowest converged solution of a point (else the first that did not converge), and the energy of
-/// another one where there is one.
-fn kept(scan: &Scan, point: usize, entries: &[&Entry]) -> Option<PointResult> {
-    let here: Vec<&&Entry> = entries.iter().filter(|e| e.point == point).collect();
-    let energy = |e: &Entry| e.record.energy.unwrap_or(f64::INFINITY);
-    let lowest = here.iter().map(|e| energy(e)).min_by(f64::total_cmp)?;
-    // Solutions that agree are one; the evaluation that came first stands for them, so that a second
-    // pass that finds nothing new changes nothing.
-    let first = here
+/// Kinds of the findings that concern a point, each once.
+fn kinds_at(point: usize, findings: &[Finding]) -> Vec<FindingKind> {
+    let mut kinds: Vec<FindingKind> = findings
         .iter()
-        .filter(|e| energy(e) <= lowest + crate::scan::SAME_SOLUTION || !lowest.is_finite())
-        .min_by_key(|e| e.order)?;
-    let second = here
-        .iter()
-        .filter_map(|e| e.record.energy)
-        .filter(|&e| e > lowest + crate::scan::SAME_SOLUTION)
-        .min_by(f64::total_cmp);
-    Some(PointResult {
-        point,
-        index: scan.grid.index(point),
-        values: scan.coordinates[point].clone(),
-        positions: scan.positions[point].clone(),
-        record: first.record.clone(),
-        second_energy: second,
-        findings: Vec::new(),
-    })
-}
-
-fn findings(points: &[PointResult], level: &Level) -> Vec<Finding> {
-    let functions: usize = level
-        .shells_of_atom
-        .iter()
-        .flatten()
-        .map(|s| s.functions())
-        .sum();
-    let which = |test: &dyn Fn(&PointResult) -> bool| -> Vec<usize> {
-        points.iter().filter(|p| test(p)).map(|p| p.point).collect()
-    };
-    let mut findings = Vec::new();
-    let lost = which(&|p| p.record.energy.is_none());
-    if !lost.is_empty() {
-        findings.push(Finding {
-            kind: FindingKind::NotConverged,
-            text: format!(
-                "{} of {} points did not converge and have no energy; a smaller step, another start of the \
-                 walk or more [scf] iterations may help",
-                lost.len(),
-                points.len()
-            ),
-            points: lost,
-        });
-    }
-    let dependent = which(&|p| p.record.functions_kept < functions);
-    if !dependent.is_empty() {
-        let kept = points
-            .iter()
-            .map(|p| p.record.functions_kept)
-            .min()
-            .unwrap_or(functions);
-        findings.push(Finding {
-            kind: FindingKind::NearDependentBasis,
-            text: format!(
-                "the basis functions are nearly dependent at {} points: {kept} of {functions} combinations are \
-                 kept there; energies may step where that number changes",
-                dependent.len()
-            ),
-            points: dependent,
-        });
-    }
-    findings
+        .filter(|f| f.points.contains(&point))
+        .map(|f| f.kind)
+        .collect();
+    kinds.sort_unstable();
+    kinds.dedup();
+    kinds
 }

@@ -2,10 +2,8 @@
 //! finished evaluations alone, so that a journal can give them again.
 
 pub mod assemble;
-pub mod finding;
 
 pub use assemble::{Cost, JobResult, LevelResult, PointResult, SweepResult, assemble};
-pub use finding::{Finding, FindingKind};
 
 use crate::scan::journal::{LevelEnd, LevelEntry};
 use crate::scan::{Event, Grid, Scan, ScanError, WalkStart, grid, runner};
@@ -113,6 +111,7 @@ pub fn scan_of(spec: &Spec) -> Result<Scan, JobError> {
         .collect();
     Ok(Scan {
         start: grid.point(&start_index),
+        is_length: spec.sweeps.iter().map(|s| s.unit() == "angstrom").collect(),
         grid,
         coordinates,
         positions,
@@ -174,20 +173,24 @@ pub fn walk_level<S: Surface>(
     record: &mut JobRecord,
 ) -> Result<(), JobError> {
     let begin = Instant::now();
-    let entries = runner::run(surface, scan, pool, stop, &mut |event| {
+    let walked = runner::run(surface, scan, pool, stop, &mut |event| {
         observer(&JobEvent::Walk { level, name, event });
     })
     .map_err(|source| JobError::Scan {
         level: name.to_owned(),
         source,
     })?;
-    record
-        .entries
-        .extend(entries.into_iter().map(|entry| LevelEntry { level, entry }));
+    record.entries.extend(
+        walked
+            .entries
+            .into_iter()
+            .map(|entry| LevelEntry { level, entry }),
+    );
     let end = LevelEnd {
         level,
         wall_seconds: begin.elapsed().as_secs_f64(),
         threads: pool.current_num_threads(),
+        likeness: walked.likeness,
     };
     observer(&JobEvent::LevelDone(end.clone()));
     record.ends.push(end);

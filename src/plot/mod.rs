@@ -6,14 +6,15 @@
 //! caller names.
 //!
 //! Drawing order: [`Figure`] ← `canvas` (shapes → SVG → PNG) ← `frame` (data coordinates, axes) ←
-//! `place`, `legend` (labels and keys) ← one file per figure. `range` decides which energies are
-//! shown, `interpolate` which points are joined, `style`, `colour` and `font` hold the look.
+//! `place`, `label`, `legend` (words and keys) ← one file per figure. `range` decides which energies are
+//! shown, `interpolate` which points are joined, `series` how, `style`, `colour` and `font` hold the look.
 //!
 //! Conventions: a point without a converged energy is a tick on the horizontal axis and interrupts
 //! its line; a point with a finding has a ring; a line that leaves the frame ends in an arrowhead.
 
 mod audit;
 mod axis;
+mod bands;
 mod canvas;
 mod colour;
 mod curve;
@@ -22,10 +23,14 @@ mod font;
 mod frame;
 mod interpolate;
 mod isoline;
+mod isoline_numbers;
+mod label;
 mod legend;
+mod map_grid;
 mod panels;
 mod place;
 mod range;
+mod series;
 mod style;
 mod surface;
 mod vibration;

@@ -111,7 +111,8 @@ fn curve_level(spec: &Spec, result: &JobResult, level: &LevelResult) -> CurveLev
             .collect(),
         findings: (0..level.points.len())
             .filter(|&k| {
-                level.points[k].record.energy.is_some() && !level.points[k].findings.is_empty()
+                level.points[k].record.energy.is_some()
+                    && level.points[k].findings.iter().any(|f| f.is_ringed())
             })
             .collect(),
         ..CurveLevel::default()
@@ -151,7 +152,7 @@ fn surface(spec: &Spec, result: &JobResult, level: &LevelResult) -> SurfaceFigur
         findings: level
             .points
             .iter()
-            .filter(|p| p.record.energy.is_some() && !p.findings.is_empty())
+            .filter(|p| p.record.energy.is_some() && p.findings.iter().any(|f| f.is_ringed()))
             .map(|p| (p.index[0], p.index[1]))
             .collect(),
     }

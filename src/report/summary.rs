@@ -1,7 +1,8 @@
 //! `summary.json`: everything a run has to say, for programs.
 
 use super::csv::dipole_debye;
-use crate::job::{Cost, Finding, FindingKind, JobResult, LevelResult, PointResult};
+use crate::job::{Cost, JobResult, LevelResult, PointResult};
+use crate::scan::{Finding, FindingKind};
 use crate::units::ANGSTROM_PER_BOHR;
 use serde::Serialize;
 

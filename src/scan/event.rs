@@ -21,6 +21,15 @@ pub struct Entry {
     pub record: PointRecord,
 }
 
+/// How alike the kept solutions of two neighbouring points are.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+pub struct Likeness {
+    /// Numbers of the points.
+    pub points: [usize; 2],
+    /// Smallest cosine of the principal angles between their occupied spaces, α and β.
+    pub cosines: [f64; 2],
+}
+
 /// Something that happened in a walk.
 #[derive(Debug, Clone, PartialEq)]
 pub enum Event {

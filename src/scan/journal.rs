@@ -4,7 +4,7 @@
 //! The first line holds the format version and the fingerprint of the spec. A last line that was cut off
 //! (the machine went down while it was written) is dropped on reading; any other damage is an error.
 
-use super::event::Entry;
+use super::event::{Entry, Likeness};
 use serde::{Deserialize, Serialize};
 use serde_json::value::RawValue;
 use std::fs::{File, OpenOptions, TryLockError};
@@ -55,6 +55,8 @@ pub struct LevelEnd {
     pub wall_seconds: f64,
     /// Threads it ran on.
     pub threads: usize,
+    /// How alike the kept solutions of neighbouring points are.
+    pub likeness: Vec<Likeness>,
 }
 
 /// Why a journal cannot be written or read.

@@ -1,17 +1,24 @@
 //! Scans: grids of points, the order in which they are walked, and what is known of each.
 
+pub mod audit;
+mod evaluate;
 pub mod event;
+pub mod finding;
 pub mod grid;
 mod heal;
 pub mod journal;
+pub mod kept;
 pub mod runner;
 mod settings;
+mod smooth;
 pub mod sweep;
+mod testing;
 pub mod walk;
 
-pub use event::{Entry, Event};
+pub use event::{Entry, Event, Likeness};
+pub use finding::{Finding, FindingKind};
 pub use grid::Grid;
-pub use heal::SAME_SOLUTION;
-pub use runner::{Scan, ScanError};
+pub use kept::SAME_SOLUTION;
+pub use runner::{Scan, ScanError, Walked};
 pub use settings::{Others, Passes, SeedKind, StateChoice, WalkSettings, WalkStart};
 pub use sweep::Sweep;

@@ -2,22 +2,27 @@
 //! pool, and what happens goes through one channel to one observer.
 
 use super::Grid;
-use super::event::{Entry, Event};
+use super::evaluate::{Evaluator, Known, Left};
+use super::event::{Entry, Event, Likeness};
 use super::heal;
-use super::settings::{Passes, SeedKind, StateChoice, WalkSettings};
+use super::kept::keep;
+use super::settings::{Passes, StateChoice, WalkSettings};
 use super::walk::{self, Pass, Step};
-use crate::surface::{PointRequest, SeedPoint, StabilityDemand, Start, Surface, SurfaceError};
+use crate::surface::{Surface, SurfaceError};
 use nalgebra::Vector3;
 use rayon::ThreadPool;
+use std::collections::BTreeMap;
+use std::sync::OnceLock;
 use std::sync::atomic::{AtomicBool, AtomicUsize, Ordering};
 use std::sync::mpsc::{Sender, channel};
-use std::sync::{Mutex, OnceLock, PoisonError};
 
 /// What is to be walked.
 #[derive(Debug, Clone)]
 pub struct Scan {
     /// The grid.
     pub grid: Grid,
+    /// For each sweep whether it is a length (else an angle).
+    pub is_length: Vec<bool>,
     /// Values of the swept coordinates at every point, ångström or degree.
     pub coordinates: Vec<Vec<f64>>,
     /// Positions at every point, bohr.
@@ -30,6 +35,34 @@ pub struct Scan {
     pub gradients: bool,
     /// Memory that the workspaces of all chains may take together, bytes.
     pub memory_bytes: u64,
+}
+
+impl Scan {
+    /// Whether arms are walked back: asked for, and not against the wish to follow one state.
+    #[must_use]
+    pub fn walks_back(&self) -> bool {
+        self.settings.passes == Passes::Both && self.settings.state == StateChoice::Lowest
+    }
+
+    /// The steps of the walk, healing not counted.
+    #[must_use]
+    pub fn plan(&self) -> Vec<Step> {
+        walk::plan(
+            &self.grid,
+            self.start,
+            self.settings.seed,
+            self.walks_back(),
+        )
+    }
+}
+
+/// What a walk gave.
+#[derive(Debug, Clone, PartialEq, Default)]
+pub struct Walked {
+    /// All evaluations, in the order of the plan.
+    pub entries: Vec<Entry>,
+    /// How alike the kept solutions of neighbouring points are.
+    pub likeness: Vec<Likeness>,
 }
 
 /// Why a scan ended early.
@@ -64,14 +97,14 @@ pub fn run<S: Surface>(
     pool: &ThreadPool,
     stop: &AtomicBool,
     observer: &mut dyn FnMut(&Event),
-) -> Result<Vec<Entry>, ScanError> {
-    let both = scan.settings.passes == Passes::Both;
-    let steps = walk::plan(&scan.grid, scan.start, scan.settings.seed, both);
+) -> Result<Walked, ScanError> {
+    let steps = scan.plan();
     observer(&Event::Started {
         planned: steps.len(),
         points: scan.grid.len(),
     });
-    let runner = Runner::new(surface, scan, &steps, pool, stop);
+    let evaluator = Evaluator::new(surface, scan, pool);
+    let runner = Runner::new(&evaluator, &steps, stop);
     let mut entries = Vec::with_capacity(steps.len());
     let (sender, receiver) = channel();
     std::thread::scope(|threads| {
@@ -84,85 +117,116 @@ pub fn run<S: Surface>(
     });
     runner.outcome(entries.len())?;
     entries.sort_by_key(|e: &Entry| e.order);
-    if both {
-        heal::heal(&runner, &mut entries, observer)?;
+    let mut left = runner.left();
+    if scan.walks_back() {
+        heal::heal(&evaluator, &mut entries, &mut left, stop, observer)?;
     }
+    let likeness = likeness(surface, scan, &entries, &left);
     observer(&Event::Finished);
-    Ok(entries)
+    Ok(Walked { entries, likeness })
+}
+
+/// How alike the kept solutions of neighbouring points are.
+fn likeness<S: Surface>(
+    surface: &S,
+    scan: &Scan,
+    entries: &[Entry],
+    left: &BTreeMap<usize, Left<S::Seed>>,
+) -> Vec<Likeness> {
+    let kept = keep(entries, scan.grid.len(), scan.settings.state);
+    let seed = |point: usize| {
+        left.get(&kept[point].as_ref()?.entry.order)
+            .map(|l| &l.seed)
+    };
+    let mut all = Vec::new();
+    for point in 0..scan.grid.len() {
+        for neighbour in scan
+            .grid
+            .neighbours(point)
+            .into_iter()
+            .filter(|&n| n > point)
+        {
+            if let (Some(one), Some(other)) = (seed(point), seed(neighbour)) {
+                let cosines = surface.likeness(one, other);
+                all.push(Likeness {
+                    points: [point, neighbour],
+                    cosines,
+                });
+            }
+        }
+    }
+    all
 }
 
 /// The state shared by the steps of one walk.
-pub(super) struct Runner<'a, S: Surface> {
-    surface: &'a S,
-    pub(super) scan: &'a Scan,
+struct Runner<'a, S: Surface> {
+    evaluator: &'a Evaluator<'a, S>,
     steps: &'a [Step],
-    pool: &'a ThreadPool,
-    /// Whether the memory allows every thread a workspace of its own.
-    side_by_side: bool,
     stop: &'a AtomicBool,
     /// What each finished step left; the inner option is empty where it did not converge.
-    solved: Vec<OnceLock<Option<S::Seed>>>,
+    solved: Vec<OnceLock<Option<Left<S::Seed>>>>,
     /// For each step how many of those it starts from are still to come.
     waiting: Vec<AtomicUsize>,
     followers: Vec<Vec<usize>>,
-    workspaces: Mutex<Pool<S::Workspace>>,
+    /// For each step of the way back, the one of the way out at its point.
+    out: Vec<Option<usize>>,
     failure: OnceLock<ScanError>,
 }
 
-/// Workspaces not in use, each with the row it last served, and the first one as it was after its first
-/// point: a further one begins as its copy, because most of what it holds can be taken over.
-struct Pool<W> {
-    free: Vec<(usize, W)>,
-    first: Option<W>,
-}
-
 impl<'a, S: Surface> Runner<'a, S> {
-    fn new(
-        surface: &'a S,
-        scan: &'a Scan,
-        steps: &'a [Step],
-        pool: &'a ThreadPool,
-        stop: &'a AtomicBool,
-    ) -> Self {
-        // Every thread may hold a workspace of its own, and one copy is kept aside.
-        let wanted = pool.current_num_threads() as u64 + 1;
-        let side_by_side = surface.workspace_bytes().saturating_mul(wanted) <= scan.memory_bytes;
+    fn new(evaluator: &'a Evaluator<'a, S>, steps: &'a [Step], stop: &'a AtomicBool) -> Self {
+        let mut out_of_point = vec![None; evaluator.scan.grid.len()];
+        for (k, step) in steps
+            .iter()
+            .enumerate()
+            .filter(|(_, s)| s.pass == Pass::Out)
+        {
+            out_of_point[step.point] = Some(k);
+        }
+        let out: Vec<Option<usize>> = steps
+            .iter()
+            .map(|s| {
+                if s.pass == Pass::Back {
+                    out_of_point[s.point]
+                } else {
+                    None
+                }
+            })
+            .collect();
         let mut followers = vec![Vec::new(); steps.len()];
+        let mut waiting = Vec::with_capacity(steps.len());
         for (k, step) in steps.iter().enumerate() {
-            for &h in &step.history {
+            // A step of the way back is compared with the way out, and waits for it too.
+            let awaited = step.history.iter().copied().chain(out[k]);
+            let mut awaited: Vec<usize> = awaited.collect();
+            awaited.sort_unstable();
+            awaited.dedup();
+            waiting.push(AtomicUsize::new(awaited.len()));
+            for h in awaited {
                 followers[h].push(k);
             }
         }
         Self {
-            surface,
-            scan,
+            evaluator,
             steps,
-            pool,
-            side_by_side,
             stop,
             solved: steps.iter().map(|_| OnceLock::new()).collect(),
-            waiting: steps
-                .iter()
-                .map(|s| AtomicUsize::new(s.history.len()))
-                .collect(),
+            waiting,
             followers,
-            workspaces: Mutex::new(Pool {
-                free: Vec::new(),
-                first: None,
-            }),
+            out,
             failure: OnceLock::new(),
         }
     }
 
     fn run_all(&self, sender: Sender<Entry>) {
-        if !self.side_by_side {
+        if !self.evaluator.side_by_side() {
             // One chain after another; the threads share the work of each point instead.
             (0..self.steps.len()).for_each(|k| self.run_step(k, &sender));
             return;
         }
         rayon::scope(|scope| {
-            for (k, step) in self.steps.iter().enumerate() {
-                if step.history.is_empty() {
+            for (k, waiting) in self.waiting.iter().enumerate() {
+                if waiting.load(Ordering::Acquire) == 0 {
                     let sender = sender.clone();
                     scope.spawn(move |scope| self.run_from(k, sender, scope));
                 }
@@ -186,14 +250,23 @@ impl<'a, S: Surface> Runner<'a, S> {
             return;
         }
         let step = &self.steps[k];
-        let known: Vec<(usize, &S::Seed)> = step
+        let known: Vec<Known<'_, S::Seed>> = step
             .history
             .iter()
-            .filter_map(|&h| Some((self.steps[h].point, self.solved[h].get()?.as_ref()?)))
+            .filter_map(|&h| {
+                Some(Known {
+                    point: self.steps[h].point,
+                    left: self.solved[h].get()?.as_ref()?,
+                })
+            })
             .collect();
-        match self.evaluate(step.point, step.pass, step.row, &known, k) {
-            Ok((entry, seed)) => {
-                let _ = self.solved[k].set(seed);
+        let before = self.out[k].and_then(|h| Some(self.solved[h].get()?.as_ref()?.energy));
+        match self
+            .evaluator
+            .evaluate(step.point, step.pass, step.row, &known, before, k)
+        {
+            Ok((entry, left)) => {
+                let _ = self.solved[k].set(left);
                 // The observer outlives the walk; a closed channel means the program is ending anyway.
                 let _ = sender.send(entry);
             }
@@ -204,95 +277,6 @@ impl<'a, S: Surface> Runner<'a, S> {
                 });
             }
         }
-    }
-
-    /// Evaluates one point from the solutions in `known` (point, seed), nearest last.
-    pub(super) fn evaluate(
-        &self,
-        point: usize,
-        pass: Pass,
-        row: usize,
-        known: &[(usize, &S::Seed)],
-        order: usize,
-    ) -> Result<(Entry, Option<S::Seed>), SurfaceError> {
-        let settings = &self.scan.settings;
-        let neighbours = || {
-            known.iter().map(|&(p, seed)| SeedPoint {
-                coordinates: &self.scan.coordinates[p],
-                seed,
-            })
-        };
-        let start = match (settings.seed, neighbours().next_back()) {
-            (SeedKind::Fresh, _) | (_, None) => Start::Fresh,
-            (SeedKind::Previous, Some(last)) => Start::Previous(last),
-            (SeedKind::Extrapolated, Some(_)) => Start::Extrapolated(neighbours().collect()),
-        };
-        let nearest = known.last();
-        let request = PointRequest {
-            positions: &self.scan.positions[point],
-            coordinates: &self.scan.coordinates[point],
-            start,
-            gradient: self.scan.gradients,
-            stability: if settings.stability {
-                StabilityDemand::Leave
-            } else {
-                StabilityDemand::None
-            },
-            follow: match settings.state {
-                StateChoice::Follow => nearest.map(|&(_, seed)| seed),
-                StateChoice::Lowest => None,
-            },
-        };
-        let mut workspace = self.take_workspace(row);
-        let outcome = self
-            .pool
-            .install(|| self.surface.evaluate(&request, &mut workspace));
-        self.put_workspace(row, workspace);
-        let outcome = outcome?;
-        let likeness = match (&outcome.seed, nearest) {
-            (Some(seed), Some(&(p, other))) => Some((p, self.surface.likeness(seed, other))),
-            _ => None,
-        };
-        let entry = Entry {
-            point,
-            pass,
-            order,
-            seeded_from: known.iter().map(|&(p, _)| p).collect(),
-            likeness,
-            record: outcome.record,
-        };
-        Ok((entry, outcome.seed))
-    }
-
-    /// A workspace, if possible one that last served the same row: fewer atoms have moved since.
-    fn take_workspace(&self, row: usize) -> S::Workspace {
-        let mut pool = self
-            .workspaces
-            .lock()
-            .unwrap_or_else(PoisonError::into_inner);
-        let place = pool
-            .free
-            .iter()
-            .position(|(r, _)| *r == row)
-            .or(pool.free.len().checked_sub(1));
-        match place {
-            Some(place) => pool.free.swap_remove(place).1,
-            None => pool
-                .first
-                .clone()
-                .unwrap_or_else(|| self.surface.workspace()),
-        }
-    }
-
-    fn put_workspace(&self, row: usize, workspace: S::Workspace) {
-        let mut pool = self
-            .workspaces
-            .lock()
-            .unwrap_or_else(PoisonError::into_inner);
-        if pool.first.is_none() && self.side_by_side {
-            pool.first = Some(workspace.clone());
-        }
-        pool.free.push((row, workspace));
     }
 
     fn outcome(&self, finished: usize) -> Result<(), ScanError> {
@@ -306,9 +290,13 @@ impl<'a, S: Surface> Runner<'a, S> {
         }
     }
 
-    /// The seed that an evaluation of the plan left, by its number.
-    pub(super) fn seed(&self, order: usize) -> Option<&S::Seed> {
-        self.solved.get(order)?.get()?.as_ref()
+    /// What the steps left, by their number.
+    fn left(self) -> BTreeMap<usize, Left<S::Seed>> {
+        self.solved
+            .into_iter()
+            .enumerate()
+            .filter_map(|(k, cell)| Some((k, cell.into_inner()??)))
+            .collect()
     }
 }
 
@@ -316,6 +304,7 @@ impl<'a, S: Surface> Runner<'a, S> {
 mod tests {
     use super::*;
     use crate::molecule::internal::Coordinate;
+    use crate::scan::SeedKind;
     use crate::surface::model::{Form, ModelState, ModelSurface};
 
     const BOND: Coordinate = Coordinate::Bond([0, 1]);
@@ -325,6 +314,7 @@ mod tests {
         let values: Vec<f64> = (0..points).map(|i| 1.0 + 0.1 * i as f64).collect();
         Scan {
             grid: Grid::new(&[points]),
+            is_length: vec![true],
             coordinates: values.iter().map(|&v| vec![v]).collect(),
             positions: values
                 .iter()
@@ -369,6 +359,7 @@ mod tests {
             &mut |_| {},
         )
         .unwrap()
+        .entries
     }
 
     /// Lowest energy at each point; nothing where nothing converged.
@@ -399,6 +390,7 @@ mod tests {
             },
         )
         .unwrap();
+        let entries = entries.entries;
         assert_eq!((entries.len(), told), (11, 11));
         for entry in &entries {
             let q = scan.coordinates[entry.point][0];

@@ -8,7 +8,7 @@ use super::diis::dot;
 use super::grassmann::tangent_part;
 use super::orthogonal::Orthogonal;
 use super::settings::Method;
-use crate::scf::stand_in::CoulombExchange;
+use crate::integrals::repulsion::CoulombExchange;
 use nalgebra::DMatrix;
 
 /// Direct builds add up density differences at most this often before everything is computed afresh, so that what

@@ -10,7 +10,7 @@ use super::orthogonal::{Orbitals, Orthogonal};
 use crate::basis::Basis;
 use crate::elements::Element;
 use crate::integrals;
-use crate::scf::stand_in::CoulombExchange;
+use crate::integrals::repulsion::CoulombExchange;
 use nalgebra::{DMatrix, Vector3};
 
 /// Iterations of an atom; a density that is not quite converged still serves.

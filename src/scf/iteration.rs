@@ -1,16 +1,18 @@
 //! The self-consistent field iteration, shared by RHF (one spin block) and UHF (two).
 //!
 //! A ladder of methods: extrapolation (with the energy minimised over combinations of iterates while far away) →
-//! level shift and damping where that stalls → Newton steps in a trust region. Each rung starts from the lowest
-//! determinant so far.
+//! level shift and damping where that stalls → quasi-Newton descent → Newton steps in a trust region. Each rung starts
+//! from the lowest determinant so far.
 
 use super::ScfError;
 use super::diis::{Difference, EnergyInterpolation, Extrapolation};
 use super::fock::{Evaluation, Field};
 use super::grassmann;
 use super::orthogonal::Orbitals;
+use super::quasi_newton;
 use super::second_order;
 use super::settings::ScfSettings;
+use super::stability::CarriedVectors;
 use crate::scf::StopReason;
 use nalgebra::DMatrix;
 
@@ -35,6 +37,9 @@ const SEEDED_RUNG: usize = 14;
 const SEEDED_RISE: f64 = 1e-5;
 /// Commutator below which a seed counts as good, hartree.
 const GOOD_SEED: f64 = 0.05;
+
+/// Quasi-Newton steps before exact ones.
+const DESCENT: usize = 45;
 
 /// When an iteration counts as converged.
 #[derive(Debug, Clone, Copy, PartialEq)]
@@ -76,8 +81,10 @@ pub struct Plan<'a> {
     pub carried: Vec<Difference>,
     /// Occupied orbitals (frame) to keep to by overlap, instead of filling the lowest.
     pub follow: Option<&'a [DMatrix<f64>]>,
-    /// Go straight to the Newton rung.
-    pub newton: bool,
+    /// Eigenvectors of the orbital Hessian of a neighbouring geometry: where the energy is soft.
+    pub soft: Option<&'a CarriedVectors>,
+    /// Go straight to the rungs that never climb.
+    pub downhill: bool,
 }
 
 /// Where an iteration ended.
@@ -261,11 +268,11 @@ pub fn converge(
         }
 
         // Choice of the rung.
-        let mut newton = plan.newton;
+        let mut downhill = plan.downhill;
         let stalled = since_best >= PATIENCE;
         match rung {
             Rung::Extrapolated if good_seed => {
-                newton |= rung_builds >= SEEDED_RUNG || here.energy > lowest_energy + SEEDED_RISE;
+                downhill |= rung_builds >= SEEDED_RUNG || here.energy > lowest_energy + SEEDED_RISE;
             }
             Rung::Extrapolated if stalled || rung_builds >= FIRST_RUNG => {
                 rung = Rung::Shifted;
@@ -278,24 +285,17 @@ pub fn converge(
                 history.restart();
                 history.record(&here.focks, &here.errors);
             }
-            Rung::Shifted => newton |= rung_builds >= SHIFTED_RUNG,
-            Rung::Final => newton |= stalled || rung_builds >= SHIFTED_RUNG,
+            Rung::Shifted => downhill |= rung_builds >= SHIFTED_RUNG,
+            Rung::Final => downhill |= stalled || rung_builds >= SHIFTED_RUNG,
             Rung::Extrapolated => {}
         }
-        if newton && plan.follow.is_none() {
-            let start = if plan.newton {
+        if downhill && plan.follow.is_none() {
+            let start = if plan.downhill {
                 here
             } else {
                 lowest.unwrap_or(here)
             };
-            let (evaluation, stop) =
-                second_order::minimise(field, start, &plan.thresholds, plan.limit)?;
-            return Ok(Solution {
-                refined: evaluation.occupied.clone(),
-                evaluation,
-                stop,
-                differences: Vec::new(),
-            });
+            return descend(field, start, plan);
         }
         if rung == Rung::Shifted && rung_builds == 0 {
             // From here on from the lowest determinant, without memory of what led astray.
@@ -343,6 +343,28 @@ pub fn converge(
         last = Some((here.energy, here.commutator));
         last_focks = Some(here.focks);
     }
+}
+
+/// The rungs that never climb: quasi-Newton steps, then exact Newton steps.
+fn descend(
+    field: &mut Field<'_>,
+    start: Evaluation,
+    plan: &Plan<'_>,
+) -> Result<Solution, ScfError> {
+    let left = plan.limit.saturating_sub(field.builds() + field.products());
+    let (evaluation, converged) =
+        quasi_newton::descend(field, start, &plan.thresholds, left.min(DESCENT), plan.soft)?;
+    let (evaluation, stop) = if converged {
+        (evaluation, StopReason::Converged)
+    } else {
+        second_order::minimise(field, evaluation, &plan.thresholds, plan.limit)?
+    };
+    Ok(Solution {
+        refined: evaluation.occupied.clone(),
+        evaluation,
+        stop,
+        differences: Vec::new(),
+    })
 }
 
 fn unconverged(evaluation: Evaluation) -> Solution {

@@ -12,11 +12,11 @@ pub mod guess;
 pub mod iteration;
 pub mod orthogonal;
 pub mod properties;
+pub mod quasi_newton;
 pub mod second_order;
 pub mod seed;
 mod settings;
 pub mod stability;
-pub mod stand_in;
 
 use serde::{Deserialize, Serialize};
 pub use settings::{FirstDensity, Method, ScfSettings};

@@ -333,6 +333,7 @@ struct StoredMatrix {
 #[derive(Serialize, Deserialize)]
 struct StoredVectors {
     occupied: Vec<StoredMatrix>,
+    values: Vec<f64>,
     tangents: Vec<Vec<StoredMatrix>>,
 }
 
@@ -371,6 +372,7 @@ impl From<&CarriedVectors> for StoredVectors {
     fn from(vectors: &CarriedVectors) -> Self {
         Self {
             occupied: store(&vectors.occupied),
+            values: vectors.values.clone(),
             tangents: vectors.tangents.iter().map(|t| store(t)).collect(),
         }
     }
@@ -380,6 +382,7 @@ impl From<StoredVectors> for CarriedVectors {
     fn from(stored: StoredVectors) -> Self {
         Self {
             occupied: restore(stored.occupied),
+            values: stored.values,
             tangents: stored.tangents.into_iter().map(restore).collect(),
         }
     }

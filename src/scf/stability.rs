@@ -46,6 +46,8 @@ pub struct Eigenpairs {
 pub struct CarriedVectors {
     /// Occupied orbitals the tangents refer to, one matrix per spin block.
     pub occupied: Vec<DMatrix<f64>>,
+    /// Eigenvalues, hartree.
+    pub values: Vec<f64>,
     /// Tangents, one set per eigenvector.
     pub tangents: Vec<Vec<DMatrix<f64>>>,
 }
@@ -56,6 +58,7 @@ impl CarriedVectors {
     pub fn of(orbitals: &[Canonical], pairs: &Eigenpairs) -> Self {
         Self {
             occupied: orbitals.iter().map(|o| o.occupied.clone()).collect(),
+            values: pairs.values.clone(),
             tangents: pairs
                 .vectors
                 .iter()
@@ -65,7 +68,8 @@ impl CarriedVectors {
     }
 
     /// The same vectors as rotations of the orbitals of a neighbouring solution.
-    fn carried_to(&self, orbitals: &[Canonical]) -> Vec<Kappa> {
+    #[must_use]
+    pub fn carried_to(&self, orbitals: &[Canonical]) -> Vec<Kappa> {
         let fits = self.occupied.len() == orbitals.len()
             && self
                 .occupied

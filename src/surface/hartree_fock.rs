@@ -5,7 +5,9 @@ use super::{
     StabilityRecord, Start, Surface, SurfaceError,
 };
 use crate::basis::{Basis, Shell};
+use crate::gradient::energy_gradient;
 use crate::integrals;
+use crate::integrals::repulsion::{DirectRepulsion, RepulsionList, RepulsionSettings};
 use crate::molecule::{ElectronCountError, Molecule, nuclear};
 use crate::scf::canonical::Canonical;
 use crate::scf::fock::{Evaluation, Field, Occupation, Repulsion, Rotation};
@@ -13,7 +15,6 @@ use crate::scf::iteration::{self, Beginning, Plan, Solution, Thresholds};
 use crate::scf::orthogonal::Orthogonal;
 use crate::scf::seed::{self, Seed, SeedState};
 use crate::scf::stability::{self, CarriedVectors};
-use crate::scf::stand_in::RepulsionList;
 use crate::scf::{
     FirstDensity, Method, ScfError, ScfSettings, StopReason, guess, properties, second_order,
 };
@@ -40,7 +41,29 @@ pub struct HartreeFock {
 /// Repulsion integrals kept from one point to the next.
 #[derive(Debug, Clone, Default)]
 pub struct Workspace {
-    list: Option<RepulsionList>,
+    list: Option<(Vec<Shell>, RepulsionList)>,
+}
+
+impl Workspace {
+    /// The integrals of a basis, those of atoms that stayed in place taken over.
+    fn list_of(&mut self, basis: &Basis) -> &RepulsionList {
+        // A list of other shells (the workspace of another surface) is of no use.
+        let kept = self
+            .list
+            .take()
+            .filter(|(shells, _)| shells == basis.shells());
+        let (_, list) = match kept {
+            Some((shells, mut list)) => {
+                list.update(basis);
+                self.list.insert((shells, list))
+            }
+            None => self.list.insert((
+                basis.shells().to_vec(),
+                RepulsionList::compute(basis, &RepulsionSettings::default()),
+            )),
+        };
+        list
+    }
 }
 
 impl From<ScfError> for SurfaceError {
@@ -118,6 +141,11 @@ impl HartreeFock {
             .flatten()
             .map(Shell::functions)
             .sum()
+    }
+
+    /// Whether the integrals are too many to be kept.
+    fn is_direct(&self) -> bool {
+        RepulsionList::bytes_needed(self.functions()) > self.settings.memory_mib << 20
     }
 
     fn check_positions(&self, positions: &[Vector3<f64>]) -> Result<(), SurfaceError> {
@@ -207,7 +235,7 @@ impl HartreeFock {
                 } else if let Some((_, density)) = twin {
                     all.push(density.clone());
                 } else {
-                    let list = RepulsionList::compute(&basis);
+                    let list = RepulsionList::compute(&basis, &RepulsionSettings::default());
                     let density = guess::atomic_density(
                         atom.element,
                         &basis,
@@ -293,6 +321,7 @@ impl HartreeFock {
         field: &mut Field<'_>,
     ) -> Result<Settled, SurfaceError> {
         let (beginning, carried) = self.beginning(request, geometry)?;
+        let newest = start_points(&request.start).last().map(|p| p.seed.state());
         let follow = request
             .follow
             .filter(|seed| self.fits(seed, geometry.basis.len()))
@@ -302,7 +331,8 @@ impl HartreeFock {
             limit: self.settings.iterations,
             carried,
             follow,
-            newton: false,
+            soft: newest.and_then(|s| s.internal.as_ref()),
+            downhill: false,
         };
         let mut solution = iteration::converge(field, beginning, &plan)?;
         let mut settled = Settled {
@@ -316,7 +346,6 @@ impl HartreeFock {
         if request.stability == StabilityDemand::None {
             return Ok(settled);
         }
-        let newest = start_points(&request.start).last().map(|p| p.seed.state());
         let mut internal = newest.and_then(|s| s.internal.clone());
         let mut triplet = newest.and_then(|s| s.triplet.clone());
         let mut products = 0;
@@ -396,17 +425,17 @@ impl HartreeFock {
         saddle: f64,
         plan: &mut Plan<'_>,
     ) -> Result<Solution, ScfError> {
-        plan.newton = false;
+        plan.downhill = false;
         let start = Beginning::Occupied(lower.occupied.clone());
         let solution = iteration::converge(field, start.clone(), plan)?;
         let below = lower.energy.min(saddle) + 1e-9;
         if solution.stop == StopReason::Converged && solution.evaluation.energy <= below {
             return Ok(solution);
         }
-        plan.newton = true;
+        plan.downhill = true;
         plan.limit = field.builds() + field.products() + self.settings.iterations;
         let monotone = iteration::converge(field, start, plan);
-        plan.newton = false;
+        plan.downhill = false;
         monotone
     }
 
@@ -495,6 +524,32 @@ impl HartreeFock {
     }
 }
 
+fn gradient(geometry: &Geometry, field: &Field<'_>, evaluation: &Evaluation) -> Vec<[f64; 3]> {
+    let densities = field.densities(&evaluation.occupied);
+    let mut weighted = DMatrix::zeros(geometry.basis.len(), geometry.basis.len());
+    for (y, fock) in evaluation.occupied.iter().zip(&evaluation.focks) {
+        // tr over occupied orbitals, in whatever combination they are: Y (YᵀFY) Yᵀ.
+        let energies = y.transpose() * (fock * y);
+        weighted +=
+            geometry.frame.transform(&(y * energies * y.transpose())) * field.occupation().weight();
+    }
+    // A single block stands for both spins.
+    let (Some(alpha), Some(beta)) = (densities.first(), densities.last()) else {
+        return Vec::new();
+    };
+    energy_gradient(&geometry.molecule, &geometry.basis, alpha, beta, &weighted)
+        .into_iter()
+        .map(Into::into)
+        .collect()
+}
+
+fn counts(counts: integrals::repulsion::IntegralCounts) -> IntegralCounts {
+    IntegralCounts {
+        computed: counts.computed,
+        reused: counts.reused,
+    }
+}
+
 /// The same exponents and coefficients, wherever the shells sit.
 fn same_shells(one: &[Shell], other: &[Shell]) -> bool {
     one.len() == other.len()
@@ -521,8 +576,11 @@ impl Surface for HartreeFock {
     }
 
     fn workspace_bytes(&self) -> u64 {
-        let pairs = (self.functions() * (self.functions() + 1) / 2) as u64;
-        8 * pairs * (pairs + 1) / 2
+        if self.is_direct() {
+            0
+        } else {
+            RepulsionList::bytes_needed(self.functions())
+        }
     }
 
     fn evaluate(
@@ -535,13 +593,22 @@ impl Surface for HartreeFock {
         let points = start_points(&request.start);
         let keep = points.last().map(|p| p.seed.state().kept);
         let geometry = self.geometry(request.positions, keep)?;
-        let list = workspace
-            .list
-            .insert(RepulsionList::compute(&geometry.basis));
+        let direct = self
+            .is_direct()
+            .then(|| DirectRepulsion::new(&geometry.basis, &RepulsionSettings::default()));
+        let mut integrals = IntegralCounts::default();
+        let repulsion = match &direct {
+            Some(direct) => Repulsion::Direct(direct),
+            None => {
+                let list = workspace.list_of(&geometry.basis);
+                integrals = counts(list.counts());
+                Repulsion::Stored(list)
+            }
+        };
         let mut field = Field::new(
             geometry.core.clone(),
             &geometry.frame,
-            Repulsion::Stored(list),
+            repulsion,
             geometry.nuclear,
             self.occupation,
         );
@@ -562,8 +629,13 @@ impl Surface for HartreeFock {
             }
         }
         let mut record = self.record(&geometry, &field, &settled)?;
+        record.integrals = direct.as_ref().map_or(integrals, |d| counts(d.counts()));
         record.scf_seconds = scf_seconds;
         record.seconds = clock.elapsed().as_secs_f64();
+        if request.gradient && record.energy.is_some() {
+            record.gradient = Some(gradient(&geometry, &field, &settled.solution.evaluation));
+            record.seconds = clock.elapsed().as_secs_f64();
+        }
         let seed = record.energy.is_some().then(|| {
             Seed::new(SeedState {
                 occupied: settled.solution.refined,

@@ -1,0 +1,482 @@
+//! Derivatives of four primitive quartets at once, contracted with the two-particle density.
+//!
+//! The density Γ of a contracted quartet is turned into Hermite functions of both sides,
+//! G_hh' = Σ E_h^{ab} Γ_{ab,cd} E_h'^{cd}, after which the energy is Σ G_hh' R_{h+h'}(Q − P) and everything
+//! else that [`super::pairs`] asks for is a sum over R with shifted indices. (−1)^|h| for the side of P is
+//! part of its coefficients.
+
+use super::pairs::PairClass;
+use crate::integrals::recurrence::{hermite_count, hermite_index, hermite_powers};
+use crate::integrals::repulsion::lanes::{Four, Kernel, Lanes};
+use std::sync::OnceLock;
+
+/// Highest degree on one side: gg.
+const SIDE_DEGREE: usize = 8;
+/// Hermite functions on one side, at most.
+const SIDE: usize = hermite_count(SIDE_DEGREE);
+
+/// Places of Hermite functions with added or shifted indices.
+pub(super) struct Places {
+    /// h + h' at [h · SIDE + h']
+    sums: Vec<u16>,
+    /// k + 1 in each direction
+    up: Vec<[u16; 3]>,
+    /// k − 1 in each direction (0 where there is none)
+    down: Vec<[u16; 3]>,
+    /// t, u, v as numbers
+    powers: Vec<[f64; 3]>,
+}
+
+pub(super) fn places() -> &'static Places {
+    static PLACES: OnceLock<Places> = OnceLock::new();
+    PLACES.get_or_init(|| {
+        let powers = &hermite_powers()[..hermite_count(2 * SIDE_DEGREE)];
+        let index = |p: [usize; 3]| hermite_index(p[0], p[1], p[2]) as u16;
+        let shifted = |p: &[usize; 3], shift: fn(usize) -> usize| {
+            std::array::from_fn(|axis| {
+                let mut other = *p;
+                other[axis] = shift(other[axis]);
+                index(other)
+            })
+        };
+        Places {
+            sums: (0..SIDE * SIDE)
+                .map(|i| {
+                    let (a, b) = (powers[i / SIDE], powers[i % SIDE]);
+                    index(std::array::from_fn(|axis| a[axis] + b[axis]))
+                })
+                .collect(),
+            up: powers.iter().map(|p| shifted(p, |i| i + 1)).collect(),
+            down: powers
+                .iter()
+                .map(|p| shifted(p, |i| i.saturating_sub(1)))
+                .collect(),
+            powers: powers.iter().map(|p| p.map(|i| i as f64)).collect(),
+        }
+    })
+}
+
+/// Sums that belong to the ket primitives, lane by lane; see [`super::pairs`] for their use.
+#[derive(Debug, Clone, Copy, Default)]
+pub(super) struct KetSums {
+    /// derivative with respect to Q
+    pub(super) force: [Four; 3],
+    /// energy
+    pub(super) energy: Four,
+    /// products with lowered second function
+    pub(super) lowered: [Four; 3],
+    /// Σ h'_x G R_{h+h'−x}
+    pub(super) shifted: [Four; 3],
+}
+
+/// Intermediate numbers of [`Quartets`], kept between calls.
+#[derive(Debug, Default)]
+pub(super) struct Work {
+    half: Vec<Four>,
+    hermite: Vec<Four>,
+    folded: Vec<Four>,
+}
+
+/// A bra primitive in numbers that are the same in all lanes.
+#[derive(Debug, Clone)]
+pub(super) struct BraPrimitive {
+    pub(super) fractions: [f64; 2],
+    pub(super) stretch: [f64; 3],
+    pub(super) twice_second: f64,
+}
+
+/// All primitives of one bra pair with four ket primitives.
+pub(super) struct Quartets<'a> {
+    pub(super) places: &'a Places,
+    pub(super) bra: &'a PairClass,
+    pub(super) ket: &'a PairClass,
+    pub(super) primitives: &'a [BraPrimitive],
+    /// coefficients of the bra primitives with (−1)^|h|, `bra.len()` each
+    pub(super) bra_values: &'a [f64],
+    /// coefficients of the ket primitives
+    pub(super) ket_values: &'a [Four],
+    /// Γ, bra pairs slower
+    pub(super) density: &'a [Four],
+    /// R up to the sum of the degrees plus one, for each bra primitive
+    pub(super) coulomb: &'a [Four],
+    pub(super) work: &'a mut Work,
+    /// gradient with respect to the two centres of the bra pair, added to
+    pub(super) bra_gradient: &'a mut [[Four; 3]; 2],
+}
+
+impl Kernel for Quartets<'_> {
+    type Output = KetSums;
+
+    #[inline(always)]
+    fn run<V: Lanes>(self) -> KetSums {
+        let (bra, ket) = (self.bra, self.ket);
+        let (rows, columns) = (bra.columns(), ket.columns());
+        let (bra_pairs, ket_pairs) = (bra.rows_count(), ket.rows_count());
+        let work = self.work;
+        resize(&mut work.hermite, rows * columns);
+        resize(&mut work.folded, hermite_count(bra.degree + ket.degree));
+        let coulomb_len = hermite_count(bra.degree + ket.degree + 1);
+        // The ket is transformed first if enough bra primitives share the result.
+        let ket_first = {
+            let (bra_all, ket_all) = (bra.len(), ket.len());
+            let n = self.primitives.len();
+            bra_pairs * ket_all + n * bra_all * columns
+                <= n * (ket_pairs * bra_all + rows * ket_all)
+        };
+        if ket_first {
+            resize(&mut work.half, bra_pairs * columns);
+            from_right::<V>(
+                ket,
+                0..columns,
+                self.ket_values,
+                (self.density, ket_pairs),
+                (&mut work.half, columns),
+                bra_pairs,
+            );
+        } else {
+            resize(&mut work.half, rows * ket_pairs);
+        }
+        let mut sums = Sums::<V>::zero();
+        let mut bra_sums = [[V::zero(); 3]; 2];
+        for (i, primitive) in self.primitives.iter().enumerate() {
+            let values = &self.bra_values[i * bra.len()..(i + 1) * bra.len()];
+            let half = &mut work.half;
+            let hermite = &mut work.hermite;
+            if ket_first {
+                let plain = 0..bra.hermites;
+                from_left::<V>(
+                    bra,
+                    plain,
+                    values,
+                    (half, columns),
+                    hermite,
+                    columns,
+                    columns,
+                );
+                let lowered = bra.hermites..rows;
+                let width = ket.hermites;
+                from_left::<V>(
+                    bra,
+                    lowered,
+                    values,
+                    (half, columns),
+                    hermite,
+                    columns,
+                    width,
+                );
+            } else {
+                let density = (self.density, ket_pairs);
+                from_left::<V>(bra, 0..rows, values, density, half, ket_pairs, ket_pairs);
+                let split = bra.hermites * ket_pairs;
+                from_right::<V>(
+                    ket,
+                    0..columns,
+                    self.ket_values,
+                    (&half[..split], ket_pairs),
+                    (hermite, columns),
+                    bra.hermites,
+                );
+                if bra.lowered > 0 {
+                    from_right::<V>(
+                        ket,
+                        0..ket.hermites,
+                        self.ket_values,
+                        (&half[split..], ket_pairs),
+                        (&mut hermite[bra.hermites * columns..], columns),
+                        rows - bra.hermites,
+                    );
+                }
+            }
+            let coulomb = &self.coulomb[i * coulomb_len..(i + 1) * coulomb_len];
+            let one = reduce::<V>(self.places, bra, ket, hermite, &mut work.folded, coulomb);
+            sums.add(&one.ket);
+            for axis in 0..3 {
+                let force = one.ket.force[axis];
+                let mut split = V::zero();
+                if bra.two_centre {
+                    split = V::splat(primitive.stretch[axis])
+                        .mul_add(one.ket.energy, one.bra_lowered[axis])
+                        .sub(V::splat(primitive.twice_second).mul(one.bra_shifted[axis]));
+                }
+                let [first, second] = primitive.fractions.map(V::splat);
+                let [a, b] = &mut bra_sums;
+                a[axis] = a[axis].add(split.sub(first.mul(force)));
+                b[axis] = b[axis].sub(second.mul_add(force, split));
+            }
+        }
+        for (total, sum) in self.bra_gradient.iter_mut().zip(&bra_sums) {
+            for (total, sum) in total.iter_mut().zip(sum) {
+                V::load(total).add(*sum).store(total);
+            }
+        }
+        sums.stored()
+    }
+}
+
+fn resize(buffer: &mut Vec<Four>, len: usize) {
+    if buffer.len() < len {
+        buffer.resize(len, Four::default());
+    }
+}
+
+/// [`KetSums`] in registers.
+#[derive(Clone, Copy)]
+struct Sums<V> {
+    force: [V; 3],
+    energy: V,
+    lowered: [V; 3],
+    shifted: [V; 3],
+}
+
+impl<V: Lanes> Sums<V> {
+    #[inline(always)]
+    fn zero() -> Self {
+        Self {
+            force: [V::zero(); 3],
+            energy: V::zero(),
+            lowered: [V::zero(); 3],
+            shifted: [V::zero(); 3],
+        }
+    }
+
+    #[inline(always)]
+    fn add(&mut self, other: &Self) {
+        self.energy = self.energy.add(other.energy);
+        for axis in 0..3 {
+            self.force[axis] = self.force[axis].add(other.force[axis]);
+            self.lowered[axis] = self.lowered[axis].add(other.lowered[axis]);
+            self.shifted[axis] = self.shifted[axis].add(other.shifted[axis]);
+        }
+    }
+
+    #[inline(always)]
+    fn stored(&self) -> KetSums {
+        let four = |v: V| {
+            let mut out = Four::default();
+            v.store(&mut out);
+            out
+        };
+        KetSums {
+            force: self.force.map(four),
+            energy: four(self.energy),
+            lowered: self.lowered.map(four),
+            shifted: self.shifted.map(four),
+        }
+    }
+}
+
+/// Sums of one bra primitive with the four ket primitives.
+struct Reduced<V> {
+    ket: Sums<V>,
+    bra_lowered: [V; 3],
+    bra_shifted: [V; 3],
+}
+
+/// All sums over G and R.
+#[inline(always)]
+fn reduce<V: Lanes>(
+    places: &Places,
+    bra: &PairClass,
+    ket: &PairClass,
+    hermite: &[Four],
+    folded: &mut [Four],
+    coulomb: &[Four],
+) -> Reduced<V> {
+    let columns = ket.columns();
+    let mut sums = Sums::<V>::zero();
+    let mut bra_lowered = [V::zero(); 3];
+    let mut bra_shifted = [V::zero(); 3];
+    let folded = &mut folded[..hermite_count(bra.degree + ket.degree)];
+    folded.fill(Four::default());
+    let shift = bra.two_centre || ket.two_centre;
+    for h in 0..bra.hermites {
+        let row = &hermite[h * columns..(h + 1) * columns];
+        let (plain, lowered) = row.split_at(ket.hermites);
+        let sums_of = &places.sums[h * SIDE..];
+        for (value, &k) in plain.iter().zip(sums_of) {
+            let target = &mut folded[usize::from(k)];
+            V::load(target).add(V::load(value)).store(target);
+        }
+        if shift {
+            for axis in 0..3 {
+                let power = places.powers[h][axis];
+                if power > 0.0 {
+                    let down = usize::from(places.down[h][axis]);
+                    let sum = dot::<V>(plain, &places.sums[down * SIDE..], coulomb);
+                    bra_shifted[axis] = V::splat(power).mul_add(sum, bra_shifted[axis]);
+                }
+            }
+        }
+        if ket.lowered > 0 {
+            for axis in 0..3 {
+                let values = &lowered[axis * ket.lowered..(axis + 1) * ket.lowered];
+                sums.lowered[axis] = sums.lowered[axis].add(dot::<V>(values, sums_of, coulomb));
+            }
+        }
+    }
+    for axis in 0..3 {
+        for h in 0..bra.lowered {
+            let start = (bra.hermites + axis * bra.lowered + h) * columns;
+            let values = &hermite[start..start + ket.hermites];
+            let sum = dot::<V>(values, &places.sums[h * SIDE..], coulomb);
+            bra_lowered[axis] = bra_lowered[axis].add(sum);
+        }
+    }
+    for (k, w) in folded.iter().enumerate() {
+        let w = V::load(w);
+        sums.energy = w.mul_add(V::load(&coulomb[k]), sums.energy);
+        for axis in 0..3 {
+            let r = V::load(&coulomb[usize::from(places.up[k][axis])]);
+            sums.force[axis] = w.mul_add(r, sums.force[axis]);
+        }
+    }
+    if ket.two_centre {
+        for (k, w) in folded.iter().enumerate().skip(1) {
+            let w = V::load(w);
+            for axis in 0..3 {
+                let r = V::load(&coulomb[usize::from(places.down[k][axis])]);
+                let factor = w.mul(V::splat(places.powers[k][axis]));
+                sums.shifted[axis] = factor.mul_add(r, sums.shifted[axis]);
+            }
+        }
+        for axis in 0..3 {
+            sums.shifted[axis] = sums.shifted[axis].sub(bra_shifted[axis]);
+        }
+    }
+    Reduced {
+        ket: sums,
+        bra_lowered,
+        bra_shifted,
+    }
+}
+
+/// Σ values · R at the places given.
+#[inline(always)]
+fn dot<V: Lanes>(values: &[Four], places: &[u16], coulomb: &[Four]) -> V {
+    let mut sum = V::zero();
+    for (value, &k) in values.iter().zip(places) {
+        sum = V::load(value).mul_add(V::load(&coulomb[usize::from(k)]), sum);
+    }
+    sum
+}
+
+/// out[row, column] = Σ_ij input[row, ij] · E_column^{ij} for the columns of the range.
+#[inline(always)]
+fn from_right<V: Lanes>(
+    class: &PairClass,
+    range: std::ops::Range<usize>,
+    values: &[Four],
+    (input, stride): (&[Four], usize),
+    (out, out_stride): (&mut [Four], usize),
+    rows: usize,
+) {
+    let mut row = 0;
+    while row + 4 <= rows {
+        rows_from_right::<V, 4>(
+            class,
+            range.clone(),
+            values,
+            &input[row * stride..],
+            stride,
+            &mut out[row * out_stride..],
+            out_stride,
+        );
+        row += 4;
+    }
+    while row < rows {
+        rows_from_right::<V, 1>(
+            class,
+            range.clone(),
+            values,
+            &input[row * stride..],
+            stride,
+            &mut out[row * out_stride..],
+            out_stride,
+        );
+        row += 1;
+    }
+}
+
+#[inline(always)]
+fn rows_from_right<V: Lanes, const N: usize>(
+    class: &PairClass,
+    range: std::ops::Range<usize>,
+    values: &[Four],
+    input: &[Four],
+    stride: usize,
+    out: &mut [Four],
+    out_stride: usize,
+) {
+    let inputs: [&[Four]; N] = std::array::from_fn(|n| &input[n * stride..(n + 1) * stride]);
+    for column in range {
+        let elements = class.starts[column]..class.starts[column + 1];
+        let mut sums = [V::zero(); N];
+        for (value, &place) in values[elements.clone()].iter().zip(&class.rows[elements]) {
+            let value = V::load(value);
+            for n in 0..N {
+                sums[n] = value.mul_add(V::load(&inputs[n][usize::from(place)]), sums[n]);
+            }
+        }
+        for n in 0..N {
+            sums[n].store(&mut out[n * out_stride + column]);
+        }
+    }
+}
+
+/// out[column, k] = Σ_ij E_column^{ij} · input[ij, k] for the columns of the range and k < `width`.
+#[inline(always)]
+fn from_left<V: Lanes>(
+    class: &PairClass,
+    range: std::ops::Range<usize>,
+    values: &[f64],
+    (input, stride): (&[Four], usize),
+    out: &mut [Four],
+    out_stride: usize,
+    width: usize,
+) {
+    for column in range {
+        let elements = class.starts[column]..class.starts[column + 1];
+        let values = &values[elements.clone()];
+        let places = &class.rows[elements];
+        let out = &mut out[column * out_stride..column * out_stride + width];
+        let mut k = 0;
+        while k + 8 <= width {
+            part_from_left::<V, 8>(values, places, input, stride, k, out);
+            k += 8;
+        }
+        if k + 4 <= width {
+            part_from_left::<V, 4>(values, places, input, stride, k, out);
+            k += 4;
+        }
+        if k + 2 <= width {
+            part_from_left::<V, 2>(values, places, input, stride, k, out);
+            k += 2;
+        }
+        if k < width {
+            part_from_left::<V, 1>(values, places, input, stride, k, out);
+        }
+    }
+}
+
+#[inline(always)]
+fn part_from_left<V: Lanes, const N: usize>(
+    values: &[f64],
+    places: &[u16],
+    input: &[Four],
+    stride: usize,
+    start: usize,
+    out: &mut [Four],
+) {
+    let mut sums = [V::zero(); N];
+    for (&value, &place) in values.iter().zip(places) {
+        let value = V::splat(value);
+        let from = usize::from(place) * stride + start;
+        let input = &input[from..from + N];
+        for n in 0..N {
+            sums[n] = value.mul_add(V::load(&input[n]), sums[n]);
+        }
+    }
+    for (sum, out) in sums.iter().zip(&mut out[start..start + N]) {
+        sum.store(out);
+    }
+}
