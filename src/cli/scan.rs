@@ -8,7 +8,7 @@ use crate::plot::PlotError;
 use crate::report::folder::{FolderError, Occupant, RunFolder};
 use crate::report::{self, figures};
 use crate::scan::Event;
-use crate::scan::journal::{self, Journal, JournalError, LevelEntry, Line};
+use crate::job::journal::{self, Journal, JournalError, LevelEntry, Line};
 use crate::spec::Spec;
 use std::sync::atomic::AtomicBool;
 
@@ -122,6 +122,8 @@ fn record_of(lines: Vec<Line>) -> JobRecord {
         match line {
             Line::Header(_) => {}
             Line::Point(entry) => record.entries.push(entry),
+            Line::Limit(limit) => record.limits.push(limit),
+            Line::Onset(onset) => record.onsets.push(onset),
             Line::Complete(end) => record.ends.push(end),
         }
     }
@@ -156,6 +158,8 @@ fn walk(
                 level: *level,
                 entry: (**entry).clone(),
             })),
+            JobEvent::Limit(limit) => Some(Line::Limit(limit.clone())),
+            JobEvent::Onset(onset) => Some(Line::Onset(onset.clone())),
             JobEvent::LevelDone(end) => Some(Line::Complete(end.clone())),
             JobEvent::Walk { .. } => None,
         };

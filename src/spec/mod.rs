@@ -79,8 +79,8 @@ impl Spec {
     }
 
     /// Sixteen hexadecimal digits that differ between specs whose points differ: geometry, masses, basis functions, levels,
-    /// sweeps, walk, SCF settings and whether gradients are computed. Title, fits, vibrational states, separated parts
-    /// and output do not change a point and do not count.
+    /// sweeps, walk, SCF settings, separated parts and whether gradients are computed. Title, fits, vibrational states and
+    /// output do not change a calculation and do not count.
     #[must_use]
     pub fn fingerprint(&self) -> &str {
         &self.fingerprint
@@ -144,7 +144,7 @@ impl Level {
 /// Parts into which the molecule dissociates.
 #[derive(Debug, Clone, PartialEq, Eq)]
 pub struct DissociationSpec {
-    /// The parts; each atom belongs to exactly one.
+    /// The parts; each atom belongs to exactly one. Empty: those that the swept bond cuts.
     pub parts: Vec<Part>,
     /// Whether each part is computed in the basis of the whole as well.
     pub counterpoise: bool,
