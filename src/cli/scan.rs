@@ -3,12 +3,12 @@
 use super::args::{CommonArgs, ReportArgs, ScanArgs};
 use super::progress::Progress;
 use super::{Failure, Status, Streams, load};
+use crate::job::journal::{self, Journal, JournalError, LevelEntry, Line};
 use crate::job::{self, JobError, JobEvent, JobRecord, JobResult};
 use crate::plot::PlotError;
 use crate::report::folder::{FolderError, Occupant, RunFolder};
 use crate::report::{self, figures};
 use crate::scan::Event;
-use crate::job::journal::{self, Journal, JournalError, LevelEntry, Line};
 use crate::spec::Spec;
 use std::sync::atomic::AtomicBool;
 

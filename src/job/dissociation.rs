@@ -70,7 +70,9 @@ pub fn parts_cut(molecule: &Molecule, sweeps: &[Sweep]) -> Option<Vec<Vec<usize>
         .collect();
     let without = Connectivity::from_bonds(molecule.atoms.len(), &kept);
     let parts = without.components();
-    let separates = cut.iter().all(|&[a, b]| !without.component(a, Cut::Nothing).contains(&b));
+    let separates = cut
+        .iter()
+        .all(|&[a, b]| !without.component(a, Cut::Nothing).contains(&b));
     (!cut.is_empty() && separates && parts.len() > 1).then_some(parts)
 }
 
@@ -91,13 +93,23 @@ pub fn given(
     settings: &ScfSettings,
     parts: &[Part],
 ) -> Result<Limit, SurfaceError> {
-    let whole = Whole { molecule, level, settings };
+    let whole = Whole {
+        molecule,
+        level,
+        settings,
+    };
     let parts = parts
         .iter()
         .map(|p| whole.part(&p.atoms, p.charge, p.multiplicity, level.method))
         .collect::<Result<Vec<_>, _>>()?;
     let energy = parts.iter().map(|p| p.energy).sum();
-    Ok(Limit { parts, energy, counterpoise: None, proposed: false, unreachable: None })
+    Ok(Limit {
+        parts,
+        energy,
+        counterpoise: None,
+        proposed: false,
+        unreachable: None,
+    })
 }
 
 /// Computes parts in the spin states and charges of lowest UHF energy whose spin projections can add up to that
@@ -111,7 +123,11 @@ pub fn proposed(
     settings: &ScfSettings,
     parts: &[Vec<usize>],
 ) -> Result<Option<Limit>, SurfaceError> {
-    let whole = Whole { molecule, level, settings };
+    let whole = Whole {
+        molecule,
+        level,
+        settings,
+    };
     let unpaired_of_whole = level.multiplicity as i32 - 1;
     let mut best: Option<(f64, Vec<LimitPart>)> = None;
     let mut lowest = f64::INFINITY;
@@ -130,13 +146,17 @@ pub fn proposed(
             lowest = lowest.min(energy);
             let unpaired: Vec<i32> = choice.iter().map(|p| p.multiplicity as i32 - 1).collect();
             if adds_up(&unpaired, unpaired_of_whole)
-                && best.as_ref().is_none_or(|(known, _)| energy < *known - 1e-9)
+                && best
+                    .as_ref()
+                    .is_none_or(|(known, _)| energy < *known - 1e-9)
             {
                 best = Some((energy, choice.into_iter().cloned().collect()));
             }
         }
     }
-    let Some((energy, parts)) = best else { return Ok(None) };
+    let Some((energy, parts)) = best else {
+        return Ok(None);
+    };
     let unreachable = (lowest < energy - 1e-6).then_some(lowest);
     // A restricted level keeps its own closed-shell parts restricted.
     let parts = if level.method == Method::Rhf {
@@ -148,7 +168,13 @@ pub fn proposed(
         parts
     };
     let energy = parts.iter().map(|p| p.energy).sum();
-    Ok(Some(Limit { parts, energy, counterpoise: None, proposed: true, unreachable }))
+    Ok(Some(Limit {
+        parts,
+        energy,
+        counterpoise: None,
+        proposed: true,
+        unreachable,
+    }))
 }
 
 /// The energy that the whole basis at `positions` (bohr) lends the parts, hartree.
@@ -163,7 +189,11 @@ pub fn counterpoise(
     positions: &[Vector3<f64>],
 ) -> Result<Option<f64>, SurfaceError> {
     let molecule = molecule.at(positions);
-    let whole = Whole { molecule: &molecule, level, settings };
+    let whole = Whole {
+        molecule: &molecule,
+        level,
+        settings,
+    };
     let mut sum = 0.0;
     for part in &limit.parts {
         let own = whole.energy(&part.atoms, part, false)?;
@@ -185,7 +215,11 @@ impl Whole<'_> {
         multiplicity: u32,
         method: Method,
     ) -> Result<LimitPart, SurfaceError> {
-        let method = if multiplicity == 1 { method } else { Method::Uhf };
+        let method = if multiplicity == 1 {
+            method
+        } else {
+            Method::Uhf
+        };
         let mut part = LimitPart {
             atoms: atoms.to_vec(),
             charge,
@@ -207,8 +241,11 @@ impl Whole<'_> {
         part: &LimitPart,
         ghosts: bool,
     ) -> Result<PointRecord, SurfaceError> {
-        let chosen: Vec<usize> =
-            if ghosts { (0..self.molecule.atoms.len()).collect() } else { atoms.to_vec() };
+        let chosen: Vec<usize> = if ghosts {
+            (0..self.molecule.atoms.len()).collect()
+        } else {
+            atoms.to_vec()
+        };
         let molecule = Molecule {
             atoms: chosen
                 .iter()
@@ -222,7 +259,10 @@ impl Whole<'_> {
             charge: part.charge,
             multiplicity: part.multiplicity,
         };
-        let shells = chosen.iter().map(|&i| self.level.shells_of_atom[i].clone()).collect();
+        let shells = chosen
+            .iter()
+            .map(|&i| self.level.shells_of_atom[i].clone())
+            .collect();
         let surface = HartreeFock::new(&molecule, shells, part.method, self.settings.clone())?;
         let request = PointRequest {
             positions: &molecule.positions,
@@ -242,7 +282,11 @@ fn charge_patterns(parts: usize, charge: i32) -> Vec<Vec<i32>> {
         return vec![vec![0; parts]];
     }
     (0..parts)
-        .map(|holder| (0..parts).map(|k| if k == holder { charge } else { 0 }).collect())
+        .map(|holder| {
+            (0..parts)
+                .map(|k| if k == holder { charge } else { 0 })
+                .collect()
+        })
         .collect()
 }
 
@@ -253,9 +297,18 @@ fn multiplicities(molecule: &Molecule, atoms: &[usize], charge: i32) -> Vec<u32>
         .filter(|&&i| !molecule.atoms[i].ghost)
         .map(|&i| i64::from(molecule.atoms[i].element.atomic_number()))
         .sum();
-    let Ok(electrons) = u32::try_from(nuclear - i64::from(charge)) else { return Vec::new() };
-    let most = if atoms.len() == 1 { UNPAIRED_OF_ATOM } else { UNPAIRED_OF_LARGER };
-    (0..=most.min(electrons)).filter(|n| n % 2 == electrons % 2).map(|n| n + 1).collect()
+    let Ok(electrons) = u32::try_from(nuclear - i64::from(charge)) else {
+        return Vec::new();
+    };
+    let most = if atoms.len() == 1 {
+        UNPAIRED_OF_ATOM
+    } else {
+        UNPAIRED_OF_LARGER
+    };
+    (0..=most.min(electrons))
+        .filter(|n| n % 2 == electrons % 2)
+        .map(|n| n + 1)
+        .collect()
 }
 
 /// Every way to take one of each list.

@@ -5,12 +5,12 @@ pub mod assemble;
 pub mod dissociation;
 pub mod journal;
 pub mod onset;
+pub mod pieces;
 
+pub use assemble::{Cost, JobResult, LevelResult, PointResult, SweepResult, assemble};
 pub use dissociation::{Limit, LimitPart};
 pub use onset::Onset;
-pub use assemble::{Cost, JobResult, LevelResult, PointResult, SweepResult, assemble};
 
-use journal::{LevelEnd, LevelEntry, LevelLimit, LevelOnset};
 use crate::scan::kept::{Kept, keep};
 use crate::scan::{Entry, Event, Grid, Scan, ScanError, WalkStart, grid, runner};
 use crate::scf::Method;
@@ -18,6 +18,7 @@ use crate::spec::{Level, Spec};
 use crate::surface::HartreeFock;
 use crate::surface::Surface;
 use crate::{molecule::motion::MotionError, surface::SurfaceError};
+use journal::{LevelEnd, LevelEntry, LevelLimit, LevelOnset};
 use rayon::ThreadPool;
 use std::sync::atomic::AtomicBool;
 use std::time::Instant;
@@ -160,8 +161,16 @@ pub fn run(
             source,
         })?;
         let before = Instant::now();
-        let mut end =
-            walk_level(&surface, &scan, number, &level.name, pool, stop, observer, &mut record)?;
+        let mut end = walk_level(
+            &surface,
+            &scan,
+            number,
+            &level.name,
+            pool,
+            stop,
+            observer,
+            &mut record,
+        )?;
         beside_the_walk(spec, number, &scan, pool, observer, &mut record)?;
         end.wall_seconds = before.elapsed().as_secs_f64();
         observer(&JobEvent::LevelDone(end.clone()));
@@ -180,20 +189,33 @@ fn beside_the_walk(
     record: &mut JobRecord,
 ) -> Result<(), JobError> {
     let level = &spec.levels[number];
-    let entries: Vec<Entry> =
-        record.entries.iter().filter(|e| e.level == number).map(|e| e.entry.clone()).collect();
+    let entries: Vec<Entry> = record
+        .entries
+        .iter()
+        .filter(|e| e.level == number)
+        .map(|e| e.entry.clone())
+        .collect();
     if let Some(limit) = pool
         .install(|| limit_of(spec, level, scan, &entries))
-        .map_err(|source| JobError::Level { level: level.name.clone(), source })?
+        .map_err(|source| JobError::Level {
+            level: level.name.clone(),
+            source,
+        })?
     {
-        let limit = LevelLimit { level: number, limit };
+        let limit = LevelLimit {
+            level: number,
+            limit,
+        };
         observer(&JobEvent::Limit(limit.clone()));
         record.limits.push(limit);
     }
     if level.method == Method::Rhf
         && let Some(onset) = pool.install(|| onset::find(spec, level, &entries, scan.start))?
     {
-        let onset = LevelOnset { level: number, onset };
+        let onset = LevelOnset {
+            level: number,
+            onset,
+        };
         observer(&JobEvent::Onset(onset.clone()));
         record.onsets.push(onset);
     }
@@ -218,7 +240,9 @@ fn limit_of(
     } else {
         Some(dissociation::given(molecule, level, settings, given)?)
     };
-    let Some(mut limit) = limit else { return Ok(None) };
+    let Some(mut limit) = limit else {
+        return Ok(None);
+    };
     let kept = keep(entries, scan.grid.len(), scan.settings.state);
     let lowest = kept
         .iter()

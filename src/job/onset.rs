@@ -50,10 +50,15 @@ impl Eigenvalue<'_> {
             stability: StabilityDemand::Report,
             follow: None,
         };
-        let mut workspace =
-            self.workspace.lock().unwrap_or_else(std::sync::PoisonError::into_inner);
+        let mut workspace = self
+            .workspace
+            .lock()
+            .unwrap_or_else(std::sync::PoisonError::into_inner);
         let record = self.surface.evaluate(&request, &mut workspace)?.record;
-        record.stability.and_then(|s| s.triplet).ok_or(EigenvalueError::Missing(q))
+        record
+            .stability
+            .and_then(|s| s.triplet)
+            .ok_or(EigenvalueError::Missing(q))
     }
 }
 
@@ -78,7 +83,9 @@ pub fn find(
     entries: &[Entry],
     start: usize,
 ) -> Result<Option<Onset>, JobError> {
-    let [sweep] = &spec.sweeps[..] else { return Ok(None) };
+    let [sweep] = &spec.sweeps[..] else {
+        return Ok(None);
+    };
     let mut tested: Vec<(usize, f64)> = entries
         .iter()
         .filter(|e| e.pass == Pass::Out && e.record.energy.is_some())
@@ -89,21 +96,36 @@ pub fn find(
         .windows(2)
         .filter(|pair| (pair[0].1 < 0.0) != (pair[1].1 < 0.0))
         .min_by_key(|pair| pair[0].0.abs_diff(start).min(pair[1].0.abs_diff(start)));
-    let Some(&[(one, _), (other, _)]) = bracket else { return Ok(None) };
+    let Some(&[(one, _), (other, _)]) = bracket else {
+        return Ok(None);
+    };
     let surface = HartreeFock::new(
         &level.molecule(&spec.molecule),
         level.shells_of_atom.clone(),
         level.method,
         // The eigenvalue is only as good as the orbitals.
-        crate::scf::ScfSettings { commutator: spec.scf.commutator.min(1e-8), ..spec.scf.clone() },
+        crate::scf::ScfSettings {
+            commutator: spec.scf.commutator.min(1e-8),
+            ..spec.scf.clone()
+        },
     )
-    .map_err(|source| JobError::Level { level: level.name.clone(), source })?;
+    .map_err(|source| JobError::Level {
+        level: level.name.clone(),
+        source,
+    })?;
     let workspace = Mutex::new(surface.workspace());
-    let eigenvalue = Eigenvalue { spec, surface: &surface, workspace };
+    let eigenvalue = Eigenvalue {
+        spec,
+        surface: &surface,
+        workspace,
+    };
     let solver = BrentRoot::new(sweep.values[one], sweep.values[other], TOLERANCE);
     let result = Executor::new(&eigenvalue, solver)
         .configure(|state| state.param(sweep.values[one]).max_iters(MOST_EVALUATIONS))
         .run();
     // A solution that is lost between two points leaves the onset unknown; it is not worth the run.
-    Ok(result.ok().and_then(|r| r.state.best_param).map(|value| Onset { value }))
+    Ok(result
+        .ok()
+        .and_then(|r| r.state.best_param)
+        .map(|value| Onset { value }))
 }

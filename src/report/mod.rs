@@ -4,6 +4,7 @@ pub mod csv;
 pub mod figures;
 pub mod folder;
 pub mod geometries;
+mod state_figures;
 pub mod summary;
 pub mod text;
 

@@ -21,7 +21,10 @@ pub(super) fn dissociation(
     Feature::Dissociation.demand(&given.span, problems);
     let counterpoise = given.value.counterpoise.get().is_some_and(|c| c.value);
     let Some(list) = given.value.parts.get() else {
-        return Some(DissociationSpec { parts: Vec::new(), counterpoise });
+        return Some(DissociationSpec {
+            parts: Vec::new(),
+            counterpoise,
+        });
     };
     if list.value.len() < 2 {
         problems
