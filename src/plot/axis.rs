@@ -120,7 +120,7 @@ impl Ticks {
     /// Labels in the order of the values; tiny or huge steps are written with a power of ten.
     pub(super) fn labels(&self) -> Vec<String> {
         let largest = self.values.iter().fold(0.0_f64, |m, v| m.max(v.abs()));
-        if largest > 0.0 && (largest < 1e-3 || largest >= 1e7) {
+        if largest > 0.0 && !(1e-3..1e7).contains(&largest) {
             let power = largest.log10().floor() as i32;
             let scale = 10f64.powi(power);
             let decimals = decimals_for(self.step / scale);
@@ -222,7 +222,7 @@ pub(super) fn number(value: f64, decimals: usize) -> String {
 /// An energy as read off a figure: about four figures, never more than six decimals.
 pub(super) fn energy(value: f64) -> String {
     let magnitude = value.abs();
-    let decimals = if magnitude >= 100.0 || magnitude < 1e-12 {
+    let decimals = if !(1e-12..100.0).contains(&magnitude) {
         1
     } else {
         (3 - magnitude.log10().floor() as i32).clamp(1, 6) as usize

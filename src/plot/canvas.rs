@@ -119,9 +119,10 @@ impl Canvas {
         self.height = height.ceil();
     }
 
-    /// Makes the sheet at least this wide.
-    pub(super) fn widen(&mut self, width: f64) {
+    /// Makes the sheet at least this large.
+    pub(super) fn grow(&mut self, width: f64, height: f64) {
         self.width = self.width.max(width.ceil());
+        self.height = self.height.max(height.ceil());
     }
 
     /// A line through the points, cut into dashes along its length where the stroke asks for it.

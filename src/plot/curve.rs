@@ -1,15 +1,14 @@
 //! Energies over one sweep, one line per level.
 
 use super::axis::{Axis, Span, Ticks, energy, ticks};
-use super::canvas::{Anchor, Canvas, Lettering, Px, Stroke};
-use super::colour::Rgb;
+use super::canvas::{Anchor, Canvas, Lettering, Stroke};
 use super::font::{self, Weight};
 use super::frame::{Frame, Rect, X_AXIS_ROOM, heading, y_axis_room};
+use super::label::{energy_label, label};
 use super::legend::{self, Entry, Sample};
-use super::place::{Occupied, gap_to, nearest_in};
+use super::place::Occupied;
 use super::style::{
-    DOTS, FIT_DASH, INK, LABEL_SIZE, MARGIN, Marker, PAPER, SLATE, SeriesStyle, TICK_SIZE, WHOLE,
-    series,
+    DOTS, FIT_DASH, INK, LABEL_SIZE, MARGIN, Marker, SLATE, SeriesStyle, TICK_SIZE, WHOLE, series,
 };
 use super::{Figure, PlotError, interpolate, range, require_finite};
 
@@ -107,7 +106,11 @@ impl CurveFigure {
         let top = heading(&mut canvas, WIDTH, &self.title, &self.notes);
         let lanes = self.levels.iter().filter(|l| l.fails()).count() as f64;
         let y = self.energy_span(lanes);
-        let y_ticks = ticks(y, 7, false);
+        let nothing = self.levels.iter().all(|l| l.converged().is_empty());
+        let mut y_ticks = ticks(y, 7, false);
+        if nothing {
+            y_ticks.values.clear();
+        }
         let area = Rect {
             left: MARGIN + y_axis_room(&y_ticks),
             top: top + 26.0,
@@ -138,11 +141,7 @@ impl CurveFigure {
         for (k, level) in self.levels.iter().enumerate() {
             self.label_level(&mut canvas, &frame, &mut occupied, level, series(k));
         }
-        if self
-            .levels
-            .iter()
-            .all(|l| l.points.iter().all(|p| p.1.is_none()))
-        {
+        if nothing {
             canvas.text(
                 (
                     0.5 * (area.left + area.right),
@@ -210,15 +209,11 @@ impl CurveFigure {
                 span = span.with(limit.energy);
             }
         }
-        let least = if all.lo.abs() > 0.0 {
-            1e-3 * all.lo.abs()
-        } else {
-            1.0
-        };
+        // Equal energies, up to rounding, make a level line in the middle.
         let span = if span.length() > 1e-9 * (1.0 + all.lo.abs()) {
             span
         } else {
-            span.at_least(least.max(1e-3))
+            span.at_least(1.0)
         };
         let foot = (12.0 + LANE * lanes) / HEIGHT;
         span.padded(foot / (1.0 - foot - 0.06), 0.08)
@@ -314,7 +309,7 @@ impl CurveFigure {
                 right: left + size.0,
                 bottom: frame.area.top + size.1,
             };
-            canvas.widen(rect.right + MARGIN - 6.0);
+            canvas.grow(rect.right + MARGIN - 6.0, rect.bottom + MARGIN);
             legend::draw_column(canvas, rect, &entries);
         }
     }
@@ -343,7 +338,8 @@ impl CurveFigure {
                 entries.push(Entry::new(Sample::Line(fit_stroke(style), None), words));
             }
         }
-        if self.levels.iter().any(|l| l.limit.is_some()) {
+        let mut limits = self.levels.iter().filter_map(|l| l.limit.as_ref());
+        if limits.any(|l| frame.y.holds(l.energy)) {
             let stroke = Stroke::new(SLATE, 1.5).dashed(DOTS);
             entries.push(Entry::new(Sample::Line(stroke, None), "separated parts"));
         }
@@ -413,15 +409,6 @@ impl CurveFigure {
     }
 }
 
-/// The label of an energy axis, with its zero and unit.
-pub(super) fn energy_label(zero: &str, unit: &str) -> String {
-    if zero.trim().is_empty() {
-        format!("Energy ({unit})")
-    } else {
-        format!("Energy relative to {} ({unit})", zero.trim())
-    }
-}
-
 /// The stroke of a computed curve.
 ///
 /// Markers tell curves apart; where points crowd so that markers shrink to dots, dashes do.
@@ -436,36 +423,6 @@ fn second_stroke(style: SeriesStyle) -> Stroke {
 
 fn fit_stroke(style: SeriesStyle) -> Stroke {
     Stroke::new(style.colour.legible(), 1.2).dashed(FIT_DASH)
-}
-
-/// Words near an anchor at the freest place, on a pale ground, led to the anchor where they had to
-/// move away.
-pub(super) fn label(
-    canvas: &mut Canvas,
-    bounds: Rect,
-    occupied: &mut Occupied,
-    (at, toward): (Px, Px),
-    words: &str,
-    ink: Rgb,
-) {
-    let size = (
-        font::width(words, TICK_SIZE, Weight::Regular) + 6.0,
-        TICK_SIZE + 5.0,
-    );
-    let rect = occupied.near(bounds.grown(-2.0), at, size, toward);
-    if gap_to(rect, at) > 20.0 {
-        canvas.segment(nearest_in(rect, at), at, Stroke::new(ink, 0.7).faint(0.7));
-    }
-    canvas.area(rect.corners(), PAPER, 0.85);
-    canvas.text(
-        (
-            0.5 * (rect.left + rect.right),
-            0.5 * (rect.top + rect.bottom),
-        ),
-        words,
-        Lettering::new(TICK_SIZE, ink, Anchor::Middle),
-    );
-    occupied.add_box(rect);
 }
 
 impl CurveLevel {

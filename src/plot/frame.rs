@@ -68,7 +68,7 @@ impl Rect {
                 leave = leave.min(room / run);
             }
         }
-        if !(enter <= leave) {
+        if enter > leave {
             return None;
         }
         let at = |t: f64| (p.0 + dx * t, p.1 + dy * t);
@@ -189,6 +189,9 @@ impl Frame {
             let x = self.x_px(*value);
             canvas.segment((x, y), (x, y + 4.0), Stroke::new(SLATE, 1.0));
             if axis.is_some() {
+                // A wide number at the end of the axis moves in rather than off the sheet.
+                let half = 0.5 * font::width(&label, TICK_SIZE, Weight::Regular);
+                let x = x.min(self.area.right + MARGIN - 2.0 - half);
                 canvas.text(
                     (x, y + 14.0),
                     &label,

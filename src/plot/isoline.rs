@@ -130,11 +130,13 @@ fn off_edge(ring: &[(f64, f64)]) -> Vec<Vec<(f64, f64)>> {
         joined = true;
     }
     // A ring may start in the middle of a line: join its last part to its first.
-    if lines.len() > 1 && joined && ring.len() > 1 && !on_edge(ring[0], ring[1]) {
-        if let Some(mut last) = lines.pop() {
-            last.extend(lines[0].iter().skip(1));
-            lines[0] = last;
-        }
+    let through_start = ring.len() > 1 && joined && !on_edge(ring[0], ring[1]);
+    if lines.len() > 1
+        && through_start
+        && let Some(mut last) = lines.pop()
+    {
+        last.extend(lines[0].iter().skip(1));
+        lines[0] = last;
     }
     lines
 }

@@ -6,7 +6,7 @@
 //! caller names.
 //!
 //! Drawing order: [`Figure`] ← `canvas` (shapes → SVG → PNG) ← `frame` (data coordinates, axes) ←
-//! `place`, `legend` (labels and keys) ← one file per figure. `range` decides which energies are
+//! `place`, `label`, `legend` (words and keys) ← one file per figure. `range` decides which energies are
 //! shown, `interpolate` which points are joined, `style`, `colour` and `font` hold the look.
 //!
 //! Conventions: a point without a converged energy is a tick on the horizontal axis and interrupts
@@ -14,6 +14,7 @@
 
 mod audit;
 mod axis;
+mod bands;
 mod canvas;
 mod colour;
 mod curve;
@@ -22,7 +23,10 @@ mod font;
 mod frame;
 mod interpolate;
 mod isoline;
+mod isoline_numbers;
+mod label;
 mod legend;
+mod map_grid;
 mod panels;
 mod place;
 mod range;

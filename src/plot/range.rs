@@ -59,7 +59,7 @@ pub(super) fn cap_and_step(heights: &[f64], wanted: Option<f64>) -> (f64, f64) {
     if cap <= 0.0 {
         return (0.0, 0.0);
     }
-    let step = round_step(cap, 12);
+    let step = round_step(cap, 10);
     let rounded = match wanted {
         Some(_) => cap,
         None => (cap / step - 1e-9).ceil() * step,
@@ -70,7 +70,8 @@ pub(super) fn cap_and_step(heights: &[f64], wanted: Option<f64>) -> (f64, f64) {
 /// The range of a sweep's values, widened so that marks do not touch the axes.
 pub(super) fn sweep_span(values: impl IntoIterator<Item = f64>) -> Span {
     let span = Span::of(values).unwrap_or(Span { lo: 0.0, hi: 1.0 });
-    let least = (0.1 * span.lo.abs().max(span.hi.abs())).max(1e-3);
+    let size = span.lo.abs().max(span.hi.abs());
+    let least = if size > 0.0 { 0.1 * size } else { 1.0 };
     if span.length() > 1e-6 * least {
         span.padded(0.02, 0.02)
     } else {

@@ -4,8 +4,9 @@ use super::axis::{Axis, Span, energy, ticks};
 use super::canvas::{Anchor, Canvas, Lettering, Px, Stroke};
 use super::font::{self, Weight};
 use super::frame::{Frame, Rect, X_AXIS_ROOM, heading, y_axis_room};
+use super::label::energy_label;
 use super::style::{DOTS, INK, LABEL_SIZE, MARGIN, SLATE, TICK_SIZE, series};
-use super::{Figure, PlotError, curve, interpolate, range, require_finite};
+use super::{Figure, PlotError, interpolate, range, require_finite};
 
 /// Width of the sheet, px.
 const WIDTH: f64 = 760.0;
@@ -96,7 +97,7 @@ impl VibrationFigure {
         frame.draw_x_axis(&mut canvas, &frame.x_ticks(&self.sweep), Some(&self.sweep));
         canvas.text(
             (MARGIN, area.top - 15.0),
-            &curve::energy_label(&self.zero, &self.energy_unit),
+            &energy_label(&self.zero, &self.energy_unit),
             Lettering::new(LABEL_SIZE, INK, Anchor::Start),
         );
 
@@ -158,10 +159,11 @@ impl VibrationFigure {
             lo: all.lo,
             hi: top.max(states.map_or(top, |s| s.hi)),
         };
-        if let Some(limit) = self.limit {
-            if limit > span.lo && limit - span.lo < 1.4 * span.length() {
-                span = span.with(limit);
-            }
+        if let Some(limit) = self.limit
+            && limit > span.lo
+            && limit - span.lo < 1.4 * span.length()
+        {
+            span = span.with(limit);
         }
         span.at_least(1e-3).padded(0.05, 0.08)
     }
@@ -228,10 +230,9 @@ impl VibrationFigure {
                 continue;
             }
             if tallest > 0.0 && state.density.len() > 2 {
-                let hump: Vec<Px> = state
-                    .density
+                let hump: Vec<Px> = without_tails(&state.density, TAIL * tallest)
                     .iter()
-                    .filter(|p| frame.x.holds(p.0) && p.1 > TAIL * tallest)
+                    .filter(|p| frame.x.holds(p.0))
                     .map(|p| (frame.x_px(p.0), y - 0.9 * rise * p.1 / tallest))
                     .collect();
                 if let (Some(first), Some(last)) = (hump.first(), hump.last()) {
@@ -288,6 +289,16 @@ impl VibrationFigure {
             self.sweep.label(),
             states.join(", ")
         )
+    }
+}
+
+/// The samples from the first to the last that exceed `least`.
+fn without_tails(density: &[(f64, f64)], least: f64) -> &[(f64, f64)] {
+    let first = density.iter().position(|p| p.1 > least);
+    let last = density.iter().rposition(|p| p.1 > least);
+    match (first, last) {
+        (Some(first), Some(last)) => &density[first..=last],
+        _ => &[],
     }
 }
 

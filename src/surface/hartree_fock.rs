@@ -627,7 +627,7 @@ impl Surface for HartreeFock {
             }
         }
         let mut record = self.record(&geometry, &field, &settled)?;
-        record.integrals = direct.map_or(integrals, |d| counts(d.counts()));
+        record.integrals = direct.as_ref().map_or(integrals, |d| counts(d.counts()));
         record.scf_seconds = scf_seconds;
         record.seconds = clock.elapsed().as_secs_f64();
         if request.gradient && record.energy.is_some() {
