@@ -30,6 +30,41 @@ pub struct Likeness {
     pub cosines: [f64; 2],
 }
 
+/// What a curve or surface does at a stationary point along the swept coordinates.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Serialize, Deserialize)]
+#[serde(rename_all = "lowercase")]
+pub enum StationaryKind {
+    /// It rises in every direction.
+    Minimum,
+    /// It falls in every direction.
+    Maximum,
+    /// It rises in one direction and falls in another.
+    Saddle,
+}
+
+/// A stationary point along the swept coordinates, located with gradients after the walk.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+pub struct Stationary {
+    /// What the curve or surface does there.
+    pub kind: StationaryKind,
+    /// Values of the swept coordinates, ångström or degree.
+    pub values: Vec<f64>,
+    /// Positions, bohr.
+    pub positions: Vec<[f64; 3]>,
+    /// The numbers, the gradient among them.
+    pub record: PointRecord,
+    /// dE/dq of every sweep that remains, hartree per bohr or radian.
+    pub slopes: Vec<f64>,
+    /// d²E/dqᵢdqⱼ from differences of gradients, one row per sweep, hartree per bohr or radian of each.
+    pub curvature: Vec<Vec<f64>>,
+    /// Whether the steps of Newton's method came to an end.
+    pub converged: bool,
+    /// Gradient calls that it took.
+    pub gradient_calls: usize,
+    /// Fock builds of all of them.
+    pub fock_builds: usize,
+}
+
 /// Something that happened in a walk.
 #[derive(Debug, Clone, PartialEq)]
 pub enum Event {

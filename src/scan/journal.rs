@@ -4,7 +4,7 @@
 //! The first line holds the format version and the fingerprint of the spec. A last line that was cut off
 //! (the machine went down while it was written) is dropped on reading; any other damage is an error.
 
-use super::event::{Entry, Likeness};
+use super::event::{Entry, Likeness, Stationary};
 use serde::{Deserialize, Serialize};
 use serde_json::value::RawValue;
 use std::fs::{File, OpenOptions, TryLockError};
@@ -22,6 +22,8 @@ pub enum Line {
     Header(Header),
     /// A finished evaluation.
     Point(LevelEntry),
+    /// A stationary point located after a level's walk.
+    Stationary(LevelStationary),
     /// A level is complete.
     Complete(LevelEnd),
 }
@@ -44,6 +46,15 @@ pub struct LevelEntry {
     pub level: usize,
     /// The evaluation.
     pub entry: Entry,
+}
+
+/// A stationary point and the level it belongs to.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+pub struct LevelStationary {
+    /// Number of the level in the spec.
+    pub level: usize,
+    /// The stationary point.
+    pub stationary: Stationary,
 }
 
 /// The end of a level.
