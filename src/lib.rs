@@ -1,10 +1,6 @@
 //! thalweg walks molecules along their potential-energy surfaces.
 //!
 //! Modules, each of which may use those before it:
-//!
-//! [`units`], [`elements`] ← [`molecule`] ← [`basis`] ← [`integrals`] ← [`scf`] ← [`surface`] ← [`minimise`] ← [`scan`] ← [`spec`]
-//! ← [`job`] ← [`report`], [`plot`] ← [`cli`].
-//! [`fit`] ← [`vibration`] use units and plain arrays only; job calls them.
 
 pub mod basis;
 pub mod cli;

@@ -1,8 +1,6 @@
 //! The audit of electronic states as a figure: one panel a check, one colour a level.
 
 use super::axis::Axis;
-use super::canvas::Stroke;
-use super::legend::{Entry, Sample};
 use super::panels::{Panel, Stack, Trace};
 use super::style::series;
 use super::{Figure, PlotError};
@@ -164,11 +162,7 @@ impl AuditFigure {
                 .levels
                 .iter()
                 .enumerate()
-                .map(|(k, level)| {
-                    let style = series(k);
-                    let stroke = Stroke::new(style.colour, 1.5);
-                    Entry::new(Sample::Line(stroke, Some(style.marker)), level.name.clone())
-                })
+                .map(|(k, level)| (level.name.clone(), series(k), level.x.len()))
                 .collect(),
             failures: self
                 .levels

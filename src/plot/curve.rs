@@ -7,8 +7,9 @@ use super::frame::{Frame, Rect, X_AXIS_ROOM, heading, y_axis_room};
 use super::label::{energy_label, label};
 use super::legend::{self, Entry, Sample};
 use super::place::Occupied;
+use super::series::SeriesDrawing;
 use super::style::{
-    DOTS, FIT_DASH, INK, LABEL_SIZE, MARGIN, Marker, SLATE, SeriesStyle, TICK_SIZE, WHOLE, series,
+    DOTS, FIT_DASHES, INK, LABEL_SIZE, MARGIN, Marker, SLATE, SeriesStyle, TICK_SIZE, WHOLE, series,
 };
 use super::{Figure, PlotError, interpolate, range, require_finite};
 
@@ -18,8 +19,6 @@ const WIDTH: f64 = 760.0;
 const HEIGHT: f64 = 380.0;
 /// Room at the foot of the data area for each level's ticks of failed points.
 const LANE: f64 = 10.0;
-/// Marker radius below which markers can no longer be told apart.
-const CROWDED: f64 = 2.0;
 
 /// Energies over one sweep.
 #[derive(Debug, Clone, PartialEq)]
@@ -55,7 +54,7 @@ pub struct CurveLevel {
     pub minima: Vec<CurveMark>,
     /// energy of the separated parts
     pub limit: Option<CurveLimit>,
-    /// fitted curves, drawn dashed
+    /// fitted curves, drawn as broad pale dashes under the points
     pub fits: Vec<CurveFit>,
     /// swept value where an instability of the solution sets in
     pub onset: Option<f64>,
@@ -177,6 +176,13 @@ impl CurveFigure {
             require_finite(
                 &format!("minima of {name}"),
                 level.minima.iter().flat_map(|m| [m.x, m.energy]),
+            )?;
+            require_finite(
+                &format!("fits of {name}"),
+                level
+                    .fits
+                    .iter()
+                    .flat_map(|f| f.points.iter().flat_map(|p| [p.0, p.1])),
             )?;
             require_finite(
                 &format!("limit or onset of {name}"),
@@ -318,24 +324,20 @@ impl CurveFigure {
         let mut entries = Vec::new();
         for (k, level) in self.levels.iter().enumerate() {
             let style = series(k);
-            let radius = marker_radius(frame, level.points.len());
-            entries.push(Entry::new(
-                Sample::Line(main_stroke(style, radius), Some(style.marker)),
-                level.name.clone(),
-            ));
+            entries.push(level.drawing(frame, style).entry(&level.name));
             if level.second_solution.iter().any(|p| p.1.is_some()) {
                 entries.push(Entry::new(
                     Sample::Line(second_stroke(style), None),
                     format!("{}, second solution", level.name),
                 ));
             }
-            for fit in level.fits.iter().filter(|f| f.points.len() > 1) {
+            for (f, fit) in level.fits.iter().enumerate() {
                 let words = if self.levels.len() > 1 {
                     format!("{}, {}", level.name, fit.name)
                 } else {
                     fit.name.clone()
                 };
-                entries.push(Entry::new(Sample::Line(fit_stroke(style), None), words));
+                entries.push(Entry::new(Sample::Line(fit_stroke(style, f), None), words));
             }
         }
         let mut limits = self.levels.iter().filter_map(|l| l.limit.as_ref());
@@ -409,20 +411,15 @@ impl CurveFigure {
     }
 }
 
-/// The stroke of a computed curve.
-///
-/// Markers tell curves apart; where points crowd so that markers shrink to dots, dashes do.
-pub(super) fn main_stroke(style: SeriesStyle, radius: f64) -> Stroke {
-    let dash = if radius < CROWDED { style.dash } else { WHOLE };
-    Stroke::new(style.colour, 1.9).dashed(dash)
-}
-
 fn second_stroke(style: SeriesStyle) -> Stroke {
     Stroke::new(style.colour, 0.9).faint(0.8)
 }
 
-fn fit_stroke(style: SeriesStyle) -> Stroke {
-    Stroke::new(style.colour.legible(), 1.2).dashed(FIT_DASH)
+/// Broad and pale, so that a good fit shows although it lies on its points.
+fn fit_stroke(style: SeriesStyle, index: usize) -> Stroke {
+    Stroke::new(style.colour, 5.5)
+        .faint(0.38)
+        .dashed(FIT_DASHES[index % FIT_DASHES.len()])
 }
 
 impl CurveLevel {
@@ -435,6 +432,10 @@ impl CurveLevel {
 
     fn fails(&self) -> bool {
         self.points.iter().any(|p| p.1.is_none())
+    }
+
+    fn drawing(&self, frame: &Frame, style: SeriesStyle) -> SeriesDrawing {
+        SeriesDrawing::new(style, frame.area.width(), self.points.len(), 1.9, 3.2)
     }
 
     fn draw_lines(
@@ -456,17 +457,17 @@ impl CurveLevel {
                 occupied.add_line(&piece);
             }
         };
+        for (k, fit) in self.fits.iter().enumerate() {
+            draw(canvas, occupied, &fit.points, fit_stroke(style, k));
+        }
         for run in interpolate::runs(&self.second_solution, &[]) {
             let line = interpolate::smooth(&run, pieces(frame, &run));
             draw(canvas, occupied, &line, second_stroke(style));
         }
-        let radius = marker_radius(frame, self.points.len());
+        let stroke = self.drawing(frame, style).stroke;
         for run in interpolate::runs(&self.points, &self.breaks) {
             let line = interpolate::smooth(&run, pieces(frame, &run));
-            draw(canvas, occupied, &line, main_stroke(style, radius));
-        }
-        for fit in &self.fits {
-            draw(canvas, occupied, &fit.points, fit_stroke(style));
+            draw(canvas, occupied, &line, stroke);
         }
     }
 
@@ -490,22 +491,15 @@ impl CurveLevel {
             );
             occupied.add_line(&line);
         }
-        let radius = marker_radius(frame, self.points.len());
+        let drawing = self.drawing(frame, style);
         let foot = frame.area.bottom - LANE * lane;
-        for &(x, value) in &self.points {
-            let at = match value {
-                Some(e) => frame.px((x, e)),
-                None => {
-                    let at = (frame.x_px(x), foot);
-                    legend::failure_tick(canvas, at, style.colour);
-                    occupied.add_line(&[at, (at.0, at.1 - 8.0)]);
-                    continue;
-                }
-            };
-            if frame.area.holds(at) {
-                canvas.marker(at, radius, style.marker, style.colour);
-                occupied.add_point(at);
-            }
+        for at in drawing.draw_markers(canvas, frame, &self.points, &self.breaks) {
+            occupied.add_point(at);
+        }
+        for &(x, _) in self.points.iter().filter(|p| p.1.is_none()) {
+            let at = (frame.x_px(x), foot);
+            legend::failure_tick(canvas, at, style.colour);
+            occupied.add_line(&[at, (at.0, at.1 - 8.0)]);
         }
         for &(x, value) in self.findings.iter().filter_map(|&i| self.points.get(i)) {
             let at = match value {
@@ -513,7 +507,7 @@ impl CurveLevel {
                 None => (frame.x_px(x), foot - 4.0),
             };
             if frame.area.grown(8.0).holds(at) {
-                legend::finding_ring(canvas, at);
+                legend::finding_ring(canvas, at, drawing.ring_radius);
                 occupied.add_box(
                     Rect {
                         left: at.0,
@@ -548,9 +542,4 @@ fn pieces(frame: &Frame, run: &[(f64, f64)]) -> usize {
     let span = run.last().map_or(0.0, |l| l.0 - run[0].0);
     let px = span / frame.x.length() * frame.area.width();
     (px / run.len().max(2) as f64 / 3.0).ceil().clamp(2.0, 60.0) as usize
-}
-
-/// Markers shrink where points crowd.
-fn marker_radius(frame: &Frame, points: usize) -> f64 {
-    (0.22 * frame.area.width() / points.max(1) as f64).clamp(1.1, 3.2)
 }

@@ -110,7 +110,7 @@ pub(super) fn draw_sample(canvas: &mut Canvas, sample: Sample, (x, y): Px) {
         Sample::Minimum(colour) => minimum(canvas, middle, colour),
         Sample::None => {}
         Sample::Tick(colour) => failure_tick(canvas, (middle.0, y + 4.0), colour),
-        Sample::Ring => finding_ring(canvas, middle),
+        Sample::Ring => finding_ring(canvas, middle, 7.0),
         Sample::Hatch => hatch(
             canvas,
             Rect {
@@ -131,9 +131,9 @@ pub(super) fn failure_tick(canvas: &mut Canvas, foot: Px, colour: Rgb) {
 }
 
 /// The ring round a point with a finding.
-pub(super) fn finding_ring(canvas: &mut Canvas, centre: Px) {
-    canvas.ring(centre, 7.0, Stroke::new(PAPER, 3.2));
-    canvas.ring(centre, 7.0, Stroke::new(INK, 1.4));
+pub(super) fn finding_ring(canvas: &mut Canvas, centre: Px, radius: f64) {
+    canvas.ring(centre, radius, Stroke::new(PAPER, 3.2));
+    canvas.ring(centre, radius, Stroke::new(INK, 1.4));
 }
 
 /// The mark of a minimum: a diamond around white.

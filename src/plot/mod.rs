@@ -7,7 +7,7 @@
 //!
 //! Drawing order: [`Figure`] ← `canvas` (shapes → SVG → PNG) ← `frame` (data coordinates, axes) ←
 //! `place`, `label`, `legend` (words and keys) ← one file per figure. `range` decides which energies are
-//! shown, `interpolate` which points are joined, `style`, `colour` and `font` hold the look.
+//! shown, `interpolate` which points are joined, `series` how, `style`, `colour` and `font` hold the look.
 //!
 //! Conventions: a point without a converged energy is a tick on the horizontal axis and interrupts
 //! its line; a point with a finding has a ring; a line that leaves the frame ends in an arrowhead.
@@ -30,6 +30,7 @@ mod map_grid;
 mod panels;
 mod place;
 mod range;
+mod series;
 mod style;
 mod surface;
 mod vibration;

@@ -5,7 +5,8 @@ use super::canvas::{Anchor, Canvas, Lettering, Stroke};
 use super::font::{self, Weight};
 use super::frame::{Frame, Rect, X_AXIS_ROOM, heading, y_axis_room};
 use super::legend::{self, Entry, Sample};
-use super::style::{INK, LABEL_SIZE, MARGIN, SLATE, SeriesStyle, WHOLE};
+use super::series::SeriesDrawing;
+use super::style::{INK, LABEL_SIZE, MARGIN, SLATE, SeriesStyle};
 use super::{Figure, PlotError, interpolate, range, require_finite};
 
 /// Width of the sheet without keys beside the panels, px.
@@ -50,8 +51,8 @@ pub(super) struct Stack {
     pub(super) notes: Vec<String>,
     pub(super) sweep: Axis,
     pub(super) panels: Vec<Panel>,
-    /// key shared by all panels
-    pub(super) key: Vec<Entry>,
+    /// key shared by all panels: name, style and number of points of each series
+    pub(super) key: Vec<(String, SeriesStyle, usize)>,
     /// swept values of failed points, one list a series
     pub(super) failures: Vec<(SeriesStyle, Vec<f64>)>,
     pub(super) description: String,
@@ -93,7 +94,11 @@ impl Stack {
         let y_ticks: Vec<_> = spans.iter().map(|s| ticks(*s, 4, false)).collect();
         let left = MARGIN + y_ticks.iter().map(y_axis_room).fold(0.0, f64::max);
         let right = WIDTH - MARGIN;
-        let keys: Vec<Vec<Entry>> = self.panels.iter().map(Panel::entries).collect();
+        let keys: Vec<Vec<Entry>> = self
+            .panels
+            .iter()
+            .map(|p| p.entries(right - left))
+            .collect();
         let beside = keys
             .iter()
             .map(|k| legend::column_size(k).0)
@@ -103,7 +108,7 @@ impl Stack {
 
         let mut canvas = Canvas::new(width, HEIGHT);
         let mut top = heading(&mut canvas, width, &self.title, &self.notes);
-        let shared = self.shared_key();
+        let shared = self.shared_key(right - left);
         top += legend::draw_rows(
             &mut canvas,
             (MARGIN, top + 12.0),
@@ -169,8 +174,12 @@ impl Stack {
         }
     }
 
-    fn shared_key(&self) -> Vec<Entry> {
-        let mut entries = self.key.clone();
+    fn shared_key(&self, width: f64) -> Vec<Entry> {
+        let mut entries: Vec<Entry> = self
+            .key
+            .iter()
+            .map(|(name, style, points)| drawing(*style, width, *points).entry(name))
+            .collect();
         if let [(style, _)] = self.failures.as_slice() {
             entries.push(Entry::new(Sample::Tick(style.colour), "not converged"));
         } else if !self.failures.is_empty() {
@@ -218,35 +227,25 @@ impl Panel {
             canvas.segment((area.left, y), (area.right, y), Stroke::new(SLATE, 1.0));
         }
         for trace in &self.traces {
-            let radius = trace.radius(frame);
-            let dash = if radius < 1.8 {
-                trace.style.dash
-            } else {
-                WHOLE
-            };
-            let stroke = Stroke::new(trace.style.colour, 1.5).dashed(dash);
+            let stroke = trace.drawing(frame.area.width()).stroke;
             for run in interpolate::runs(&trace.points, &trace.breaks) {
                 frame.draw_line(canvas, &run, stroke);
             }
         }
         for trace in &self.traces {
-            let radius = trace.radius(frame);
-            for &(x, value) in &trace.points {
-                if let Some(value) = value {
-                    let at = frame.px((x, value));
-                    canvas.marker(at, radius, trace.style.marker, trace.style.colour);
-                }
-            }
+            let drawing = trace.drawing(frame.area.width());
+            drawing.draw_markers(canvas, frame, &trace.points, &trace.breaks);
             for &(x, value) in trace.findings.iter().filter_map(|&i| trace.points.get(i)) {
                 if let Some(value) = value {
-                    legend::finding_ring(canvas, frame.px((x, value)));
+                    let at = frame.px((x, value));
+                    legend::finding_ring(canvas, at, drawing.ring_radius);
                 }
             }
         }
     }
 
     /// The panel's own key: lines in the order in which they end at the right.
-    fn entries(&self) -> Vec<Entry> {
+    fn entries(&self, width: f64) -> Vec<Entry> {
         if !self.keyed {
             return Vec::new();
         }
@@ -261,10 +260,7 @@ impl Panel {
         order.sort_by(|p, q| end(q).total_cmp(&end(p)));
         let mut entries: Vec<Entry> = order
             .iter()
-            .map(|t| {
-                let stroke = Stroke::new(t.style.colour, 1.5);
-                Entry::new(Sample::Line(stroke, Some(t.style.marker)), t.name.clone())
-            })
+            .map(|t| t.drawing(width).entry(&t.name))
             .collect();
         if !self.remark.is_empty() {
             entries.push(Entry::new(Sample::None, self.remark.clone()));
@@ -274,7 +270,11 @@ impl Panel {
 }
 
 impl Trace {
-    fn radius(&self, frame: &Frame) -> f64 {
-        (0.2 * frame.area.width() / self.points.len().max(1) as f64).clamp(1.0, 2.6)
+    fn drawing(&self, width: f64) -> SeriesDrawing {
+        drawing(self.style, width, self.points.len())
     }
+}
+
+fn drawing(style: SeriesStyle, width: f64, points: usize) -> SeriesDrawing {
+    SeriesDrawing::new(style, width, points, 1.5, 2.6)
 }

@@ -58,7 +58,7 @@ impl Occupied {
     pub(super) fn near(&self, bounds: Rect, anchor: Px, size: (f64, f64), toward: Px) -> Rect {
         let (w, h) = size;
         let mut best: Option<(f64, Rect)> = None;
-        for distance in [9.0, 15.0, 24.0, 36.0, 52.0, 72.0] {
+        for distance in [9.0, 15.0, 24.0, 36.0, 52.0, 72.0, 100.0] {
             for turn in 0..12 {
                 let angle = f64::from(turn) * std::f64::consts::PI / 6.0;
                 let (c, s) = (angle.cos(), angle.sin());
@@ -70,7 +70,7 @@ impl Occupied {
                 let rect = shifted_into(bounds, centre, size);
                 let gap = gap_to(rect, anchor);
                 let against = 1.0 - (c * toward.0 + s * toward.1);
-                let cost = 8.0 * self.covered(rect)
+                let cost = 25.0 * self.covered(rect)
                     + 0.35 * gap
                     + 2.5 * against
                     + if gap < 6.0 { 60.0 } else { 0.0 };

@@ -29,7 +29,7 @@ pub(super) fn ceiling(curves: &[Vec<(f64, f64)>], floor: f64) -> f64 {
     }
     // A frame that would hide only a little more is not worth leaving.
     floor
-        + if top <= 1.6 * shown || shown <= 0.0 {
+        + if top <= 2.0 * shown || shown <= 0.0 {
             top
         } else {
             shown

@@ -69,8 +69,8 @@ pub(super) type Dash = &'static [f64];
 
 /// A whole line.
 pub(super) const WHOLE: Dash = &[];
-/// Fitted curves.
-pub(super) const FIT_DASH: Dash = &[5.0, 3.5];
+/// First, second and third fitted curve of a level.
+pub(super) const FIT_DASHES: [Dash; 3] = [&[5.0, 3.5], &[1.8, 2.6], &[12.0, 3.0, 2.0, 3.0]];
 /// Limits and onsets.
 pub(super) const DOTS: Dash = &[1.4, 3.4];
 

@@ -281,9 +281,11 @@ impl SurfaceFigure {
                 canvas.line(&piece, Stroke::new(colour, width));
             }
         }
+        let cells = self.x_values.len().max(self.y_values.len()).max(1) as f64;
+        let ring = (0.55 * frame.area.width() / cells).clamp(3.5, 7.0);
         for &(i, j) in &self.findings {
             if let (Some(&x), Some(&y)) = (self.x_values.get(i), self.y_values.get(j)) {
-                legend::finding_ring(canvas, frame.px((x, y)));
+                legend::finding_ring(canvas, frame.px((x, y)), ring);
             }
         }
         let inside = |m: &&SurfaceMark| frame.x.holds(m.x) && frame.y.holds(m.y);
