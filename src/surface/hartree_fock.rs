@@ -514,6 +514,8 @@ impl HartreeFock {
             functions_kept: geometry.frame.kept(),
             overlap_smallest: geometry.frame.smallest(),
             gradient: None,
+            positions: None,
+            relaxation: None,
             stability: settled.stability,
             integrals: IntegralCounts::default(),
             seconds: 0.0,

@@ -116,6 +116,17 @@ pub struct StabilityRecord {
     pub left: usize,
 }
 
+/// How the relaxation of a point went.
+#[derive(Debug, Clone, Copy, PartialEq, Serialize, Deserialize)]
+pub struct RelaxationRecord {
+    /// Gradient calls.
+    pub gradient_calls: usize,
+    /// Whether a stationary point was reached; if not, the record has no energy.
+    pub converged: bool,
+    /// Largest component of the gradient left, swept coordinates apart, hartree/bohr; none without an energy.
+    pub gradient_max: Option<f64>,
+}
+
 /// Unique repulsion integrals computed and taken over.
 #[derive(Debug, Clone, Copy, PartialEq, Eq, Default, Serialize, Deserialize)]
 pub struct IntegralCounts {
@@ -171,6 +182,12 @@ pub struct PointRecord {
     pub overlap_smallest: f64,
     /// Energy gradient in hartree/bohr, one per atom, where it was asked for.
     pub gradient: Option<Vec<[f64; 3]>>,
+    /// Positions in bohr, where they were relaxed; otherwise they are those asked for.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub positions: Option<Vec<[f64; 3]>>,
+    /// How the relaxation went, where there was one.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub relaxation: Option<RelaxationRecord>,
     /// What the stability test found, where there was one.
     pub stability: Option<StabilityRecord>,
     /// Repulsion integrals.
