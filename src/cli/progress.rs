@@ -100,7 +100,7 @@ impl<'a> Progress<'a> {
                 event: Event::Finished,
                 ..
             } => self.line(true),
-            JobEvent::LevelDone(_) => {}
+            JobEvent::Stationary(_) | JobEvent::LevelDone(_) => {}
         }
     }
 

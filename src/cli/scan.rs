@@ -122,6 +122,7 @@ fn record_of(lines: Vec<Line>) -> JobRecord {
         match line {
             Line::Header(_) => {}
             Line::Point(entry) => record.entries.push(entry),
+            Line::Stationary(found) => record.stationary.push(found),
             Line::Complete(end) => record.ends.push(end),
         }
     }
@@ -156,6 +157,7 @@ fn walk(
                 level: *level,
                 entry: (**entry).clone(),
             })),
+            JobEvent::Stationary(found) => Some(Line::Stationary(found.clone())),
             JobEvent::LevelDone(end) => Some(Line::Complete(end.clone())),
             JobEvent::Walk { .. } => None,
         };

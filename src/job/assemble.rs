@@ -1,5 +1,6 @@
 //! Evaluations → results: the kept solution of every point, findings and cost.
 
+use super::analysis::{LevelAnalysis, Material, analyse};
 use super::{JobRecord, scan_of};
 use crate::basis::Shell;
 use crate::scan::audit::{Audited, audit};
@@ -66,6 +67,8 @@ pub struct LevelResult {
     pub likeness: Vec<Likeness>,
     /// Mean Fock builds of the kept solutions, all points but the first; none for a single point.
     pub mean_fock_builds: Option<f64>,
+    /// Minima, fits and vibrational states.
+    pub analysis: LevelAnalysis,
 }
 
 /// The kept solution of a point.
@@ -180,7 +183,20 @@ pub fn assemble(spec: &Spec, record: &JobRecord) -> Result<JobResult, super::Job
                 .collect();
             let end = record.ends.iter().find(|e| e.level == number);
             let likeness = end.map_or(&[][..], |e| &e.likeness);
-            level_result(spec, level, &scan, &entries, likeness)
+            let mut result = level_result(spec, level, &scan, &entries, likeness);
+            result.analysis = analyse(&Material {
+                spec,
+                grid: &scan.grid,
+                points: &result.points,
+                findings: &result.findings,
+                stationary: record
+                    .stationary
+                    .iter()
+                    .filter(|s| s.level == number)
+                    .map(|s| &s.stationary)
+                    .collect(),
+            });
+            result
         })
         .collect();
     Ok(JobResult {
@@ -229,6 +245,9 @@ fn cost(record: &JobRecord) -> Cost {
         cost.integrals_computed += record.integrals.computed;
         cost.integrals_reused += record.integrals.reused;
     }
+    for found in &record.stationary {
+        cost.fock_builds += found.stationary.fock_builds;
+    }
     cost
 }
 
@@ -271,7 +290,10 @@ fn level_result(
                 point,
                 index: scan.grid.index(point),
                 values: scan.coordinates[point].clone(),
-                positions: scan.positions[point].clone(),
+                positions: match &kept.entry.record.positions {
+                    Some(relaxed) => relaxed.iter().map(|&p| Vector3::from(p)).collect(),
+                    None => scan.positions[point].clone(),
+                },
                 record: kept.entry.record.clone(),
                 second_energy: kept.second_energy,
                 findings: kinds_at(point, &findings),
@@ -292,6 +314,7 @@ fn level_result(
         points,
         findings,
         likeness: likeness.to_vec(),
+        analysis: LevelAnalysis::default(),
         mean_fock_builds: (!further.is_empty())
             .then(|| further.iter().sum::<f64>() / further.len() as f64),
     }

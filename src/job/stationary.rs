@@ -4,11 +4,17 @@
 //! dE/dq goes on from there, and second derivatives at the end come from central differences of dE/dq. They are
 //! an independent check of every fitted force constant.
 
-use crate::fit::{ExtremaSettings, Kind, Place, dihedral_period, extrema, surface};
+use crate::fit::{ExtremaSettings, Kind, Place, dihedral_period, extrema};
+use crate::minimise::landscape::{GridAxis, Landscape};
+use crate::minimise::valley::{PointKind, stationary_points};
+use crate::minimise::MinimiseError;
+use crate::minimise::settle::{SettleSettings, settle};
+use crate::molecule::Molecule;
+use crate::molecule::motion::Motion;
 use crate::scan::kept::{Kept, keep};
 use crate::scan::sweep::{positions_at, slopes};
 use crate::scan::{
-    Entry, Scan, ScanError, StateChoice, Stationary, StationaryKind, Sweep, WalkSettings,
+    Entry, Harmonic, Scan, ScanError, StateChoice, Stationary, StationaryKind, Sweep, WalkSettings,
 };
 use crate::surface::{
     PointRecord, PointRequest, SeedPoint, StabilityDemand, Start, Surface, SurfaceError,
@@ -27,6 +33,8 @@ const SMALL_SLOPE: f64 = 1e-7;
 /// derivative of a stretch (a few hundred times the second) leaves 1e-6 of the force constant, and the noise of
 /// gradients (1e-7 hartree/bohr) over it 1e-5.
 const DISPLACEMENT: f64 = 0.02;
+/// Stationary points of a surface that are refined, minima first; an interpolation of a wild surface may have any number.
+const MOST_CANDIDATES: usize = 24;
 
 /// Where a stationary point is presumed.
 #[derive(Debug, Clone, PartialEq)]
@@ -34,7 +42,7 @@ pub(super) struct Candidate {
     pub(super) kind: StationaryKind,
     /// Bohr or radian.
     pub(super) place: Vec<f64>,
-    /// Second derivatives.
+    /// Second derivatives there as the points have them.
     curvature: DMatrix<f64>,
     /// Farthest that a search may go from the place, bohr or radian of each sweep.
     reach: Vec<f64>,
@@ -125,57 +133,36 @@ fn on_curve(
         .collect()
 }
 
-/// Points of a grid that lie lower than all their neighbours, diagonal ones too, away from its border.
-pub(super) fn grid_minima(shape: [usize; 2], energies: &[Option<f64>]) -> Vec<[usize; 2]> {
-    let [rows, columns] = shape;
-    let at = |i: usize, j: usize| energies[i * columns + j];
-    let mut found = Vec::new();
-    for i in 1..rows.saturating_sub(1) {
-        for j in 1..columns.saturating_sub(1) {
-            let Some(here) = at(i, j) else { continue };
-            let lowest = (i - 1..=i + 1)
-                .flat_map(|a| (j - 1..=j + 1).map(move |b| (a, b)))
-                .filter(|&place| place != (i, j))
-                // Of two equal neighbours the first stands for both.
-                .all(|(a, b)| {
-                    at(a, b).is_some_and(|e| e > here || ((a, b) > (i, j) && e >= here))
-                });
-            if lowest {
-                found.push([i, j]);
-            }
+/// The interpolated surface of a grid of two sweeps; none where the points make none.
+pub(super) fn landscape(path: &ScanPath<'_>, energies: &[Option<f64>]) -> Option<Landscape> {
+    let axis = |sweep: usize| {
+        let values = path.axis(sweep);
+        let is_dihedral = path.sweeps[sweep].kind() == "dihedral";
+        GridAxis {
+            period: is_dihedral.then(|| dihedral_period(&values)).flatten(),
+            values,
         }
-    }
-    found
+    };
+    Landscape::new(&[axis(0), axis(1)], energies).ok()
 }
 
 fn on_surface(path: &ScanPath<'_>, energies: &[Option<f64>]) -> Vec<Candidate> {
-    let (first, second) = (path.axis(0), path.axis(1));
-    let shape = [first.len(), second.len()];
-    grid_minima(shape, energies)
+    let Some(landscape) = landscape(path, energies) else {
+        return Vec::new();
+    };
+    let spacing = landscape.spacing();
+    stationary_points(&landscape)
         .into_iter()
-        .filter_map(|[i, j]| {
-            // The quadratic through the nine points around: its minimum and second derivatives.
-            let rows = i - 1..i + 2;
-            let columns = j - 1..j + 2;
-            let near: Vec<Option<f64>> = rows
-                .clone()
-                .flat_map(|a| columns.clone().map(move |b| (a, b)))
-                .map(|(a, b)| energies[a * second.len() + b])
-                .collect();
-            let local = surface::through_nine(&first[rows], &second[columns], &near)?;
-            Some(Candidate {
-                kind: StationaryKind::Minimum,
-                place: local.place.to_vec(),
-                curvature: DMatrix::from_row_slice(
-                    2,
-                    2,
-                    &[local.k11, local.k12, local.k12, local.k22],
-                ),
-                reach: vec![
-                    (first[i + 1] - first[i - 1]).abs(),
-                    (second[j + 1] - second[j - 1]).abs(),
-                ],
-            })
+        .take(MOST_CANDIDATES)
+        .map(|point| Candidate {
+            kind: match point.kind {
+                PointKind::Minimum => StationaryKind::Minimum,
+                PointKind::Saddle => StationaryKind::Saddle,
+                PointKind::Maximum => StationaryKind::Maximum,
+            },
+            place: vec![point.at[0], point.at[1]],
+            curvature: DMatrix::from_fn(2, 2, |i, j| point.curvature[(i, j)]),
+            reach: vec![spacing[0], spacing[1]],
         })
         .collect()
 }
@@ -280,6 +267,10 @@ where
         let (Some(_), Some(gradient)) = (record.energy, &record.gradient) else {
             return Ok(None);
         };
+        let positions = match &record.positions {
+            Some(relaxed) => relaxed.iter().map(|&p| Vector3::from(p)).collect(),
+            None => positions,
+        };
         let slopes = DVector::from_vec(slopes(self.path.sweeps, &positions, gradient));
         if slopes.iter().any(|s| !s.is_finite()) {
             return Ok(None);
@@ -342,11 +333,10 @@ where
         else {
             return Ok(None);
         };
-        let positions = here.record.positions_or(&here.positions);
         Ok(Some(Stationary {
             kind: kind_of(&second, candidate.kind),
             values: self.path.reported(&place),
-            positions: positions.iter().map(|p| [p.x, p.y, p.z]).collect(),
+            positions: here.positions.iter().map(|p| [p.x, p.y, p.z]).collect(),
             slopes: here.slopes.iter().copied().collect(),
             curvature: second
                 .row_iter()
@@ -356,6 +346,7 @@ where
             converged,
             gradient_calls: calls + more_calls,
             fock_builds: builds + more_builds,
+            harmonic: None,
         }))
     }
 
@@ -413,6 +404,107 @@ where
         let symmetric = (&second + second.transpose()) * 0.5;
         Ok(Some((symmetric, wanted.len(), builds)))
     }
+}
+
+/// Largest component of the gradient (hartree/bohr) with which a point of the path counts as a minimum of all
+/// coordinates: what is left shifts a bond by 0.0002 bohr.
+const STATIONARY: f64 = 1e-4;
+/// Energies (hartree) that differ by more belong to different solutions.
+const SAME_ENERGY: f64 = 1e-5;
+
+/// Adds harmonic vibrations to a minimum on which no force is left, by settling it once more on the surface without
+/// relaxation; on a relaxed scan the settled point takes the place of the one found on the curve. Left as it is where
+/// that leads elsewhere.
+///
+/// # Errors
+/// [`SurfaceError`] when a geometry cannot be treated.
+pub(super) fn vibrate<S: Surface>(
+    surface: &S,
+    molecule: &Molecule,
+    masses_u: &[f64],
+    path: &ScanPath<'_>,
+    settings: &SettleSettings,
+    stationary: &mut Stationary,
+) -> Result<(), SurfaceError> {
+    let forces = stationary.record.gradient.iter().flatten().flatten();
+    let force = forces.fold(0.0, |most: f64, g| most.max(g.abs()));
+    let relaxed = stationary.record.relaxation.is_some();
+    if stationary.kind != StationaryKind::Minimum || !(relaxed || force < STATIONARY) {
+        return Ok(());
+    }
+    let positions: Vec<Vector3<f64>> = stationary
+        .positions
+        .iter()
+        .map(|&p| Vector3::from(p))
+        .collect();
+    let swept: Vec<Vec<Motion>> = path
+        .sweeps
+        .iter()
+        .map(|s| s.motions().cloned().collect())
+        .collect();
+    let settled = match settle(
+        surface,
+        &molecule.at(&positions),
+        masses_u,
+        &swept,
+        settings,
+        &mut surface.workspace(),
+    ) {
+        Ok(settled) => settled,
+        Err(MinimiseError::Surface(error)) => return Err(error),
+        // The point on the curve stands without its vibrations.
+        Err(_) => return Ok(()),
+    };
+    stationary.gradient_calls += settled.gradient_calls;
+    stationary.fock_builds += settled.minimum.all_builds + settled.hessian.fock_builds;
+    let same = settled
+        .minimum
+        .record
+        .energy
+        .zip(stationary.record.energy)
+        .is_some_and(|(a, b)| (a - b).abs() < SAME_ENERGY);
+    if !(settled.minimum.converged() && same) {
+        return Ok(());
+    }
+    stationary.harmonic = Some(Harmonic {
+        wavenumbers_cm1: settled
+            .analysis
+            .modes
+            .iter()
+            .map(|m| m.wavenumber_cm1)
+            .collect(),
+        intensities_km_per_mol: settled
+            .analysis
+            .modes
+            .iter()
+            .map(|m| m.intensity_km_per_mol.unwrap_or(0.0))
+            .collect(),
+        zero_point_hartree: settled.analysis.zero_point_hartree,
+        relaxed: settled.swept.iter().map(|c| c.relaxed).collect(),
+        rigid: settled.swept.iter().map(|c| c.rigid).collect(),
+    });
+    if relaxed {
+        let places = &settled.minimum.positions;
+        stationary.values = path
+            .sweeps
+            .iter()
+            .zip(&stationary.values)
+            .map(|(sweep, &before)| {
+                let coordinate = &sweep.motion.coordinate;
+                let from = coordinate.from_reported(before);
+                let change = coordinate.difference(coordinate.value(places), from);
+                coordinate.to_reported(from + change)
+            })
+            .collect();
+        stationary.positions = places.iter().map(|p| [p.x, p.y, p.z]).collect();
+        if let Some(gradient) = &settled.minimum.record.gradient {
+            stationary.slopes = slopes(path.sweeps, places, gradient);
+        }
+        let relaxation = stationary.record.relaxation;
+        stationary.record = settled.minimum.record;
+        stationary.record.relaxation = relaxation;
+    }
+    Ok(())
 }
 
 /// Energies of the kept solutions.

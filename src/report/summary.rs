@@ -1,6 +1,7 @@
 //! `summary.json`: everything a run has to say, for programs.
 
 use super::csv::dipole_debye;
+use super::fitted;
 use crate::job::{Cost, JobResult, LevelResult, PointResult};
 use crate::scan::{Finding, FindingKind};
 use crate::units::ANGSTROM_PER_BOHR;
@@ -32,6 +33,13 @@ struct Level<'a> {
     electrons: usize,
     mean_fock_builds_per_further_point: Option<f64>,
     points: Vec<Point<'a>>,
+    minima: Vec<fitted::Minimum<'a>>,
+    barriers: Vec<fitted::Minimum<'a>>,
+    fits: Vec<fitted::FitEntry<'a>>,
+    force_field: Option<fitted::ForceFieldEntry<'a>>,
+    valleys: Vec<fitted::ValleyEntry>,
+    spectroscopy: Option<fitted::SpectroscopyEntry<'a>>,
+    notes: &'a [String],
     findings: &'a [Finding],
 }
 
@@ -87,6 +95,17 @@ fn level<'a>(result: &'a JobResult, level: &'a LevelResult) -> Level<'a> {
         electrons: level.electrons,
         mean_fock_builds_per_further_point: level.mean_fock_builds,
         points: level.points.iter().map(|p| point(result, p)).collect(),
+        minima: fitted::minima(result, &level.analysis.minima),
+        barriers: fitted::minima(result, &level.analysis.barriers),
+        fits: fitted::fits(result, &level.analysis),
+        force_field: level.analysis.force_field.as_ref().map(fitted::force_field),
+        valleys: fitted::valleys(&level.analysis.valleys),
+        spectroscopy: level
+            .analysis
+            .spectroscopy
+            .as_ref()
+            .map(fitted::spectroscopy),
+        notes: &level.analysis.notes,
         findings: &level.findings,
     }
 }

@@ -63,6 +63,24 @@ pub struct Stationary {
     pub gradient_calls: usize,
     /// Fock builds of all of them.
     pub fock_builds: usize,
+    /// Harmonic vibrations, where no force is left on any coordinate.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub harmonic: Option<Harmonic>,
+}
+
+/// Harmonic vibrations at a minimum of all coordinates.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+pub struct Harmonic {
+    /// Wavenumbers in cm⁻¹ in rising order; imaginary ones negative.
+    pub wavenumbers_cm1: Vec<f64>,
+    /// Infrared intensity of each in km/mol.
+    pub intensities_km_per_mol: Vec<f64>,
+    /// Half the sum of the real ones, hartree.
+    pub zero_point_hartree: f64,
+    /// Second derivative along each sweep while all other coordinates follow, hartree per bohr² or radian².
+    pub relaxed: Vec<f64>,
+    /// The same along the rigid motion; none where no side can move by itself.
+    pub rigid: Vec<Option<f64>>,
 }
 
 /// Something that happened in a walk.
