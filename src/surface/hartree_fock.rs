@@ -5,7 +5,7 @@ use super::{
     StabilityRecord, Start, Surface, SurfaceError,
 };
 use crate::basis::{Basis, Shell};
-use crate::gradient::energy_gradient;
+use crate::gradient::{GradientSettings, hartree_fock_gradient};
 use crate::integrals;
 use crate::integrals::repulsion::{DirectRepulsion, RepulsionList, RepulsionSettings};
 use crate::molecule::{ElectronCountError, Molecule, nuclear};
@@ -530,17 +530,24 @@ fn gradient(geometry: &Geometry, field: &Field<'_>, evaluation: &Evaluation) -> 
     for (y, fock) in evaluation.occupied.iter().zip(&evaluation.focks) {
         // tr over occupied orbitals, in whatever combination they are: Y (YᵀFY) Yᵀ.
         let energies = y.transpose() * (fock * y);
-        weighted += geometry.frame.transform(&(y * energies * y.transpose()))
-            * field.occupation().weight();
+        weighted +=
+            geometry.frame.transform(&(y * energies * y.transpose())) * field.occupation().weight();
     }
     // A single block stands for both spins.
     let (Some(alpha), Some(beta)) = (densities.first(), densities.last()) else {
         return Vec::new();
     };
-    energy_gradient(&geometry.molecule, &geometry.basis, alpha, beta, &weighted)
-        .into_iter()
-        .map(Into::into)
-        .collect()
+    hartree_fock_gradient(
+        &geometry.molecule,
+        &geometry.basis,
+        alpha,
+        beta,
+        &weighted,
+        &GradientSettings::default(),
+    )
+    .into_iter()
+    .map(Into::into)
+    .collect()
 }
 
 fn counts(counts: integrals::repulsion::IntegralCounts) -> IntegralCounts {

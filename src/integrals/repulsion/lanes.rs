@@ -11,6 +11,7 @@
     reason = "vector instructions, and disjoint writes from several threads"
 )]
 
+use super::pair_count;
 use crate::integrals::boys::CellPolynomial;
 
 /// Four doubles in memory, one per lane.
@@ -330,6 +331,40 @@ impl<'a> SharedList<'a> {
             start: list.as_mut_ptr(),
             len: list.len(),
             owner: std::marker::PhantomData,
+        }
+    }
+
+    /// Writes one lane of a block of values: the one for row r and column c, at r · strides[0] +
+    /// c · strides[1] of `values`, to place rows[r](rows[r] + 1)/2 + columns[c].
+    ///
+    /// # Panics
+    /// If a place is beyond the end of the list, or `values` is too short.
+    #[inline]
+    pub(super) fn scatter(
+        &self,
+        rows: &[u32],
+        columns: &[u32],
+        values: &[Four],
+        lane: usize,
+        strides: [usize; 2],
+    ) {
+        let (Some(&last_row), Some(&last_column)) = (rows.iter().max(), columns.iter().max())
+        else {
+            return;
+        };
+        assert!(pair_count(last_row as usize) + (last_column as usize) < self.len);
+        assert!((rows.len() - 1) * strides[0] + (columns.len() - 1) * strides[1] < values.len());
+        assert!(lane < 4);
+        for (r, &row) in rows.iter().enumerate() {
+            let start = pair_count(row as usize);
+            for (c, &column) in columns.iter().enumerate() {
+                // SAFETY: the largest place and the largest index were checked above; places are
+                // disjoint between threads.
+                unsafe {
+                    let value = values.get_unchecked(r * strides[0] + c * strides[1]);
+                    *self.start.add(start + column as usize) = *value.0.get_unchecked(lane);
+                }
+            }
         }
     }
 

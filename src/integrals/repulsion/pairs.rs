@@ -130,6 +130,11 @@ impl ShellPair {
             .sum()
     }
 
+    /// Whether one of the shells is on an atom that moves.
+    pub(super) fn touches(&self, moved: &[bool]) -> bool {
+        self.atoms.iter().any(|&atom| moved[atom])
+    }
+
     fn stride(&self) -> usize {
         field::SCALARS + self.class.carried()
     }
@@ -213,6 +218,15 @@ impl PairClass {
 pub(super) enum Side {
     Bra,
     Ket,
+}
+
+impl Side {
+    pub(super) fn other(self) -> Self {
+        match self {
+            Self::Bra => Self::Ket,
+            Self::Ket => Self::Bra,
+        }
+    }
 }
 
 /// Four pairs of one class in lanes, each with its own primitives, padded with zeros.

@@ -174,7 +174,7 @@ fn reserve(buffer: &mut Vec<Four>, len: usize) {
 }
 
 impl QuartetEngine {
-    /// The integrals of four quartets: result[f · ket functions + g], one quartet in each lane.
+    /// Evaluates the integrals of four quartets, for [`Self::result`].
     ///
     /// Primitives are left out as [`crate::integrals::screening`] says, with `budget` the error allowed.
     pub(super) fn evaluate(
@@ -183,7 +183,7 @@ impl QuartetEngine {
         bra: &PairBlock,
         ket: &PairBlock,
         budget: f64,
-    ) -> &[Four] {
+    ) {
         let nherm = hermite_count(plan.degree);
         let (bra_functions, ket_functions) = plan.shape();
         let (bra_hermites, ket_hermites) = (plan.bra.hermites.len(), plan.ket.hermites.len());
@@ -222,7 +222,7 @@ impl QuartetEngine {
         let result = &mut self.result[..bra_functions * ket_functions];
         if !any {
             result.fill(Four::default());
-            return result;
+            return;
         }
         let full = if plan.bra.key.contracted {
             &self.full
@@ -252,7 +252,12 @@ impl QuartetEngine {
             out_row: ket_functions,
             out_column: 1,
         });
-        result
+    }
+
+    /// What [`Self::evaluate`] found last: element f · ket functions + g, one quartet in each lane.
+    pub(super) fn result(&self, plan: &QuartetPlan) -> &[Four] {
+        let (bra_functions, ket_functions) = plan.shape();
+        &self.result[..bra_functions * ket_functions]
     }
 
     /// Stages 1 and 2 for one bra primitive; false when all its primitive quartets are negligible.
