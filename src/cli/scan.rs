@@ -124,6 +124,7 @@ fn record_of(lines: Vec<Line>) -> JobRecord {
             Line::Point(entry) => record.entries.push(entry),
             Line::Limit(limit) => record.limits.push(limit),
             Line::Onset(onset) => record.onsets.push(onset),
+            Line::Stationary(found) => record.stationary.push(found),
             Line::Complete(end) => record.ends.push(end),
         }
     }
@@ -160,6 +161,7 @@ fn walk(
             })),
             JobEvent::Limit(limit) => Some(Line::Limit(limit.clone())),
             JobEvent::Onset(onset) => Some(Line::Onset(onset.clone())),
+            JobEvent::Stationary(found) => Some(Line::Stationary(found.clone())),
             JobEvent::LevelDone(end) => Some(Line::Complete(end.clone())),
             JobEvent::Walk { .. } => None,
         };

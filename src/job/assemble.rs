@@ -1,5 +1,6 @@
 //! Evaluations → results: the kept solution of every point, findings and cost.
 
+use super::analysis::{LevelAnalysis, Material, analyse};
 use super::{JobRecord, Limit, Onset, scan_of};
 use crate::basis::Shell;
 use crate::scan::audit::{Audited, audit};
@@ -70,6 +71,8 @@ pub struct LevelResult {
     pub likeness: Vec<Likeness>,
     /// Mean Fock builds of the kept solutions, all points but the first; none for a single point.
     pub mean_fock_builds: Option<f64>,
+    /// Minima, fits and vibrational states.
+    pub analysis: LevelAnalysis,
 }
 
 /// The kept solution of a point.
@@ -197,6 +200,18 @@ pub fn assemble(spec: &Spec, record: &JobRecord) -> Result<JobResult, super::Job
             result.limit = limit.map(|l| l.limit.clone());
             let onset = record.onsets.iter().find(|o| o.level == number);
             result.onset = onset.map(|o| o.onset);
+            result.analysis = analyse(&Material {
+                spec,
+                grid: &scan.grid,
+                points: &result.points,
+                findings: &result.findings,
+                stationary: record
+                    .stationary
+                    .iter()
+                    .filter(|s| s.level == number)
+                    .map(|s| &s.stationary)
+                    .collect(),
+            });
             result
         })
         .collect();
@@ -246,6 +261,9 @@ fn cost(record: &JobRecord) -> Cost {
         cost.integrals_computed += record.integrals.computed;
         cost.integrals_reused += record.integrals.reused;
     }
+    for found in &record.stationary {
+        cost.fock_builds += found.stationary.fock_builds;
+    }
     cost
 }
 
@@ -288,7 +306,10 @@ fn level_result(
                 point,
                 index: scan.grid.index(point),
                 values: scan.coordinates[point].clone(),
-                positions: scan.positions[point].clone(),
+                positions: match &kept.entry.record.positions {
+                    Some(relaxed) => relaxed.iter().map(|&p| Vector3::from(p)).collect(),
+                    None => scan.positions[point].clone(),
+                },
                 record: kept.entry.record.clone(),
                 second_energy: kept.second_energy,
                 findings: kinds_at(point, &findings),
@@ -311,6 +332,7 @@ fn level_result(
         likeness: likeness.to_vec(),
         limit: None,
         onset: None,
+        analysis: LevelAnalysis::default(),
         mean_fock_builds: (!further.is_empty())
             .then(|| further.iter().sum::<f64>() / further.len() as f64),
     }

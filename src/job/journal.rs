@@ -6,6 +6,7 @@
 
 use super::dissociation::Limit;
 use super::onset::Onset;
+use crate::scan::event::Stationary;
 use crate::scan::{Entry, Likeness};
 use serde::{Deserialize, Serialize};
 use serde_json::value::RawValue;
@@ -28,6 +29,8 @@ pub enum Line {
     Limit(LevelLimit),
     /// Where a level's solution becomes unstable.
     Onset(LevelOnset),
+    /// A stationary point located after a level's walk.
+    Stationary(LevelStationary),
     /// A level is complete.
     Complete(LevelEnd),
 }
@@ -68,6 +71,15 @@ pub struct LevelOnset {
     pub level: usize,
     /// The onset.
     pub onset: Onset,
+}
+
+/// A stationary point and the level it belongs to.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+pub struct LevelStationary {
+    /// Number of the level in the spec.
+    pub level: usize,
+    /// The stationary point.
+    pub stationary: Stationary,
 }
 
 /// The end of a level.

@@ -1,25 +1,29 @@
 //! One job end to end: every level of a spec walked over its grid, and all results made from the
 //! finished evaluations alone, so that a journal can give them again.
 
+pub mod analysis;
 pub mod assemble;
 pub mod dissociation;
 pub mod journal;
 pub mod onset;
 pub mod pieces;
+pub mod stationary;
 
 pub use assemble::{Cost, JobResult, LevelResult, PointResult, SweepResult, assemble};
 pub use dissociation::{Limit, LimitPart};
 pub use onset::Onset;
 
+use crate::minimise::hessian::HessianSettings;
+use crate::minimise::settle::SettleSettings;
 use crate::scan::kept::{Kept, keep};
 use crate::scan::{Entry, Event, Grid, Scan, ScanError, WalkStart, grid, runner};
 use crate::scf::Method;
 use crate::spec::{Level, Spec};
-use crate::surface::HartreeFock;
-use crate::surface::Surface;
+use crate::surface::{HartreeFock, StabilityDemand, Surface};
 use crate::{molecule::motion::MotionError, surface::SurfaceError};
-use journal::{LevelEnd, LevelEntry, LevelLimit, LevelOnset};
+use journal::{LevelEnd, LevelEntry, LevelLimit, LevelOnset, LevelStationary};
 use rayon::ThreadPool;
+use stationary::{ScanPath, Search};
 use std::sync::atomic::AtomicBool;
 use std::time::Instant;
 
@@ -82,6 +86,8 @@ pub enum JobEvent<'a> {
     Limit(LevelLimit),
     /// The onset of an instability is located.
     Onset(LevelOnset),
+    /// A stationary point of a level's curve or surface is located.
+    Stationary(LevelStationary),
     /// A level is complete.
     LevelDone(LevelEnd),
 }
@@ -95,6 +101,8 @@ pub struct JobRecord {
     pub limits: Vec<LevelLimit>,
     /// Onsets of instabilities.
     pub onsets: Vec<LevelOnset>,
+    /// Stationary points of all levels.
+    pub stationary: Vec<LevelStationary>,
     /// Ends of the levels that are complete.
     pub ends: Vec<LevelEnd>,
 }
@@ -163,9 +171,10 @@ pub fn run(
         let before = Instant::now();
         let mut end = walk_level(
             &surface,
+            &surface,
+            spec,
             &scan,
             number,
-            &level.name,
             pool,
             stop,
             observer,
@@ -261,27 +270,77 @@ fn limit_of(
 }
 
 /// Walks one level over any surface, adds its evaluations to `record` and tells how it ended.
+/// Walks one level over any surface, locates the stationary points of what it finds and adds all to `record`.
+/// `unrelaxed` is the surface itself, without the relaxation that `surface` may do at every point.
 ///
 /// # Errors
 /// [`JobError::Scan`].
-pub fn walk_level<S: Surface>(
+pub fn walk_level<S: Surface, U: Surface>(
     surface: &S,
+    unrelaxed: &U,
+    spec: &Spec,
     scan: &Scan,
     level: usize,
-    name: &str,
     pool: &ThreadPool,
     stop: &AtomicBool,
     observer: &mut dyn FnMut(&JobEvent<'_>),
     record: &mut JobRecord,
 ) -> Result<LevelEnd, JobError> {
     let begin = Instant::now();
-    let walked = runner::run(surface, scan, pool, stop, &mut |event| {
-        observer(&JobEvent::Walk { level, name, event });
-    })
-    .map_err(|source| JobError::Scan {
+    let name = spec.levels.get(level).map_or("", |l| l.name.as_str());
+    let failed = |source| JobError::Scan {
         level: name.to_owned(),
         source,
-    })?;
+    };
+    let (walked, seeds) = runner::run_keeping(surface, scan, pool, stop, &mut |event| {
+        observer(&JobEvent::Walk { level, name, event });
+    })
+    .map_err(failed)?;
+    let search = Search {
+        surface,
+        scan,
+        path: ScanPath {
+            sweeps: &spec.sweeps,
+            input: &spec.molecule.positions,
+        },
+        pool,
+        seeds: &seeds,
+    };
+    let molecule = spec.levels.get(level).map_or_else(
+        || spec.molecule.clone(),
+        |level| level.molecule(&spec.molecule),
+    );
+    let settings = SettleSettings {
+        stability: if scan.settings.stability {
+            StabilityDemand::Leave
+        } else {
+            StabilityDemand::None
+        },
+        hessian: HessianSettings {
+            memory_bytes: scan.memory_bytes,
+            ..HessianSettings::default()
+        },
+        ..SettleSettings::default()
+    };
+    for mut stationary in search
+        .run(&walked.entries, spec.scf.energy)
+        .map_err(failed)?
+    {
+        pool.install(|| {
+            stationary::vibrate(
+                unrelaxed,
+                &molecule,
+                &spec.masses_u,
+                &search.path,
+                &settings,
+                &mut stationary,
+            )
+        })
+        .map_err(|source| failed(ScanError::Point { point: 0, source }))?;
+        let found = LevelStationary { level, stationary };
+        observer(&JobEvent::Stationary(found.clone()));
+        record.stationary.push(found);
+    }
     record.entries.extend(
         walked
             .entries

@@ -1,6 +1,7 @@
 //! `summary.json`: everything a run has to say, for programs.
 
 use super::csv::dipole_debye;
+use super::fitted;
 use crate::job::{Cost, JobResult, LevelResult, PointResult};
 use crate::job::{LimitPart, pieces};
 use crate::scan::{Finding, FindingKind};
@@ -35,6 +36,13 @@ struct Level<'a> {
     points: Vec<Point<'a>>,
     dissociation: Option<Dissociation<'a>>,
     onset_of_instability: Option<Onset<'a>>,
+    minima: Vec<fitted::Minimum<'a>>,
+    barriers: Vec<fitted::Minimum<'a>>,
+    fits: Vec<fitted::FitEntry<'a>>,
+    force_field: Option<fitted::ForceFieldEntry<'a>>,
+    valleys: Vec<fitted::ValleyEntry>,
+    spectroscopy: Option<fitted::SpectroscopyEntry<'a>>,
+    notes: &'a [String],
     findings: &'a [Finding],
 }
 
@@ -133,6 +141,17 @@ fn level<'a>(result: &'a JobResult, level: &'a LevelResult) -> Level<'a> {
                 value: onset.value,
                 unit: sweep.unit,
             }),
+        minima: fitted::minima(result, &level.analysis.minima),
+        barriers: fitted::minima(result, &level.analysis.barriers),
+        fits: fitted::fits(result, &level.analysis),
+        force_field: level.analysis.force_field.as_ref().map(fitted::force_field),
+        valleys: fitted::valleys(&level.analysis.valleys),
+        spectroscopy: level
+            .analysis
+            .spectroscopy
+            .as_ref()
+            .map(fitted::spectroscopy),
+        notes: &level.analysis.notes,
         findings: &level.findings,
     }
 }

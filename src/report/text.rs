@@ -1,5 +1,6 @@
 //! The result as a short table per level, for people.
 
+use super::text_fits;
 use crate::job::pieces;
 use crate::job::{JobResult, LevelResult, PointResult};
 use crate::units::EnergyUnit;
@@ -20,6 +21,7 @@ pub fn render(result: &JobResult, unit: EnergyUnit) -> String {
         );
         table(&mut text, result, level, unit);
         summary(&mut text, result, level, unit);
+        text_fits::write(&mut text, result, &level.analysis, unit);
     }
     cost(&mut text, result);
     text

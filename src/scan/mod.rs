@@ -14,7 +14,7 @@ pub mod sweep;
 mod testing;
 pub mod walk;
 
-pub use event::{Entry, Event, Likeness};
+pub use event::{Entry, Event, Harmonic, Likeness, Stationary, StationaryKind};
 pub use finding::{Finding, FindingKind};
 pub use grid::Grid;
 pub use kept::SAME_SOLUTION;
