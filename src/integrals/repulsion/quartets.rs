@@ -151,7 +151,7 @@ pub(super) fn bra_first(x: &PairClass, y: &PairClass) -> bool {
             .map(|g| g.count * (hermite_count(g.high + bra.degree) - below(g.low)))
             .sum()
     };
-    let rank = |bra: &PairClass, ket: &PairClass| (bra.key.contracted, cost(bra, ket));
+    let rank = |bra: &PairClass, ket: &PairClass| (bra.contracted(), cost(bra, ket));
     (rank(x, y), &x.key) < (rank(y, x), &y.key)
 }
 
@@ -210,7 +210,7 @@ impl QuartetEngine {
             if active == 0 {
                 break;
             }
-            if plan.bra.key.contracted {
+            if plan.bra.contracted() {
                 self.bra_contract(plan, bra, start, active, any);
             }
             any = true;
@@ -224,7 +224,7 @@ impl QuartetEngine {
             result.fill(Four::default());
             return;
         }
-        let full = if plan.bra.key.contracted {
+        let full = if plan.bra.contracted() {
             &self.full
         } else {
             &self.half
@@ -272,7 +272,7 @@ impl QuartetEngine {
         let nherm = hermite_count(plan.degree);
         let primitives = PRIMITIVES[plan.degree];
         let half = &mut self.half[slot * plan.half_len..][..plan.half_len];
-        if !plan.ket.key.contracted {
+        if !plan.ket.contracted() {
             // The one ket primitive needs no contraction: its R are the half-contracted numbers.
             let out = &mut half[..nherm];
             let scratch = &mut self.scratch;
