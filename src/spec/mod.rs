@@ -69,12 +69,16 @@ pub struct Spec {
 }
 
 impl Spec {
-    /// Takes title, fits, vibrational states and output from another spec: what a report may change without a calculation.
+    /// Takes title, fits, vibrational states and output from another spec: what a report may change without a
+    /// calculation. Whether gradients are computed stays as it is.
     pub fn take_reporting_from(&mut self, other: Self) {
         self.title = other.title;
         self.fits = other.fits;
         self.vibration = other.vibration;
-        self.output = other.output;
+        self.output = OutputSpec {
+            gradients: self.output.gradients,
+            ..other.output
+        };
         self.text = resolved::text(self);
     }
 
