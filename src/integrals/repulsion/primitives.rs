@@ -1,22 +1,22 @@
 //! Primitive quartets: geometry, Boys functions and Hermite Coulomb integrals on four lanes.
 
 use super::hermite::{MAX_DEGREE, hermite_coulomb};
-use super::lanes::{Four, Kernel, Lanes};
+use super::lanes::{Four, Kernel, Lanes, dispatch};
 use crate::integrals::boys::{BoysTable, CELLS_PER_UNIT};
 use crate::integrals::recurrence::hermite_count;
 
 /// Places of the numbers of one primitive pair in a block; its scalars follow.
-pub(super) mod field {
+pub(in crate::integrals) mod field {
     /// Exponent p = a + b.
-    pub(crate) const EXPONENT: usize = 0;
+    pub(in crate::integrals) const EXPONENT: usize = 0;
     /// Centre of charge P, three numbers.
-    pub(crate) const CENTRE: usize = 1;
+    pub(in crate::integrals) const CENTRE: usize = 1;
     /// √(2π^(5/2)) exp(−ab/p |AB|²) / p.
-    pub(crate) const FACTOR: usize = 4;
+    pub(in crate::integrals) const FACTOR: usize = 4;
     /// Upper bound of the self-repulsion, square root of.
-    pub(crate) const BOUND: usize = 5;
+    pub(in crate::integrals) const BOUND: usize = 5;
     /// First scalar of the pair class.
-    pub(crate) const SCALARS: usize = 6;
+    pub(in crate::integrals) const SCALARS: usize = 6;
 }
 
 /// One bra primitive with a run of ket primitives.
@@ -167,3 +167,34 @@ pub(super) fn primitives<V: Lanes>(
     }
     by_degree!(0 1 2 3 4 5 6 7 8 9 10 11 12 13 14 15 16)
 }
+
+/// The primitive kernel of one degree as a plain function.
+pub(in crate::integrals) type PrimitiveFunction =
+    fn(&[Four], &[Four], usize, &Four, &BoysTable, &mut [Four], &mut [Four]) -> usize;
+
+fn run<const L: usize>(
+    bra: &[Four],
+    ket: &[Four],
+    stride: usize,
+    cut: &Four,
+    table: &BoysTable,
+    out: &mut [Four],
+    scratch: &mut [Four],
+) -> usize {
+    dispatch(Primitives::<L> {
+        bra,
+        ket,
+        stride,
+        cut,
+        table,
+        out,
+        scratch,
+    })
+}
+
+/// Primitive kernels by degree, for callers outside the vector code; derivatives need one degree more.
+pub(in crate::integrals) const PRIMITIVES: [PrimitiveFunction; 18] = [
+    run::<0>, run::<1>, run::<2>, run::<3>, run::<4>, run::<5>, run::<6>, run::<7>, run::<8>,
+    run::<9>, run::<10>, run::<11>, run::<12>, run::<13>, run::<14>, run::<15>, run::<16>,
+    run::<17>,
+];
