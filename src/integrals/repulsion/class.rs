@@ -20,7 +20,7 @@
 use crate::basis::shell::{cartesian_count, cartesian_powers};
 use crate::basis::{FunctionKind, Shell};
 use crate::integrals::harmonics::function_transform;
-use crate::integrals::recurrence::{hermite_index, hermite_powers};
+use crate::integrals::recurrence::{hermite_count, hermite_index, hermite_powers};
 use std::collections::{BTreeMap, HashMap};
 use std::sync::{Arc, Mutex, OnceLock};
 

@@ -130,17 +130,15 @@ impl PairSet {
                 let part = if large { count.ilog2() } else { 0 };
                 divided.entry(part).or_default().push(i);
             }
-            groups.extend(divided.into_values().map(|members| {
-                Group {
-                    class: Arc::clone(&self.pairs[members[0]].class),
-                    moved,
-                    largest_norm: members
-                        .iter()
-                        .map(|&i| self.pairs[i].norm)
-                        .fold(0.0, f64::max),
-                    members,
-                    blocks: [Vec::new(), Vec::new()],
-                }
+            groups.extend(divided.into_values().map(|members| Group {
+                class: Arc::clone(&self.pairs[members[0]].class),
+                moved,
+                largest_norm: members
+                    .iter()
+                    .map(|&i| self.pairs[i].norm)
+                    .fold(0.0, f64::max),
+                members,
+                blocks: [Vec::new(), Vec::new()],
             }));
         }
         groups.par_iter_mut().for_each(|group| {
@@ -184,12 +182,7 @@ impl PairSet {
         }
         let meetings: Vec<Vec<Meeting>> = classes
             .iter()
-            .map(|outer| {
-                groups
-                    .iter()
-                    .map(|g| Meeting::of(outer, &g.class))
-                    .collect()
-            })
+            .map(|outer| groups.iter().map(|g| Meeting::of(outer, &g.class)).collect())
             .collect();
         let walk = Walk {
             set: self,
@@ -310,7 +303,8 @@ impl Walker {
             for (four, block) in fours.zip(blocks) {
                 let inner = [0, 1, 2, 3].map(|l| &pairs[four[l]]);
                 let weights = inner.map(|i| sink.weight(pair, i));
-                let kept = |l: usize| weights[l] * pair.norm * inner[l].norm >= walk.threshold;
+                let kept =
+                    |l: usize| weights[l] * pair.norm * inner[l].norm >= walk.threshold;
                 if (0..4).all(kept) {
                     let weight = weights.into_iter().fold(0.0, f64::max);
                     let outer_block = &self.outer_blocks[1 - meeting.side as usize];
@@ -372,12 +366,7 @@ impl Walker {
         let block = &mut self.mixed_blocks[0];
         block.pack(inner, meeting.side);
         let outer_block = &self.outer_blocks[1 - meeting.side as usize];
-        meeting.evaluate(
-            &mut self.engine,
-            outer_block,
-            block,
-            walk.threshold / weight,
-        );
+        meeting.evaluate(&mut self.engine, outer_block, block, walk.threshold / weight);
         meeting.hand_over(&self.engine, &[pair; 4], &inner, sink);
     }
 
@@ -461,8 +450,7 @@ impl Walk<'_> {
             .enumerate()
             .for_each_init(Walker::default, |walker, (first, sink)| {
                 for task in tasks.iter().skip(first).step_by(count) {
-                    task.iter()
-                        .for_each(|four| walker.run_mixed(self, four, sink));
+                    task.iter().for_each(|four| walker.run_mixed(self, four, sink));
                 }
             });
         sinks
@@ -486,11 +474,11 @@ fn set_norms(mut pairs: Vec<&mut ShellPair>) {
             let plan = QuartetPlan::get(class, class);
             let lanes = [0, 1, 2, 3].map(|l: usize| &*four[l.min(four.len() - 1)]);
             let [bra, ket] = &mut walker.mixed_blocks;
-            bra.pack(lanes, Side::Bra);
-            ket.pack(lanes, Side::Ket);
-            walker.engine.evaluate(&plan, bra, ket, 0.0);
-            let result = walker.engine.result(&plan);
-            let functions = class.functions.len();
+        bra.pack(lanes, Side::Bra);
+        ket.pack(lanes, Side::Ket);
+        walker.engine.evaluate(&plan, bra, ket, 0.0);
+        let result = walker.engine.result(&plan);
+        let functions = class.functions.len();
             let norms: [f64; 4] = std::array::from_fn(|l| {
                 (0..functions)
                     .map(|f| result[f * functions + f].0[l])

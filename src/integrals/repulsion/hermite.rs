@@ -13,8 +13,8 @@ use crate::integrals::recurrence::{hermite_count, hermite_index};
 
 /// Highest degree whose recursion is unrolled.
 pub(super) const UNROLLED: usize = 6;
-/// Highest degree: a derivative of (gg|gg).
-pub(in crate::integrals) const MAX_DEGREE: usize = 17;
+/// Highest degree: (gg|gg).
+pub(super) const MAX_DEGREE: usize = 16;
 
 /// One step: work[target] = PQ[axis] · work[first] + factor · work[second].
 #[derive(Clone, Copy)]
@@ -133,7 +133,7 @@ static LONG_STEPS: [&[Step]; MAX_DEGREE + 1] = {
              $(of::<$degree, { work_len($degree) - $degree - 1 }>()),*]
         };
     }
-    table!(7 8 9 10 11 12 13 14 15 16 17)
+    table!(7 8 9 10 11 12 13 14 15 16)
 };
 
 #[inline(always)]
@@ -190,11 +190,7 @@ pub(super) fn hermite_coulomb<V: Lanes, const L: usize>(
     for m in 0..=L {
         work[Table::<L>::ROOTS[m]] = roots[m];
     }
-    let mut small = [V::zero(); UNROLLED];
-    for (i, number) in small.iter_mut().enumerate() {
-        *number = V::splat(i as f64);
-    }
-    let small = &small;
+    let small: &[V; UNROLLED] = &std::array::from_fn(|i| V::splat(i as f64));
     unrolled!(work pq small L: 0 1 2 3 4 5 6 7 8 9 10 11 12 13 14 15 16 17 18 19 20);
     for (to, from) in out.iter_mut().zip(work.iter()) {
         from.store(to);
@@ -202,7 +198,7 @@ pub(super) fn hermite_coulomb<V: Lanes, const L: usize>(
 }
 
 /// Scratch that [`hermite_coulomb`] needs for `degree`.
-pub(in crate::integrals) const fn scratch_len(degree: usize) -> usize {
+pub(super) const fn scratch_len(degree: usize) -> usize {
     if degree > UNROLLED {
         work_len(degree)
     } else {

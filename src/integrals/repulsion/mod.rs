@@ -12,11 +12,11 @@ mod class;
 mod digestion;
 mod direct;
 mod groups;
-pub(in crate::integrals) mod hermite;
-pub(in crate::integrals) mod lanes;
+mod hermite;
+mod lanes;
 mod list;
 mod pairs;
-pub(in crate::integrals) mod primitives;
+mod primitives;
 mod products;
 mod quartets;
 

@@ -1,7 +1,7 @@
 //! Shell pairs prepared once per geometry, and packed four at a time into lanes.
 
 use super::class::{ClassKey, PairClass, Scalar, ShellType};
-use super::lanes::{Four, Run};
+use super::lanes::Four;
 use super::primitives::field;
 use crate::basis::{Basis, Shell};
 use crate::integrals::recurrence::{hermite_count, hermite_powers};
@@ -17,10 +17,6 @@ pub(super) struct ShellPair {
     pub(super) class: Arc<PairClass>,
     /// Packed index a(a+1)/2 + b of each function pair, in the order of the class.
     pub(super) places: Vec<u32>,
-    /// The same in runs of places that follow one another, and the distance of the function pairs in a
-    /// run: 1, or the number of functions of shell B where A's functions come first.
-    pub(super) runs: Vec<Run>,
-    pub(super) run_stride: usize,
     /// Functions (a, b) of each function pair.
     pub(super) functions: Vec<[u32; 2]>,
     /// Primitive pairs kept, largest bound first.
@@ -68,14 +64,13 @@ impl ShellPair {
             .iter()
             .map(|&(f, g)| [(basis.offset(a) + f) as u32, (basis.offset(b) + g) as u32])
             .collect();
-        let places: Vec<u32> = functions
+        let places = functions
             .iter()
             .map(|&[f, g]| {
                 let (high, low) = (f.max(g), f.min(g));
                 high * (high + 1) / 2 + low
             })
             .collect();
-        let run_stride = if a < b { shell_b.functions() } else { 1 };
         let monomials: Vec<f64> = {
             let axes = [0, 1, 2].map(|i| powers(displacement[i], class.degree));
             hermite_powers()[..hermite_count(class.degree)]
@@ -110,8 +105,6 @@ impl ShellPair {
         Self {
             shells: [s, t],
             atoms: [shell_a.atom, shell_b.atom],
-            runs: runs(&places, run_stride),
-            run_stride,
             places,
             functions,
             primitives: primitives.len(),
@@ -138,27 +131,6 @@ impl ShellPair {
     fn stride(&self) -> usize {
         field::SCALARS + self.class.carried()
     }
-}
-
-/// Divides places, visited every `stride`, into runs.
-fn runs(places: &[u32], stride: usize) -> Vec<Run> {
-    let mut runs: Vec<Run> = Vec::new();
-    for start in 0..stride {
-        for index in (start..places.len()).step_by(stride) {
-            let place = places[index] as usize;
-            match runs.last_mut() {
-                Some(run) if place == run.place + run.len && index >= start + stride => {
-                    run.len += 1;
-                }
-                _ => runs.push(Run {
-                    first: index,
-                    place,
-                    len: 1,
-                }),
-            }
-        }
-    }
-    runs
 }
 
 /// An upper bound of the norm of every pair of the basis, independent of where the centres are:
