@@ -7,11 +7,11 @@ pub mod stationary;
 
 pub use assemble::{Cost, JobResult, LevelResult, PointResult, SweepResult, assemble};
 
+use crate::minimise::hessian::HessianSettings;
+use crate::minimise::settle::SettleSettings;
 use crate::scan::journal::{LevelEnd, LevelEntry, LevelStationary};
 use crate::scan::{Event, Grid, Scan, ScanError, WalkStart, grid, runner};
 use crate::spec::Spec;
-use crate::minimise::hessian::HessianSettings;
-use crate::minimise::settle::SettleSettings;
 use crate::surface::{HartreeFock, StabilityDemand, Surface};
 use crate::{molecule::motion::MotionError, surface::SurfaceError};
 use rayon::ThreadPool;

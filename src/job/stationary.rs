@@ -5,10 +5,10 @@
 //! an independent check of every fitted force constant.
 
 use crate::fit::{ExtremaSettings, Kind, Place, dihedral_period, extrema};
-use crate::minimise::landscape::{GridAxis, Landscape};
-use crate::minimise::valley::{PointKind, stationary_points};
 use crate::minimise::MinimiseError;
+use crate::minimise::landscape::{GridAxis, Landscape};
 use crate::minimise::settle::{SettleSettings, settle};
+use crate::minimise::valley::{PointKind, stationary_points};
 use crate::molecule::Molecule;
 use crate::molecule::motion::Motion;
 use crate::scan::kept::{Kept, keep};
@@ -370,8 +370,7 @@ where
             self.ask(&moved, near, own)
         };
         let copies = self.pool.current_num_threads() as u64 + 1;
-        let fits =
-            self.surface.workspace_bytes().saturating_mul(copies) <= self.scan.memory_bytes;
+        let fits = self.surface.workspace_bytes().saturating_mul(copies) <= self.scan.memory_bytes;
         let answers: Vec<Result<Option<Answer<S::Seed>>, SurfaceError>> = if fits {
             // Cloned before the threads start: a workspace need not be shareable.
             let owned: Vec<(S::Workspace, (usize, f64))> =

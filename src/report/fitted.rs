@@ -31,10 +31,7 @@ pub(super) struct Minimum<'a> {
 }
 
 /// Minima or barriers.
-pub(super) fn minima<'a>(
-    result: &'a JobResult,
-    list: &'a [MinimumResult],
-) -> Vec<Minimum<'a>> {
+pub(super) fn minima<'a>(result: &'a JobResult, list: &'a [MinimumResult]) -> Vec<Minimum<'a>> {
     list.iter()
         .map(|m| {
             let refined = m.refined.as_ref();
@@ -64,7 +61,8 @@ pub(super) fn minima<'a>(
                 force_constants: refined.map(|r| {
                     (0..r.curvature.len())
                         .map(|k| {
-                            constant(&result.sweeps[k], r.curvature[k][k]).in_units(Convention::HalfK)
+                            constant(&result.sweeps[k], r.curvature[k][k])
+                                .in_units(Convention::HalfK)
                         })
                         .collect()
                 }),
@@ -162,10 +160,7 @@ pub(super) struct FitEntry<'a> {
 }
 
 /// The entries of `fits`.
-pub(super) fn fits<'a>(
-    result: &'a JobResult,
-    analysis: &'a LevelAnalysis,
-) -> Vec<FitEntry<'a>> {
+pub(super) fn fits<'a>(result: &'a JobResult, analysis: &'a LevelAnalysis) -> Vec<FitEntry<'a>> {
     analysis
         .fits
         .iter()

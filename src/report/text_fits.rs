@@ -141,7 +141,10 @@ fn fit_lines(text: &mut String, sweep: &SweepResult, entry: &FitResult) {
     let decimals = if sweep.unit == "angstrom" { 5 } else { 3 };
     let of = match names.len() {
         1 => format!("{} {}", sweep.kind, names[0]),
-        _ => format!("{} together, k their sum with couplings", names.join(" and ")),
+        _ => format!(
+            "{} together, k their sum with couplings",
+            names.join(" and ")
+        ),
     };
     let path = match entry.path {
         PathKind::Rigid => format!("rigid, {} moves", entry.moves.join(" ")),

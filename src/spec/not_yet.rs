@@ -25,8 +25,6 @@ pub(super) enum Feature {
 const NOT_YET: &[Feature] = &[
     Feature::OthersOptimised,
     Feature::Dissociation,
-    Feature::Fit,
-    Feature::Vibration,
     Feature::Gradients,
 ];
 

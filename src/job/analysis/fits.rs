@@ -101,7 +101,11 @@ pub(super) fn fit_lines(material: &Material<'_>, lines: &[Line], analysis: &mut 
 fn reason(error: &FitError, sweep: &Sweep) -> String {
     match error {
         FitError::NoFit { at, points, needed } => {
-            let unit = if sweep.unit() == "degree" { "°" } else { " Å" };
+            let unit = if sweep.unit() == "degree" {
+                "°"
+            } else {
+                " Å"
+            };
             format!(
                 "near {:.3}{unit} no order and window holds; {points} points are there and the lowest order needs \
                  {needed}",
@@ -128,12 +132,7 @@ pub(super) fn coordinate(sweep: &Sweep) -> Coordinate {
     }
 }
 
-fn settings(
-    material: &Material<'_>,
-    wanted: &FitSpec,
-    sweep: &Sweep,
-    line: &Line,
-) -> FitSettings {
+fn settings(material: &Material<'_>, wanted: &FitSpec, sweep: &Sweep, line: &Line) -> FitSettings {
     let default = FitSettings::default();
     let width = wanted
         .window

@@ -46,11 +46,7 @@ pub(super) fn of_curve(material: &Material<'_>) -> Vec<Line> {
         .filter(|(x, _)| !x.is_empty())
         .map(|(x, energies)| Line {
             sweep: 0,
-            settings: super::super::stationary::curve_settings(
-                sweep,
-                &x,
-                material.spec.scf.energy,
-            ),
+            settings: super::super::stationary::curve_settings(sweep, &x, material.spec.scf.energy),
             x,
             energies,
             others: vec![0.0],

@@ -113,7 +113,9 @@ pub(super) fn of_curve(material: &Material<'_>, lines: &[Line], analysis: &mut L
     let fit = best_fit(material, minimum, analysis);
     match spectroscopy(material, line, minimum, mass, fit) {
         Ok(found) => analysis.spectroscopy = Some(found),
-        Err(error) => analysis.notes.push(format!("no vibrational states: {error}")),
+        Err(error) => analysis
+            .notes
+            .push(format!("no vibrational states: {error}")),
     }
 }
 
@@ -128,7 +130,12 @@ fn best_fit<'a>(
         .iter()
         .filter(|f| f.sweep == 0 && material.is_same_place(&f.values, &minimum.values))
         .map(|f| &f.fit)
-        .min_by_key(|fit| (fit.fourth_derivative.is_none(), fit.form != Form::Polynomial))
+        .min_by_key(|fit| {
+            (
+                fit.fourth_derivative.is_none(),
+                fit.form != Form::Polynomial,
+            )
+        })
 }
 
 /// Inverse mass of a sweep's common coordinate. Of tied coordinates it is the G element of their mean, which they all
@@ -225,9 +232,9 @@ fn spectroscopy(
         ));
     }
     let floor = minimum.energy;
-    let curvature = fit.map(|f| f.force_constant).or_else(|| {
-        super::fits::second_derivative(minimum, 0, material.path_kind())
-    });
+    let curvature = fit
+        .map(|f| f.force_constant)
+        .or_else(|| super::fits::second_derivative(minimum, 0, material.path_kind()));
     let omega = curvature.and_then(|k| wavenumber_per_cm(k, mass.inverse).ok());
     let dunham = fit.filter(|_| mass.exact).and_then(|fit| {
         let at = MinimumDerivatives {

@@ -117,8 +117,12 @@ fn force_field(
         }
     };
     let sweeps = &material.spec.sweeps;
-    let values =
-        [0, 1].map(|k| sweeps[k].motion.coordinate.to_reported(field.equilibrium[k]));
+    let values = [0, 1].map(|k| {
+        sweeps[k]
+            .motion
+            .coordinate
+            .to_reported(field.equilibrium[k])
+    });
     let exact = material
         .minimum_at(&analysis.minima, &values)
         .and_then(|m| m.refined.as_ref())
@@ -128,11 +132,7 @@ fn force_field(
         // A coupling may vanish, so it is compared on the scale of the constants that it couples.
         vec![
             verdict(field.k11, field.half_ranges[0] / field.k11, k11),
-            verdict(
-                scale + field.k12,
-                field.half_ranges[1] / scale,
-                scale + k12,
-            ),
+            verdict(scale + field.k12, field.half_ranges[1] / scale, scale + k12),
             verdict(field.k22, field.half_ranges[2] / field.k22, k22),
         ]
     });
@@ -197,9 +197,11 @@ fn keep_at_their_minima(
     places: &[Vec<f64>],
     analysis: &mut LevelAnalysis,
 ) {
-    analysis
-        .fits
-        .retain(|fit| places.iter().any(|p| material.is_same_place(p, &fit.values)));
+    analysis.fits.retain(|fit| {
+        places
+            .iter()
+            .any(|p| material.is_same_place(p, &fit.values))
+    });
 }
 
 fn valleys(material: &Material<'_>, energies: &[Option<f64>], analysis: &mut LevelAnalysis) {
