@@ -3,12 +3,12 @@
 use super::args::{CommonArgs, ReportArgs, ScanArgs};
 use super::progress::Progress;
 use super::{Failure, Status, Streams, load};
+use crate::job::journal::{self, Journal, JournalError, LevelEntry, Line};
 use crate::job::{self, JobError, JobEvent, JobRecord, JobResult};
 use crate::plot::PlotError;
 use crate::report::folder::{FolderError, Occupant, RunFolder};
 use crate::report::{self, figures};
 use crate::scan::Event;
-use crate::scan::journal::{self, Journal, JournalError, LevelEntry, Line};
 use crate::spec::Spec;
 use std::sync::atomic::AtomicBool;
 
@@ -122,6 +122,8 @@ fn record_of(lines: Vec<Line>) -> JobRecord {
         match line {
             Line::Header(_) => {}
             Line::Point(entry) => record.entries.push(entry),
+            Line::Limit(limit) => record.limits.push(limit),
+            Line::Onset(onset) => record.onsets.push(onset),
             Line::Stationary(found) => record.stationary.push(found),
             Line::Complete(end) => record.ends.push(end),
         }
@@ -157,6 +159,8 @@ fn walk(
                 level: *level,
                 entry: (**entry).clone(),
             })),
+            JobEvent::Limit(limit) => Some(Line::Limit(limit.clone())),
+            JobEvent::Onset(onset) => Some(Line::Onset(onset.clone())),
             JobEvent::Stationary(found) => Some(Line::Stationary(found.clone())),
             JobEvent::LevelDone(end) => Some(Line::Complete(end.clone())),
             JobEvent::Walk { .. } => None,

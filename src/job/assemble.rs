@@ -1,7 +1,7 @@
 //! Evaluations → results: the kept solution of every point, findings and cost.
 
 use super::analysis::{LevelAnalysis, Material, analyse};
-use super::{JobRecord, scan_of};
+use super::{JobRecord, Limit, Onset, scan_of};
 use crate::basis::Shell;
 use crate::scan::audit::{Audited, audit};
 use crate::scan::kept::keep;
@@ -63,6 +63,10 @@ pub struct LevelResult {
     pub points: Vec<PointResult>,
     /// What a person should see.
     pub findings: Vec<Finding>,
+    /// Energies of the separated parts.
+    pub limit: Option<Limit>,
+    /// Where the solution becomes unstable towards unrestricted orbitals.
+    pub onset: Option<Onset>,
     /// How alike the kept solutions of neighbouring points are.
     pub likeness: Vec<Likeness>,
     /// Mean Fock builds of the kept solutions, all points but the first; none for a single point.
@@ -142,6 +146,14 @@ impl JobResult {
 }
 
 impl LevelResult {
+    /// Energy from the lowest point to the separated parts, hartree; where it was asked for, less what the basis
+    /// functions of the others lend each part.
+    #[must_use]
+    pub fn dissociation_energy(&self) -> Option<f64> {
+        let limit = self.limit.as_ref()?;
+        Some(limit.energy? - self.lowest()?.record.energy? - limit.counterpoise.unwrap_or(0.0))
+    }
+
     /// The point of lowest energy.
     #[must_use]
     pub fn lowest(&self) -> Option<&PointResult> {
@@ -184,6 +196,10 @@ pub fn assemble(spec: &Spec, record: &JobRecord) -> Result<JobResult, super::Job
             let end = record.ends.iter().find(|e| e.level == number);
             let likeness = end.map_or(&[][..], |e| &e.likeness);
             let mut result = level_result(spec, level, &scan, &entries, likeness);
+            let limit = record.limits.iter().find(|l| l.level == number);
+            result.limit = limit.map(|l| l.limit.clone());
+            let onset = record.onsets.iter().find(|o| o.level == number);
+            result.onset = onset.map(|o| o.onset);
             result.analysis = analyse(&Material {
                 spec,
                 grid: &scan.grid,
@@ -314,6 +330,8 @@ fn level_result(
         points,
         findings,
         likeness: likeness.to_vec(),
+        limit: None,
+        onset: None,
         analysis: LevelAnalysis::default(),
         mean_fock_builds: (!further.is_empty())
             .then(|| further.iter().sum::<f64>() / further.len() as f64),

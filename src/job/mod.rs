@@ -3,17 +3,25 @@
 
 pub mod analysis;
 pub mod assemble;
+pub mod dissociation;
+pub mod journal;
+pub mod onset;
+pub mod pieces;
 pub mod stationary;
 
 pub use assemble::{Cost, JobResult, LevelResult, PointResult, SweepResult, assemble};
+pub use dissociation::{Limit, LimitPart};
+pub use onset::Onset;
 
 use crate::minimise::hessian::HessianSettings;
 use crate::minimise::settle::SettleSettings;
-use crate::scan::journal::{LevelEnd, LevelEntry, LevelStationary};
-use crate::scan::{Event, Grid, Scan, ScanError, WalkStart, grid, runner};
-use crate::spec::Spec;
+use crate::scan::kept::{Kept, keep};
+use crate::scan::{Entry, Event, Grid, Scan, ScanError, WalkStart, grid, runner};
+use crate::scf::Method;
+use crate::spec::{Level, Spec};
 use crate::surface::{HartreeFock, StabilityDemand, Surface};
 use crate::{molecule::motion::MotionError, surface::SurfaceError};
+use journal::{LevelEnd, LevelEntry, LevelLimit, LevelOnset, LevelStationary};
 use rayon::ThreadPool;
 use stationary::{ScanPath, Search};
 use std::sync::atomic::AtomicBool;
@@ -74,6 +82,10 @@ pub enum JobEvent<'a> {
         /// what happened
         event: &'a Event,
     },
+    /// The energies of a level's separated parts are known.
+    Limit(LevelLimit),
+    /// The onset of an instability is located.
+    Onset(LevelOnset),
     /// A stationary point of a level's curve or surface is located.
     Stationary(LevelStationary),
     /// A level is complete.
@@ -85,6 +97,10 @@ pub enum JobEvent<'a> {
 pub struct JobRecord {
     /// Evaluations of all levels.
     pub entries: Vec<LevelEntry>,
+    /// Energies of separated parts.
+    pub limits: Vec<LevelLimit>,
+    /// Onsets of instabilities.
+    pub onsets: Vec<LevelOnset>,
     /// Stationary points of all levels.
     pub stationary: Vec<LevelStationary>,
     /// Ends of the levels that are complete.
@@ -152,7 +168,8 @@ pub fn run(
             level: level.name.clone(),
             source,
         })?;
-        walk_level(
+        let before = Instant::now();
+        let mut end = walk_level(
             &surface,
             &surface,
             spec,
@@ -163,10 +180,96 @@ pub fn run(
             observer,
             &mut record,
         )?;
+        beside_the_walk(spec, number, &scan, pool, observer, &mut record)?;
+        end.wall_seconds = before.elapsed().as_secs_f64();
+        observer(&JobEvent::LevelDone(end.clone()));
+        record.ends.push(end);
     }
     Ok(record)
 }
 
+/// What a level needs besides its walk: the separated parts, and the onset of an instability.
+fn beside_the_walk(
+    spec: &Spec,
+    number: usize,
+    scan: &Scan,
+    pool: &ThreadPool,
+    observer: &mut dyn FnMut(&JobEvent<'_>),
+    record: &mut JobRecord,
+) -> Result<(), JobError> {
+    let level = &spec.levels[number];
+    let entries: Vec<Entry> = record
+        .entries
+        .iter()
+        .filter(|e| e.level == number)
+        .map(|e| e.entry.clone())
+        .collect();
+    if let Some(limit) = pool
+        .install(|| limit_of(spec, level, scan, &entries))
+        .map_err(|source| JobError::Level {
+            level: level.name.clone(),
+            source,
+        })?
+    {
+        let limit = LevelLimit {
+            level: number,
+            limit,
+        };
+        observer(&JobEvent::Limit(limit.clone()));
+        record.limits.push(limit);
+    }
+    if level.method == Method::Rhf
+        && let Some(onset) = pool.install(|| onset::find(spec, level, &entries, scan.start))?
+    {
+        let onset = LevelOnset {
+            level: number,
+            onset,
+        };
+        observer(&JobEvent::Onset(onset.clone()));
+        record.onsets.push(onset);
+    }
+    Ok(())
+}
+
+/// The separated parts of a level: those given, else those that the swept bond cuts.
+fn limit_of(
+    spec: &Spec,
+    level: &Level,
+    scan: &Scan,
+    entries: &[Entry],
+) -> Result<Option<Limit>, SurfaceError> {
+    let (molecule, settings) = (&spec.molecule, &spec.scf);
+    let asked = spec.dissociation.as_ref();
+    let given = asked.map_or(&[][..], |d| &d.parts);
+    let limit = if given.is_empty() {
+        match dissociation::parts_cut(molecule, &spec.sweeps) {
+            Some(parts) => dissociation::proposed(molecule, level, settings, &parts)?,
+            None => None,
+        }
+    } else {
+        Some(dissociation::given(molecule, level, settings, given)?)
+    };
+    let Some(mut limit) = limit else {
+        return Ok(None);
+    };
+    let kept = keep(entries, scan.grid.len(), scan.settings.state);
+    let lowest = kept
+        .iter()
+        .flatten()
+        .filter(|k| k.entry.record.energy.is_some())
+        .min_by(|a, b| {
+            let energy = |k: &Kept<'_>| k.entry.record.energy.unwrap_or(f64::INFINITY);
+            energy(a).total_cmp(&energy(b))
+        });
+    if let (true, Some(lowest)) = (asked.is_some_and(|d| d.counterpoise), lowest) {
+        let positions = &scan.positions[lowest.entry.point];
+        limit.counterpoise =
+            dissociation::counterpoise(molecule, level, settings, &limit, positions)?;
+    }
+    Ok(Some(limit))
+}
+
+/// Walks one level over any surface, adds its evaluations to `record` and tells how it ended.
 /// Walks one level over any surface, locates the stationary points of what it finds and adds all to `record`.
 /// `unrelaxed` is the surface itself, without the relaxation that `surface` may do at every point.
 ///
@@ -182,7 +285,7 @@ pub fn walk_level<S: Surface, U: Surface>(
     stop: &AtomicBool,
     observer: &mut dyn FnMut(&JobEvent<'_>),
     record: &mut JobRecord,
-) -> Result<(), JobError> {
+) -> Result<LevelEnd, JobError> {
     let begin = Instant::now();
     let name = spec.levels.get(level).map_or("", |l| l.name.as_str());
     let failed = |source| JobError::Scan {
@@ -244,13 +347,10 @@ pub fn walk_level<S: Surface, U: Surface>(
             .into_iter()
             .map(|entry| LevelEntry { level, entry }),
     );
-    let end = LevelEnd {
+    Ok(LevelEnd {
         level,
         wall_seconds: begin.elapsed().as_secs_f64(),
         threads: pool.current_num_threads(),
         likeness: walked.likeness,
-    };
-    observer(&JobEvent::LevelDone(end.clone()));
-    record.ends.push(end);
-    Ok(())
+    })
 }

@@ -1,8 +1,8 @@
 //! Results → figures: fills the plain structs of [`plot`](crate::plot) and renders them in the formats asked for.
 
-use super::figure_fits;
+use super::{figure_fits, state_figures};
 use crate::job::{JobResult, LevelResult, PointResult};
-use crate::plot::{Axis, CurveFigure, CurveLevel, Figure, PlotError, SurfaceFigure};
+use crate::plot::{Axis, CurveFigure, CurveLevel, CurveLimit, Figure, PlotError, SurfaceFigure};
 use crate::scan::StationaryKind;
 use crate::spec::{FigureFormat, Spec};
 
@@ -25,33 +25,40 @@ pub fn render(spec: &Spec, result: &JobResult) -> Result<Vec<(String, Vec<u8>)>,
 }
 
 fn draw(spec: &Spec, result: &JobResult) -> Result<Vec<(String, Figure)>, PlotError> {
-    match result.sweeps.len() {
-        0 => Ok(Vec::new()),
-        1 => {
-            let mut figures = vec![("curve".to_owned(), curve(spec, result).draw()?)];
-            for (name, figure) in figure_fits::vibrations(spec, result, &axis(result, 0)) {
-                figures.push((name, figure.draw()?));
-            }
-            Ok(figures)
+    if result.sweeps.is_empty() {
+        return Ok(Vec::new());
+    }
+    let mut figures = vec![("audit".to_owned(), state_figures::audit(result).draw()?)];
+    if result.sweeps.len() == 1 {
+        figures.push(("curve".to_owned(), curve(spec, result).draw()?));
+        for (name, figure) in figure_fits::vibrations(spec, result, &axis(result, 0)) {
+            figures.push((name, figure.draw()?));
         }
-        _ => result
-            .levels
-            .iter()
-            .enumerate()
-            .map(|(k, level)| {
-                // The first level's figure has the plain name; further ones are numbered from 2.
-                let name = if k == 0 {
-                    "surface".to_owned()
-                } else {
-                    format!("surface-{}", k + 1)
-                };
-                Ok((name, surface(spec, result, level).draw()?))
-            })
-            .collect(),
+    }
+    for (k, level) in result.levels.iter().enumerate() {
+        if result.sweeps.len() == 1 {
+            figures.push((
+                numbered("density", k),
+                state_figures::density(result, level).draw()?,
+            ));
+        } else {
+            figures.push((numbered("surface", k), surface(spec, result, level).draw()?));
+        }
+    }
+    Ok(figures)
+}
+
+/// The first level's figure has the plain name; further ones are numbered from 2.
+fn numbered(name: &str, level: usize) -> String {
+    if level == 0 {
+        name.to_owned()
+    } else {
+        format!("{name}-{}", level + 1)
     }
 }
 
-fn axis(result: &JobResult, sweep: usize) -> Axis {
+/// Axis of a sweep.
+pub(super) fn axis(result: &JobResult, sweep: usize) -> Axis {
     let sweep = &result.sweeps[sweep];
     let quantity = match sweep.kind {
         "bond" => "distance",
@@ -106,6 +113,16 @@ fn curve_level(spec: &Spec, result: &JobResult, level: &LevelResult) -> CurveLev
         },
         minima: figure_fits::curve_minima(level, zero, scale),
         fits: figure_fits::fits(result, level, zero, scale),
+        breaks: state_figures::breaks(level),
+        limit: level
+            .limit
+            .as_ref()
+            .and_then(|l| l.energy)
+            .map(|e| CurveLimit {
+                energy: (e - zero) * scale,
+                text: None,
+            }),
+        onset: level.onset.map(|o| o.value),
         findings: (0..level.points.len())
             .filter(|&k| {
                 level.points[k].record.energy.is_some()

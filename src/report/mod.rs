@@ -7,6 +7,7 @@ mod fitted;
 pub mod folder;
 pub mod geometries;
 pub mod parameters;
+mod state_figures;
 pub mod summary;
 pub mod text;
 mod text_fits;

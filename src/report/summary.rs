@@ -3,6 +3,7 @@
 use super::csv::dipole_debye;
 use super::fitted;
 use crate::job::{Cost, JobResult, LevelResult, PointResult};
+use crate::job::{LimitPart, pieces};
 use crate::scan::{Finding, FindingKind};
 use crate::units::ANGSTROM_PER_BOHR;
 use serde::Serialize;
@@ -33,6 +34,8 @@ struct Level<'a> {
     electrons: usize,
     mean_fock_builds_per_further_point: Option<f64>,
     points: Vec<Point<'a>>,
+    dissociation: Option<Dissociation<'a>>,
+    onset_of_instability: Option<Onset<'a>>,
     minima: Vec<fitted::Minimum<'a>>,
     barriers: Vec<fitted::Minimum<'a>>,
     fits: Vec<fitted::FitEntry<'a>>,
@@ -41,6 +44,33 @@ struct Level<'a> {
     spectroscopy: Option<fitted::SpectroscopyEntry<'a>>,
     notes: &'a [String],
     findings: &'a [Finding],
+}
+
+#[derive(Serialize)]
+struct Dissociation<'a> {
+    parts: Vec<Part<'a>>,
+    proposed: bool,
+    limit_hartree: Option<f64>,
+    counterpoise_hartree: Option<f64>,
+    unreachable_hartree: Option<f64>,
+    de_hartree: Option<f64>,
+    text: Option<String>,
+}
+
+#[derive(Serialize)]
+struct Part<'a> {
+    atoms: Vec<&'a str>,
+    charge: i32,
+    multiplicity: u32,
+    method: &'static str,
+    energy_hartree: Option<f64>,
+    s_squared: f64,
+}
+
+#[derive(Serialize)]
+struct Onset<'a> {
+    value: f64,
+    unit: &'a str,
 }
 
 #[derive(Serialize)]
@@ -95,6 +125,22 @@ fn level<'a>(result: &'a JobResult, level: &'a LevelResult) -> Level<'a> {
         electrons: level.electrons,
         mean_fock_builds_per_further_point: level.mean_fock_builds,
         points: level.points.iter().map(|p| point(result, p)).collect(),
+        dissociation: level.limit.as_ref().map(|limit| Dissociation {
+            parts: limit.parts.iter().map(|p| part(result, p)).collect(),
+            proposed: limit.proposed,
+            limit_hartree: limit.energy,
+            counterpoise_hartree: limit.counterpoise,
+            unreachable_hartree: limit.unreachable,
+            de_hartree: level.dissociation_energy(),
+            text: pieces::sentence(level, &result.labels),
+        }),
+        onset_of_instability: level
+            .onset
+            .zip(result.sweeps.first())
+            .map(|(onset, sweep)| Onset {
+                value: onset.value,
+                unit: sweep.unit,
+            }),
         minima: fitted::minima(result, &level.analysis.minima),
         barriers: fitted::minima(result, &level.analysis.barriers),
         fits: fitted::fits(result, &level.analysis),
@@ -107,6 +153,17 @@ fn level<'a>(result: &'a JobResult, level: &'a LevelResult) -> Level<'a> {
             .map(fitted::spectroscopy),
         notes: &level.analysis.notes,
         findings: &level.findings,
+    }
+}
+
+fn part<'a>(result: &'a JobResult, part: &LimitPart) -> Part<'a> {
+    Part {
+        atoms: part.atoms.iter().map(|&a| &*result.labels[a]).collect(),
+        charge: part.charge,
+        multiplicity: part.multiplicity,
+        method: part.method.name(),
+        energy_hartree: part.energy,
+        s_squared: part.s_squared,
     }
 }
 

@@ -24,7 +24,6 @@ pub(super) enum Feature {
 /// The features that are not built.
 const NOT_YET: &[Feature] = &[
     Feature::OthersOptimised,
-    Feature::Dissociation,
     Feature::Gradients,
 ];
 

@@ -236,8 +236,8 @@ table! {
 table! {
     /// Separated parts of the molecule.
     RawDissociation ("[dissociation]") {
-        /// The parts; each atom belongs to one.
-        parts (required ()): Vec<Given<RawPart>>,
+        /// The parts; each atom belongs to one. Default: those that the swept bond cuts.
+        parts: Vec<Given<RawPart>>,
         /// Whether each part is computed in the basis of the whole as well (counterpoise correction); default false.
         counterpoise: bool,
     }

@@ -49,10 +49,9 @@ struct Meeting {
 
 /// A quartet that found no three others for its lanes.
 struct LeftOver {
-    class: usize,
-    group: usize,
-    outer: usize,
-    inner: usize,
+    plan: Arc<QuartetPlan>,
+    bra: usize,
+    ket: usize,
 }
 
 /// Where quartets go.
@@ -341,11 +340,16 @@ impl Walker {
             if self.queue.len() >= 4 {
                 self.run_queue(walk, meeting, pair, sink);
             }
-            left.extend(self.queue.drain(..).map(|inner| LeftOver {
-                class,
-                group: index,
-                outer,
-                inner,
+            left.extend(self.queue.drain(..).map(|inner| {
+                let (bra, ket) = match meeting.side {
+                    Side::Bra => (inner, outer),
+                    Side::Ket => (outer, inner),
+                };
+                LeftOver {
+                    plan: Arc::clone(&meeting.plan),
+                    bra,
+                    ket,
+                }
             }));
         }
     }
@@ -377,23 +381,23 @@ impl Walker {
         meeting.hand_over(&self.engine, &[pair; 4], &inner, sink);
     }
 
-    /// Up to four quartets of one meeting that may differ in both pairs.
+    /// Up to four quartets of one plan that may differ in both pairs.
     fn run_mixed(&mut self, walk: &Walk<'_>, four: &[LeftOver], sink: &mut impl QuartetSink) {
         let pairs = &walk.set.pairs;
-        let meeting = &walk.meetings[four[0].class][four[0].group];
+        let plan = &four[0].plan;
         let lane = |l: usize| &four[l.min(four.len() - 1)];
-        let outer = [0, 1, 2, 3].map(|l| &pairs[lane(l).outer]);
-        let inner = [0, 1, 2, 3].map(|l| &pairs[lane(l).inner]);
+        let bra = [0, 1, 2, 3].map(|l| &pairs[lane(l).bra]);
+        let ket = [0, 1, 2, 3].map(|l| &pairs[lane(l).ket]);
         let weight = (0..4)
-            .map(|l| sink.weight(outer[l], inner[l]))
+            .map(|l| sink.weight(bra[l], ket[l]))
             .fold(0.0, f64::max);
-        let [outer_block, inner_block] = &mut self.mixed_blocks;
-        outer_block.pack(outer, meeting.side.other());
-        inner_block.pack(inner, meeting.side);
+        let [bra_block, ket_block] = &mut self.mixed_blocks;
+        bra_block.pack(bra, Side::Bra);
+        ket_block.pack(ket, Side::Ket);
         let engine = &mut self.engine;
-        meeting.evaluate(engine, outer_block, inner_block, walk.threshold / weight);
+        engine.evaluate(plan, bra_block, ket_block, walk.threshold / weight);
         let count = four.len();
-        meeting.hand_over(engine, &outer[..count], &inner[..count], sink);
+        sink.take(&bra[..count], &ket[..count], engine.result(plan));
     }
 }
 
@@ -434,22 +438,19 @@ impl Walk<'_> {
         mut sinks: Vec<S>,
     ) -> Vec<S> {
         let primitives = |i: usize| self.set.pairs[i].primitives;
-        // Groups of one class (moved or not, many primitives or few) are alike here.
-        let kind = |q: &LeftOver| {
-            let meeting = &self.meetings[q.class][q.group];
-            (Arc::as_ptr(&meeting.plan) as usize, meeting.side as usize)
-        };
-        let mut first_seen: HashMap<(usize, usize), usize> = HashMap::new();
+        // Plans in order of appearance, which does not depend on where they are in memory.
+        let plan = |q: &LeftOver| Arc::as_ptr(&q.plan) as usize;
+        let mut first_seen: HashMap<usize, usize> = HashMap::new();
         for q in &left {
             let next = first_seen.len();
-            first_seen.entry(kind(q)).or_insert(next);
+            first_seen.entry(plan(q)).or_insert(next);
         }
         left.sort_by_cached_key(|q| {
-            let counts = (primitives(q.outer), primitives(q.inner));
-            (first_seen[&kind(q)], counts, q.outer, q.inner)
+            let counts = (primitives(q.bra), primitives(q.ket));
+            (first_seen[&plan(q)], counts, q.bra, q.ket)
         });
         let blocks: Vec<&[LeftOver]> = left
-            .chunk_by(|x, y| kind(x) == kind(y))
+            .chunk_by(|x, y| plan(x) == plan(y))
             .flat_map(|alike| alike.chunks(4))
             .collect();
         let tasks: Vec<&[&[LeftOver]]> = blocks.chunks(LEFT_BLOCKS_PER_TASK).collect();

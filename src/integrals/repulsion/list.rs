@@ -2,7 +2,7 @@
 
 use super::digestion::{CoulombExchange, CoulombExchangePair, coulomb_exchange_packed};
 use super::groups::{PairSet, QuartetSink};
-use super::lanes::{Four, SharedList};
+use super::lanes::{Four, Scatter, SharedList, dispatch};
 use super::pairs::ShellPair;
 use super::{IntegralCounts, RepulsionSettings, pair_count};
 use crate::basis::Basis;
@@ -162,8 +162,35 @@ impl ListSink<'_> {
 
 impl QuartetSink for ListSink<'_> {
     fn take(&mut self, bra: &[&ShellPair], ket: &[&ShellPair], result: &[Four]) {
-        for (lane, (bra, ket)) in bra.iter().zip(ket).enumerate() {
-            self.write(bra, ket, result, lane);
+        let width = ket[0].places.len();
+        let lanes = bra.len();
+        let all = |order: Ordering| {
+            let mut orders = bra.iter().zip(ket).map(|(b, k)| b.shells[0].cmp(&k.shells[0]));
+            orders.all(|o| o == order)
+        };
+        let (rows, columns, strides) = if all(Ordering::Greater) {
+            (bra, ket, [width, 1])
+        } else {
+            (ket, bra, [1, width])
+        };
+        // Pairs of one class have the same runs if their shells come in the same order.
+        let order = |c: &ShellPair| (c.run_stride, c.runs.len());
+        let alike = columns.iter().all(|c| order(c) == order(columns[0]));
+        if alike && (strides[1] == 1 || all(Ordering::Less)) {
+            let lane = |l: usize| l.min(lanes - 1);
+            dispatch(Scatter {
+                list: self.list,
+                rows: [0, 1, 2, 3].map(|l| rows[lane(l)].places.as_slice()),
+                runs: [0, 1, 2, 3].map(|l| columns[lane(l)].runs.as_slice()),
+                run_stride: columns[0].run_stride,
+                values: result,
+                strides,
+                lanes,
+            });
+        } else {
+            for (lane, (bra, ket)) in bra.iter().zip(ket).enumerate() {
+                self.write(bra, ket, result, lane);
+            }
         }
     }
 

@@ -20,7 +20,12 @@ pub(super) fn dissociation(
     let given = raw.get()?;
     Feature::Dissociation.demand(&given.span, problems);
     let counterpoise = given.value.counterpoise.get().is_some_and(|c| c.value);
-    let list = given.value.parts.get()?;
+    let Some(list) = given.value.parts.get() else {
+        return Some(DissociationSpec {
+            parts: Vec::new(),
+            counterpoise,
+        });
+    };
     if list.value.len() < 2 {
         problems
             .at(

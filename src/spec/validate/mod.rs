@@ -13,7 +13,7 @@ mod values;
 use super::diagnostic::{Problems, nearest, number, quoted};
 use super::raw::{RawLabels, RawSpec};
 use super::read::{Field, Given};
-use super::{MAX_ATOMS, Spec, VibrationSpec};
+use super::{MAX_ATOMS, Spec};
 use crate::molecule::Molecule;
 use std::ops::Range;
 
@@ -65,7 +65,7 @@ pub(super) fn validate(raw: &RawSpec, problems: &mut Problems<'_>) -> Option<Spe
         scf,
         dissociation,
         fits,
-        vibration: vibration.unwrap_or(VibrationSpec::default()),
+        vibration: vibration.unwrap_or_default(),
         output,
         unit,
         text: String::new(),

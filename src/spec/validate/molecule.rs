@@ -297,7 +297,7 @@ fn sound(
 ) -> Option<()> {
     if let Some(far) = positions
         .iter()
-        .position(|p| p.iter().any(|x| !(x.abs() <= MAX_COORDINATE)))
+        .position(|p| p.iter().any(|x| !x.is_finite() || x.abs() > MAX_COORDINATE))
     {
         problems.at(
             &rows[far],

@@ -243,14 +243,14 @@ fn range(
                 step: step.value,
             };
             if (steps - steps.round()).abs() > WHOLE_STEPS
-                && let Some(last) = written.expanded().last()
+                && let Some(last) = written.expanded().pop()
             {
                 notes
                     .at(
                         &step.span,
                         format!("this step does not reach to = {}", number(to.value)),
                     )
-                    .expected(format!("the last value is {}", number(*last)));
+                    .expected(format!("the last value is {}", number(last)));
             }
             Some(written)
         }
@@ -348,7 +348,7 @@ mod tests {
             points: 47,
         };
         assert_eq!(points.expanded().len(), 47);
-        assert_eq!(points.expanded()[46], 3.0);
+        assert_eq!(points.expanded()[46..], [3.0]);
         let short = SweepValues::Step {
             from: 0.0,
             to: 1.0,
@@ -375,7 +375,7 @@ mod tests {
                 let values = written.expanded();
                 prop_assert_eq!(values.len(), steps + 1);
                 prop_assert!(values.windows(2).all(|p| p[0] < p[1]));
-                prop_assert!(values[0] == from && values[steps] <= to);
+                prop_assert!(values[0].to_bits() == from.to_bits() && values[steps] <= to);
                 prop_assert!((values[steps] - to).abs() < 1e-6 * width);
             }
         }

@@ -4,7 +4,10 @@
 //! The first line holds the format version and the fingerprint of the spec. A last line that was cut off
 //! (the machine went down while it was written) is dropped on reading; any other damage is an error.
 
-use super::event::{Entry, Likeness, Stationary};
+use super::dissociation::Limit;
+use super::onset::Onset;
+use crate::scan::event::Stationary;
+use crate::scan::{Entry, Likeness};
 use serde::{Deserialize, Serialize};
 use serde_json::value::RawValue;
 use std::fs::{File, OpenOptions, TryLockError};
@@ -22,6 +25,10 @@ pub enum Line {
     Header(Header),
     /// A finished evaluation.
     Point(LevelEntry),
+    /// Energies of a level's separated parts.
+    Limit(LevelLimit),
+    /// Where a level's solution becomes unstable.
+    Onset(LevelOnset),
     /// A stationary point located after a level's walk.
     Stationary(LevelStationary),
     /// A level is complete.
@@ -46,6 +53,24 @@ pub struct LevelEntry {
     pub level: usize,
     /// The evaluation.
     pub entry: Entry,
+}
+
+/// Energies of the separated parts and the level they belong to.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+pub struct LevelLimit {
+    /// Number of the level in the spec.
+    pub level: usize,
+    /// The parts.
+    pub limit: Limit,
+}
+
+/// The onset of an instability and the level it belongs to.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+pub struct LevelOnset {
+    /// Number of the level in the spec.
+    pub level: usize,
+    /// The onset.
+    pub onset: Onset,
 }
 
 /// A stationary point and the level it belongs to.
