@@ -1,10 +1,10 @@
 //! Experiments.
 mod common;
 use common::{surface, surface_with};
-use thalweg::minimise::{minimise, MinimiseSettings, Task};
+use thalweg::minimise::{MinimiseSettings, Task, minimise};
+use thalweg::molecule::{Molecule, zmatrix};
 use thalweg::scf::{Method, ScfSettings};
 use thalweg::surface::Surface;
-use thalweg::molecule::{Molecule, zmatrix};
 use thalweg::units::LengthUnit;
 
 fn from_zmatrix(text: &str) -> Molecule {
@@ -65,17 +65,52 @@ fn experiment() {
     let skip = std::env::var("SKIP").unwrap_or_default();
     let only = std::env::var("ONLY").ok();
     let mut all = vec![];
-    for (number, entry) in include_str!("data/molecules.txt").split("\n[").skip(1).enumerate() {
+    for (number, entry) in include_str!("data/molecules.txt")
+        .split("\n[")
+        .skip(1)
+        .enumerate()
+    {
         let (name, text) = entry.split_once("]\n").unwrap();
-        if skip.contains(name) || only.as_ref().is_some_and(|o| !o.contains(name)) { continue; }
+        if skip.contains(name) || only.as_ref().is_some_and(|o| !o.contains(name)) {
+            continue;
+        }
         let clock = std::time::Instant::now();
         let reference = from_zmatrix(text);
-        let s = surface_with(&reference, &basis, Method::Rhf, ScfSettings::default(), None);
+        let s = surface_with(
+            &reference,
+            &basis,
+            Method::Rhf,
+            ScfSettings::default(),
+            None,
+        );
         let settings = MinimiseSettings::default();
         let a = minimise(&s, Task::of(&reference), &settings, &mut s.workspace()).unwrap();
-        let b = minimise(&s, Task::of(&distorted(text, seed + 97 * number as u64)), &settings, &mut s.workspace()).unwrap();
-        eprintln!("{name}: plain {:?} {} calls {:?}; distorted {:?} {} calls diff {:.2e}, builds {} time {:?}", a.stop, a.calls.len(), a.record.energy, b.stop, b.calls.len(), b.record.energy.unwrap() - a.record.energy.unwrap(), b.all_builds, clock.elapsed());
-        if std::env::var("TRACE").is_ok() { for c in a.calls.iter().chain(&b.calls) { eprintln!("   {:.8} g {:.2e} d {:.2e} p {:.2e} {}", c.energy, c.gradient_max, c.displacement, c.promise, c.kept); } }
+        let b = minimise(
+            &s,
+            Task::of(&distorted(text, seed + 97 * number as u64)),
+            &settings,
+            &mut s.workspace(),
+        )
+        .unwrap();
+        eprintln!(
+            "{name}: plain {:?} {} calls {:?}; distorted {:?} {} calls diff {:.2e}, builds {} time {:?}",
+            a.stop,
+            a.calls.len(),
+            a.record.energy,
+            b.stop,
+            b.calls.len(),
+            b.record.energy.unwrap() - a.record.energy.unwrap(),
+            b.all_builds,
+            clock.elapsed()
+        );
+        if std::env::var("TRACE").is_ok() {
+            for c in a.calls.iter().chain(&b.calls) {
+                eprintln!(
+                    "   {:.8} g {:.2e} d {:.2e} p {:.2e} {}",
+                    c.energy, c.gradient_max, c.displacement, c.promise, c.kept
+                );
+            }
+        }
         all.push(b.calls.len());
     }
     all.sort_unstable();

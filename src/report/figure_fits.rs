@@ -139,7 +139,11 @@ pub(super) fn vibrations(
                     density: s.density.clone(),
                 })
                 .collect(),
-            limit: None,
+            limit: level
+                .limit
+                .as_ref()
+                .and_then(|l| l.energy)
+                .map(|e| (e - found.minimum_energy) * scale),
         };
         figures.push((name, figure));
     }

@@ -336,8 +336,10 @@ impl PairClass {
             // The primitive's integrals are used as they come, all degrees.
             ranges.insert(Scalar::default(), (0, degree));
         }
-        let mut ordered: Vec<((usize, usize), Scalar)> =
-            ranges.into_iter().map(|(scalar, range)| (range, scalar)).collect();
+        let mut ordered: Vec<((usize, usize), Scalar)> = ranges
+            .into_iter()
+            .map(|(scalar, range)| (range, scalar))
+            .collect();
         ordered.sort_unstable();
         let groups = ordered
             .chunk_by(|x, y| x.0 == y.0)
@@ -363,8 +365,11 @@ impl PairClass {
             .collect();
         hermites.sort_unstable_by_key(|&(h, s)| (s, h));
         hermites.dedup();
-        let column: HashMap<(usize, usize), usize> =
-            hermites.iter().enumerate().map(|(u, key)| (*key, u)).collect();
+        let column: HashMap<(usize, usize), usize> = hermites
+            .iter()
+            .enumerate()
+            .map(|(u, key)| (*key, u))
+            .collect();
         let mut class = Self {
             key,
             degree,

@@ -165,7 +165,10 @@ impl QuartetSink for ListSink<'_> {
         let width = ket[0].places.len();
         let lanes = bra.len();
         let all = |order: Ordering| {
-            let mut orders = bra.iter().zip(ket).map(|(b, k)| b.shells[0].cmp(&k.shells[0]));
+            let mut orders = bra
+                .iter()
+                .zip(ket)
+                .map(|(b, k)| b.shells[0].cmp(&k.shells[0]));
             orders.all(|o| o == order)
         };
         let (rows, columns, strides) = if all(Ordering::Greater) {

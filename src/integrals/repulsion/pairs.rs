@@ -85,7 +85,10 @@ impl ShellPair {
         };
         // What is folded depends on the exponents of single primitives only: any primitive will do.
         let pair = [shell_a, shell_b];
-        let elements = class.elements(&monomials, &scalar_values(&class, &class.folded, pair, [0, 0]));
+        let elements = class.elements(
+            &monomials,
+            &scalar_values(&class, &class.folded, pair, [0, 0]),
+        );
         let mut primitives = Vec::new();
         for i in 0..shell_a.exponents.len() {
             for j in 0..shell_b.exponents.len() {
@@ -181,7 +184,9 @@ fn scalar_values(
     let single = if class.key.contracted[0] { b } else { a };
     let powers_of = [b / p, a / p, 0.5 / p, 0.5 / single].map(|x| powers(x, 2 * class.degree));
     let coefficient = |shell: usize, contraction: Option<usize>, primitive: usize| {
-        contraction.map_or(1.0, |c| shells[shell].contractions[c].coefficients[primitive])
+        contraction.map_or(1.0, |c| {
+            shells[shell].contractions[c].coefficients[primitive]
+        })
     };
     let value = |s: &Scalar| {
         coefficient(0, s.contraction_a, i)
