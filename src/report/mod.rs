@@ -1,6 +1,7 @@
 //! Results → files and text. Every format is one small file; writers are passed in.
 
 pub mod csv;
+mod figure_fits;
 pub mod figures;
 mod fitted;
 pub mod folder;

@@ -16,7 +16,7 @@ pub(super) fn form_words(fit: &Fit) -> String {
     match fit.form {
         Form::Polynomial => format!("polynomial of order {}", fit.order),
         Form::Morse if fit.order == 0 => "Morse".to_owned(),
-        Form::Morse => format!("Morse with {} more", fit.order),
+        Form::Morse => format!("Morse, {} further exponents", fit.order),
         Form::Fourier => format!("Fourier series to n = {}", fit.order),
     }
 }

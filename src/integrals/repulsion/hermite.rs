@@ -13,8 +13,8 @@ use crate::integrals::recurrence::{hermite_count, hermite_index};
 
 /// Highest degree whose recursion is unrolled.
 pub(super) const UNROLLED: usize = 6;
-/// Highest degree: (gg|gg).
-pub(super) const MAX_DEGREE: usize = 16;
+/// Highest degree: a derivative of (gg|gg).
+pub(in crate::integrals) const MAX_DEGREE: usize = 17;
 
 /// One step: work[target] = PQ[axis] · work[first] + factor · work[second].
 #[derive(Clone, Copy)]
@@ -133,7 +133,7 @@ static LONG_STEPS: [&[Step]; MAX_DEGREE + 1] = {
              $(of::<$degree, { work_len($degree) - $degree - 1 }>()),*]
         };
     }
-    table!(7 8 9 10 11 12 13 14 15 16)
+    table!(7 8 9 10 11 12 13 14 15 16 17)
 };
 
 #[inline(always)]
@@ -198,7 +198,7 @@ pub(super) fn hermite_coulomb<V: Lanes, const L: usize>(
 }
 
 /// Scratch that [`hermite_coulomb`] needs for `degree`.
-pub(super) const fn scratch_len(degree: usize) -> usize {
+pub(in crate::integrals) const fn scratch_len(degree: usize) -> usize {
     if degree > UNROLLED {
         work_len(degree)
     } else {

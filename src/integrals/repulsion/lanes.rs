@@ -11,16 +11,15 @@
     reason = "vector instructions, and disjoint writes from several threads"
 )]
 
-use super::pair_count;
 use crate::integrals::boys::CellPolynomial;
 
 /// Four doubles in memory, one per lane.
 #[derive(Debug, Clone, Copy, PartialEq, Default)]
 #[repr(C, align(32))]
-pub(super) struct Four(pub(super) [f64; 4]);
+pub(in crate::integrals) struct Four(pub(in crate::integrals) [f64; 4]);
 
 /// Arithmetic on four lanes at once.
-pub(super) trait Lanes: Copy {
+pub(in crate::integrals) trait Lanes: Copy {
     fn load(from: &Four) -> Self;
     fn store(self, to: &mut Four);
     fn splat(value: f64) -> Self;
@@ -54,7 +53,7 @@ pub(super) trait Lanes: Copy {
 }
 
 /// A piece of work compiled once per instruction set.
-pub(super) trait Kernel {
+pub(in crate::integrals) trait Kernel {
     type Output;
     /// Must be `#[inline(always)]`.
     fn run<V: Lanes>(self) -> Self::Output;
@@ -62,7 +61,7 @@ pub(super) trait Kernel {
 
 /// Runs a kernel with the widest instruction set that both processor and program know.
 #[inline]
-pub(super) fn dispatch<K: Kernel>(kernel: K) -> K::Output {
+pub(in crate::integrals) fn dispatch<K: Kernel>(kernel: K) -> K::Output {
     #[cfg(target_arch = "x86_64")]
     if std::arch::is_x86_feature_detected!("avx2") && std::arch::is_x86_feature_detected!("fma") {
         // SAFETY: the processor has both features, as just asked.
@@ -331,39 +330,6 @@ impl<'a> SharedList<'a> {
             start: list.as_mut_ptr(),
             len: list.len(),
             owner: std::marker::PhantomData,
-        }
-    }
-
-    /// Writes one lane of a block of values: the one for row r and column c, at r · strides[0] +
-    /// c · strides[1] of `values`, to place rows[r](rows[r] + 1)/2 + columns[c].
-    ///
-    /// # Panics
-    /// If a place is beyond the end of the list, or `values` is too short.
-    #[inline]
-    pub(super) fn scatter(
-        &self,
-        rows: &[u32],
-        columns: &[u32],
-        values: &[Four],
-        lane: usize,
-        strides: [usize; 2],
-    ) {
-        let (Some(&last_row), Some(&last_column)) = (rows.iter().max(), columns.iter().max()) else {
-            return;
-        };
-        assert!(pair_count(last_row as usize) + (last_column as usize) < self.len);
-        assert!((rows.len() - 1) * strides[0] + (columns.len() - 1) * strides[1] < values.len());
-        assert!(lane < 4);
-        for (r, &row) in rows.iter().enumerate() {
-            let start = pair_count(row as usize);
-            for (c, &column) in columns.iter().enumerate() {
-                // SAFETY: the largest place and the largest index were checked above; places are
-                // disjoint between threads.
-                unsafe {
-                    let value = values.get_unchecked(r * strides[0] + c * strides[1]);
-                    *self.start.add(start + column as usize) = *value.0.get_unchecked(lane);
-                }
-            }
         }
     }
 

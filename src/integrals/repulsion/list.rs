@@ -7,7 +7,6 @@ use super::pairs::ShellPair;
 use super::{IntegralCounts, RepulsionSettings, pair_count};
 use crate::basis::Basis;
 use nalgebra::DMatrix;
-use std::cmp::Ordering;
 
 /// All unique integrals of one geometry, packed with their eight-fold symmetry.
 ///
@@ -130,31 +129,19 @@ struct ListSink<'a> {
 }
 
 impl ListSink<'_> {
-    /// Writes the quartet of a bra and a ket: `values` row by row, of which one lane counts.
     #[inline]
-    fn write(&self, bra: &ShellPair, ket: &ShellPair, values: &[Four], lane: usize) {
-        let width = ket.places.len();
-        // Pairs are ordered by their higher shell first, as are the places of their functions.
-        match bra.shells[0].cmp(&ket.shells[0]) {
-            Ordering::Greater => {
-                self.list
-                    .scatter(&bra.places, &ket.places, values, lane, [width, 1]);
-            }
-            Ordering::Less => {
-                self.list
-                    .scatter(&ket.places, &bra.places, values, lane, [1, width]);
-            }
-            Ordering::Equal => {
-                // A pair with itself has every integral twice, and the two may differ by rounding.
-                let same = std::ptr::eq(bra, ket);
-                for (f, &ab) in bra.places.iter().enumerate() {
-                    for (g, &cd) in ket.places.iter().enumerate() {
-                        if !(same && ab < cd) {
-                            let place = pair_count(ab.max(cd) as usize) + ab.min(cd) as usize;
-                            self.list.set(place, values[f * width + g].0[lane]);
-                        }
-                    }
+    fn write(&self, bra: &ShellPair, ket: &ShellPair, value: impl Fn(usize, usize) -> f64) {
+        // A pair with itself has every integral twice, and the two may differ by rounding.
+        let same = std::ptr::eq(bra, ket);
+        for (f, &ab) in bra.places.iter().enumerate() {
+            let ab = ab as usize;
+            for (g, &cd) in ket.places.iter().enumerate() {
+                let cd = cd as usize;
+                if same && ab < cd {
+                    continue;
                 }
+                let (high, low) = (ab.max(cd), ab.min(cd));
+                self.list.set(pair_count(high) + low, value(f, g));
             }
         }
     }
@@ -163,14 +150,14 @@ impl ListSink<'_> {
 impl QuartetSink for ListSink<'_> {
     fn take(&mut self, bra: &[&ShellPair], ket: &[&ShellPair], result: &[Four]) {
         for (lane, (bra, ket)) in bra.iter().zip(ket).enumerate() {
-            self.write(bra, ket, result, lane);
+            let width = ket.places.len();
+            self.write(bra, ket, |f, g| result[f * width + g].0[lane]);
         }
     }
 
     fn skip(&mut self, bra: &ShellPair, ket: &ShellPair) {
         if self.erase_skipped {
-            let count = bra.places.len() * ket.places.len();
-            self.write(bra, ket, &vec![Four::default(); count], 0);
+            self.write(bra, ket, |_, _| 0.0);
         }
     }
 }

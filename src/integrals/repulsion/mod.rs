@@ -12,11 +12,11 @@ mod class;
 mod digestion;
 mod direct;
 mod groups;
-mod hermite;
-mod lanes;
+pub(in crate::integrals) mod hermite;
+pub(in crate::integrals) mod lanes;
 mod list;
 mod pairs;
-mod primitives;
+pub(in crate::integrals) mod primitives;
 mod products;
 mod quartets;
 

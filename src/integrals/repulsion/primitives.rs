@@ -6,17 +6,17 @@ use crate::integrals::boys::{BoysTable, CELLS_PER_UNIT};
 use crate::integrals::recurrence::hermite_count;
 
 /// Places of the numbers of one primitive pair in a block; its scalars follow.
-pub(super) mod field {
+pub(in crate::integrals) mod field {
     /// Exponent p = a + b.
-    pub(crate) const EXPONENT: usize = 0;
+    pub(in crate::integrals) const EXPONENT: usize = 0;
     /// Centre of charge P, three numbers.
-    pub(crate) const CENTRE: usize = 1;
+    pub(in crate::integrals) const CENTRE: usize = 1;
     /// √(2π^(5/2)) exp(−ab/p |AB|²) / p.
-    pub(crate) const FACTOR: usize = 4;
+    pub(in crate::integrals) const FACTOR: usize = 4;
     /// Upper bound of the self-repulsion, square root of.
-    pub(crate) const BOUND: usize = 5;
+    pub(in crate::integrals) const BOUND: usize = 5;
     /// First scalar of the pair class.
-    pub(crate) const SCALARS: usize = 6;
+    pub(in crate::integrals) const SCALARS: usize = 6;
 }
 
 /// One bra primitive with a run of ket primitives.
@@ -136,7 +136,7 @@ fn boys_roots<V: Lanes, const L: usize>(
 }
 
 /// The primitive kernel of one degree as a plain function.
-pub(super) type PrimitiveFunction =
+pub(in crate::integrals) type PrimitiveFunction =
     fn(&[Four], &[Four], usize, &Four, &BoysTable, &mut [Four], &mut [Four]) -> usize;
 
 fn run<const L: usize>(
@@ -160,7 +160,8 @@ fn run<const L: usize>(
 }
 
 /// Primitive kernels by degree.
-pub(super) const PRIMITIVES: [PrimitiveFunction; MAX_DEGREE + 1] = [
+pub(in crate::integrals) const PRIMITIVES: [PrimitiveFunction; MAX_DEGREE + 1] = [
     run::<0>, run::<1>, run::<2>, run::<3>, run::<4>, run::<5>, run::<6>, run::<7>, run::<8>,
     run::<9>, run::<10>, run::<11>, run::<12>, run::<13>, run::<14>, run::<15>, run::<16>,
+    run::<17>,
 ];

@@ -151,7 +151,7 @@ pub(super) fn bra_first(x: &PairClass, y: &PairClass) -> bool {
             .map(|g| g.count * (hermite_count(g.high + bra.degree) - below(g.low)))
             .sum()
     };
-    let rank = |bra: &PairClass, ket: &PairClass| (bra.contracted(), cost(bra, ket));
+    let rank = |bra: &PairClass, ket: &PairClass| (bra.key.contracted, cost(bra, ket));
     (rank(x, y), &x.key) < (rank(y, x), &y.key)
 }
 
@@ -174,7 +174,7 @@ fn reserve(buffer: &mut Vec<Four>, len: usize) {
 }
 
 impl QuartetEngine {
-    /// Evaluates the integrals of four quartets, for [`Self::result`].
+    /// The integrals of four quartets: result[f · ket functions + g], one quartet in each lane.
     ///
     /// Primitives are left out as [`crate::integrals::screening`] says, with `budget` the error allowed.
     pub(super) fn evaluate(
@@ -183,7 +183,7 @@ impl QuartetEngine {
         bra: &PairBlock,
         ket: &PairBlock,
         budget: f64,
-    ) {
+    ) -> &[Four] {
         let nherm = hermite_count(plan.degree);
         let (bra_functions, ket_functions) = plan.shape();
         let (bra_hermites, ket_hermites) = (plan.bra.hermites.len(), plan.ket.hermites.len());
@@ -210,7 +210,7 @@ impl QuartetEngine {
             if active == 0 {
                 break;
             }
-            if plan.bra.contracted() {
+            if plan.bra.key.contracted {
                 self.bra_contract(plan, bra, start, active, any);
             }
             any = true;
@@ -222,9 +222,9 @@ impl QuartetEngine {
         let result = &mut self.result[..bra_functions * ket_functions];
         if !any {
             result.fill(Four::default());
-            return;
+            return result;
         }
-        let full = if plan.bra.contracted() {
+        let full = if plan.bra.key.contracted {
             &self.full
         } else {
             &self.half
@@ -252,12 +252,7 @@ impl QuartetEngine {
             out_row: ket_functions,
             out_column: 1,
         });
-    }
-
-    /// What [`Self::evaluate`] found last: element f · ket functions + g, one quartet in each lane.
-    pub(super) fn result(&self, plan: &QuartetPlan) -> &[Four] {
-        let (bra_functions, ket_functions) = plan.shape();
-        &self.result[..bra_functions * ket_functions]
+        result
     }
 
     /// Stages 1 and 2 for one bra primitive; false when all its primitive quartets are negligible.
@@ -272,7 +267,7 @@ impl QuartetEngine {
         let nherm = hermite_count(plan.degree);
         let primitives = PRIMITIVES[plan.degree];
         let half = &mut self.half[slot * plan.half_len..][..plan.half_len];
-        if !plan.ket.contracted() {
+        if !plan.ket.key.contracted {
             // The one ket primitive needs no contraction: its R are the half-contracted numbers.
             let out = &mut half[..nherm];
             let scratch = &mut self.scratch;
