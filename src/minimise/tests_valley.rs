@@ -163,7 +163,12 @@ fn the_way_goes_round_the_period_and_round_missing_points() {
         .unwrap()
         .unwrap();
     let off = floor.barrier - (f(0.0, 0.0) - f(expected, 0.0));
-    assert!(off.abs() < 1e-5, "{off} {:?} {}", floor.top, floor.is_saddle);
+    assert!(
+        off.abs() < 1e-5,
+        "{off} {:?} {}",
+        floor.top,
+        floor.is_saddle
+    );
     // With both barred there is none.
     let shut = landscape(&axes, |x, y| (x.sin().abs() > 0.1).then(|| f(x, y)));
     assert_eq!(
