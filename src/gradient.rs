@@ -159,7 +159,8 @@ mod tests {
             || [fill(&guess, alpha), fill(&guess, beta)],
             |state| state.densities.clone(),
         );
-        let mut history: Vec<([DMatrix<f64>; 2], [DMatrix<f64>; 2])> = Vec::new();
+        type BothSpins = [DMatrix<f64>; 2];
+        let mut history: Vec<(BothSpins, BothSpins)> = Vec::new();
         for _ in 0..150 {
             let built = list.coulomb_exchange(&densities);
             let coulomb = &built[0].coulomb + &built[1].coulomb;
