@@ -7,16 +7,17 @@ pub mod dissociation;
 pub mod journal;
 pub mod onset;
 pub mod pieces;
+pub mod settle;
 pub mod stationary;
 
 pub use assemble::{Cost, JobResult, LevelResult, PointResult, SweepResult, assemble};
 pub use dissociation::{Limit, LimitPart};
 pub use onset::Onset;
 
-use crate::minimise::MinimiseSettings;
 use crate::minimise::hessian::HessianSettings;
 use crate::minimise::relaxed::Relaxed;
 use crate::minimise::settle::SettleSettings;
+use crate::minimise::{MinimiseError, MinimiseSettings};
 use crate::scan::kept::{Kept, keep};
 use crate::scan::{Entry, Event, Grid, Others, Scan, ScanError, WalkStart, grid, runner};
 use crate::scf::Method;
@@ -47,6 +48,14 @@ pub enum JobError {
         level: String,
         /// what is wrong
         source: SurfaceError,
+    },
+    /// A geometry that cannot be settled.
+    #[error("level {level}: {source}")]
+    Settle {
+        /// name of the level
+        level: String,
+        /// what is wrong
+        source: MinimiseError,
     },
     /// A geometry of the grid that cannot be reached.
     #[error("point {values:?}: {source}")]

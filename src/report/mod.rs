@@ -7,6 +7,7 @@ mod fitted;
 pub mod folder;
 pub mod geometries;
 pub mod parameters;
+pub mod settled;
 mod state_figures;
 pub mod summary;
 pub mod text;
