@@ -5,6 +5,7 @@ mod check;
 mod exit;
 mod progress;
 mod scan;
+mod settle;
 
 pub use exit::Status;
 
@@ -57,6 +58,7 @@ pub fn run(
     let mut streams = Streams { out, err, terminal };
     let result = match arguments.command {
         Command::Scan(scan) => scan::run(&scan, stop, &mut streams),
+        Command::Settle(args) => settle::run(&args, stop, &mut streams),
         Command::Report(report) => scan::report(&report, &mut streams),
         Command::Check(check) => check::run(&check, &mut streams),
         Command::Basis { name } => basis(name.as_deref(), &mut streams),

@@ -119,7 +119,7 @@ impl<'a, S> Task<'a, S> {
 }
 
 /// Why an optimisation ended.
-#[derive(Debug, Clone, Copy, PartialEq, Eq, serde::Serialize)]
+#[derive(Debug, Clone, Copy, PartialEq, Eq, serde::Serialize, serde::Deserialize)]
 #[serde(rename_all = "kebab-case")]
 pub enum MinimiseStop {
     /// all thresholds met

@@ -2,7 +2,7 @@
 
 use crate::molecule::Molecule;
 use crate::molecule::motion::{Motion, MotionError, set_all};
-use nalgebra::Vector3;
+use nalgebra::{DMatrix, DVector, Vector3};
 
 /// How the values of a sweep were written, in the spec's unit or degrees.
 #[derive(Debug, Clone, PartialEq)]
@@ -135,4 +135,68 @@ pub fn positions_at(
         .collect();
     set_all(&targets, &mut positions)?;
     Ok(positions)
+}
+
+/// Displacements of all atoms (bohr) per unit of each sweep (bohr or radian) while the other sweeps stay, one list per
+/// sweep: dE/dq is their scalar product with the Cartesian gradient, also on a relaxed scan, where the coordinates
+/// that are not swept exert no force.
+///
+/// The rigid motions of the sweeps and of what is tied to them are combined so that each swept coordinate changes as
+/// it should, whatever the motions do to each other's coordinates.
+#[must_use]
+pub fn tangents(sweeps: &[Sweep], positions: &[Vector3<f64>]) -> Vec<Vec<Vector3<f64>>> {
+    let motions: Vec<(usize, &Motion)> = sweeps
+        .iter()
+        .enumerate()
+        .flat_map(|(k, sweep)| sweep.motions().map(move |m| (k, m)))
+        .collect();
+    let displacements: Vec<Vec<Vector3<f64>>> = motions
+        .iter()
+        .map(|(_, m)| m.displacement(positions))
+        .collect();
+    let order = motions.len();
+    // Change of coordinate i in motion j. A motion changes its own coordinate by definition, also where the coordinate
+    // has no derivative (a straight angle).
+    let changes = DMatrix::from_fn(order, order, |i, j| {
+        if i == j {
+            return 1.0;
+        }
+        let change: f64 = motions[i]
+            .1
+            .coordinate
+            .derivative(positions)
+            .iter()
+            .map(|(atom, d)| d.dot(&displacements[j][*atom]))
+            .sum();
+        if change.is_finite() { change } else { 0.0 }
+    });
+    let solver = changes.lu();
+    (0..sweeps.len())
+        .map(|k| {
+            let wanted = DVector::from_fn(order, |i, _| if motions[i].0 == k { 1.0 } else { 0.0 });
+            let shares = solver.solve(&wanted).unwrap_or(wanted);
+            let mut tangent = vec![Vector3::zeros(); positions.len()];
+            for (share, displacement) in shares.iter().zip(&displacements) {
+                for (sum, d) in tangent.iter_mut().zip(displacement) {
+                    *sum += d * *share;
+                }
+            }
+            tangent
+        })
+        .collect()
+}
+
+/// dE/dq of every sweep, hartree per bohr or radian, from the Cartesian gradient (hartree/bohr).
+#[must_use]
+pub fn slopes(sweeps: &[Sweep], positions: &[Vector3<f64>], gradient: &[[f64; 3]]) -> Vec<f64> {
+    tangents(sweeps, positions)
+        .iter()
+        .map(|tangent| {
+            tangent
+                .iter()
+                .zip(gradient)
+                .map(|(t, g)| t.dot(&Vector3::from(*g)))
+                .sum()
+        })
+        .collect()
 }
