@@ -340,16 +340,17 @@ impl HartreeFock {
         let mut settled = Settled {
             fock_builds: field.builds() + field.products(),
             stability: None,
-            internal: None,
-            triplet: None,
+            // Vectors of an earlier point still tell where the energy is soft, and where the next test may begin.
+            internal: newest.and_then(|s| s.internal.clone()),
+            triplet: newest.and_then(|s| s.triplet.clone()),
             stability_seconds: 0.0,
             solution: solution.clone(),
         };
         if request.stability == StabilityDemand::None {
             return Ok(settled);
         }
-        let mut internal = newest.and_then(|s| s.internal.clone());
-        let mut triplet = newest.and_then(|s| s.triplet.clone());
+        let mut internal = settled.internal.take();
+        let mut triplet = settled.triplet.take();
         let mut products = 0;
         let mut left = 0;
         let mut triplet_value = None;
