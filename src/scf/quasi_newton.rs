@@ -24,6 +24,13 @@ const LEAST_GAP: f64 = 0.15;
 const MEMORY: usize = 16;
 /// Trials along one direction before it is given up.
 const TRIALS: usize = 5;
+/// Growth of the steps while the energy curves downwards.
+const STRETCH: f64 = 2.5;
+/// Steps over which progress is judged, and the energy gain (hartree) below which, with a commutator that hardly
+/// falls, the descent is given over to exact Newton steps.
+const WINDOW: usize = 8;
+/// See [`WINDOW`].
+const LITTLE: f64 = 1e-3;
 /// Energy differences below this are rounding, hartree.
 const ENERGY_NOISE: f64 = 2e-11;
 
@@ -192,6 +199,8 @@ pub fn descend(
     let mut here = start;
     let mut slope = gradient(&frames, &here);
     let mut last_energy = None;
+    let mut stretch = 1.0;
+    let mut trail: Vec<(f64, f64)> = Vec::new();
     loop {
         if iteration::is_converged(field, &here, last_energy, thresholds)? {
             return Ok((here, true));
@@ -201,10 +210,15 @@ pub fn descend(
             model.steps.clear();
             direction = model.direction(&slope);
         }
-        let size = inner(&direction, &direction).sqrt();
-        if size > LONGEST {
-            direction = scaled(&direction, LONGEST / size);
+        trail.push((here.energy, here.commutator));
+        if trail.len() > WINDOW {
+            let (energy, commutator) = trail[trail.len() - 1 - WINDOW];
+            if energy - here.energy < LITTLE && here.commutator > 0.3 * commutator {
+                return Ok((here, false));
+            }
         }
+        let size = inner(&direction, &direction).sqrt();
+        direction = scaled(&direction, f64::min(stretch, LONGEST / size));
         let descent = inner(&direction, &slope);
         let mut length = 1.0;
         let mut accepted = false;
@@ -226,7 +240,14 @@ pub fn descend(
             let change = trial.energy - here.energy;
             let rounding = change.abs() < ENERGY_NOISE && trial.commutator < here.commutator;
             if rounding || change < 1e-4 * 2.0 * weight * length * descent {
-                model.learn(step, combined(&trial_slope, -1.0, &slope));
+                let change = combined(&trial_slope, -1.0, &slope);
+                // Where the energy curves downwards the model has nothing to learn from, and steps would stay short.
+                stretch = if inner(&step, &change) < 0.0 {
+                    stretch * STRETCH
+                } else {
+                    1.0
+                };
+                model.learn(step, change);
                 last_energy = Some(here.energy);
                 here = trial;
                 slope = trial_slope;

@@ -24,6 +24,8 @@ use std::time::Instant;
 
 /// Nuclei nearer than this (bohr) count as being on one spot.
 const COINCIDENT: f64 = 1e-4;
+/// Calculations allowed for the way down from one saddle point, each with as many builds as the settings say.
+const DESCENTS: usize = 3;
 /// How often unstable solutions are left at one geometry.
 const LEAVES: usize = 5;
 
@@ -326,7 +328,7 @@ impl HartreeFock {
             .follow
             .filter(|seed| self.fits(seed, geometry.basis.len()))
             .map(|seed| seed.state().occupied.as_slice());
-        let mut plan = Plan {
+        let plan = Plan {
             thresholds: Thresholds::from(&self.settings),
             limit: self.settings.iterations,
             carried,
@@ -398,9 +400,15 @@ impl HartreeFock {
             left += 1;
             let saddle = solution.evaluation.energy;
             let before = field.builds() + field.products();
-            plan.carried = Vec::new();
-            plan.limit = before + self.settings.iterations;
-            solution = self.descend(field, &lower, saddle, &mut plan)?;
+            let mut onwards = Plan {
+                thresholds: plan.thresholds,
+                limit: before + self.settings.iterations,
+                carried: Vec::new(),
+                follow: None,
+                soft: internal.as_ref(),
+                downhill: false,
+            };
+            solution = self.descend(field, &lower, saddle, &mut onwards)?;
             settled.fock_builds = field.builds() + field.products() - before;
         }
         if let Some(internal) = internal_value {
@@ -425,18 +433,24 @@ impl HartreeFock {
         saddle: f64,
         plan: &mut Plan<'_>,
     ) -> Result<Solution, ScfError> {
-        plan.downhill = false;
-        let start = Beginning::Occupied(lower.occupied.clone());
-        let solution = iteration::converge(field, start.clone(), plan)?;
-        let below = lower.energy.min(saddle) + 1e-9;
-        if solution.stop == StopReason::Converged && solution.evaluation.energy <= below {
-            return Ok(solution);
+        let mut start = lower.occupied.clone();
+        let mut below = lower.energy.min(saddle) + 1e-9;
+        let mut rounds = 0;
+        loop {
+            plan.limit = field.builds() + field.products() + self.settings.iterations;
+            let beginning = Beginning::Occupied(start.clone());
+            let solution = iteration::converge(field, beginning, plan)?;
+            rounds += 1;
+            let better = solution.evaluation.energy <= below;
+            if (better && solution.stop == StopReason::Converged) || rounds == DESCENTS {
+                return Ok(solution);
+            }
+            plan.downhill = true;
+            if better {
+                below = solution.evaluation.energy + 1e-9;
+                start = solution.evaluation.occupied;
+            }
         }
-        plan.downhill = true;
-        plan.limit = field.builds() + field.products() + self.settings.iterations;
-        let monotone = iteration::converge(field, start, plan);
-        plan.downhill = false;
-        monotone
     }
 
     fn record(
