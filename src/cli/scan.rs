@@ -52,7 +52,7 @@ pub(super) fn run(
     stop: &AtomicBool,
     streams: &mut Streams<'_>,
 ) -> Result<Status, Failure> {
-    let spec = load(&args.spec)?;
+    let spec = load(&args.spec, streams)?;
     let folder = RunFolder::at(args.common.out.as_deref().unwrap_or(&spec.output.folder));
     let record = match existing(&folder, &spec, args.fresh, streams)? {
         Some(record) => record,
@@ -63,8 +63,20 @@ pub(super) fn run(
 
 pub(super) fn report(args: &ReportArgs, streams: &mut Streams<'_>) -> Result<Status, Failure> {
     let source = RunFolder::at(&args.run);
-    let mut spec = load(&source.path().join("spec.toml"))?;
+    let mut spec = load(&source.path().join("spec.toml"), streams)?;
     let (header, lines) = journal::read(&source.journal())?;
+    let folder = RunFolder::at(args.common.out.as_deref().unwrap_or(source.path()));
+    let settled = super::settle::report(
+        &spec,
+        &header.fingerprint,
+        &lines,
+        &folder,
+        &args.common,
+        streams,
+    );
+    if let Some(status) = settled {
+        return status;
+    }
     if header.fingerprint != spec.fingerprint() {
         return Err(Failure::usage(format!(
             "{}: the journal belongs to another spec than the spec.toml beside it",
@@ -72,10 +84,9 @@ pub(super) fn report(args: &ReportArgs, streams: &mut Streams<'_>) -> Result<Sta
         )));
     }
     if let Some(path) = &args.spec {
-        spec.take_reporting_from(load(path)?);
+        spec.take_reporting_from(load(path, streams)?);
     }
     let record = record_of(lines);
-    let folder = RunFolder::at(args.common.out.as_deref().unwrap_or(source.path()));
     folder.create()?;
     finish(&spec, &record, &folder, &args.common, streams)
 }
@@ -120,7 +131,7 @@ fn record_of(lines: Vec<Line>) -> JobRecord {
     let mut record = JobRecord::default();
     for line in lines {
         match line {
-            Line::Header(_) => {}
+            Line::Header(_) | Line::Settled(_) => {}
             Line::Point(entry) => record.entries.push(entry),
             Line::Limit(limit) => record.limits.push(limit),
             Line::Onset(onset) => record.onsets.push(onset),

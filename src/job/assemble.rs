@@ -5,7 +5,8 @@ use super::{JobRecord, Limit, Onset, scan_of};
 use crate::basis::Shell;
 use crate::scan::audit::{Audited, audit};
 use crate::scan::kept::keep;
-use crate::scan::{Entry, Finding, FindingKind, Grid, Likeness, Scan};
+use crate::scan::sweep::slopes;
+use crate::scan::{Entry, Finding, FindingKind, Grid, Likeness, Scan, Sweep};
 use crate::scf::Method;
 use crate::spec::{Level, Spec};
 use crate::surface::PointRecord;
@@ -86,6 +87,8 @@ pub struct PointResult {
     pub values: Vec<f64>,
     /// Positions, bohr.
     pub positions: Vec<Vector3<f64>>,
+    /// dE/dq of every sweep in hartree per ångström or degree, where gradients were asked for.
+    pub slopes: Option<Vec<f64>>,
     /// The numbers.
     pub record: PointRecord,
     /// Energy of another solution that was found here and is not kept, hartree.
@@ -146,12 +149,31 @@ impl JobResult {
 }
 
 impl LevelResult {
-    /// Energy from the lowest point to the separated parts, hartree; where it was asked for, less what the basis
+    /// Energy of the lowest minimum, hartree: refined between the points where the sweep holds one, else of the lowest
+    /// point.
+    #[must_use]
+    pub fn bottom(&self) -> Option<f64> {
+        let minima = self.analysis.minima.iter().filter(|m| m.interior);
+        minima
+            .map(|m| m.energy)
+            .chain(self.lowest().and_then(|p| p.record.energy))
+            .min_by(f64::total_cmp)
+    }
+
+    /// Energy from the lowest minimum to the separated parts, hartree; where it was asked for, less what the basis
     /// functions of the others lend each part.
     #[must_use]
     pub fn dissociation_energy(&self) -> Option<f64> {
         let limit = self.limit.as_ref()?;
-        Some(limit.energy? - self.lowest()?.record.energy? - limit.counterpoise.unwrap_or(0.0))
+        Some(limit.energy? - self.bottom()? - limit.counterpoise.unwrap_or(0.0))
+    }
+
+    /// The same from the lowest vibrational state, for a molecule of two atoms: atoms keep no zero-point energy.
+    #[must_use]
+    pub fn dissociation_energy_from_zero_point(&self) -> Option<f64> {
+        let found = self.analysis.spectroscopy.as_ref()?;
+        let zero_point = found.zero_point.filter(|_| found.mass.exact)?;
+        Some(self.dissociation_energy()? - zero_point)
     }
 
     /// The point of lowest energy.
@@ -302,14 +324,17 @@ fn level_result(
         .enumerate()
         .filter_map(|(point, kept)| {
             let kept = kept.as_ref()?;
+            let positions = match &kept.entry.record.positions {
+                Some(relaxed) => relaxed.iter().map(|&p| Vector3::from(p)).collect(),
+                None => scan.positions[point].clone(),
+            };
+            let gradient = kept.entry.record.gradient.as_ref();
             Some(PointResult {
                 point,
                 index: scan.grid.index(point),
                 values: scan.coordinates[point].clone(),
-                positions: match &kept.entry.record.positions {
-                    Some(relaxed) => relaxed.iter().map(|&p| Vector3::from(p)).collect(),
-                    None => scan.positions[point].clone(),
-                },
+                slopes: gradient.map(|g| reported_slopes(&spec.sweeps, &positions, g)),
+                positions,
                 record: kept.entry.record.clone(),
                 second_energy: kept.second_energy,
                 findings: kinds_at(point, &findings),
@@ -336,6 +361,19 @@ fn level_result(
         mean_fock_builds: (!further.is_empty())
             .then(|| further.iter().sum::<f64>() / further.len() as f64),
     }
+}
+
+/// dE/dq of every sweep in hartree per ångström or degree.
+fn reported_slopes(
+    sweeps: &[Sweep],
+    positions: &[Vector3<f64>],
+    gradient: &[[f64; 3]],
+) -> Vec<f64> {
+    slopes(sweeps, positions, gradient)
+        .iter()
+        .zip(sweeps)
+        .map(|(slope, sweep)| slope / sweep.motion.coordinate.to_reported(1.0))
+        .collect()
 }
 
 /// Kinds of the findings that concern a point, each once.

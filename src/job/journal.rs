@@ -6,6 +6,7 @@
 
 use super::dissociation::Limit;
 use super::onset::Onset;
+use super::settle::SettledLevel;
 use crate::scan::event::Stationary;
 use crate::scan::{Entry, Likeness};
 use serde::{Deserialize, Serialize};
@@ -33,6 +34,8 @@ pub enum Line {
     Stationary(LevelStationary),
     /// A level is complete.
     Complete(LevelEnd),
+    /// A level's molecule is settled.
+    Settled(Box<SettledLevel>),
 }
 
 /// What a journal belongs to.

@@ -7,6 +7,7 @@ pub mod dissociation;
 pub mod journal;
 pub mod onset;
 pub mod pieces;
+pub mod settle;
 pub mod stationary;
 
 pub use assemble::{Cost, JobResult, LevelResult, PointResult, SweepResult, assemble};
@@ -14,9 +15,11 @@ pub use dissociation::{Limit, LimitPart};
 pub use onset::Onset;
 
 use crate::minimise::hessian::HessianSettings;
+use crate::minimise::relaxed::Relaxed;
 use crate::minimise::settle::SettleSettings;
+use crate::minimise::{MinimiseError, MinimiseSettings};
 use crate::scan::kept::{Kept, keep};
-use crate::scan::{Entry, Event, Grid, Scan, ScanError, WalkStart, grid, runner};
+use crate::scan::{Entry, Event, Grid, Others, Scan, ScanError, WalkStart, grid, runner};
 use crate::scf::Method;
 use crate::spec::{Level, Spec};
 use crate::surface::{HartreeFock, StabilityDemand, Surface};
@@ -45,6 +48,14 @@ pub enum JobError {
         level: String,
         /// what is wrong
         source: SurfaceError,
+    },
+    /// A geometry that cannot be settled.
+    #[error("level {level}: {source}")]
+    Settle {
+        /// name of the level
+        level: String,
+        /// what is wrong
+        source: MinimiseError,
     },
     /// A geometry of the grid that cannot be reached.
     #[error("point {values:?}: {source}")]
@@ -169,17 +180,43 @@ pub fn run(
             source,
         })?;
         let before = Instant::now();
-        let mut end = walk_level(
-            &surface,
-            &surface,
-            spec,
-            &scan,
-            number,
-            pool,
-            stop,
-            observer,
-            &mut record,
-        )?;
+        let mut end = match spec.walk.others {
+            Others::Fixed => walk_level(
+                &LevelSurfaces::rigid(&surface),
+                spec,
+                &scan,
+                number,
+                pool,
+                stop,
+                observer,
+                &mut record,
+            ),
+            Others::Optimised => {
+                let relaxed = |settings| {
+                    let swept = spec.sweeps.iter().flat_map(|s| s.motions());
+                    Relaxed::new(
+                        &surface,
+                        &level.molecule(&spec.molecule),
+                        swept.map(|m| m.coordinate).collect(),
+                        settings,
+                    )
+                };
+                walk_level(
+                    &LevelSurfaces {
+                        walk: &relaxed(MinimiseSettings::default()),
+                        polish: &relaxed(MinimiseSettings::tight()),
+                        unrelaxed: &surface,
+                    },
+                    spec,
+                    &scan,
+                    number,
+                    pool,
+                    stop,
+                    observer,
+                    &mut record,
+                )
+            }
+        }?;
         beside_the_walk(spec, number, &scan, pool, observer, &mut record)?;
         end.wall_seconds = before.elapsed().as_secs_f64();
         observer(&JobEvent::LevelDone(end.clone()));
@@ -269,15 +306,36 @@ fn limit_of(
     Ok(Some(limit))
 }
 
-/// Walks one level over any surface, adds its evaluations to `record` and tells how it ended.
-/// Walks one level over any surface, locates the stationary points of what it finds and adds all to `record`.
-/// `unrelaxed` is the surface itself, without the relaxation that `surface` may do at every point.
+/// The surfaces that a level is computed on.
+#[derive(Debug)]
+pub struct LevelSurfaces<'a, S, U> {
+    /// The one that is walked.
+    pub walk: &'a S,
+    /// The same, with thresholds fine enough for second derivatives, for stationary points.
+    pub polish: &'a S,
+    /// The surface without the relaxation that the others may do at every point.
+    pub unrelaxed: &'a U,
+}
+
+impl<'a, S> LevelSurfaces<'a, S, S> {
+    /// One surface for everything.
+    #[must_use]
+    pub fn rigid(surface: &'a S) -> Self {
+        Self {
+            walk: surface,
+            polish: surface,
+            unrelaxed: surface,
+        }
+    }
+}
+
+/// Walks one level over any surface, locates the stationary points of what it finds, adds all to `record` and tells
+/// how it ended.
 ///
 /// # Errors
 /// [`JobError::Scan`].
 pub fn walk_level<S: Surface, U: Surface>(
-    surface: &S,
-    unrelaxed: &U,
+    surfaces: &LevelSurfaces<'_, S, U>,
     spec: &Spec,
     scan: &Scan,
     level: usize,
@@ -292,12 +350,12 @@ pub fn walk_level<S: Surface, U: Surface>(
         level: name.to_owned(),
         source,
     };
-    let (walked, seeds) = runner::run_keeping(surface, scan, pool, stop, &mut |event| {
+    let (walked, seeds) = runner::run_keeping(surfaces.walk, scan, pool, stop, &mut |event| {
         observer(&JobEvent::Walk { level, name, event });
     })
     .map_err(failed)?;
     let search = Search {
-        surface,
+        surface: surfaces.polish,
         scan,
         path: ScanPath {
             sweeps: &spec.sweeps,
@@ -328,7 +386,7 @@ pub fn walk_level<S: Surface, U: Surface>(
     {
         pool.install(|| {
             stationary::vibrate(
-                unrelaxed,
+                surfaces.unrelaxed,
                 &molecule,
                 &spec.masses_u,
                 &search.path,

@@ -83,7 +83,7 @@ impl Landscape {
             Some(period) => Spline::periodic(&x[axis], values, period),
             None => Spline::new(&x[axis], values),
         };
-        let values = bridged(&kept, counts);
+        let values = bridged(&x, periods, &kept)?;
         let mut nodes: Vec<[f64; 4]> = values.iter().map(|&v| [v, 0.0, 0.0, 0.0]).collect();
         for i in 0..rows {
             let spline = along(1, &values[i * columns..(i + 1) * columns])?;
@@ -219,9 +219,32 @@ impl Landscape {
     }
 }
 
-/// Energies with gaps filled from their edges inwards, each by the mean of its neighbours.
-fn bridged(energies: &[Option<f64>], [rows, columns]: [usize; 2]) -> Vec<f64> {
+/// Energies with gaps filled: by the mean of the splines through the rest of the row and of the column where the gap lies
+/// between points of them, and from the edges inwards by the mean of neighbours elsewhere.
+fn bridged(
+    axes: &[Vec<f64>; 2],
+    periods: [Option<f64>; 2],
+    energies: &[Option<f64>],
+) -> Result<Vec<f64>, MinimiseError> {
+    let [rows, columns] = [axes[0].len(), axes[1].len()];
     let mut filled = energies.to_vec();
+    for i in 0..rows {
+        for j in 0..columns {
+            if energies[i * columns + j].is_some() {
+                continue;
+            }
+            let row: Vec<_> = (0..columns).map(|l| energies[i * columns + l]).collect();
+            let column: Vec<_> = (0..rows).map(|k| energies[k * columns + j]).collect();
+            let bridges = [
+                bridge(&axes[0], periods[0], &column, i)?,
+                bridge(&axes[1], periods[1], &row, j)?,
+            ];
+            let found: Vec<f64> = bridges.into_iter().flatten().collect();
+            if !found.is_empty() {
+                filled[i * columns + j] = Some(found.iter().sum::<f64>() / found.len() as f64);
+            }
+        }
+    }
     while filled.iter().any(Option::is_none) && filled.iter().any(Option::is_some) {
         let before = filled.clone();
         for i in 0..rows {
@@ -239,7 +262,36 @@ fn bridged(energies: &[Option<f64>], [rows, columns]: [usize; 2]) -> Vec<f64> {
             }
         }
     }
-    filled.into_iter().map(|e| e.unwrap_or(f64::NAN)).collect()
+    Ok(filled.into_iter().map(|e| e.unwrap_or(f64::NAN)).collect())
+}
+
+/// The value at one place of a line by the spline through the others; none unless it lies between two of them.
+fn bridge(
+    x: &[f64],
+    period: Option<f64>,
+    line: &[Option<f64>],
+    at: usize,
+) -> Result<Option<f64>, MinimiseError> {
+    let turns: &[f64] = if period.is_some() {
+        &[-1.0, 0.0, 1.0]
+    } else {
+        &[0.0]
+    };
+    let (places, heights): (Vec<f64>, Vec<f64>) = turns
+        .iter()
+        .flat_map(|turn| {
+            let shift = turn * period.unwrap_or(0.0);
+            x.iter()
+                .zip(line)
+                .filter_map(move |(x, height)| Some((x + shift, (*height)?)))
+        })
+        .unzip();
+    match (places.first(), places.last()) {
+        (Some(first), Some(last)) if *first < x[at] && x[at] < *last => {
+            Ok(Some(Spline::new(&places, &heights)?.value(x[at])))
+        }
+        _ => Ok(None),
+    }
 }
 
 /// Weights of the heights and slopes at both ends of a piece of this width, in its value, first and second derivative at

@@ -119,7 +119,7 @@ impl<'a, S> Task<'a, S> {
 }
 
 /// Why an optimisation ended.
-#[derive(Debug, Clone, Copy, PartialEq, Eq, serde::Serialize)]
+#[derive(Debug, Clone, Copy, PartialEq, Eq, serde::Serialize, serde::Deserialize)]
 #[serde(rename_all = "kebab-case")]
 pub enum MinimiseStop {
     /// all thresholds met
@@ -220,7 +220,7 @@ pub enum MinimiseError {
         /// bohr or radian
         coordinates: Vec<f64>,
         /// why
-        reason: crate::molecule::motion::MotionError,
+        reason: Box<crate::molecule::motion::MotionError>,
     },
     /// Arrays that do not belong together.
     #[error("{given} values where {expected} are needed")]

@@ -38,7 +38,7 @@ impl Default for SettleSettings {
 }
 
 /// What kind of stationary point a Hessian says it is.
-#[derive(Debug, Clone, Copy, PartialEq, Eq, serde::Serialize)]
+#[derive(Debug, Clone, Copy, PartialEq, Eq, serde::Serialize, serde::Deserialize)]
 #[serde(rename_all = "kebab-case", tag = "kind")]
 pub enum Character {
     /// all vibrations real

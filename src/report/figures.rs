@@ -1,11 +1,9 @@
 //! Results → figures: fills the plain structs of [`plot`](crate::plot) and renders them in the formats asked for.
 
-use super::state_figures;
+use super::{figure_fits, state_figures};
 use crate::job::{JobResult, LevelResult, PointResult};
-use crate::plot::{
-    Axis, CurveFigure, CurveLevel, CurveLimit, CurveMark, Figure, PlotError, SurfaceFigure,
-    SurfaceMark,
-};
+use crate::plot::{Axis, CurveFigure, CurveLevel, CurveLimit, Figure, PlotError, SurfaceFigure};
+use crate::scan::StationaryKind;
 use crate::spec::{FigureFormat, Spec};
 
 /// Every figure of a result: file name and bytes. A run without a sweep has none.
@@ -33,6 +31,9 @@ fn draw(spec: &Spec, result: &JobResult) -> Result<Vec<(String, Figure)>, PlotEr
     let mut figures = vec![("audit".to_owned(), state_figures::audit(result).draw()?)];
     if result.sweeps.len() == 1 {
         figures.push(("curve".to_owned(), curve(spec, result).draw()?));
+        for (name, figure) in figure_fits::vibrations(spec, result, &axis(result, 0)) {
+            figures.push((name, figure.draw()?));
+        }
     }
     for (k, level) in result.levels.iter().enumerate() {
         if result.sweeps.len() == 1 {
@@ -110,17 +111,8 @@ fn curve_level(spec: &Spec, result: &JobResult, level: &LevelResult) -> CurveLev
         } else {
             Vec::new()
         },
-        minima: level
-            .lowest()
-            .and_then(|p| {
-                Some(CurveMark {
-                    x: p.values[0],
-                    energy: relative(spec, p, zero)?,
-                    text: None,
-                })
-            })
-            .into_iter()
-            .collect(),
+        minima: figure_fits::curve_minima(level, zero, scale),
+        fits: figure_fits::fits(result, level, zero, scale),
         breaks: state_figures::breaks(level),
         limit: level
             .limit
@@ -143,6 +135,7 @@ fn curve_level(spec: &Spec, result: &JobResult, level: &LevelResult) -> CurveLev
 
 fn surface(spec: &Spec, result: &JobResult, level: &LevelResult) -> SurfaceFigure {
     let zero = level.lowest().and_then(|p| p.record.energy).unwrap_or(0.0);
+    let scale = spec.output.energy.per_hartree();
     let mut energies = vec![None; result.grid.len()];
     for point in &level.points {
         energies[point.point] = relative(spec, point, zero);
@@ -159,18 +152,9 @@ fn surface(spec: &Spec, result: &JobResult, level: &LevelResult) -> SurfaceFigur
         y_values: result.sweeps[1].values.clone(),
         energies,
         cap: None,
-        minima: level
-            .lowest()
-            .map(|p| SurfaceMark {
-                x: p.values[0],
-                y: p.values[1],
-                energy: 0.0,
-                text: None,
-            })
-            .into_iter()
-            .collect(),
-        saddles: Vec::new(),
-        path: Vec::new(),
+        minima: figure_fits::surface_marks(level, StationaryKind::Minimum, zero, scale),
+        saddles: figure_fits::surface_marks(level, StationaryKind::Saddle, zero, scale),
+        path: figure_fits::valley_path(level),
         findings: level
             .points
             .iter()

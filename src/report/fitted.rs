@@ -21,9 +21,10 @@ pub(super) struct Minimum<'a> {
     kind: crate::scan::StationaryKind,
     geometry_angstrom: Option<Vec<(&'a str, f64, f64, f64)>>,
     gradient_max_hartree_per_bohr: Option<f64>,
-    slopes_hartree_per_unit: Option<&'a [f64]>,
+    /// dE/dq of every sweep that remains, hartree per ångström or degree.
+    slopes_hartree_per_unit: Option<Vec<f64>>,
     force_constants: Option<Vec<Units>>,
-    coupling_hartree_per_unit2: Option<f64>,
+    coupling_atomic_units: Option<f64>,
     frequencies_cm1: Option<&'a [f64]>,
     intensities_km_per_mol: Option<&'a [f64]>,
     zero_point_hartree: Option<f64>,
@@ -57,7 +58,13 @@ pub(super) fn minima<'a>(result: &'a JobResult, list: &'a [MinimumResult]) -> Ve
                         .collect()
                 }),
                 gradient_max_hartree_per_bohr: m.gradient_max(),
-                slopes_hartree_per_unit: refined.map(|r| &r.slopes[..]),
+                slopes_hartree_per_unit: refined.map(|r| {
+                    r.slopes
+                        .iter()
+                        .zip(&result.sweeps)
+                        .map(|(slope, sweep)| slope / reported(sweep, 1.0))
+                        .collect()
+                }),
                 force_constants: refined.map(|r| {
                     (0..r.curvature.len())
                         .map(|k| {
@@ -66,8 +73,7 @@ pub(super) fn minima<'a>(result: &'a JobResult, list: &'a [MinimumResult]) -> Ve
                         })
                         .collect()
                 }),
-                coupling_hartree_per_unit2: refined
-                    .and_then(|r| r.curvature.first()?.get(1).copied()),
+                coupling_atomic_units: refined.and_then(|r| r.curvature.first()?.get(1).copied()),
                 frequencies_cm1: harmonic.map(|h| &h.wavenumbers_cm1[..]),
                 intensities_km_per_mol: harmonic.map(|h| &h.intensities_km_per_mol[..]),
                 zero_point_hartree: harmonic.map(|h| h.zero_point_hartree),

@@ -1,11 +1,13 @@
 //! Results → files and text. Every format is one small file; writers are passed in.
 
 pub mod csv;
+mod figure_fits;
 pub mod figures;
 mod fitted;
 pub mod folder;
 pub mod geometries;
 pub mod parameters;
+pub mod settled;
 mod state_figures;
 pub mod summary;
 pub mod text;

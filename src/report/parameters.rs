@@ -7,7 +7,7 @@ use crate::job::{JobResult, SweepResult};
 use crate::units::{KCAL_PER_MOL_PER_HARTREE, KJ_PER_MOL_PER_HARTREE};
 
 /// Names of the columns.
-const HEADER: [&str; 12] = [
+pub(super) const HEADER: [&str; 12] = [
     "term",
     "atoms",
     "equilibrium",

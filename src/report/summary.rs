@@ -54,6 +54,7 @@ struct Dissociation<'a> {
     counterpoise_hartree: Option<f64>,
     unreachable_hartree: Option<f64>,
     de_hartree: Option<f64>,
+    d0_hartree: Option<f64>,
     text: Option<String>,
 }
 
@@ -79,6 +80,9 @@ struct Point<'a> {
     values: &'a [f64],
     geometry_angstrom: Vec<(&'a str, f64, f64, f64)>,
     energy_hartree: Option<f64>,
+    /// dE/dq of every sweep, hartree per ångström or degree.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    slopes_hartree_per_unit: Option<&'a [f64]>,
     converged: bool,
     fock_builds: usize,
     s_squared: Option<f64>,
@@ -132,6 +136,7 @@ fn level<'a>(result: &'a JobResult, level: &'a LevelResult) -> Level<'a> {
             counterpoise_hartree: limit.counterpoise,
             unreachable_hartree: limit.unreachable,
             de_hartree: level.dissociation_energy(),
+            d0_hartree: level.dissociation_energy_from_zero_point(),
             text: pieces::sentence(level, &result.labels),
         }),
         onset_of_instability: level
@@ -183,6 +188,7 @@ fn point<'a>(result: &'a JobResult, point: &'a PointResult) -> Point<'a> {
             })
             .collect(),
         energy_hartree: record.energy,
+        slopes_hartree_per_unit: point.slopes.as_deref().filter(|_| converged),
         converged,
         fock_builds: record.fock_builds,
         s_squared: converged.then_some(record.s_squared),

@@ -181,10 +181,11 @@ fn dissociation(text: &mut String, result: &JobResult, level: &LevelResult, unit
         } else {
             ""
         };
-        let _ = writeln!(
-            text,
-            "De from the lowest point {value:.3} {word}{corrected}"
-        );
+        let _ = writeln!(text, "De {value:.3} {word}{corrected}");
+        if let Some(d0) = level.dissociation_energy_from_zero_point() {
+            let value = d0 * unit.per_hartree();
+            let _ = writeln!(text, "D0 {value:.3} {word}{corrected}");
+        }
     }
     if let Some(sentence) = pieces::sentence(level, &result.labels) {
         let _ = writeln!(text, "{sentence}");

@@ -33,8 +33,11 @@ const SHIFT: f64 = 0.4;
 const SHIFT_ENDS: f64 = 5e-3;
 /// Builds after which a calculation with a good seed is given to the Newton rung.
 const SEEDED_RUNG: usize = 14;
-/// Rise of the energy after which the same happens, hartree.
-const SEEDED_RISE: f64 = 1e-5;
+/// Rise of the energy above the lowest so far (hartree) that counts as climbing towards a saddle point, where the commutator
+/// is below [`NEARBY`]: from farther away the way down may well lead over a rise.
+const RISE: f64 = 1e-5;
+/// Commutator below which a stall is a saddle point or a flat valley rather than oscillation, hartree.
+const NEARBY: f64 = 0.02;
 /// Commutator below which a seed counts as good, hartree.
 const GOOD_SEED: f64 = 0.05;
 
@@ -270,13 +273,17 @@ pub fn converge(
         // Choice of the rung.
         let mut downhill = plan.downhill;
         let stalled = since_best >= PATIENCE;
+        let climbs = here.energy > lowest_energy + RISE && here.commutator < NEARBY;
         match rung {
-            Rung::Extrapolated if good_seed => {
-                downhill |= rung_builds >= SEEDED_RUNG || here.energy > lowest_energy + SEEDED_RISE;
-            }
+            _ if climbs => downhill = true,
+            Rung::Extrapolated if good_seed => downhill |= rung_builds >= SEEDED_RUNG,
             Rung::Extrapolated if stalled || rung_builds >= FIRST_RUNG => {
-                rung = Rung::Shifted;
-                rung_builds = 0;
+                if here.commutator < NEARBY {
+                    downhill = true;
+                } else {
+                    rung = Rung::Shifted;
+                    rung_builds = 0;
+                }
             }
             Rung::Shifted if here.commutator < SHIFT_ENDS => {
                 rung = Rung::Final;
@@ -352,18 +359,31 @@ fn descend(
     plan: &Plan<'_>,
 ) -> Result<Solution, ScfError> {
     let left = plan.limit.saturating_sub(field.builds() + field.products());
-    let (evaluation, converged) =
-        quasi_newton::descend(field, start, &plan.thresholds, left.min(DESCENT), plan.soft)?;
-    let (evaluation, stop) = if converged {
-        (evaluation, StopReason::Converged)
-    } else {
-        second_order::minimise(field, evaluation, &plan.thresholds, plan.limit)?
-    };
+    let mut history = Extrapolation::default();
+    history.record(&start.focks, &start.errors);
+    let descent = quasi_newton::descend(
+        field,
+        start,
+        &plan.thresholds,
+        left.min(DESCENT),
+        plan.soft,
+        &mut history,
+    )?;
+    if descent.converged {
+        return Ok(Solution {
+            evaluation: descent.evaluation,
+            refined: descent.refined,
+            stop: StopReason::Converged,
+            differences: history.own().to_vec(),
+        });
+    }
+    let (evaluation, stop) =
+        second_order::minimise(field, descent.evaluation, &plan.thresholds, plan.limit)?;
     Ok(Solution {
         refined: evaluation.occupied.clone(),
         evaluation,
         stop,
-        differences: Vec::new(),
+        differences: history.own().to_vec(),
     })
 }
 

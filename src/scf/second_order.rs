@@ -77,13 +77,15 @@ fn path(
     metric: &[DMatrix<f64>],
     radius: f64,
     budget: usize,
+    converged: f64,
 ) -> Path {
     let kind = internal_rotation(field.occupation().method);
     let zero = scaled(gradient, 0.0);
     let (mut kappa, mut product) = (zero.clone(), zero);
     let mut residual = scaled(gradient, -1.0);
     let start = inner(gradient, &divided(gradient, metric)).sqrt();
-    let target = start * start.sqrt().min(0.1);
+    // No use in solving far below what counts as converged.
+    let target = (start * start.sqrt().min(0.1)).max(0.3 * converged);
     let mut conditioned = divided(&residual, metric);
     let mut direction = conditioned.clone();
     let mut rho = inner(&residual, &conditioned);
@@ -184,7 +186,15 @@ pub fn minimise(
         if spent >= limit {
             return Ok((here, StopReason::IterationLimit));
         }
-        let path = path(field, &orbitals, &gradient, &metric, radius, limit - spent);
+        let path = path(
+            field,
+            &orbitals,
+            &gradient,
+            &metric,
+            radius,
+            limit - spent,
+            thresholds.commutator,
+        );
         loop {
             let (kappa, product) = cut(&path, &gradient, &metric, radius);
             let predicted = weight * (2.0 * inner(&gradient, &kappa) + inner(&kappa, &product));

@@ -22,12 +22,7 @@ pub(super) enum Feature {
 }
 
 /// The features that are not built.
-const NOT_YET: &[Feature] = &[
-    Feature::OthersOptimised,
-    Feature::Fit,
-    Feature::Vibration,
-    Feature::Gradients,
-];
+const NOT_YET: &[Feature] = &[];
 
 impl Feature {
     /// How it is written in a spec, and what works instead.

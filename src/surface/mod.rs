@@ -45,6 +45,31 @@ pub trait Surface: Sync {
     fn likeness(&self, one: &Self::Seed, other: &Self::Seed) -> [f64; 2];
 }
 
+impl<S: Surface> Surface for &S {
+    type Seed = S::Seed;
+    type Workspace = S::Workspace;
+
+    fn workspace(&self) -> Self::Workspace {
+        (**self).workspace()
+    }
+
+    fn workspace_bytes(&self) -> u64 {
+        (**self).workspace_bytes()
+    }
+
+    fn evaluate(
+        &self,
+        request: &PointRequest<'_, Self::Seed>,
+        workspace: &mut Self::Workspace,
+    ) -> Result<PointOutcome<Self::Seed>, SurfaceError> {
+        (**self).evaluate(request, workspace)
+    }
+
+    fn likeness(&self, one: &Self::Seed, other: &Self::Seed) -> [f64; 2] {
+        (**self).likeness(one, other)
+    }
+}
+
 /// A point already computed that the next may start from.
 #[derive(Debug)]
 pub struct SeedPoint<'a, S> {

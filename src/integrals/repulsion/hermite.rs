@@ -190,11 +190,7 @@ pub(super) fn hermite_coulomb<V: Lanes, const L: usize>(
     for m in 0..=L {
         work[Table::<L>::ROOTS[m]] = roots[m];
     }
-    let mut small = [V::zero(); UNROLLED];
-    for (i, number) in small.iter_mut().enumerate() {
-        *number = V::splat(i as f64);
-    }
-    let small = &small;
+    let small: &[V; UNROLLED] = &std::array::from_fn(|i| V::splat(i as f64));
     unrolled!(work pq small L: 0 1 2 3 4 5 6 7 8 9 10 11 12 13 14 15 16 17 18 19 20);
     for (to, from) in out.iter_mut().zip(work.iter()) {
         from.store(to);

@@ -1,7 +1,7 @@
 //! Shell pairs prepared once per geometry, and packed four at a time into lanes.
 
 use super::class::{ClassKey, PairClass, Scalar, ShellType};
-use super::lanes::{Four, Run};
+use super::lanes::Four;
 use super::primitives::field;
 use crate::basis::{Basis, Shell};
 use crate::integrals::recurrence::{hermite_count, hermite_powers};
@@ -17,10 +17,6 @@ pub(super) struct ShellPair {
     pub(super) class: Arc<PairClass>,
     /// Packed index a(a+1)/2 + b of each function pair, in the order of the class.
     pub(super) places: Vec<u32>,
-    /// The same in runs of places that follow one another, and the distance of the function pairs in a
-    /// run: 1, or the number of functions of shell B where A's functions come first.
-    pub(super) runs: Vec<Run>,
-    pub(super) run_stride: usize,
     /// Functions (a, b) of each function pair.
     pub(super) functions: Vec<[u32; 2]>,
     /// Primitive pairs kept, largest bound first.
@@ -57,7 +53,7 @@ impl ShellPair {
         let displacement = basis.centre(a) - basis.centre(b);
         let one_centre = shell_a.atom == shell_b.atom;
         let key = ClassKey {
-            contracted: [shell_a, shell_b].map(|s| s.exponents.len() > 1),
+            contracted: shell_a.exponents.len() * shell_b.exponents.len() > 1,
             types: [a, b].map(|i| ShellType::of(&shells[i])),
             one_centre,
             same_shell: a == b,
@@ -68,14 +64,13 @@ impl ShellPair {
             .iter()
             .map(|&(f, g)| [(basis.offset(a) + f) as u32, (basis.offset(b) + g) as u32])
             .collect();
-        let places: Vec<u32> = functions
+        let places = functions
             .iter()
             .map(|&[f, g]| {
                 let (high, low) = (f.max(g), f.min(g));
                 high * (high + 1) / 2 + low
             })
             .collect();
-        let run_stride = if a < b { shell_b.functions() } else { 1 };
         let monomials: Vec<f64> = {
             let axes = [0, 1, 2].map(|i| powers(displacement[i], class.degree));
             hermite_powers()[..hermite_count(class.degree)]
@@ -83,9 +78,10 @@ impl ShellPair {
                 .map(|m| axes[0][m[0]] * axes[1][m[1]] * axes[2][m[2]])
                 .collect()
         };
-        // What is folded depends on the exponents of single primitives only: any primitive will do.
-        let pair = [shell_a, shell_b];
-        let elements = class.elements(&monomials, &scalar_values(&class, &class.folded, pair, [0, 0]));
+        let mut elements = Vec::new();
+        if class.key.contracted {
+            elements = class.elements(&monomials, |_| 1.0);
+        }
         let mut primitives = Vec::new();
         for i in 0..shell_a.exponents.len() {
             for j in 0..shell_b.exponents.len() {
@@ -95,7 +91,13 @@ impl ShellPair {
                 let factor = (2.0 * PI.powf(2.5)).sqrt() / p
                     * (-reduced * displacement.norm_squared()).exp();
                 let centre = basis.centre(a) - displacement * (exponents[1] / p);
-                let carried = scalar_values(&class, &class.carried, pair, [i, j]);
+                let scalars = scalar_values(&class, [shell_a, shell_b], [i, j]);
+                let carried = if class.key.contracted {
+                    scalars
+                } else {
+                    elements = class.elements(&monomials, |s| scalars[s]);
+                    vec![1.0]
+                };
                 let bound =
                     factor / (2.0 * p).powf(0.25) * class.largest_norm(&elements, &carried, p);
                 if bound * largest < PRIMITIVE_FLOOR {
@@ -110,8 +112,6 @@ impl ShellPair {
         Self {
             shells: [s, t],
             atoms: [shell_a.atom, shell_b.atom],
-            runs: runs(&places, run_stride),
-            run_stride,
             places,
             functions,
             primitives: primitives.len(),
@@ -130,35 +130,9 @@ impl ShellPair {
             .sum()
     }
 
-    /// Whether one of the shells is on an atom that moves.
-    pub(super) fn touches(&self, moved: &[bool]) -> bool {
-        self.atoms.iter().any(|&atom| moved[atom])
-    }
-
     fn stride(&self) -> usize {
         field::SCALARS + self.class.carried()
     }
-}
-
-/// Divides places, visited every `stride`, into runs.
-fn runs(places: &[u32], stride: usize) -> Vec<Run> {
-    let mut runs: Vec<Run> = Vec::new();
-    for start in 0..stride {
-        for index in (start..places.len()).step_by(stride) {
-            let place = places[index] as usize;
-            match runs.last_mut() {
-                Some(run) if place == run.place + run.len && index >= start + stride => {
-                    run.len += 1;
-                }
-                _ => runs.push(Run {
-                    first: index,
-                    place,
-                    len: 1,
-                }),
-            }
-        }
-    }
-    runs
 }
 
 /// An upper bound of the norm of every pair of the basis, independent of where the centres are:
@@ -169,34 +143,25 @@ pub(super) fn largest_bound(basis: &Basis) -> f64 {
         .fold(0.0, f64::max)
 }
 
-/// Values of scalars for primitives i and j.
-fn scalar_values(
-    class: &PairClass,
-    scalars: &[Scalar],
-    shells: [&Shell; 2],
-    [i, j]: [usize; 2],
-) -> Vec<f64> {
+/// Values of all scalars of a class for primitives i and j.
+fn scalar_values(class: &PairClass, shells: [&Shell; 2], [i, j]: [usize; 2]) -> Vec<f64> {
     let (a, b) = (shells[0].exponents[i], shells[1].exponents[j]);
     let p = a + b;
-    let single = if class.key.contracted[0] { b } else { a };
-    let powers_of = [b / p, a / p, 0.5 / p, 0.5 / single].map(|x| powers(x, 2 * class.degree));
-    let coefficient = |shell: usize, contraction: Option<usize>, primitive: usize| {
-        contraction.map_or(1.0, |c| shells[shell].contractions[c].coefficients[primitive])
-    };
+    let degree = class.degree;
+    let [from_b, from_a, from_p] = [b / p, a / p, 0.5 / p].map(|x| powers(x, degree));
     let value = |s: &Scalar| {
-        coefficient(0, s.contraction_a, i)
-            * coefficient(1, s.contraction_b, j)
-            * powers_of[0][s.power_b]
-            * powers_of[1][s.power_a]
-            * powers_of[2][s.power_p]
-            * powers_of[3][s.power_single]
+        shells[0].contractions[s.contraction_a].coefficients[i]
+            * shells[1].contractions[s.contraction_b].coefficients[j]
+            * from_b[s.power_b]
+            * from_a[s.power_a]
+            * from_p[s.power_p]
     };
-    scalars.iter().map(value).collect()
+    class.scalars.iter().map(value).collect()
 }
 
 impl PairClass {
     /// Elements of the transformation for given monomials of AB and scalars.
-    fn elements(&self, monomials: &[f64], folded: &[f64]) -> Vec<f64> {
+    fn elements(&self, monomials: &[f64], scalar: impl Fn(usize) -> f64) -> Vec<f64> {
         let mut start = 0;
         self.term_ends
             .iter()
@@ -205,7 +170,7 @@ impl PairClass {
                 let sum = self.terms[start..end]
                     .iter()
                     .map(|t| {
-                        t.coefficient * monomials[t.monomial as usize] * folded[t.scalar as usize]
+                        t.coefficient * monomials[t.monomial as usize] * scalar(t.scalar as usize)
                     })
                     .sum();
                 start = end;
@@ -248,15 +213,6 @@ impl PairClass {
 pub(super) enum Side {
     Bra,
     Ket,
-}
-
-impl Side {
-    pub(super) fn other(self) -> Self {
-        match self {
-            Self::Bra => Self::Ket,
-            Self::Ket => Self::Bra,
-        }
-    }
 }
 
 /// Four pairs of one class in lanes, each with its own primitives, padded with zeros.

@@ -42,11 +42,7 @@ impl<const L: usize> Kernel for Primitives<'_, L> {
     fn run<V: Lanes>(self) -> usize {
         let number = |index: usize| V::load(&self.bra[index]);
         let p = number(field::EXPONENT);
-        let centre = [
-            number(field::CENTRE),
-            number(field::CENTRE + 1),
-            number(field::CENTRE + 2),
-        ];
+        let centre: [V; 3] = std::array::from_fn(|i| number(field::CENTRE + i));
         let factor = number(field::FACTOR);
         let bound = number(field::BOUND);
         let cut = V::load(self.cut);
@@ -59,11 +55,7 @@ impl<const L: usize> Kernel for Primitives<'_, L> {
                 break;
             }
             let q = number(field::EXPONENT);
-            let pq = [
-                centre[0].sub(number(field::CENTRE)),
-                centre[1].sub(number(field::CENTRE + 1)),
-                centre[2].sub(number(field::CENTRE + 2)),
-            ];
+            let pq: [V; 3] = std::array::from_fn(|i| centre[i].sub(number(field::CENTRE + i)));
             let inverse = V::splat(1.0).div(p.add(q));
             let alpha = p.mul(q).mul(inverse);
             let square = pq[0].mul_add(pq[0], pq[1].mul_add(pq[1], pq[2].mul(pq[2])));
@@ -143,31 +135,6 @@ fn boys_roots<V: Lanes, const L: usize>(
     roots
 }
 
-/// The primitive kernel of a degree known at run time only.
-#[inline(always)]
-pub(super) fn primitives<V: Lanes>(
-    degree: usize,
-    bra: &[Four],
-    ket: &[Four],
-    stride: usize,
-    cut: &Four,
-    table: &BoysTable,
-    out: &mut [Four],
-    scratch: &mut [Four],
-) -> usize {
-    macro_rules! by_degree {
-        ($($degree:literal)*) => {
-            match degree {
-                $($degree => V::call(Primitives::<$degree> {
-                    bra, ket, stride, cut, table, out, scratch,
-                }),)*
-                _ => 0,
-            }
-        };
-    }
-    by_degree!(0 1 2 3 4 5 6 7 8 9 10 11 12 13 14 15 16)
-}
-
 /// The primitive kernel of one degree as a plain function.
 pub(in crate::integrals) type PrimitiveFunction =
     fn(&[Four], &[Four], usize, &Four, &BoysTable, &mut [Four], &mut [Four]) -> usize;
@@ -192,8 +159,8 @@ fn run<const L: usize>(
     })
 }
 
-/// Primitive kernels by degree, for callers outside the vector code; derivatives need one degree more.
-pub(in crate::integrals) const PRIMITIVES: [PrimitiveFunction; 18] = [
+/// Primitive kernels by degree.
+pub(in crate::integrals) const PRIMITIVES: [PrimitiveFunction; MAX_DEGREE + 1] = [
     run::<0>, run::<1>, run::<2>, run::<3>, run::<4>, run::<5>, run::<6>, run::<7>, run::<8>,
     run::<9>, run::<10>, run::<11>, run::<12>, run::<13>, run::<14>, run::<15>, run::<16>,
     run::<17>,

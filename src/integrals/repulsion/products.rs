@@ -1,6 +1,6 @@
 //! The two kinds of small matrix product behind every quartet, on four lanes.
 
-use super::lanes::{Four, Lanes};
+use super::lanes::{Four, Kernel, Lanes};
 
 /// A contraction: out[s][n] (+)= Σ_k scalars[k][s] · values[k][n].
 ///
@@ -24,9 +24,11 @@ pub(super) struct Contraction<'a> {
     pub(super) accumulate: bool,
 }
 
-impl Contraction<'_> {
+impl Kernel for Contraction<'_> {
+    type Output = ();
+
     #[inline(always)]
-    pub(super) fn run<V: Lanes>(mut self) {
+    fn run<V: Lanes>(mut self) {
         let mut s = 0;
         while s < self.scalar_count {
             match self.scalar_count - s {
@@ -59,16 +61,17 @@ impl Contraction<'_> {
             self.tile::<V, N, S>(n, s);
             n += N;
         }
-        // `min` tells the compiler which tiles cannot occur.
-        match (self.columns - n).min(N - 1) {
-            7 => self.tile::<V, 7, S>(n, s),
-            6 => self.tile::<V, 6, S>(n, s),
-            5 => self.tile::<V, 5, S>(n, s),
-            4 => self.tile::<V, 4, S>(n, s),
-            3 => self.tile::<V, 3, S>(n, s),
-            2 => self.tile::<V, 2, S>(n, s),
-            1 => self.tile::<V, 1, S>(n, s),
-            _ => {}
+        if N > 4 && n + 4 <= self.columns {
+            self.tile::<V, 4, S>(n, s);
+            n += 4;
+        }
+        if N > 2 && n + 2 <= self.columns {
+            self.tile::<V, 2, S>(n, s);
+            n += 2;
+        }
+        while n < self.columns {
+            self.tile::<V, 1, S>(n, s);
+            n += 1;
         }
     }
 
@@ -86,14 +89,11 @@ impl Contraction<'_> {
         for k in 0..self.primitives {
             let values = &self.values[k * self.value_stride + n..][..N];
             let scalars = &self.scalars[k * self.scalar_stride + s..][..S];
-            let mut loaded = [V::zero(); N];
-            for a in 0..N {
-                loaded[a] = V::load(&values[a]);
-            }
+            let values: [V; N] = std::array::from_fn(|a| V::load(&values[a]));
             for b in 0..S {
                 let scalar = V::load(&scalars[b]);
                 for a in 0..N {
-                    sums[b][a] = loaded[a].mul_add(scalar, sums[b][a]);
+                    sums[b][a] = values[a].mul_add(scalar, sums[b][a]);
                 }
             }
         }
@@ -123,23 +123,26 @@ pub(super) struct SparseProduct<'a> {
     pub(super) out_column: usize,
 }
 
-impl SparseProduct<'_> {
+impl Kernel for SparseProduct<'_> {
+    type Output = ();
+
     #[inline(always)]
-    pub(super) fn run<V: Lanes>(mut self) {
+    fn run<V: Lanes>(mut self) {
         let mut r = 0;
         while r + 8 <= self.width {
             self.tile::<V, 8>(r);
             r += 8;
         }
-        match self.width - r {
-            7 => self.tile::<V, 7>(r),
-            6 => self.tile::<V, 6>(r),
-            5 => self.tile::<V, 5>(r),
-            4 => self.tile::<V, 4>(r),
-            3 => self.tile::<V, 3>(r),
-            2 => self.tile::<V, 2>(r),
-            1 => self.tile::<V, 1>(r),
-            _ => {}
+        if r + 4 <= self.width {
+            self.tile::<V, 4>(r);
+            r += 4;
+        }
+        if r + 2 <= self.width {
+            self.tile::<V, 2>(r);
+            r += 2;
+        }
+        if r < self.width {
+            self.tile::<V, 1>(r);
         }
     }
 }

@@ -11,19 +11,17 @@
 
 use super::class::{ClassKey, PairClass, ScalarGroup};
 use super::hermite::scratch_len;
-use super::lanes::{Four, Gather, Kernel, Lanes, dispatch};
+use super::lanes::{Four, dispatch};
 use super::pairs::PairBlock;
-use super::primitives::{field, primitives};
+use super::primitives::{PRIMITIVES, field};
 use super::products::{Contraction, SparseProduct};
 use crate::integrals::boys::{self, BoysTable};
 use crate::integrals::recurrence::{hermite_count, hermite_index, hermite_powers};
 use std::collections::HashMap;
 use std::sync::{Arc, Mutex, OnceLock, PoisonError};
 
-/// Most Hermite integrals of primitives between two contractions.
-const BATCH_NUMBERS: usize = 512;
-/// Bounds of the number of ket primitives between two contractions.
-const KET_BATCH: std::ops::RangeInclusive<usize> = 4..=36;
+/// Most ket primitives between two contractions.
+const KET_BATCH: usize = 8;
 /// Most numbers that the half-contracted integrals of one batch of bra primitives may take.
 const HALF_NUMBERS: usize = 640;
 
@@ -46,15 +44,13 @@ pub(super) struct QuartetPlan {
     /// For each ket group: where it starts among the half-contracted numbers, and how many each scalar has.
     half: Vec<(usize, usize)>,
     half_len: usize,
-    /// Ket primitives contracted together.
-    ket_batch: usize,
     /// Bra primitives contracted together.
     bra_batch: usize,
     /// Contractions of stage 3.
     steps: Vec<BraStep>,
     full_len: usize,
     /// Place among the fully contracted numbers of each (ket Hermite, bra Hermite).
-    expansion: Gather,
+    expansion: Vec<u32>,
 }
 
 /// One contraction over bra primitives: a group of bra scalars with one ket scalar.
@@ -133,12 +129,10 @@ impl QuartetPlan {
             table: boys::table(degree),
             half,
             half_len,
-            ket_batch: (BATCH_NUMBERS / hermite_count(degree))
-                .clamp(*KET_BATCH.start(), *KET_BATCH.end()),
             bra_batch: (HALF_NUMBERS / half_len).clamp(1, 8),
             steps,
             full_len,
-            expansion: Gather::new(expansion),
+            expansion,
         }
     }
 
@@ -157,7 +151,7 @@ pub(super) fn bra_first(x: &PairClass, y: &PairClass) -> bool {
             .map(|g| g.count * (hermite_count(g.high + bra.degree) - below(g.low)))
             .sum()
     };
-    let rank = |bra: &PairClass, ket: &PairClass| (bra.contracted(), cost(bra, ket));
+    let rank = |bra: &PairClass, ket: &PairClass| (bra.key.contracted, cost(bra, ket));
     (rank(x, y), &x.key) < (rank(y, x), &y.key)
 }
 
@@ -180,7 +174,7 @@ fn reserve(buffer: &mut Vec<Four>, len: usize) {
 }
 
 impl QuartetEngine {
-    /// Evaluates the integrals of four quartets, for [`Self::result`].
+    /// The integrals of four quartets: result[f · ket functions + g], one quartet in each lane.
     ///
     /// Primitives are left out as [`crate::integrals::screening`] says, with `budget` the error allowed.
     pub(super) fn evaluate(
@@ -189,147 +183,124 @@ impl QuartetEngine {
         bra: &PairBlock,
         ket: &PairBlock,
         budget: f64,
-    ) {
+    ) -> &[Four] {
         let nherm = hermite_count(plan.degree);
         let (bra_functions, ket_functions) = plan.shape();
-        let bra_hermites = plan.bra.hermites.len();
-        reserve(&mut self.hermites, plan.ket_batch * nherm);
+        let (bra_hermites, ket_hermites) = (plan.bra.hermites.len(), plan.ket.hermites.len());
+        reserve(&mut self.hermites, KET_BATCH * nherm);
         reserve(&mut self.scratch, scratch_len(plan.degree));
         reserve(&mut self.half, plan.bra_batch * plan.half_len);
         reserve(&mut self.full, plan.full_len);
-        reserve(&mut self.expanded, plan.expansion.len());
+        reserve(&mut self.expanded, bra_hermites * ket_hermites);
         reserve(&mut self.ket_done, bra_hermites * ket_functions);
         reserve(&mut self.result, bra_functions * ket_functions);
-        dispatch(Evaluation {
-            engine: self,
-            plan,
-            bra,
-            ket,
-            cut: Four([budget; 4]),
-        });
-    }
+        let cut = Four([budget; 4]);
 
-    /// What [`Self::evaluate`] found last: element f · ket functions + g, one quartet in each lane.
-    pub(super) fn result(&self, plan: &QuartetPlan) -> &[Four] {
-        let (bra_functions, ket_functions) = plan.shape();
-        &self.result[..bra_functions * ket_functions]
-    }
-}
-
-/// The evaluation of one block.
-struct Evaluation<'a> {
-    engine: &'a mut QuartetEngine,
-    plan: &'a QuartetPlan,
-    bra: &'a PairBlock,
-    ket: &'a PairBlock,
-    cut: Four,
-}
-
-impl Kernel for Evaluation<'_> {
-    type Output = ();
-
-    #[inline(always)]
-    fn run<V: Lanes>(mut self) {
-        let (plan, bra) = (self.plan, self.bra);
-        let (bra_functions, ket_functions) = plan.shape();
         let mut start = 0;
+        let mut any = false;
         while start < bra.primitives {
-            let wanted = plan.bra_batch.min(bra.primitives - start);
             let mut active = 0;
-            while active < wanted && self.half_contract::<V>(start + active, active) {
+            while active < plan.bra_batch && start + active < bra.primitives {
+                let numbers = &bra.numbers[(start + active) * bra.stride..][..bra.stride];
+                if !self.half_contract(plan, numbers, ket, active, &cut) {
+                    break;
+                }
                 active += 1;
             }
-            if active > 0 && plan.bra.contracted() {
-                self.bra_contract::<V>(start, active);
+            if active == 0 {
+                break;
             }
+            if plan.bra.key.contracted {
+                self.bra_contract(plan, bra, start, active, any);
+            }
+            any = true;
             start += active;
-            if active < wanted {
+            if active < plan.bra_batch {
                 break;
             }
         }
-        let engine = self.engine;
-        let result = &mut engine.result[..bra_functions * ket_functions];
-        if start == 0 {
+        let result = &mut self.result[..bra_functions * ket_functions];
+        if !any {
             result.fill(Four::default());
-            return;
+            return result;
         }
-        let full = if plan.bra.contracted() {
-            &engine.full
+        let full = if plan.bra.key.contracted {
+            &self.full
         } else {
-            &engine.half
+            &self.half
         };
-        plan.expansion.copy::<V>(full, &mut engine.expanded);
-        SparseProduct {
+        for (to, &from) in self.expanded.iter_mut().zip(&plan.expansion) {
+            *to = full[from as usize];
+        }
+        dispatch(SparseProduct {
             row_ends: &plan.ket.row_ends,
             columns: &plan.ket.columns,
-            elements: &self.ket.elements,
-            values: &engine.expanded,
-            width: plan.bra.hermites.len(),
-            out: &mut engine.ket_done,
+            elements: &ket.elements,
+            values: &self.expanded,
+            width: bra_hermites,
+            out: &mut self.ket_done,
             out_row: 1,
             out_column: ket_functions,
-        }
-        .run::<V>();
-        SparseProduct {
+        });
+        dispatch(SparseProduct {
             row_ends: &plan.bra.row_ends,
             columns: &plan.bra.columns,
             elements: &bra.elements,
-            values: &engine.ket_done,
+            values: &self.ket_done,
             width: ket_functions,
             out: result,
             out_row: ket_functions,
             out_column: 1,
-        }
-        .run::<V>();
+        });
+        result
     }
-}
 
-impl Evaluation<'_> {
     /// Stages 1 and 2 for one bra primitive; false when all its primitive quartets are negligible.
-    #[inline(always)]
-    fn half_contract<V: Lanes>(&mut self, primitive: usize, slot: usize) -> bool {
-        let (plan, ket) = (self.plan, self.ket);
-        let engine = &mut *self.engine;
-        let bra = &self.bra.numbers[primitive * self.bra.stride..][..self.bra.stride];
+    fn half_contract(
+        &mut self,
+        plan: &QuartetPlan,
+        bra: &[Four],
+        ket: &PairBlock,
+        slot: usize,
+        cut: &Four,
+    ) -> bool {
         let nherm = hermite_count(plan.degree);
-        let half = &mut engine.half[slot * plan.half_len..][..plan.half_len];
-        let contracted = plan.ket.contracted();
+        let primitives = PRIMITIVES[plan.degree];
+        let half = &mut self.half[slot * plan.half_len..][..plan.half_len];
+        if !plan.ket.key.contracted {
+            // The one ket primitive needs no contraction: its R are the half-contracted numbers.
+            let out = &mut half[..nherm];
+            let scratch = &mut self.scratch;
+            return primitives(bra, &ket.numbers, ket.stride, cut, plan.table, out, scratch) > 0;
+        }
         let mut k = 0;
         while k < ket.primitives {
-            let batch = plan.ket_batch.min(ket.primitives - k);
+            let batch = KET_BATCH.min(ket.primitives - k);
             let numbers = &ket.numbers[k * ket.stride..][..batch * ket.stride];
-            // The one ket primitive of an uncontracted pair needs no contraction: its R are the
-            // half-contracted numbers.
-            let out = if contracted {
-                &mut engine.hermites[..batch * nherm]
-            } else {
-                &mut half[..nherm]
-            };
-            let done = primitives::<V>(
-                plan.degree,
+            let done = primitives(
                 bra,
                 numbers,
                 ket.stride,
-                &self.cut,
+                cut,
                 plan.table,
-                out,
-                &mut engine.scratch,
+                &mut self.hermites[..batch * nherm],
+                &mut self.scratch,
             );
-            if done > 0 && contracted {
-                for (group, &(start, columns)) in plan.ket.groups.iter().zip(&plan.half) {
-                    Contraction {
-                        values: &engine.hermites[below(group.low)..],
-                        value_stride: nherm,
-                        scalars: &numbers[field::SCALARS + group.first..],
-                        scalar_stride: ket.stride,
-                        primitives: done,
-                        columns,
-                        scalar_count: group.count,
-                        out: &mut half[start..],
-                        accumulate: k > 0,
-                    }
-                    .run::<V>();
-                }
+            if done == 0 {
+                break;
+            }
+            for (group, &(start, columns)) in plan.ket.groups.iter().zip(&plan.half) {
+                dispatch(Contraction {
+                    values: &self.hermites[below(group.low)..],
+                    value_stride: nherm,
+                    scalars: &numbers[field::SCALARS + group.first..],
+                    scalar_stride: ket.stride,
+                    primitives: done,
+                    columns,
+                    scalar_count: group.count,
+                    out: &mut half[start..],
+                    accumulate: k > 0,
+                });
             }
             k += done;
             if done < batch {
@@ -340,23 +311,26 @@ impl Evaluation<'_> {
     }
 
     /// Stage 3 for `count` bra primitives from `start` on.
-    #[inline(always)]
-    fn bra_contract<V: Lanes>(&mut self, start: usize, count: usize) {
-        let bra = self.bra;
-        let scalars = &bra.numbers[start * bra.stride + field::SCALARS..];
-        for step in &self.plan.steps {
-            Contraction {
-                values: &self.engine.half[step.from..],
-                value_stride: self.plan.half_len,
-                scalars: &scalars[step.group.first..],
+    fn bra_contract(
+        &mut self,
+        plan: &QuartetPlan,
+        bra: &PairBlock,
+        start: usize,
+        count: usize,
+        accumulate: bool,
+    ) {
+        for step in &plan.steps {
+            dispatch(Contraction {
+                values: &self.half[step.from..],
+                value_stride: plan.half_len,
+                scalars: &bra.numbers[start * bra.stride + field::SCALARS + step.group.first..],
                 scalar_stride: bra.stride,
                 primitives: count,
                 columns: step.columns,
                 scalar_count: step.group.count,
-                out: &mut self.engine.full[step.to..],
-                accumulate: start > 0,
-            }
-            .run::<V>();
+                out: &mut self.full[step.to..],
+                accumulate,
+            });
         }
     }
 }
