@@ -81,9 +81,7 @@ pub fn hessian<S: Surface>(
         (0..size)
             .into_par_iter()
             .with_max_len(1)
-            .map_with(Own(workspace.clone()), |own, index| {
-                place(&mut own.0, index)
-            })
+            .map_with(workspace.clone(), place)
             .collect()
     } else {
         let mut own = workspace.clone();
@@ -123,15 +121,6 @@ pub fn hessian<S: Surface>(
     })
 }
 
-/// A workspace of each thread's own.
-struct Own<W>(W);
-
-impl<W: Clone> Clone for Own<W> {
-    fn clone(&self) -> Self {
-        Self(self.0.clone())
-    }
-}
-
 fn column<S: Surface>(
     surface: &S,
     molecule: &Molecule,
@@ -142,21 +131,39 @@ fn column<S: Surface>(
     index: usize,
 ) -> Result<Column, MinimiseError> {
     let (atom, axis) = (index / 3, index % 3);
+    // Along the displacement it is one more coordinate, in which the second point is extrapolated from the first.
+    let place = |shift: f64| -> Vec<f64> { coordinates.iter().copied().chain([shift]).collect() };
+    let (centre, first) = (place(0.0), place(displacement));
+    let mut known: Vec<(&[f64], S::Seed)> = seed
+        .map(|s| (centre.as_slice(), s.clone()))
+        .into_iter()
+        .collect();
     let mut fock_builds = 0;
     let mut at = |sign: f64| -> Result<(Vec<f64>, [f64; 3]), MinimiseError> {
         let mut positions = molecule.positions.clone();
         positions[atom][axis] += sign * displacement;
+        let points: Vec<SeedPoint<'_, S::Seed>> = known
+            .iter()
+            .map(|(coordinates, seed)| SeedPoint { coordinates, seed })
+            .collect();
         let request = PointRequest {
             positions: &positions,
-            coordinates,
-            start: seed.map_or(Start::Fresh, |seed| {
-                Start::Previous(SeedPoint { coordinates, seed })
-            }),
+            coordinates: &place(sign * displacement),
+            start: if points.is_empty() {
+                Start::Fresh
+            } else {
+                Start::Extrapolated(points)
+            },
             gradient: true,
             stability: StabilityDemand::None,
             follow: None,
         };
-        let record = surface.evaluate(&request, workspace)?.record;
+        let outcome = surface.evaluate(&request, workspace)?;
+        let record = outcome.record;
+        if let Some(seed) = outcome.seed {
+            // The centre is the nearest of both.
+            known.insert(0, (&first, seed));
+        }
         fock_builds += record.all_builds;
         if record.energy.is_none() {
             return Err(MinimiseError::NotConverged { atom });

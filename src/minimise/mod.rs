@@ -220,7 +220,7 @@ pub enum MinimiseError {
         /// bohr or radian
         coordinates: Vec<f64>,
         /// why
-        reason: crate::molecule::motion::MotionError,
+        reason: Box<crate::molecule::motion::MotionError>,
     },
     /// Arrays that do not belong together.
     #[error("{given} values where {expected} are needed")]

@@ -104,16 +104,20 @@ fn motion(
 fn place(positions: &Positions<'_>, at: &[f64]) -> Result<Vec<Vector3<f64>>, MinimiseError> {
     positions(at).map_err(|reason| MinimiseError::Path {
         coordinates: at.to_vec(),
-        reason,
+        reason: Box::new(reason),
     })
 }
 
-/// Calls the surface along a path and remembers the last solution.
+/// Solutions that the next one is extrapolated from.
+const REMEMBERED: usize = 6;
+
+/// Calls the surface along a path and remembers the last solutions.
 struct Walker<'a, 'b, S: Surface> {
     surface: &'a S,
     task: &'a PathTask<'b, S::Seed>,
     workspace: &'a mut S::Workspace,
-    last: Option<(Vec<f64>, S::Seed)>,
+    /// Solutions so far, the last one last.
+    known: Vec<(Vec<f64>, S::Seed)>,
     calls: usize,
 }
 
@@ -132,13 +136,19 @@ impl<S: Surface> Walker<'_, '_, S> {
             .zip(self.task.reported)
             .map(|(q, unit)| q * unit)
             .collect();
-        let start = match (&self.last, &self.task.seed) {
-            (Some((coordinates, seed)), _) => Start::Previous(SeedPoint { coordinates, seed }),
-            (None, Some(point)) => Start::Previous(SeedPoint {
-                coordinates: point.coordinates,
-                seed: point.seed,
-            }),
-            (None, None) => Start::Fresh,
+        let given = self.task.seed.as_ref().map(|point| SeedPoint {
+            coordinates: point.coordinates,
+            seed: point.seed,
+        });
+        let found = self
+            .known
+            .iter()
+            .map(|(coordinates, seed)| SeedPoint { coordinates, seed });
+        let points: Vec<SeedPoint<'_, S::Seed>> = given.into_iter().chain(found).collect();
+        let start = if points.is_empty() {
+            Start::Fresh
+        } else {
+            Start::Extrapolated(points)
         };
         let request = PointRequest {
             positions: &positions,
@@ -165,7 +175,10 @@ impl<S: Surface> Walker<'_, '_, S> {
             .map(|k| Ok(motion(self.task.positions, at.as_slice(), k)?.dot(&gradient)))
             .collect::<Result<Vec<f64>, MinimiseError>>()?;
         if let Some(seed) = &outcome.seed {
-            self.last = Some((told, seed.clone()));
+            self.known.push((told, seed.clone()));
+            if self.known.len() > REMEMBERED {
+                self.known.remove(0);
+            }
         }
         Ok(Visit {
             positions,
@@ -250,7 +263,7 @@ pub fn refine_on_path<S: Surface>(
         surface,
         task,
         workspace,
-        last: None,
+        known: Vec::new(),
         calls: 0,
     };
     let mut at = DVector::from_column_slice(task.start);
@@ -284,7 +297,6 @@ pub fn refine_on_path<S: Surface>(
         steps += 1;
     }
     let exact = if settings.displacement > 0.0 {
-        // The neighbours start from the point itself, which keeps both sides alike.
         Some(walker.curvature(&at, settings.displacement)?)
     } else {
         None

@@ -359,18 +359,31 @@ fn descend(
     plan: &Plan<'_>,
 ) -> Result<Solution, ScfError> {
     let left = plan.limit.saturating_sub(field.builds() + field.products());
-    let (evaluation, converged) =
-        quasi_newton::descend(field, start, &plan.thresholds, left.min(DESCENT), plan.soft)?;
-    let (evaluation, stop) = if converged {
-        (evaluation, StopReason::Converged)
-    } else {
-        second_order::minimise(field, evaluation, &plan.thresholds, plan.limit)?
-    };
+    let mut history = Extrapolation::default();
+    history.record(&start.focks, &start.errors);
+    let descent = quasi_newton::descend(
+        field,
+        start,
+        &plan.thresholds,
+        left.min(DESCENT),
+        plan.soft,
+        &mut history,
+    )?;
+    if descent.converged {
+        return Ok(Solution {
+            evaluation: descent.evaluation,
+            refined: descent.refined,
+            stop: StopReason::Converged,
+            differences: history.own().to_vec(),
+        });
+    }
+    let (evaluation, stop) =
+        second_order::minimise(field, descent.evaluation, &plan.thresholds, plan.limit)?;
     Ok(Solution {
         refined: evaluation.occupied.clone(),
         evaluation,
         stop,
-        differences: Vec::new(),
+        differences: history.own().to_vec(),
     })
 }
 

@@ -7,6 +7,7 @@
 //! neighbouring geometry where they are known: those soft modes are what makes a difficult case difficult.
 
 use super::ScfError;
+use super::diis::Extrapolation;
 use super::canonical::{Canonical, Kappa, combined, inner, scaled};
 use super::fock::{Evaluation, Field};
 use super::iteration::{self, Thresholds};
@@ -165,6 +166,18 @@ impl Frame {
     }
 }
 
+fn turned(frames: &[Frame], kappa: &[DMatrix<f64>]) -> Result<Vec<Frame>, ScfError> {
+    frames.iter().zip(kappa).map(|(f, k)| f.turned(k)).collect()
+}
+
+fn stopped(evaluation: Evaluation) -> Descent {
+    Descent {
+        refined: evaluation.occupied.clone(),
+        evaluation,
+        converged: false,
+    }
+}
+
 fn gradient(frames: &[Frame], evaluation: &Evaluation) -> Kappa {
     frames
         .iter()
@@ -173,8 +186,18 @@ fn gradient(frames: &[Frame], evaluation: &Evaluation) -> Kappa {
         .collect()
 }
 
-/// Descends from a determinant. Returns the lowest found and whether it meets the thresholds; `builds` bounds the Fock
-/// builds. `soft` are eigenvectors of the orbital Hessian of a neighbouring geometry.
+/// Where a descent ended.
+#[derive(Debug, Clone)]
+pub struct Descent {
+    /// The lowest determinant found.
+    pub evaluation: Evaluation,
+    /// Occupied orbitals one step further, without a build.
+    pub refined: Vec<DMatrix<f64>>,
+    /// Whether it meets the thresholds.
+    pub converged: bool,
+}
+
+/// Descends from a determinant; `builds` bounds the Fock builds and `history` takes in every accepted step. `soft` are eigenvectors of the orbital Hessian of a neighbouring geometry.
 ///
 /// # Errors
 /// [`ScfError::Eigenproblem`].
@@ -184,7 +207,8 @@ pub fn descend(
     thresholds: &Thresholds,
     builds: usize,
     soft: Option<&CarriedVectors>,
-) -> Result<(Evaluation, bool), ScfError> {
+    history: &mut Extrapolation,
+) -> Result<Descent, ScfError> {
     let limit = field.builds() + builds;
     let weight = field.occupation().weight();
     let orbitals = Canonical::of(field, &start)?;
@@ -203,7 +227,13 @@ pub fn descend(
     let mut trail: Vec<(f64, f64)> = Vec::new();
     loop {
         if iteration::is_converged(field, &here, last_energy, thresholds)? {
-            return Ok((here, true));
+            let step = model.direction(&slope);
+            let refined = turned(&frames, &step)?;
+            return Ok(Descent {
+                refined: refined.into_iter().map(|f| f.occupied).collect(),
+                evaluation: here,
+                converged: true,
+            });
         }
         let mut direction = model.direction(&slope);
         if inner(&direction, &slope) >= 0.0 {
@@ -214,7 +244,7 @@ pub fn descend(
         if trail.len() > WINDOW {
             let (energy, commutator) = trail[trail.len() - 1 - WINDOW];
             if energy - here.energy < LITTLE && here.commutator > 0.3 * commutator {
-                return Ok((here, false));
+                return Ok(stopped(here));
             }
         }
         let size = inner(&direction, &direction).sqrt();
@@ -224,19 +254,16 @@ pub fn descend(
         let mut accepted = false;
         for _ in 0..TRIALS {
             if field.builds() >= limit {
-                return Ok((here, false));
+                return Ok(stopped(here));
             }
             let step = scaled(&direction, length);
-            let turned = frames
-                .iter()
-                .zip(&step)
-                .map(|(f, k)| f.turned(k))
-                .collect::<Result<Vec<_>, _>>()?;
-            let trial = field.evaluate(turned.iter().map(|f| f.occupied.clone()).collect());
+            let trial_frames = turned(&frames, &step)?;
+            let occupied = trial_frames.iter().map(|f| f.occupied.clone()).collect();
+            let trial = field.evaluate(occupied);
             if !trial.energy.is_finite() {
-                return Ok((here, false));
+                return Ok(stopped(here));
             }
-            let trial_slope = gradient(&turned, &trial);
+            let trial_slope = gradient(&trial_frames, &trial);
             let change = trial.energy - here.energy;
             let rounding = change.abs() < ENERGY_NOISE && trial.commutator < here.commutator;
             if rounding || change < 1e-4 * 2.0 * weight * length * descent {
@@ -249,9 +276,10 @@ pub fn descend(
                 };
                 model.learn(step, change);
                 last_energy = Some(here.energy);
+                history.record(&trial.focks, &trial.errors);
                 here = trial;
                 slope = trial_slope;
-                frames = turned;
+                frames = trial_frames;
                 accepted = true;
                 break;
             }
@@ -267,7 +295,7 @@ pub fn descend(
             length = secant.clamp(0.1 * length, 0.6 * length);
         }
         if !accepted {
-            return Ok((here, false));
+            return Ok(stopped(here));
         }
     }
 }
