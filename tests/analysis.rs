@@ -13,6 +13,8 @@ use thalweg::surface::model::{Form, ModelSurface};
 use thalweg::units::{
     ANGSTROM_PER_BOHR, ELECTRON_MASSES_PER_U, KJ_PER_MOL_PER_HARTREE, PER_CM_PER_HARTREE,
 };
+use thalweg::vibration::Potential;
+use thalweg::vibration::elements::{Mesh, eigenvalues};
 
 /// What is asked of a fitted force constant: 0.3 % of the derivative-based one, and a spread of at most 1 %.
 const CONSTANT: f64 = 3e-3;
@@ -84,7 +86,7 @@ const HANDBOOK: [(&str, &str, [f64; 3]); 3] = [
 #[test]
 fn val_handbook_constants_come_back_from_a_scan_of_their_morse_curve() {
     for (first, second, [omega, anharmonicity, b]) in HANDBOOK {
-        let text = diatomic(first, second, 1.2, "from = 0.80\nto = 2.40\nstep = 0.02");
+        let text = diatomic(first, second, 1.2, "from = 0.50\nto = 2.40\nstep = 0.02");
         let spec = spec(&text);
         let [m1, m2] = [spec.masses_u[0], spec.masses_u[1]];
         let mu = m1 * m2 / (m1 + m2) * ELECTRON_MASSES_PER_U;
@@ -201,7 +203,8 @@ fn a_torsion_has_its_wells_barriers_terms_and_splittings() {
             .iter()
             .all(|b| b.kind == StationaryKind::Maximum)
     );
-    assert!((analysis.barriers[1].energy + 2.0 - heights[0] - 0.0).abs() < 1e-9);
+    let [trans, cis] = [0, 1].map(|b| analysis.barriers[b].energy + 2.0);
+    assert!((trans - heights[1]).abs() < 1e-9 && (cis - heights[0] - heights[1]).abs() < 1e-9);
     let fit = fit_of(&result, FitForm::Fourier);
     let thalweg::fit::Model::Fourier(series) = &fit.fit.model else {
         panic!("a series")
@@ -535,5 +538,73 @@ fn a_relaxed_scan_ends_in_the_settled_molecule() {
     for point in &result.levels[0].points {
         let [a, b] = [[0, 1], [0, 2]].map(|p| Coordinate::Bond(p).reported_value(&point.positions));
         assert!((a - b).abs() < 2e-3, "{a} {b}");
+    }
+}
+
+#[test]
+fn ammonia_inverts_through_a_double_well_on_which_two_solvers_agree() {
+    // Inversion as the torsion of one hydrogen through the plane of the others: planar at 180°.
+    let result = at_level(
+        r#"
+[molecule]
+zmatrix = """
+N
+H1 N 1.00
+H2 N 1.00 H1 107
+H3 N 1.00 H1 107 H2 115
+"""
+[[level]]
+method = "rhf"
+basis = "6-31g*"
+[[sweep]]
+dihedral = ["H1", "H2", "N", "H3"]
+moves = ["H3"]
+from = 60
+to = 300
+step = 8
+[walk]
+others = "optimised"
+[vibration]
+states = 4
+"#,
+    );
+    let analysis = &result.levels[0].analysis;
+    assert_eq!(analysis.minima.len(), 2);
+    // RHF/6-31G*: −56.184 36 hartree, barrier 6.5 kcal/mol (W. J. Hehre, L. Radom, P. v. R. Schleyer, J. A. Pople, Ab Initio
+    // Molecular Orbital Theory, 1986).
+    assert!((analysis.minima[0].energy + 56.184_36).abs() < 1e-5);
+    let [barrier] = &analysis.barriers[..] else {
+        panic!("one barrier")
+    };
+    let height = (barrier.energy - analysis.minima[0].energy) * KJ_PER_MOL_PER_HARTREE / 4.184;
+    assert!((height - 6.5).abs() < 0.05, "{height}");
+    let found = analysis.spectroscopy.as_ref().expect("states");
+    assert_eq!(found.wells, 2);
+    assert!(found.multiplets.len() >= 2, "{:?}", found.multiplets);
+    let points = &result.levels[0].points;
+    let x: Vec<f64> = points.iter().map(|p| p.values[0].to_radians()).collect();
+    let e: Vec<f64> = points
+        .iter()
+        .map(|p| p.record.energy.expect("converged"))
+        .collect();
+    let potential = Potential::of_line(&x, &e).expect("a curve");
+    let (lower, upper) = potential.range();
+    let mesh = Mesh {
+        lower,
+        upper,
+        periodic: false,
+        elements: 30,
+        order: 8,
+    };
+    let other = eigenvalues(|q| potential.energy(q), |_| found.mass.inverse, &mesh, 4)
+        .expect("eigenvalues");
+    for (pair, multiplet) in found.multiplets.iter().enumerate().take(2) {
+        let width = other[2 * pair + 1] - other[2 * pair];
+        let off = (multiplet.width - width).abs() / width;
+        assert!(off < 1e-3, "pair {pair}: {} and {width}", multiplet.width);
+        // Converged with the grid.
+        for state in &found.states[2 * pair..2 * pair + 2] {
+            assert!(state.convergence.abs() < 1e-3 * multiplet.width);
+        }
     }
 }

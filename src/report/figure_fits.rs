@@ -2,6 +2,7 @@
 
 use super::fitted::reported;
 use super::text_fits::form_words;
+use crate::job::analysis::FitResult;
 use crate::job::{JobResult, LevelResult};
 use crate::plot::{Axis, CurveFit, CurveMark, SurfaceMark, VibrationFigure, VibrationState};
 use crate::scan::StationaryKind;
@@ -10,7 +11,7 @@ use crate::spec::Spec;
 /// Points that a fitted curve is drawn with.
 const DRAWN: usize = 121;
 
-/// The fits of a curve over the windows that they used.
+/// The fits of a curve over the windows that they used; the minima of a series share one line.
 pub(super) fn fits(
     result: &JobResult,
     level: &LevelResult,
@@ -18,15 +19,30 @@ pub(super) fn fits(
     scale: f64,
 ) -> Vec<CurveFit> {
     let sweep = &result.sweeps[0];
-    level
-        .analysis
-        .fits
-        .iter()
-        .filter(|f| f.sweep == 0)
-        .map(|f| {
+    let all = &level.analysis.fits;
+    let drawn = all.iter().enumerate().filter(|(k, f)| {
+        let known = all[..*k].iter().any(|g| g.fit.model == f.fit.model);
+        f.sweep == 0 && !known
+    });
+    drawn
+        .map(|(_, f)| {
             let (from, to) = (f.fit.window.from, f.fit.window.to);
+            let own_place = |g: &&FitResult| g.fit.form == f.fit.form && g.fit.model != f.fit.model;
+            let name = if all.iter().any(|g| own_place(&g)) {
+                // Several wells, each with its own fit.
+                let unit = if sweep.unit == "angstrom" {
+                    " Å"
+                } else {
+                    "°"
+                };
+                let decimals = if sweep.unit == "angstrom" { 2 } else { 0 };
+                let place = reported(sweep, f.fit.equilibrium);
+                format!("{} at {place:.decimals$}{unit}", form_words(&f.fit))
+            } else {
+                form_words(&f.fit)
+            };
             CurveFit {
-                name: form_words(&f.fit),
+                name,
                 points: (0..DRAWN)
                     .map(|i| from + (to - from) * i as f64 / (DRAWN - 1) as f64)
                     .map(|q| (reported(sweep, q), (f.fit.model.energy(q) - zero) * scale))

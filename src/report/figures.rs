@@ -134,7 +134,8 @@ fn curve_level(spec: &Spec, result: &JobResult, level: &LevelResult) -> CurveLev
 }
 
 fn surface(spec: &Spec, result: &JobResult, level: &LevelResult) -> SurfaceFigure {
-    let zero = level.lowest().and_then(|p| p.record.energy).unwrap_or(0.0);
+    let zero = level.bottom().unwrap_or(0.0);
+    let refined = level.analysis.minima.iter().any(|m| m.interior);
     let scale = spec.output.energy.per_hartree();
     let mut energies = vec![None; result.grid.len()];
     for point in &level.points {
@@ -147,7 +148,11 @@ fn surface(spec: &Spec, result: &JobResult, level: &LevelResult) -> SurfaceFigur
         x: axis(result, 0),
         y: axis(result, 1),
         energy_unit: spec.output.energy.symbol().to_owned(),
-        zero: "the lowest point of the grid".to_owned(),
+        zero: if refined {
+            "the lowest minimum".to_owned()
+        } else {
+            "the lowest point of the grid".to_owned()
+        },
         x_values: result.sweeps[0].values.clone(),
         y_values: result.sweeps[1].values.clone(),
         energies,

@@ -30,8 +30,12 @@ pub fn render(result: &JobResult) -> Vec<u8> {
     // Writing to memory cannot fail, and every row has as many fields as the header.
     let _ = writer.write_record(HEADER);
     for level in &result.levels {
-        for fit in &level.analysis.fits {
-            for row in rows(&result.sweeps[fit.sweep], fit, &level.name) {
+        for (k, fit) in level.analysis.fits.iter().enumerate() {
+            // All minima of a series share its terms.
+            let known = level.analysis.fits[..k]
+                .iter()
+                .any(|f| f.sweep == fit.sweep && f.fit.model == fit.fit.model);
+            for row in rows(&result.sweeps[fit.sweep], fit, &level.name, !known) {
                 let _ = writer.write_record(row);
             }
         }
@@ -44,7 +48,12 @@ pub fn render(result: &JobResult) -> Vec<u8> {
     writer.into_inner().unwrap_or_default()
 }
 
-fn rows(sweep: &SweepResult, entry: &FitResult, level: &str) -> Vec<[String; 12]> {
+fn rows(
+    sweep: &SweepResult,
+    entry: &FitResult,
+    level: &str,
+    with_terms: bool,
+) -> Vec<[String; 12]> {
     let fit = &entry.fit;
     let atoms: Vec<String> = entry.coordinates.iter().map(|c| c.join(" ")).collect();
     let row = |term: String,
@@ -83,7 +92,7 @@ fn rows(sweep: &SweepResult, entry: &FitResult, level: &str) -> Vec<[String; 12]
             ));
         }
     }
-    if let Model::Fourier(series) = &fit.model {
+    if let (Model::Fourier(series), true) = (&fit.model, with_terms) {
         for term in series.terms() {
             for (unit, scale) in [
                 ("kj_per_mol", KJ_PER_MOL_PER_HARTREE),

@@ -40,8 +40,12 @@ pub(super) fn write(
             let _ = writeln!(text, "  {height:.3} {} above the lowest", unit.symbol());
         }
     }
-    for fit in &analysis.fits {
-        fit_lines(text, &result.sweeps[fit.sweep], fit);
+    for (k, fit) in analysis.fits.iter().enumerate() {
+        // All minima of a series share its terms.
+        let known = analysis.fits[..k]
+            .iter()
+            .any(|f| f.sweep == fit.sweep && f.fit.model == fit.fit.model);
+        fit_lines(text, &result.sweeps[fit.sweep], fit, !known);
     }
     if let Some(field) = &analysis.force_field {
         force_field(text, result, field);
@@ -142,7 +146,7 @@ fn digits(value: f64) -> String {
     format!("{value:.decimals$}")
 }
 
-fn fit_lines(text: &mut String, sweep: &SweepResult, entry: &FitResult) {
+fn fit_lines(text: &mut String, sweep: &SweepResult, entry: &FitResult, with_terms: bool) {
     let fit = &entry.fit;
     let names: Vec<String> = entry.coordinates.iter().map(|c| c.join("–")).collect();
     let decimals = if sweep.unit == "angstrom" { 5 } else { 3 };
@@ -174,7 +178,7 @@ fn fit_lines(text: &mut String, sweep: &SweepResult, entry: &FitResult) {
     if let Some(check) = &fit.derivative_check {
         let _ = writeln!(text, "  {}", check.verdict.text);
     }
-    if let Model::Fourier(series) = &fit.model {
+    if let (Model::Fourier(series), true) = (&fit.model, with_terms) {
         for term in series.terms() {
             let kj = term.height * crate::units::KJ_PER_MOL_PER_HARTREE;
             if kj >= 5e-4 {

@@ -112,6 +112,10 @@ fn reason(error: &FitError, sweep: &Sweep) -> String {
                 sweep.motion.coordinate.to_reported(*at)
             )
         }
+        FitError::NotAllRound { span, .. } => format!(
+            "points over {:.1}° do not go round the circle",
+            span.to_degrees()
+        ),
         other => other.to_string(),
     }
 }
@@ -147,9 +151,21 @@ fn settings(material: &Material<'_>, wanted: &FitSpec, sweep: &Sweep, line: &Lin
             (FitWindow::Within(_), Some(half_width)) => Window::Within { half_width },
             (FitWindow::Within(_), None) => default.window,
         },
-        noise_hartree: material.spec.scf.energy,
+        noise_hartree: noise(material),
         extrema: line.settings,
         ..default
+    }
+}
+
+/// What the energies of a relaxed scan scatter by, hartree: the optimisation ends when a step promises less than 1e-6, and
+/// the last one as a rule leaves a fiftieth of that.
+const RELAXED_NOISE: f64 = 2e-8;
+
+/// Scatter of the energies, hartree.
+pub(super) fn noise(material: &Material<'_>) -> f64 {
+    match material.path_kind() {
+        PathKind::Rigid => material.spec.scf.energy,
+        PathKind::Relaxed => material.spec.scf.energy.max(RELAXED_NOISE),
     }
 }
 

@@ -104,7 +104,7 @@ fn force_field(
     analysis: &mut LevelAnalysis,
 ) {
     let settings = SurfaceSettings {
-        noise_hartree: material.spec.scf.energy,
+        noise_hartree: fits::noise(material),
         ..SurfaceSettings::default()
     };
     let field = match quadratic_field(&axes[0], &axes[1], energies, &settings) {
