@@ -4,7 +4,7 @@ use super::RepulsionSettings;
 use super::class::{ClassKey, PairClass};
 use super::lanes::Four;
 use super::pairs::{PairBlock, ShellPair, Side, largest_bound};
-use super::quartets::{QuartetEngine, QuartetPlan, bra_first};
+use super::quartets::{QuartetEngine, QuartetPlan};
 use crate::basis::Basis;
 use rayon::prelude::*;
 use std::collections::{BTreeMap, HashMap};
@@ -16,10 +16,6 @@ use std::sync::Arc;
 const QUARTETS_PER_TASK: usize = 4096;
 /// Blocks of left-over quartets in one task.
 const LEFT_BLOCKS_PER_TASK: usize = 32;
-/// Groups of at least this many pairs are divided by number of primitives, so that the lanes of a
-/// block have equally much to do.
-const LARGE_GROUP: usize = 48;
-
 /// All shell pairs of a basis at one geometry.
 #[derive(Debug, Clone)]
 pub(super) struct PairSet {
@@ -28,7 +24,8 @@ pub(super) struct PairSet {
     largest: f64,
 }
 
-/// Pairs of one class, in the order of the pairs.
+/// Pairs of one class, by their later shell, and those with one later shell by falling number of
+/// primitives: the lanes of a block then have about equally much to do.
 #[derive(Debug)]
 struct Group {
     class: Arc<PairClass>,
@@ -121,26 +118,25 @@ impl PairSet {
             let key = (&pair.class.key, pair.touches(moved));
             by_class.entry(key).or_default().push(i);
         }
-        let mut groups = Vec::new();
-        for ((_, moved), members) in by_class {
-            let large = members.len() >= LARGE_GROUP;
-            let mut divided: BTreeMap<u32, Vec<usize>> = BTreeMap::new();
-            for i in members {
-                let count = self.pairs[i].primitives.max(1);
-                let part = if large { count.ilog2() } else { 0 };
-                divided.entry(part).or_default().push(i);
-            }
-            groups.extend(divided.into_values().map(|members| Group {
-                class: Arc::clone(&self.pairs[members[0]].class),
-                moved,
-                largest_norm: members
-                    .iter()
-                    .map(|&i| self.pairs[i].norm)
-                    .fold(0.0, f64::max),
-                members,
-                blocks: [Vec::new(), Vec::new()],
-            }));
-        }
+        let mut groups: Vec<Group> = by_class
+            .into_iter()
+            .map(|((_, moved), mut members)| {
+                members.sort_by_key(|&i| {
+                    let pair = &self.pairs[i];
+                    (pair.shells[0], std::cmp::Reverse(pair.primitives), i)
+                });
+                Group {
+                    class: Arc::clone(&self.pairs[members[0]].class),
+                    moved,
+                    largest_norm: members
+                        .iter()
+                        .map(|&i| self.pairs[i].norm)
+                        .fold(0.0, f64::max),
+                    members,
+                    blocks: [Vec::new(), Vec::new()],
+                }
+            })
+            .collect();
         groups.par_iter_mut().for_each(|group| {
             group.blocks = [Side::Bra, Side::Ket].map(|side| {
                 group
@@ -182,7 +178,12 @@ impl PairSet {
         }
         let meetings: Vec<Vec<Meeting>> = classes
             .iter()
-            .map(|outer| groups.iter().map(|g| Meeting::of(outer, &g.class)).collect())
+            .map(|outer| {
+                groups
+                    .iter()
+                    .map(|g| Meeting::of(outer, &g.class))
+                    .collect()
+            })
             .collect();
         let walk = Walk {
             set: self,
@@ -236,18 +237,13 @@ impl PairSet {
 
 impl Meeting {
     fn of(outer: &Arc<PairClass>, inner: &Arc<PairClass>) -> Self {
-        let outer_is_bra = outer.key == inner.key || bra_first(outer, inner);
-        if outer_is_bra {
-            Self {
-                plan: QuartetPlan::get(outer, inner),
-                side: Side::Ket,
-            }
+        let plan = QuartetPlan::get(outer, inner);
+        let side = if Arc::ptr_eq(&plan.bra, outer) {
+            Side::Ket
         } else {
-            Self {
-                plan: QuartetPlan::get(inner, outer),
-                side: Side::Bra,
-            }
-        }
+            Side::Bra
+        };
+        Self { plan, side }
     }
 }
 
@@ -291,9 +287,19 @@ impl Walker {
             if !(moved || group.moved) {
                 continue;
             }
-            let members = &group.members[..group.members.partition_point(|&i| i <= outer)];
+            // Pairs with an earlier first shell all are earlier pairs; those with the same may be.
+            let shell = pair.shells[0];
+            let first = |i: usize| pairs[i].shells[0];
+            let earlier = group.members.partition_point(|&i| first(i) < shell);
+            let members = &group.members[..earlier];
+            let same = group.members[earlier..]
+                .iter()
+                .copied()
+                .take_while(|&i| first(i) == shell)
+                .filter(|&i| i <= outer);
             if sink.largest_weight() * pair.norm * group.largest_norm < walk.threshold {
-                members.iter().for_each(|&i| sink.skip(pair, &pairs[i]));
+                let all = members.iter().copied().chain(same);
+                all.for_each(|i| sink.skip(pair, &pairs[i]));
                 continue;
             }
             let meeting = &walk.meetings[class][index];
@@ -303,8 +309,7 @@ impl Walker {
             for (four, block) in fours.zip(blocks) {
                 let inner = [0, 1, 2, 3].map(|l| &pairs[four[l]]);
                 let weights = inner.map(|i| sink.weight(pair, i));
-                let kept =
-                    |l: usize| weights[l] * pair.norm * inner[l].norm >= walk.threshold;
+                let kept = |l: usize| weights[l] * pair.norm * inner[l].norm >= walk.threshold;
                 if (0..4).all(kept) {
                     let weight = weights.into_iter().fold(0.0, f64::max);
                     let outer_block = &self.outer_blocks[1 - meeting.side as usize];
@@ -313,26 +318,26 @@ impl Walker {
                     meeting.hand_over(engine, &[pair; 4], &inner, sink);
                 } else {
                     for l in 0..4 {
-                        if kept(l) {
-                            self.queue.push(four[l]);
-                        } else {
+                        if !kept(l) {
                             sink.skip(pair, inner[l]);
+                            continue;
                         }
-                    }
-                    if self.queue.len() >= 4 {
-                        self.run_queue(walk, meeting, pair, sink);
+                        self.queue.push(four[l]);
+                        if self.queue.len() == 4 {
+                            self.run_queue(walk, meeting, pair, sink);
+                        }
                     }
                 }
             }
-            for &i in rest {
+            for i in rest.iter().copied().chain(same) {
                 if sink.weight(pair, &pairs[i]) * pair.norm * pairs[i].norm >= walk.threshold {
                     self.queue.push(i);
+                    if self.queue.len() == 4 {
+                        self.run_queue(walk, meeting, pair, sink);
+                    }
                 } else {
                     sink.skip(pair, &pairs[i]);
                 }
-            }
-            if self.queue.len() >= 4 {
-                self.run_queue(walk, meeting, pair, sink);
             }
             left.extend(self.queue.drain(..).map(|inner| {
                 let (bra, ket) = match meeting.side {
@@ -356,9 +361,8 @@ impl Walker {
         pair: &ShellPair,
         sink: &mut impl QuartetSink,
     ) {
-        let from = self.queue.len() - 4;
-        let inner = [0, 1, 2, 3].map(|l| &walk.set.pairs[self.queue[from + l]]);
-        self.queue.truncate(from);
+        let inner = [0, 1, 2, 3].map(|l| &walk.set.pairs[self.queue[l]]);
+        self.queue.clear();
         let weight = inner
             .iter()
             .map(|i| sink.weight(pair, i))
@@ -366,7 +370,12 @@ impl Walker {
         let block = &mut self.mixed_blocks[0];
         block.pack(inner, meeting.side);
         let outer_block = &self.outer_blocks[1 - meeting.side as usize];
-        meeting.evaluate(&mut self.engine, outer_block, block, walk.threshold / weight);
+        meeting.evaluate(
+            &mut self.engine,
+            outer_block,
+            block,
+            walk.threshold / weight,
+        );
         meeting.hand_over(&self.engine, &[pair; 4], &inner, sink);
     }
 
@@ -435,8 +444,11 @@ impl Walk<'_> {
             first_seen.entry(plan(q)).or_insert(next);
         }
         left.sort_by_cached_key(|q| {
+            // Which pair is the later one matters to those who store the integrals.
+            let (bra, ket) = (&self.set.pairs[q.bra], &self.set.pairs[q.ket]);
+            let order = bra.shells[0].cmp(&ket.shells[0]);
             let counts = (primitives(q.bra), primitives(q.ket));
-            (first_seen[&plan(q)], counts, q.bra, q.ket)
+            (first_seen[&plan(q)], order, counts, q.bra, q.ket)
         });
         let blocks: Vec<&[LeftOver]> = left
             .chunk_by(|x, y| plan(x) == plan(y))
@@ -450,7 +462,8 @@ impl Walk<'_> {
             .enumerate()
             .for_each_init(Walker::default, |walker, (first, sink)| {
                 for task in tasks.iter().skip(first).step_by(count) {
-                    task.iter().for_each(|four| walker.run_mixed(self, four, sink));
+                    task.iter()
+                        .for_each(|four| walker.run_mixed(self, four, sink));
                 }
             });
         sinks
@@ -474,11 +487,11 @@ fn set_norms(mut pairs: Vec<&mut ShellPair>) {
             let plan = QuartetPlan::get(class, class);
             let lanes = [0, 1, 2, 3].map(|l: usize| &*four[l.min(four.len() - 1)]);
             let [bra, ket] = &mut walker.mixed_blocks;
-        bra.pack(lanes, Side::Bra);
-        ket.pack(lanes, Side::Ket);
-        walker.engine.evaluate(&plan, bra, ket, 0.0);
-        let result = walker.engine.result(&plan);
-        let functions = class.functions.len();
+            bra.pack(lanes, Side::Bra);
+            ket.pack(lanes, Side::Ket);
+            walker.engine.evaluate(&plan, bra, ket, 0.0);
+            let result = walker.engine.result(&plan);
+            let functions = class.functions.len();
             let norms: [f64; 4] = std::array::from_fn(|l| {
                 (0..functions)
                     .map(|f| result[f * functions + f].0[l])

@@ -21,10 +21,13 @@ pub(super) struct Four(pub(super) [f64; 4]);
 
 /// Arithmetic on four lanes at once.
 pub(super) trait Lanes: Copy {
+    /// Whether straight code and large register tiles pay: not where four lanes are more than one
+    /// register, and the compiler would need long for it.
+    const WIDE: bool;
     fn load(from: &Four) -> Self;
     fn store(self, to: &mut Four);
     fn splat(value: f64) -> Self;
-    fn from_array(values: [f64; 4]) -> Self;
+    fn from_array(values: &[f64; 4]) -> Self;
     fn to_array(self) -> [f64; 4];
     /// Writes four doubles anywhere.
     ///
@@ -98,6 +101,7 @@ impl Portable {
 }
 
 impl Lanes for Portable {
+    const WIDE: bool = false;
     #[inline(always)]
     fn load(from: &Four) -> Self {
         Self(from.0)
@@ -111,8 +115,8 @@ impl Lanes for Portable {
         Self([value; 4])
     }
     #[inline(always)]
-    fn from_array(values: [f64; 4]) -> Self {
-        Self(values)
+    fn from_array(values: &[f64; 4]) -> Self {
+        Self(*values)
     }
     #[inline(always)]
     fn to_array(self) -> [f64; 4] {
@@ -207,6 +211,7 @@ mod avx2 {
     pub(super) struct Avx2(__m256d);
 
     impl Lanes for Avx2 {
+        const WIDE: bool = true;
         #[inline(always)]
         fn load(from: &Four) -> Self {
             // SAFETY: features as said at the type; `Four` is 32 bytes, aligned to 32.
@@ -223,7 +228,7 @@ mod avx2 {
             Self(unsafe { _mm256_set1_pd(value) })
         }
         #[inline(always)]
-        fn from_array(values: [f64; 4]) -> Self {
+        fn from_array(values: &[f64; 4]) -> Self {
             // SAFETY: features as said at the type; four doubles are read.
             Self(unsafe { _mm256_loadu_pd(values.as_ptr()) })
         }
@@ -364,10 +369,6 @@ impl Gather {
         Self { index, needed }
     }
 
-    pub(super) fn len(&self) -> usize {
-        self.index.len()
-    }
-
     /// to[i] = from[index[i]]
     ///
     /// # Panics
@@ -431,22 +432,46 @@ impl Kernel for Scatter<'_> {
             return;
         }
         assert!((row_count - 1) * row_stride + last_value < self.values.len());
-        for r in 0..row_count {
-            let mut starts = [0; 4];
-            for lane in 0..self.lanes {
-                starts[lane] = pair_count(self.rows[lane][r] as usize);
+        // SAFETY: all places and all indices into `values` were checked just now, by the largest; places
+        // are disjoint between threads.
+        unsafe {
+            if self.lanes == 4 {
+                self.write::<V, 4>();
+            } else {
+                for lane in 0..self.lanes {
+                    self.write_lane(lane);
+                }
+            }
+        }
+    }
+}
+
+impl Scatter<'_> {
+    /// # Safety
+    /// All places must be inside the list, and all values inside `values`.
+    #[inline(always)]
+    unsafe fn write<V: Lanes, const LANES: usize>(&self) {
+        let [row_stride, column_stride] = self.strides;
+        let step = self.run_stride * column_stride;
+        for r in 0..self.rows[0].len() {
+            let mut starts = [self.list.start; LANES];
+            for lane in 0..LANES {
+                // SAFETY: promised by the caller.
+                unsafe {
+                    let row = *self.rows[lane].get_unchecked(r) as usize;
+                    starts[lane] = starts[lane].add(pair_count(row));
+                }
             }
             for k in 0..self.runs[0].len() {
                 let Run { first, len, .. } = self.runs[0][k];
                 let mut value = r * row_stride + first * column_stride;
                 let mut places = starts;
-                for lane in 0..self.lanes {
-                    places[lane] += self.runs[lane][k].place;
-                }
                 let mut left = len;
-                // SAFETY: all places and all indices into `values` were checked above, by the largest;
-                // places are disjoint between threads.
+                // SAFETY: promised by the caller.
                 unsafe {
+                    for lane in 0..LANES {
+                        places[lane] = places[lane].add(self.runs[lane].get_unchecked(k).place);
+                    }
                     while left >= 4 {
                         let square = [
                             V::load(self.values.get_unchecked(value)),
@@ -455,22 +480,41 @@ impl Kernel for Scatter<'_> {
                             V::load(self.values.get_unchecked(value + 3 * step)),
                         ];
                         let rows = V::transposed_square(square);
-                        for lane in 0..self.lanes {
-                            let to = self.list.start.add(places[lane]).cast::<[f64; 4]>();
-                            rows[lane].write(to);
-                            places[lane] += 4;
+                        for lane in 0..LANES {
+                            rows[lane].write(places[lane].cast::<[f64; 4]>());
+                            places[lane] = places[lane].add(4);
                         }
                         value += 4 * step;
                         left -= 4;
                     }
                     while left > 0 {
                         let from = self.values.get_unchecked(value);
-                        for lane in 0..self.lanes {
-                            *self.list.start.add(places[lane]) = from.0[lane];
-                            places[lane] += 1;
+                        for lane in 0..LANES {
+                            *places[lane] = from.0[lane];
+                            places[lane] = places[lane].add(1);
                         }
                         value += step;
                         left -= 1;
+                    }
+                }
+            }
+        }
+    }
+
+    /// # Safety
+    /// As for [`Self::write`].
+    unsafe fn write_lane(&self, lane: usize) {
+        let [row_stride, column_stride] = self.strides;
+        let step = self.run_stride * column_stride;
+        for (r, &row) in self.rows[lane].iter().enumerate() {
+            for run in self.runs[lane] {
+                let value = r * row_stride + run.first * column_stride;
+                let place = pair_count(row as usize) + run.place;
+                for i in 0..run.len {
+                    // SAFETY: promised by the caller.
+                    unsafe {
+                        let value = self.values.get_unchecked(value + i * step).0[lane];
+                        *self.list.start.add(place + i) = value;
                     }
                 }
             }
@@ -516,7 +560,8 @@ impl<'a> SharedList<'a> {
         lane: usize,
         strides: [usize; 2],
     ) {
-        let (Some(&last_row), Some(&last_column)) = (rows.iter().max(), columns.iter().max()) else {
+        let (Some(&last_row), Some(&last_column)) = (rows.iter().max(), columns.iter().max())
+        else {
             return;
         };
         assert!(pair_count(last_row as usize) + (last_column as usize) < self.len);

@@ -165,18 +165,23 @@ impl QuartetSink for ListSink<'_> {
         let width = ket[0].places.len();
         let lanes = bra.len();
         let all = |order: Ordering| {
-            let mut orders = bra.iter().zip(ket).map(|(b, k)| b.shells[0].cmp(&k.shells[0]));
+            let mut orders = bra
+                .iter()
+                .zip(ket)
+                .map(|(b, k)| b.shells[0].cmp(&k.shells[0]));
             orders.all(|o| o == order)
         };
-        let (rows, columns, strides) = if all(Ordering::Greater) {
-            (bra, ket, [width, 1])
+        let sides = if all(Ordering::Greater) {
+            Some((bra, ket, [width, 1]))
+        } else if all(Ordering::Less) {
+            Some((ket, bra, [1, width]))
         } else {
-            (ket, bra, [1, width])
+            None
         };
         // Pairs of one class have the same runs if their shells come in the same order.
         let order = |c: &ShellPair| (c.run_stride, c.runs.len());
-        let alike = columns.iter().all(|c| order(c) == order(columns[0]));
-        if alike && (strides[1] == 1 || all(Ordering::Less)) {
+        let alike = |columns: &[&ShellPair]| columns.iter().all(|c| order(c) == order(columns[0]));
+        if let Some((rows, columns, strides)) = sides.filter(|(_, columns, _)| alike(columns)) {
             let lane = |l: usize| l.min(lanes - 1);
             dispatch(Scatter {
                 list: self.list,

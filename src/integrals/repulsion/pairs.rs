@@ -1,7 +1,7 @@
 //! Shell pairs prepared once per geometry, and packed four at a time into lanes.
 
 use super::class::{ClassKey, PairClass, Scalar, ShellType};
-use super::lanes::{Four, Run};
+use super::lanes::{Four, Kernel, Lanes, Run, dispatch};
 use super::primitives::field;
 use crate::basis::{Basis, Shell};
 use crate::integrals::recurrence::{hermite_count, hermite_powers};
@@ -85,7 +85,10 @@ impl ShellPair {
         };
         // What is folded depends on the exponents of single primitives only: any primitive will do.
         let pair = [shell_a, shell_b];
-        let elements = class.elements(&monomials, &scalar_values(&class, &class.folded, pair, [0, 0]));
+        let elements = class.elements(
+            &monomials,
+            &scalar_values(&class, &class.folded, pair, [0, 0]),
+        );
         let mut primitives = Vec::new();
         for i in 0..shell_a.exponents.len() {
             for j in 0..shell_b.exponents.len() {
@@ -181,7 +184,9 @@ fn scalar_values(
     let single = if class.key.contracted[0] { b } else { a };
     let powers_of = [b / p, a / p, 0.5 / p, 0.5 / single].map(|x| powers(x, 2 * class.degree));
     let coefficient = |shell: usize, contraction: Option<usize>, primitive: usize| {
-        contraction.map_or(1.0, |c| shells[shell].contractions[c].coefficients[primitive])
+        contraction.map_or(1.0, |c| {
+            shells[shell].contractions[c].coefficients[primitive]
+        })
     };
     let value = |s: &Scalar| {
         coefficient(0, s.contraction_a, i)
@@ -283,8 +288,17 @@ impl PairBlock {
         self.numbers.clear();
         self.numbers
             .resize(self.primitives * stride, Four::default());
+        let mut shortest = self.numbers.len();
+        for pair in pairs {
+            shortest = shortest.min(pair.numbers.len());
+        }
+        dispatch(Interleave {
+            from: pairs.map(|p| &p.numbers[..shortest]),
+            to: &mut self.numbers[..shortest],
+        });
         for (lane, pair) in pairs.iter().enumerate() {
-            for (to, from) in self.numbers.iter_mut().zip(&pair.numbers) {
+            let rest = self.numbers[shortest..].iter_mut();
+            for (to, from) in rest.zip(&pair.numbers[shortest..]) {
                 to.0[lane] = *from;
             }
             let bounds = field::BOUND..;
@@ -311,15 +325,50 @@ impl PairBlock {
         }
         self.elements.clear();
         self.elements.resize(class.columns.len(), Four::default());
-        for (lane, pair) in pairs.iter().enumerate() {
-            for (to, from) in self.elements.iter_mut().zip(&pair.elements) {
-                to.0[lane] = *from;
-            }
-        }
+        dispatch(Interleave {
+            from: pairs.map(|p| p.elements.as_slice()),
+            to: &mut self.elements,
+        });
         if side == Side::Ket {
             for (element, sign) in self.elements.iter_mut().zip(&class.ket_signs) {
                 element.0.iter_mut().for_each(|e| *e *= sign);
             }
+        }
+    }
+}
+
+/// Four lists of one length become one list of lanes.
+struct Interleave<'a> {
+    from: [&'a [f64]; 4],
+    to: &'a mut [Four],
+}
+
+impl Kernel for Interleave<'_> {
+    type Output = ();
+
+    #[inline(always)]
+    fn run<V: Lanes>(self) {
+        let count = self.to.len();
+        let [a, b, c, d] = self.from;
+        let (a, b, c, d) = (&a[..count], &b[..count], &c[..count], &d[..count]);
+        let (a_fours, a_rest) = a.as_chunks::<4>();
+        let (b_fours, b_rest) = b.as_chunks::<4>();
+        let (c_fours, c_rest) = c.as_chunks::<4>();
+        let (d_fours, d_rest) = d.as_chunks::<4>();
+        let (to_fours, to_rest) = self.to.as_chunks_mut::<4>();
+        for i in 0..to_fours.len() {
+            let square = V::transposed_square([
+                V::from_array(&a_fours[i]),
+                V::from_array(&b_fours[i]),
+                V::from_array(&c_fours[i]),
+                V::from_array(&d_fours[i]),
+            ]);
+            for (to, column) in to_fours[i].iter_mut().zip(square) {
+                column.store(to);
+            }
+        }
+        for (i, to) in to_rest.iter_mut().enumerate() {
+            to.0 = [a_rest[i], b_rest[i], c_rest[i], d_rest[i]];
         }
     }
 }

@@ -1,6 +1,6 @@
 //! Primitive quartets: geometry, Boys functions and Hermite Coulomb integrals on four lanes.
 
-use super::hermite::{MAX_DEGREE, hermite_coulomb};
+use super::hermite::{Looped, MAX_DEGREE, Recursion, Unrolled, work_elements};
 use super::lanes::{Four, Kernel, Lanes};
 use crate::integrals::boys::{BoysTable, CELLS_PER_UNIT};
 use crate::integrals::recurrence::hermite_count;
@@ -20,7 +20,8 @@ pub(super) mod field {
 }
 
 /// One bra primitive with a run of ket primitives.
-pub(super) struct Primitives<'a, const L: usize> {
+pub(super) struct Primitives<'a, R> {
+    pub(super) recursion: R,
     /// Numbers of the bra primitive.
     pub(super) bra: &'a [Four],
     /// Numbers of the ket primitives, `stride` for each.
@@ -34,7 +35,7 @@ pub(super) struct Primitives<'a, const L: usize> {
     pub(super) scratch: &'a mut [Four],
 }
 
-impl<const L: usize> Kernel for Primitives<'_, L> {
+impl<R: Recursion> Kernel for Primitives<'_, R> {
     /// Number of ket primitives done: it stops at the first that is negligible in all lanes.
     type Output = usize;
 
@@ -50,9 +51,16 @@ impl<const L: usize> Kernel for Primitives<'_, L> {
         let factor = number(field::FACTOR);
         let bound = number(field::BOUND);
         let cut = V::load(self.cut);
+        let degree = self.recursion.degree();
+        let stage_len = stage_len(degree);
+        let (stages, scratch) = self
+            .scratch
+            .split_at_mut(self.scratch.len() - work_elements(degree));
+        // Two loops instead of one: each body is a long chain of dependent operations, and the
+        // processor overlaps neighbouring bodies only while they are short.
         let mut done = 0;
-        let per_primitive = self.out.chunks_exact_mut(const { hermite_count(L) });
-        for (ket, out) in self.ket.chunks_exact(self.stride).zip(per_primitive) {
+        let kets = self.ket.chunks_exact(self.stride);
+        for (ket, stage) in kets.zip(stages.chunks_exact_mut(stage_len)) {
             let number = |index: usize| V::load(&ket[index]);
             let kept = bound.mul(number(field::BOUND)).at_least(cut);
             if kept.count_set() == 0 {
@@ -71,25 +79,43 @@ impl<const L: usize> Kernel for Primitives<'_, L> {
                 .mul(number(field::FACTOR))
                 .mul(inverse.sqrt())
                 .only(kept);
-            let roots = boys_roots::<V, L>(
-                self.table,
-                alpha.mul(square),
-                alpha.mul(V::splat(-2.0)),
-                prefactor,
-            );
-            hermite_coulomb::<V, L>(&roots, &pq, out, self.scratch);
+            let power = alpha.mul(V::splat(-2.0));
+            let roots = boys_roots::<V>(degree, self.table, alpha.mul(square), power, prefactor);
+            for (to, from) in stage.iter_mut().zip(pq.iter().chain(&roots[..=degree])) {
+                from.store(to);
+            }
             done += 1;
+        }
+        let outs = self.out.chunks_exact_mut(hermite_count(degree));
+        for (stage, out) in stages.chunks_exact(stage_len).zip(outs).take(done) {
+            let pq = [V::load(&stage[0]), V::load(&stage[1]), V::load(&stage[2])];
+            let mut roots = [V::zero(); MAX_DEGREE + 1];
+            for (root, from) in roots[..=degree].iter_mut().zip(&stage[3..]) {
+                *root = V::load(from);
+            }
+            self.recursion.run::<V>(&roots, &pq, out, scratch);
         }
         done
     }
 }
 
-/// prefactor · power^m · F_m(x) for m = 0 … L.
+/// Vector PQ and the roots of one primitive quartet.
+const fn stage_len(degree: usize) -> usize {
+    degree + 4
+}
+
+/// Scratch that [`primitives`] needs for `count` ket primitives at once.
+pub(super) const fn scratch_len(degree: usize, count: usize) -> usize {
+    count * stage_len(degree) + work_elements(degree)
+}
+
+/// prefactor · power^m · F_m(x) for m = 0 … degree.
 ///
 /// What a lane gets does not depend on the other lanes: each value comes from the table or from the
 /// asymptotic form by its own x alone, so that a quartet has the same bits in any company.
 #[inline(always)]
-fn boys_roots<V: Lanes, const L: usize>(
+fn boys_roots<V: Lanes>(
+    degree: usize,
     table: &BoysTable,
     x: V,
     power: V,
@@ -106,7 +132,12 @@ fn boys_roots<V: Lanes, const L: usize>(
             .truncate();
         let d = cell.mul_add(V::splat(-1.0 / CELLS_PER_UNIT), x);
         let exponential = {
-            let start = V::from_array(cells.map(|c| table.exponentials[c]));
+            let start = V::from_array(&[
+                table.exponentials[cells[0]],
+                table.exponentials[cells[1]],
+                table.exponentials[cells[2]],
+                table.exponentials[cells[3]],
+            ]);
             let p = &table.exponential;
             let mut sum = V::splat(p[7]);
             for k in (0..7).rev() {
@@ -114,14 +145,19 @@ fn boys_roots<V: Lanes, const L: usize>(
             }
             start.mul(sum)
         };
-        let polynomial = V::transposed(cells.map(|c| &table.cells[c]));
+        let polynomial = V::transposed([
+            &table.cells[cells[0]],
+            &table.cells[cells[1]],
+            &table.cells[cells[2]],
+            &table.cells[cells[3]],
+        ]);
         let mut sum = polynomial[7];
         for k in (0..7).rev() {
             sum = sum.mul_add(d, polynomial[k]);
         }
-        roots[L] = sum;
+        roots[degree] = sum;
         let twice = x.add(x);
-        for m in (0..L).rev() {
+        for m in (0..degree).rev() {
             let next = twice.mul_add(roots[m + 1], exponential);
             roots[m] = next.mul(V::splat(1.0 / (2 * m + 1) as f64));
         }
@@ -130,13 +166,13 @@ fn boys_roots<V: Lanes, const L: usize>(
         let inverse = V::splat(1.0).div(x);
         let half = inverse.mul(V::splat(0.5));
         let mut value = inverse.mul(V::splat(std::f64::consts::FRAC_PI_4)).sqrt();
-        for m in 0..=L {
+        for m in 0..=degree {
             roots[m] = far.choose(value, roots[m]);
             value = value.mul(half.mul(V::splat((2 * m + 1) as f64)));
         }
     }
     let mut scale = prefactor;
-    for root in &mut roots[..=L] {
+    for root in &mut roots[..=degree] {
         *root = root.mul(scale);
         scale = scale.mul(power);
     }
@@ -158,12 +194,16 @@ pub(super) fn primitives<V: Lanes>(
     macro_rules! by_degree {
         ($($degree:literal)*) => {
             match degree {
-                $($degree => V::call(Primitives::<$degree> {
+                $($degree if V::WIDE => V::call(Primitives {
+                    recursion: Unrolled::<$degree>,
                     bra, ket, stride, cut, table, out, scratch,
                 }),)*
-                _ => 0,
+                _ => V::call(Primitives {
+                    recursion: Looped(degree),
+                    bra, ket, stride, cut, table, out, scratch,
+                }),
             }
         };
     }
-    by_degree!(0 1 2 3 4 5 6 7 8 9 10 11 12 13 14 15 16)
+    by_degree!(0 1 2 3 4 5 6)
 }

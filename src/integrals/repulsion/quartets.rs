@@ -9,12 +9,11 @@
 //! Hermite functions of bra and ket enter R by their sum only, so that stages 2 and 3 hold each number
 //! once for each pair of scalars, and are plain products over contiguous ranges of degrees.
 
-use super::class::{ClassKey, PairClass, ScalarGroup};
-use super::hermite::scratch_len;
+use super::class::{PairClass, ScalarGroup};
 use super::lanes::{Four, Gather, Kernel, Lanes, dispatch};
 use super::pairs::PairBlock;
-use super::primitives::{field, primitives};
-use super::products::{Contraction, SparseProduct};
+use super::primitives::{field, primitives, scratch_len};
+use super::products::{Contraction, Layout, SparseProduct, Tiled};
 use crate::integrals::boys::{self, BoysTable};
 use crate::integrals::recurrence::{hermite_count, hermite_index, hermite_powers};
 use std::collections::HashMap;
@@ -23,9 +22,9 @@ use std::sync::{Arc, Mutex, OnceLock, PoisonError};
 /// Most Hermite integrals of primitives between two contractions.
 const BATCH_NUMBERS: usize = 512;
 /// Bounds of the number of ket primitives between two contractions.
-const KET_BATCH: std::ops::RangeInclusive<usize> = 4..=36;
+const KET_BATCH: std::ops::RangeInclusive<usize> = 8..=36;
 /// Most numbers that the half-contracted integrals of one batch of bra primitives may take.
-const HALF_NUMBERS: usize = 640;
+const HALF_NUMBERS: usize = 8192;
 
 /// Number of Hermite functions of degree below `degree`.
 const fn below(degree: usize) -> usize {
@@ -53,7 +52,11 @@ pub(super) struct QuartetPlan {
     /// Contractions of stage 3.
     steps: Vec<BraStep>,
     full_len: usize,
-    /// Place among the fully contracted numbers of each (ket Hermite, bra Hermite).
+    /// Ket Hermites by bra Hermites, as the first transformation wants them, and for each element its
+    /// place among the fully contracted numbers.
+    expanded: Tiled,
+    /// Bra Hermites by ket functions.
+    ket_done: Tiled,
     expansion: Gather,
 }
 
@@ -69,15 +72,25 @@ struct BraStep {
 }
 
 impl QuartetPlan {
-    /// The plan for two classes, made on first use.
-    pub(super) fn get(bra: &Arc<PairClass>, ket: &Arc<PairClass>) -> Arc<Self> {
-        static PLANS: OnceLock<Mutex<HashMap<[ClassKey; 2], Arc<QuartetPlan>>>> = OnceLock::new();
+    /// The plan for the quartets of two classes, made on first use. Which class is the bra is a matter of
+    /// cost, unless they are one.
+    pub(super) fn get(x: &Arc<PairClass>, y: &Arc<PairClass>) -> Arc<Self> {
+        static PLANS: OnceLock<Mutex<HashMap<[usize; 2], Arc<QuartetPlan>>>> = OnceLock::new();
         let plans = PLANS.get_or_init(Mutex::default);
         let mut plans = plans.lock().unwrap_or_else(PoisonError::into_inner);
-        let plan = plans
-            .entry([bra.key.clone(), ket.key.clone()])
-            .or_insert_with(|| Arc::new(Self::new(bra, ket)));
-        Arc::clone(plan)
+        // Classes live as long as the program: their addresses name them.
+        let key = [x, y].map(|class| Arc::as_ptr(class) as usize);
+        if let Some(plan) = plans.get(&key).or_else(|| plans.get(&[key[1], key[0]])) {
+            return Arc::clone(plan);
+        }
+        let x_first = (cost(x, y), &x.key) <= (cost(y, x), &y.key);
+        let plan = Arc::new(if x_first {
+            Self::new(x, y)
+        } else {
+            Self::new(y, x)
+        });
+        plans.insert(key, Arc::clone(&plan));
+        plan
     }
 
     fn new(bra: &Arc<PairClass>, ket: &Arc<PairClass>) -> Self {
@@ -111,19 +124,21 @@ impl QuartetPlan {
         }
         let ket_scalars = ket.carried();
         let powers = hermite_powers();
-        let mut expansion = Vec::with_capacity(bra.hermites.len() * ket.hermites.len());
-        for &(ket_hermite, ket_scalar) in &ket.hermites {
-            for &(bra_hermite, bra_scalar) in &bra.hermites {
-                let group = bra
-                    .groups
-                    .iter()
-                    .position(|g| bra_scalar < g.first + g.count)
-                    .unwrap_or(0);
+        let expanded = Tiled::new(ket.hermites.len(), bra.hermites.len());
+        let mut expansion = vec![0; expanded.len()];
+        for (column, &(bra_hermite, bra_scalar)) in bra.hermites.iter().enumerate() {
+            let group = bra
+                .groups
+                .iter()
+                .position(|g| bra_scalar < g.first + g.count)
+                .unwrap_or(0);
+            let (to, step) = expanded.column(column);
+            for (row, &(ket_hermite, ket_scalar)) in ket.hermites.iter().enumerate() {
                 let (start, columns, first) = layout[group * ket_scalars + ket_scalar];
                 let (t, u) = (powers[bra_hermite], powers[ket_hermite]);
                 let sum = hermite_index(t[0] + u[0], t[1] + u[1], t[2] + u[2]);
                 let place = start + (bra_scalar - bra.groups[group].first) * columns + sum - first;
-                expansion.push(place as u32);
+                expansion[to + row * step] = place as u32;
             }
         }
         Self {
@@ -138,6 +153,8 @@ impl QuartetPlan {
             bra_batch: (HALF_NUMBERS / half_len).clamp(1, 8),
             steps,
             full_len,
+            expanded,
+            ket_done: Tiled::new(bra.hermites.len(), ket.functions.len()),
             expansion: Gather::new(expansion),
         }
     }
@@ -148,17 +165,34 @@ impl QuartetPlan {
     }
 }
 
-/// Which pair of a quartet is the bra, by their classes: the one with fewer primitives to loop over
-/// inside; a contracted pair is the ket. Equal classes are decided elsewhere.
-pub(super) fn bra_first(x: &PairClass, y: &PairClass) -> bool {
-    let cost = |bra: &PairClass, ket: &PairClass| -> usize {
-        ket.groups
-            .iter()
-            .map(|g| g.count * (hermite_count(g.high + bra.degree) - below(g.low)))
-            .sum()
+/// Primitives that a contracted pair is taken to have when costs are compared.
+const TYPICAL_PRIMITIVES: usize = 6;
+
+/// Multiply-adds of a quartet, roughly.
+fn cost(bra: &PairClass, ket: &PairClass) -> usize {
+    let primitives = |class: &PairClass| {
+        if class.contracted() {
+            TYPICAL_PRIMITIVES
+        } else {
+            1
+        }
     };
-    let rank = |bra: &PairClass, ket: &PairClass| (bra.contracted(), cost(bra, ket));
-    (rank(x, y), &x.key) < (rank(y, x), &y.key)
+    let mut half = 0;
+    let mut full = 0;
+    for k in &ket.groups {
+        half += k.count * (hermite_count(k.high + bra.degree) - below(k.low));
+        for b in &bra.groups {
+            full += k.count * b.count * (hermite_count(k.high + b.high) - below(k.low + b.low));
+        }
+    }
+    let mut cost = bra.hermites.len() * ket.columns.len() + ket.functions.len() * bra.columns.len();
+    if ket.contracted() {
+        cost += primitives(bra) * primitives(ket) * half;
+    }
+    if bra.contracted() {
+        cost += primitives(bra) * full;
+    }
+    cost
 }
 
 /// Buffers for the evaluation of quartets; one for each thread.
@@ -192,13 +226,12 @@ impl QuartetEngine {
     ) {
         let nherm = hermite_count(plan.degree);
         let (bra_functions, ket_functions) = plan.shape();
-        let bra_hermites = plan.bra.hermites.len();
         reserve(&mut self.hermites, plan.ket_batch * nherm);
-        reserve(&mut self.scratch, scratch_len(plan.degree));
+        reserve(&mut self.scratch, scratch_len(plan.degree, plan.ket_batch));
         reserve(&mut self.half, plan.bra_batch * plan.half_len);
         reserve(&mut self.full, plan.full_len);
-        reserve(&mut self.expanded, plan.expansion.len());
-        reserve(&mut self.ket_done, bra_hermites * ket_functions);
+        reserve(&mut self.expanded, plan.expanded.len());
+        reserve(&mut self.ket_done, plan.ket_done.len());
         reserve(&mut self.result, bra_functions * ket_functions);
         dispatch(Evaluation {
             engine: self,
@@ -259,28 +292,24 @@ impl Kernel for Evaluation<'_> {
             &engine.half
         };
         plan.expansion.copy::<V>(full, &mut engine.expanded);
-        SparseProduct {
+        V::call(SparseProduct {
             row_ends: &plan.ket.row_ends,
             columns: &plan.ket.columns,
             elements: &self.ket.elements,
             values: &engine.expanded,
-            width: plan.bra.hermites.len(),
+            shape: plan.expanded,
             out: &mut engine.ket_done,
-            out_row: 1,
-            out_column: ket_functions,
-        }
-        .run::<V>();
-        SparseProduct {
+            layout: Layout::TiledColumns(plan.ket_done),
+        });
+        V::call(SparseProduct {
             row_ends: &plan.bra.row_ends,
             columns: &plan.bra.columns,
             elements: &bra.elements,
             values: &engine.ket_done,
-            width: ket_functions,
+            shape: plan.ket_done,
             out: result,
-            out_row: ket_functions,
-            out_column: 1,
-        }
-        .run::<V>();
+            layout: Layout::Rows,
+        });
     }
 }
 
@@ -317,7 +346,7 @@ impl Evaluation<'_> {
             );
             if done > 0 && contracted {
                 for (group, &(start, columns)) in plan.ket.groups.iter().zip(&plan.half) {
-                    Contraction {
+                    V::call(Contraction {
                         values: &engine.hermites[below(group.low)..],
                         value_stride: nherm,
                         scalars: &numbers[field::SCALARS + group.first..],
@@ -327,8 +356,7 @@ impl Evaluation<'_> {
                         scalar_count: group.count,
                         out: &mut half[start..],
                         accumulate: k > 0,
-                    }
-                    .run::<V>();
+                    });
                 }
             }
             k += done;
@@ -345,7 +373,7 @@ impl Evaluation<'_> {
         let bra = self.bra;
         let scalars = &bra.numbers[start * bra.stride + field::SCALARS..];
         for step in &self.plan.steps {
-            Contraction {
+            V::call(Contraction {
                 values: &self.engine.half[step.from..],
                 value_stride: self.plan.half_len,
                 scalars: &scalars[step.group.first..],
@@ -355,8 +383,7 @@ impl Evaluation<'_> {
                 scalar_count: step.group.count,
                 out: &mut self.engine.full[step.to..],
                 accumulate: start > 0,
-            }
-            .run::<V>();
+            });
         }
     }
 }
