@@ -185,9 +185,11 @@ fn power_in_hermites(k: usize) -> Vec<f64> {
     h
 }
 
-/// Terms of one function pair: by carried scalar and Hermite index, then by folded scalar and monomial
-/// of AB.
-type Symbolic = BTreeMap<(Scalar, usize), BTreeMap<(Scalar, usize), f64>>;
+/// Terms of one function pair, by carried scalar and Hermite index.
+type Symbolic = BTreeMap<(Scalar, usize), Polynomial>;
+
+/// Coefficients by folded scalar and monomial of AB.
+type Polynomial = BTreeMap<(Scalar, usize), f64>;
 
 /// One term of the product of two monomials.
 #[derive(Debug, Clone, Copy)]
@@ -404,7 +406,7 @@ impl PairClass {
             terms: Vec::new(),
         };
         for row in rows {
-            let mut elements: Vec<(usize, &BTreeMap<(Scalar, usize), f64>)> = row
+            let mut elements: Vec<(usize, &Polynomial)> = row
                 .iter()
                 .map(|((s, h), polynomial)| (column[&(*h, carried_place[s])], polynomial))
                 .collect();

@@ -255,15 +255,6 @@ pub(super) enum Side {
     Ket,
 }
 
-impl Side {
-    pub(super) fn other(self) -> Self {
-        match self {
-            Self::Bra => Self::Ket,
-            Self::Ket => Self::Bra,
-        }
-    }
-}
-
 /// Four pairs of one class in lanes, each with its own primitives, padded with zeros.
 #[derive(Debug, Clone, Default)]
 pub(super) struct PairBlock {
