@@ -33,6 +33,52 @@ pub const SPEED_OF_LIGHT_AU: f64 = 137.035_999_084;
 /// Radians in one degree.
 pub const RADIAN_PER_DEGREE: f64 = PI / 180.0;
 
+/// A unit for the lengths of an input; bohr inside.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Default, serde::Serialize, serde::Deserialize)]
+#[serde(rename_all = "lowercase")]
+pub enum LengthUnit {
+    /// ångström
+    #[default]
+    Angstrom,
+    /// bohr, the atomic unit
+    Bohr,
+}
+
+impl LengthUnit {
+    /// All units, in the order of the spec's documentation.
+    pub const ALL: [Self; 2] = [Self::Angstrom, Self::Bohr];
+
+    /// How many of this unit make one bohr.
+    #[must_use]
+    pub fn per_bohr(self) -> f64 {
+        match self {
+            Self::Angstrom => ANGSTROM_PER_BOHR,
+            Self::Bohr => 1.0,
+        }
+    }
+
+    /// A length given in this unit, in bohr.
+    #[must_use]
+    pub fn to_bohr(self, length: f64) -> f64 {
+        length / self.per_bohr()
+    }
+
+    /// A length given in bohr, in this unit.
+    #[must_use]
+    pub fn from_bohr(self, length_bohr: f64) -> f64 {
+        length_bohr * self.per_bohr()
+    }
+
+    /// The word used in the spec: `angstrom` or `bohr`.
+    #[must_use]
+    pub fn word(self) -> &'static str {
+        match self {
+            Self::Angstrom => "angstrom",
+            Self::Bohr => "bohr",
+        }
+    }
+}
+
 /// A unit for energies that people read; hartree inside.
 #[derive(Debug, Clone, Copy, PartialEq, Eq, Default, serde::Serialize, serde::Deserialize)]
 pub enum EnergyUnit {

@@ -236,6 +236,11 @@ fn parse(name: &'static str, text: &str) -> Result<BasisSet, BasisError> {
             problem: format!("no line '{key}'"),
         })
     };
+    let set_kind = kind(field("kind")?).ok_or_else(|| BasisError::Embedded {
+        set: name,
+        line: 1,
+        problem: "unknown kind".to_string(),
+    })?;
     debug_assert!(
         shells
             .values()
@@ -245,7 +250,7 @@ fn parse(name: &'static str, text: &str) -> Result<BasisSet, BasisError> {
     Ok(BasisSet::new(
         field("name")?.to_string(),
         field("description")?.to_string(),
-        kind(field("kind")?).unwrap_or(FunctionKind::Spherical),
+        set_kind,
         format!(
             "{}, set version {}",
             field("collection")?,
@@ -374,6 +379,56 @@ mod tests {
         assert_eq!(functions("def2-SVP", &water), 24);
         assert_eq!(functions("6-31G*", &benzene), 102);
         assert_eq!(functions("cc-pVTZ", &benzene), 264);
+    }
+
+    /// Shell records and primitives of the collection's data (set version 1; 0 for 6-311G**) as
+    /// counted by an independent reader whose energies serve as references elsewhere. Nothing in
+    /// these sets is merged, so shells here are records there.
+    #[test]
+    fn val_shell_and_primitive_counts() {
+        type Counts = (&'static str, usize, usize);
+        let cases: [(&str, &[Counts]); 10] = [
+            (
+                "STO-3G",
+                &[("H", 1, 3), ("Li", 2, 6), ("O", 2, 6), ("C", 2, 6)],
+            ),
+            (
+                "3-21G",
+                &[("O", 3, 6), ("H", 2, 3), ("C", 3, 6), ("F", 3, 6)],
+            ),
+            ("6-31G", &[("H", 2, 4), ("O", 3, 10)]),
+            (
+                "6-31G*",
+                &[
+                    ("H", 2, 4),
+                    ("Li", 4, 11),
+                    ("O", 4, 11),
+                    ("N", 4, 11),
+                    ("C", 4, 11),
+                ],
+            ),
+            (
+                "6-31G**",
+                &[("H", 3, 5), ("F", 4, 11), ("N", 4, 11), ("O", 4, 11)],
+            ),
+            ("6-311G**", &[("He", 4, 6), ("H", 4, 6), ("O", 5, 12)]),
+            (
+                "cc-pVDZ",
+                &[("O", 3, 14), ("H", 2, 5), ("C", 3, 14), ("N", 3, 14)],
+            ),
+            ("cc-pVTZ", &[("H", 3, 8), ("F", 4, 18), ("O", 4, 18)]),
+            ("aug-cc-pVDZ", &[("O", 6, 17), ("H", 4, 7), ("C", 6, 17)]),
+            ("def2-SVP", &[("O", 6, 12), ("H", 3, 5), ("N", 6, 12)]),
+        ];
+        for (name, counts) in cases {
+            for &(symbol, records, primitives) in counts {
+                let element = Element::from_symbol(symbol).unwrap();
+                let shells = find(name).unwrap().shells(element, None).unwrap();
+                assert_eq!(shells.len(), records, "{name} {symbol}");
+                let exponents: usize = shells.iter().map(|s| s.exponents.len()).sum();
+                assert_eq!(exponents, primitives, "{name} {symbol}");
+            }
+        }
     }
 
     #[test]

@@ -8,7 +8,9 @@
 //!
 //! Every function has unit norm, each Cartesian monomial separately.
 
+pub mod describe;
 pub mod error;
+mod file;
 pub mod library;
 pub mod set;
 pub mod shell;

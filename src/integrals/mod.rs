@@ -9,6 +9,7 @@
 
 pub mod attraction;
 pub mod boys;
+pub mod derivative;
 pub mod dipole;
 pub mod harmonics;
 pub mod kinetic;

@@ -1,6 +1,20 @@
 //! Molecules: labelled atoms in space, charge and spin multiplicity.
 
+pub mod cartesian;
+pub mod connectivity;
+pub mod frame;
+pub mod geometry_error;
+pub mod inertia;
+pub mod internal;
+mod label;
+pub mod motion;
+mod motion_error;
 pub mod nuclear;
+mod rows;
+mod side;
+#[cfg(test)]
+mod test_molecules;
+pub mod zmatrix;
 
 use crate::elements::Element;
 use nalgebra::Vector3;

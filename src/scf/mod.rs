@@ -1,5 +1,45 @@
 //! Self-consistent field calculations: restricted and unrestricted Hartree–Fock.
+//!
+//! [`orthogonal`] makes the frame of a geometry, [`fock`] evaluates determinants in it, [`iteration`] finds the
+//! self-consistent one with [`diis`] and [`second_order`], [`stability`] asks whether it is a minimum. [`guess`] and [`seed`] say
+//! where to start, [`properties`] what the result means.
 
+pub mod canonical;
+pub mod diis;
+pub mod fock;
+pub mod grassmann;
+pub mod guess;
+pub mod iteration;
+pub mod orthogonal;
+pub mod properties;
+pub mod quasi_newton;
+pub mod second_order;
+pub mod seed;
 mod settings;
+pub mod stability;
 
+use serde::{Deserialize, Serialize};
 pub use settings::{FirstDensity, Method, ScfSettings};
+
+/// Why a self-consistent field calculation stopped.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Serialize, Deserialize)]
+#[serde(rename_all = "kebab-case")]
+pub enum StopReason {
+    /// both thresholds met
+    Converged,
+    /// as many Fock builds as allowed
+    IterationLimit,
+    /// energy or density stopped being finite numbers
+    NotFinite,
+}
+
+/// Why a calculation could not be carried out.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, thiserror::Error)]
+pub enum ScfError {
+    /// The eigenvalue iteration did not end.
+    #[error("a matrix of order {order} could not be diagonalised")]
+    Eigenproblem {
+        /// its order
+        order: usize,
+    },
+}

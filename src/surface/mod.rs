@@ -4,6 +4,11 @@
 //! [`Surface`] is implemented by Hartree–Fock and by closed-form model surfaces whose
 //! answers are known, so that walks, journals, reports and figures are tested in milliseconds.
 
+mod hartree_fock;
+pub mod model;
+
+pub use crate::scf::StopReason;
+pub use hartree_fock::{HartreeFock, Workspace};
 use nalgebra::Vector3;
 use serde::{Deserialize, Serialize};
 
@@ -15,7 +20,7 @@ pub trait Surface: Sync {
     /// What a point leaves behind for its neighbours to start from.
     type Seed: Clone + Send + Sync;
     /// What is kept from one point to the next to save work.
-    type Workspace: Send;
+    type Workspace: Clone + Send;
 
     /// An empty workspace.
     fn workspace(&self) -> Self::Workspace;
@@ -38,6 +43,31 @@ pub trait Surface: Sync {
     /// principal angles between the spaces carried to one orthonormal frame (1: the same space, 0: an electron
     /// moved to an orthogonal orbital).
     fn likeness(&self, one: &Self::Seed, other: &Self::Seed) -> [f64; 2];
+}
+
+impl<S: Surface> Surface for &S {
+    type Seed = S::Seed;
+    type Workspace = S::Workspace;
+
+    fn workspace(&self) -> Self::Workspace {
+        (**self).workspace()
+    }
+
+    fn workspace_bytes(&self) -> u64 {
+        (**self).workspace_bytes()
+    }
+
+    fn evaluate(
+        &self,
+        request: &PointRequest<'_, Self::Seed>,
+        workspace: &mut Self::Workspace,
+    ) -> Result<PointOutcome<Self::Seed>, SurfaceError> {
+        (**self).evaluate(request, workspace)
+    }
+
+    fn likeness(&self, one: &Self::Seed, other: &Self::Seed) -> [f64; 2] {
+        (**self).likeness(one, other)
+    }
 }
 
 /// A point already computed that the next may start from.
@@ -98,18 +128,6 @@ pub struct PointOutcome<S> {
     pub seed: Option<S>,
 }
 
-/// Why a self-consistent field calculation stopped.
-#[derive(Debug, Clone, Copy, PartialEq, Eq, Serialize, Deserialize)]
-#[serde(rename_all = "kebab-case")]
-pub enum StopReason {
-    /// both thresholds met
-    Converged,
-    /// as many Fock builds as allowed
-    IterationLimit,
-    /// energy or density stopped being finite numbers
-    NotFinite,
-}
-
 /// Lowest eigenvalues of the orbital Hessians, hartree; negative: unstable.
 #[derive(Debug, Clone, Copy, PartialEq, Serialize, Deserialize)]
 pub struct StabilityRecord {
@@ -121,6 +139,17 @@ pub struct StabilityRecord {
     pub builds: usize,
     /// How often an unstable solution was left.
     pub left: usize,
+}
+
+/// How the relaxation of a point went.
+#[derive(Debug, Clone, Copy, PartialEq, Serialize, Deserialize)]
+pub struct RelaxationRecord {
+    /// Gradient calls.
+    pub gradient_calls: usize,
+    /// Whether a stationary point was reached; if not, the record has no energy.
+    pub converged: bool,
+    /// Largest component of the gradient left, swept coordinates apart, hartree/bohr; none without an energy.
+    pub gradient_max: Option<f64>,
 }
 
 /// Unique repulsion integrals computed and taken over.
@@ -178,6 +207,12 @@ pub struct PointRecord {
     pub overlap_smallest: f64,
     /// Energy gradient in hartree/bohr, one per atom, where it was asked for.
     pub gradient: Option<Vec<[f64; 3]>>,
+    /// Positions in bohr, where they were relaxed; otherwise they are those asked for.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub positions: Option<Vec<[f64; 3]>>,
+    /// How the relaxation went, where there was one.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub relaxation: Option<RelaxationRecord>,
     /// What the stability test found, where there was one.
     pub stability: Option<StabilityRecord>,
     /// Repulsion integrals.
@@ -208,6 +243,15 @@ pub enum SurfaceError {
         functions: usize,
         /// occupied orbitals of one spin
         occupied: usize,
+    },
+    /// Charge and multiplicity do not fit the molecule.
+    #[error(transparent)]
+    Electrons(crate::molecule::ElectronCountError),
+    /// Restricted orbitals for unpaired electrons.
+    #[error("restricted Hartree–Fock treats closed shells only, not multiplicity {multiplicity}")]
+    OpenShell {
+        /// multiplicity asked for
+        multiplicity: u32,
     },
     /// The eigenvalue iteration did not end.
     #[error("a matrix of order {order} could not be diagonalised")]

@@ -13,8 +13,8 @@ use crate::integrals::recurrence::{hermite_count, hermite_index};
 
 /// Highest degree whose recursion is unrolled.
 pub(super) const UNROLLED: usize = 6;
-/// Highest degree: (gg|gg).
-pub(super) const MAX_DEGREE: usize = 16;
+/// Highest degree: a derivative of (gg|gg).
+pub(super) const MAX_DEGREE: usize = 17;
 
 /// One step: work[target] = PQ[axis] · work[first] + factor · work[second].
 #[derive(Clone, Copy)]
@@ -129,7 +129,7 @@ static TABLES: [Table; MAX_DEGREE + 1] = {
             }),*]
         };
     }
-    tables!(0 1 2 3 4 5 6 7 8 9 10 11 12 13 14 15 16)
+    tables!(0 1 2 3 4 5 6 7 8 9 10 11 12 13 14 15 16 17)
 };
 
 /// A way to run the recursion of one degree.

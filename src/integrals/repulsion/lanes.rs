@@ -17,10 +17,10 @@ use crate::integrals::boys::CellPolynomial;
 /// Four doubles in memory, one per lane.
 #[derive(Debug, Clone, Copy, PartialEq, Default)]
 #[repr(C, align(32))]
-pub(super) struct Four(pub(super) [f64; 4]);
+pub(in crate::integrals) struct Four(pub(in crate::integrals) [f64; 4]);
 
 /// Arithmetic on four lanes at once.
-pub(super) trait Lanes: Copy {
+pub(in crate::integrals) trait Lanes: Copy {
     /// Whether straight code and large register tiles pay: not where four lanes are more than one
     /// register, and the compiler would need long for it.
     const WIDE: bool;
@@ -66,7 +66,7 @@ pub(super) trait Lanes: Copy {
 }
 
 /// A piece of work compiled once per instruction set.
-pub(super) trait Kernel {
+pub(in crate::integrals) trait Kernel {
     type Output;
     /// Must be `#[inline(always)]`.
     fn run<V: Lanes>(self) -> Self::Output;
@@ -74,7 +74,7 @@ pub(super) trait Kernel {
 
 /// Runs a kernel with the widest instruction set that both processor and program know.
 #[inline]
-pub(super) fn dispatch<K: Kernel>(kernel: K) -> K::Output {
+pub(in crate::integrals) fn dispatch<K: Kernel>(kernel: K) -> K::Output {
     #[cfg(target_arch = "x86_64")]
     if std::arch::is_x86_feature_detected!("avx2") && std::arch::is_x86_feature_detected!("fma") {
         // SAFETY: the processor has both features, as just asked.

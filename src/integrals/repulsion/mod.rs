@@ -13,10 +13,10 @@ mod digestion;
 mod direct;
 mod groups;
 mod hermite;
-mod lanes;
+pub(in crate::integrals) mod lanes;
 mod list;
 mod pairs;
-mod primitives;
+pub(in crate::integrals) mod primitives;
 mod products;
 mod quartets;
 

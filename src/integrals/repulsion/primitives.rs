@@ -1,22 +1,22 @@
 //! Primitive quartets: geometry, Boys functions and Hermite Coulomb integrals on four lanes.
 
 use super::hermite::{Looped, MAX_DEGREE, Recursion, Unrolled, work_elements};
-use super::lanes::{Four, Kernel, Lanes};
+use super::lanes::{Four, Kernel, Lanes, dispatch};
 use crate::integrals::boys::{BoysTable, CELLS_PER_UNIT};
 use crate::integrals::recurrence::hermite_count;
 
 /// Places of the numbers of one primitive pair in a block; its scalars follow.
-pub(super) mod field {
+pub(in crate::integrals) mod field {
     /// Exponent p = a + b.
-    pub(crate) const EXPONENT: usize = 0;
+    pub(in crate::integrals) const EXPONENT: usize = 0;
     /// Centre of charge P, three numbers.
-    pub(crate) const CENTRE: usize = 1;
+    pub(in crate::integrals) const CENTRE: usize = 1;
     /// √(2π^(5/2)) exp(−ab/p |AB|²) / p.
-    pub(crate) const FACTOR: usize = 4;
+    pub(in crate::integrals) const FACTOR: usize = 4;
     /// Upper bound of the self-repulsion, square root of.
-    pub(crate) const BOUND: usize = 5;
+    pub(in crate::integrals) const BOUND: usize = 5;
     /// First scalar of the pair class.
-    pub(crate) const SCALARS: usize = 6;
+    pub(in crate::integrals) const SCALARS: usize = 6;
 }
 
 /// One bra primitive with a run of ket primitives.
@@ -104,8 +104,8 @@ const fn stage_len(degree: usize) -> usize {
     degree + 4
 }
 
-/// Scratch that [`primitives`] needs for `count` ket primitives at once.
-pub(super) const fn scratch_len(degree: usize, count: usize) -> usize {
+/// Scratch that [`primitives`] and [`run_primitives`] need for `count` ket primitives at once.
+pub(in crate::integrals) const fn scratch_len(degree: usize, count: usize) -> usize {
     count * stage_len(degree) + work_elements(degree)
 }
 
@@ -206,4 +206,55 @@ pub(super) fn primitives<V: Lanes>(
         };
     }
     by_degree!(0 1 2 3 4 5 6)
+}
+
+/// One bra primitive with a run of ket primitives, for callers outside the vector code: how many of the
+/// ket primitives were done, see [`Primitives`].
+pub(in crate::integrals) fn run_primitives(
+    degree: usize,
+    bra: &[Four],
+    ket: &[Four],
+    stride: usize,
+    cut: &Four,
+    table: &BoysTable,
+    out: &mut [Four],
+    scratch: &mut [Four],
+) -> usize {
+    struct ByDegree<'a> {
+        degree: usize,
+        bra: &'a [Four],
+        ket: &'a [Four],
+        stride: usize,
+        cut: &'a Four,
+        table: &'a BoysTable,
+        out: &'a mut [Four],
+        scratch: &'a mut [Four],
+    }
+    impl Kernel for ByDegree<'_> {
+        type Output = usize;
+
+        #[inline(always)]
+        fn run<V: Lanes>(self) -> usize {
+            primitives::<V>(
+                self.degree,
+                self.bra,
+                self.ket,
+                self.stride,
+                self.cut,
+                self.table,
+                self.out,
+                self.scratch,
+            )
+        }
+    }
+    dispatch(ByDegree {
+        degree,
+        bra,
+        ket,
+        stride,
+        cut,
+        table,
+        out,
+        scratch,
+    })
 }

@@ -1,0 +1,57 @@
+//! Findings: what a person should see before trusting a curve.
+
+use serde::{Deserialize, Serialize};
+
+/// The kinds of finding.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, PartialOrd, Ord, Hash, Serialize, Deserialize)]
+#[serde(rename_all = "kebab-case")]
+pub enum FindingKind {
+    /// The calculation did not converge: there is no energy.
+    NotConverged,
+    /// The electronic state changes between two neighbouring points.
+    StateJump,
+    /// Different ways to a point led to different solutions.
+    Hysteresis,
+    /// The solution is not the lowest of its kind, or of a less restricted kind.
+    Unstable,
+    /// ⟨S²⟩ is well above that of a pure spin state.
+    SpinContaminated,
+    /// The highest occupied and the lowest empty orbital come close.
+    SmallGap,
+    /// Near-dependent combinations of basis functions were dropped.
+    NearDependentBasis,
+}
+
+impl FindingKind {
+    /// The word used in files.
+    #[must_use]
+    pub fn word(self) -> &'static str {
+        match self {
+            Self::NotConverged => "not-converged",
+            Self::StateJump => "state-jump",
+            Self::Hysteresis => "hysteresis",
+            Self::Unstable => "unstable",
+            Self::SpinContaminated => "spin-contaminated",
+            Self::SmallGap => "small-gap",
+            Self::NearDependentBasis => "near-dependent-basis",
+        }
+    }
+
+    /// Whether it casts doubt on a single point's place on the curve, so that the point is ringed on figures. Spin
+    /// contamination and an instability that the method was asked to ignore belong to whole regions.
+    #[must_use]
+    pub fn is_ringed(self) -> bool {
+        !matches!(self, Self::SpinContaminated | Self::Unstable)
+    }
+}
+
+/// One finding: its kind, the points it concerns, and a sentence that says what it means and what to do.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+pub struct Finding {
+    /// The kind.
+    pub kind: FindingKind,
+    /// Numbers of the points.
+    pub points: Vec<usize>,
+    /// What it means and what to do.
+    pub text: String,
+}

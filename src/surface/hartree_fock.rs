@@ -1,0 +1,633 @@
+//! Hartree–Fock as a potential-energy surface.
+
+use super::{
+    IntegralCounts, PointOutcome, PointRecord, PointRequest, SeedPoint, StabilityDemand,
+    StabilityRecord, Start, Surface, SurfaceError,
+};
+use crate::basis::{Basis, Shell};
+use crate::gradient::{GradientSettings, hartree_fock_gradient};
+use crate::integrals;
+use crate::integrals::repulsion::{DirectRepulsion, RepulsionList, RepulsionSettings};
+use crate::molecule::{ElectronCountError, Molecule, nuclear};
+use crate::scf::canonical::Canonical;
+use crate::scf::fock::{Evaluation, Field, Occupation, Repulsion, Rotation};
+use crate::scf::iteration::{self, Beginning, Plan, Solution, Thresholds};
+use crate::scf::orthogonal::Orthogonal;
+use crate::scf::seed::{self, Seed, SeedState};
+use crate::scf::stability::{self, CarriedVectors};
+use crate::scf::{
+    FirstDensity, Method, ScfError, ScfSettings, StopReason, guess, properties, second_order,
+};
+use nalgebra::{DMatrix, Vector3};
+use std::time::Instant;
+
+/// Nuclei nearer than this (bohr) count as being on one spot.
+const COINCIDENT: f64 = 1e-4;
+/// Calculations allowed for the way down from one saddle point, each with as many builds as the settings say.
+const DESCENTS: usize = 3;
+/// How often unstable solutions are left at one geometry.
+const LEAVES: usize = 5;
+
+/// RHF or UHF for one molecule, charge and multiplicity in one basis.
+#[derive(Debug)]
+pub struct HartreeFock {
+    molecule: Molecule,
+    shells_of_atom: Vec<Vec<Shell>>,
+    occupation: Occupation,
+    settings: ScfSettings,
+    /// One-spin densities of the free atoms, where calculations begin from them. They are computed at once: a point
+    /// that waited for them inside the thread pool could wait for itself.
+    atoms: Vec<DMatrix<f64>>,
+}
+
+/// Repulsion integrals kept from one point to the next.
+#[derive(Debug, Clone, Default)]
+pub struct Workspace {
+    list: Option<(Vec<Shell>, RepulsionList)>,
+}
+
+impl Workspace {
+    /// The integrals of a basis, those of atoms that stayed in place taken over.
+    fn list_of(&mut self, basis: &Basis) -> &RepulsionList {
+        // A list of other shells (the workspace of another surface) is of no use.
+        let kept = self
+            .list
+            .take()
+            .filter(|(shells, _)| shells == basis.shells());
+        let (_, list) = match kept {
+            Some((shells, mut list)) => {
+                list.update(basis);
+                self.list.insert((shells, list))
+            }
+            None => self.list.insert((
+                basis.shells().to_vec(),
+                RepulsionList::compute(basis, &RepulsionSettings::default()),
+            )),
+        };
+        list
+    }
+}
+
+impl From<ScfError> for SurfaceError {
+    fn from(error: ScfError) -> Self {
+        match error {
+            ScfError::Eigenproblem { order } => Self::Eigenproblem { order },
+        }
+    }
+}
+
+/// One-electron integrals and frame of a geometry.
+struct Geometry {
+    molecule: Molecule,
+    basis: Basis,
+    overlap: DMatrix<f64>,
+    kinetic: DMatrix<f64>,
+    core: DMatrix<f64>,
+    frame: Orthogonal,
+    nuclear: f64,
+}
+
+/// A solution with what stability tests said of it.
+struct Settled {
+    solution: Solution,
+    fock_builds: usize,
+    stability: Option<StabilityRecord>,
+    internal: Option<CarriedVectors>,
+    triplet: Option<CarriedVectors>,
+    stability_seconds: f64,
+}
+
+impl HartreeFock {
+    /// A surface for the charge and multiplicity of `molecule`; `shells_of_atom` holds the shells of each of its atoms.
+    ///
+    /// # Errors
+    /// [`SurfaceError::Electrons`] when charge and multiplicity do not fit, [`SurfaceError::OpenShell`] for RHF with unpaired
+    /// electrons, [`SurfaceError::TooFewFunctions`] when the basis cannot hold the electrons.
+    pub fn new(
+        molecule: &Molecule,
+        shells_of_atom: Vec<Vec<Shell>>,
+        method: Method,
+        settings: ScfSettings,
+    ) -> Result<Self, SurfaceError> {
+        let (alpha, beta) = molecule.electrons()?;
+        if method == Method::Rhf && alpha != beta {
+            return Err(SurfaceError::OpenShell {
+                multiplicity: molecule.multiplicity,
+            });
+        }
+        let functions: usize = shells_of_atom.iter().flatten().map(Shell::functions).sum();
+        if functions < alpha {
+            return Err(SurfaceError::TooFewFunctions {
+                functions,
+                occupied: alpha,
+            });
+        }
+        let atoms = match settings.first_density {
+            FirstDensity::Atoms => {
+                guess::atomic_densities(molecule, &shells_of_atom, settings.dependence)?
+            }
+            FirstDensity::CoreHamiltonian => Vec::new(),
+        };
+        Ok(Self {
+            molecule: molecule.clone(),
+            shells_of_atom,
+            occupation: Occupation {
+                method,
+                alpha,
+                beta,
+            },
+            settings,
+            atoms,
+        })
+    }
+
+    /// Number of basis functions.
+    #[must_use]
+    pub fn functions(&self) -> usize {
+        self.shells_of_atom
+            .iter()
+            .flatten()
+            .map(Shell::functions)
+            .sum()
+    }
+
+    /// Whether the integrals are too many to be kept.
+    fn is_direct(&self) -> bool {
+        RepulsionList::bytes_needed(self.functions()) > self.settings.memory_mib << 20
+    }
+
+    fn check_positions(&self, positions: &[Vector3<f64>]) -> Result<(), SurfaceError> {
+        for (i, a) in positions.iter().enumerate() {
+            if a.iter().any(|x| !x.is_finite()) {
+                return Err(SurfaceError::Coincident {
+                    first: i,
+                    second: i,
+                    distance_bohr: f64::NAN,
+                });
+            }
+            for (j, b) in positions[..i].iter().enumerate() {
+                let distance = (a - b).norm();
+                let ghost = self.molecule.atoms[i].ghost || self.molecule.atoms[j].ghost;
+                if distance < COINCIDENT && !ghost {
+                    return Err(SurfaceError::Coincident {
+                        first: j,
+                        second: i,
+                        distance_bohr: distance,
+                    });
+                }
+            }
+        }
+        Ok(())
+    }
+
+    fn geometry(
+        &self,
+        positions: &[Vector3<f64>],
+        keep: Option<usize>,
+    ) -> Result<Geometry, SurfaceError> {
+        let molecule = self.molecule.at(positions);
+        let basis = Basis::of_molecule(&self.shells_of_atom, &molecule);
+        let charges: Vec<_> = molecule
+            .atoms
+            .iter()
+            .zip(&molecule.positions)
+            .map(|(atom, position)| (atom.charge(), *position))
+            .collect();
+        let overlap = integrals::overlap(&basis);
+        let kinetic = integrals::kinetic(&basis);
+        let core = &kinetic + integrals::attraction(&basis, &charges);
+        let frame = Orthogonal::new(&overlap, self.settings.dependence, keep)?;
+        if frame.kept() < self.occupation.alpha {
+            return Err(SurfaceError::TooFewFunctions {
+                functions: frame.kept(),
+                occupied: self.occupation.alpha,
+            });
+        }
+        Ok(Geometry {
+            nuclear: nuclear::repulsion_energy(&molecule),
+            molecule,
+            basis,
+            overlap,
+            kinetic,
+            core,
+            frame,
+        })
+    }
+
+    /// What a calculation without a seed starts from.
+    fn fresh(&self, functions: usize) -> Beginning {
+        match self.settings.first_density {
+            FirstDensity::CoreHamiltonian => Beginning::Core,
+            FirstDensity::Atoms => {
+                let density = guess::superposed(&self.atoms, functions);
+                Beginning::Densities(vec![density; self.occupation.blocks().len()])
+            }
+        }
+    }
+
+    /// Whether a seed belongs to a calculation like this one.
+    fn fits(&self, seed: &Seed, functions: usize) -> bool {
+        let blocks = self.occupation.blocks();
+        let occupied = &seed.state().occupied;
+        occupied.len() == blocks.len()
+            && occupied
+                .iter()
+                .zip(blocks)
+                .all(|(y, count)| y.shape() == (functions, count))
+    }
+
+    /// What the iteration starts from, with differences to carry over.
+    fn beginning(
+        &self,
+        request: &PointRequest<'_, Seed>,
+        geometry: &Geometry,
+    ) -> Result<(Beginning, Vec<crate::scf::diis::Difference>), SurfaceError> {
+        let functions = geometry.basis.len();
+        let points = start_points(&request.start);
+        let usable: Vec<(&[f64], &Seed)> = points
+            .iter()
+            .filter(|p| self.fits(p.seed, functions))
+            .map(|p| (p.coordinates, p.seed))
+            .collect();
+        let single = matches!(request.start, Start::Previous(_));
+        let prediction = match usable.last() {
+            None => None,
+            Some(&last) if single || last.0.len() != request.coordinates.len() => {
+                seed::predict(&[last], last.0)?
+            }
+            Some(_) => seed::predict(&usable, request.coordinates)?,
+        };
+        let Some(prediction) = prediction else {
+            return Ok((self.fresh(functions), Vec::new()));
+        };
+        let occupied = prediction
+            .occupied
+            .iter()
+            .map(|y| geometry.frame.nearest(y))
+            .collect::<Result<_, _>>()?;
+        let differences = if single {
+            Vec::new()
+        } else {
+            prediction.differences
+        };
+        Ok((Beginning::Occupied(occupied), differences))
+    }
+
+    /// Solves for self-consistency and, where asked, tests and leaves unstable solutions.
+    fn settle(
+        &self,
+        request: &PointRequest<'_, Seed>,
+        geometry: &Geometry,
+        field: &mut Field<'_>,
+    ) -> Result<Settled, SurfaceError> {
+        let (beginning, carried) = self.beginning(request, geometry)?;
+        let newest = start_points(&request.start).last().map(|p| p.seed.state());
+        let follow = request
+            .follow
+            .filter(|seed| self.fits(seed, geometry.basis.len()))
+            .map(|seed| seed.state().occupied.as_slice());
+        let plan = Plan {
+            thresholds: Thresholds::from(&self.settings),
+            limit: self.settings.iterations,
+            carried,
+            follow,
+            soft: newest.and_then(|s| s.internal.as_ref()),
+            downhill: false,
+        };
+        let mut solution = iteration::converge(field, beginning, &plan)?;
+        let mut settled = Settled {
+            fock_builds: field.builds() + field.products(),
+            stability: None,
+            // Vectors of an earlier point still tell where the energy is soft, and where the next test may begin.
+            internal: newest.and_then(|s| s.internal.clone()),
+            triplet: newest.and_then(|s| s.triplet.clone()),
+            stability_seconds: 0.0,
+            solution: solution.clone(),
+        };
+        if request.stability == StabilityDemand::None {
+            return Ok(settled);
+        }
+        let mut internal = settled.internal.take();
+        let mut triplet = settled.triplet.take();
+        let mut products = 0;
+        let mut left = 0;
+        let mut triplet_value = None;
+        let mut internal_value = None;
+        while solution.stop == StopReason::Converged {
+            let clock = Instant::now();
+            let before = field.products();
+            let orbitals = Canonical::of(field, &solution.evaluation)?;
+            let kind = second_order::internal_rotation(self.occupation.method);
+            let pairs = stability::lowest_eigenpairs(field, &orbitals, kind, internal.as_ref())?;
+            settled.stability_seconds += clock.elapsed().as_secs_f64();
+            products += field.products() - before;
+            let Some(pairs) = pairs else {
+                break;
+            };
+            internal = Some(CarriedVectors::of(&orbitals, &pairs));
+            internal_value = pairs.values.first().copied();
+            let unstable = internal_value.is_some_and(|v| v < stability::UNSTABLE);
+            let leave = unstable
+                && request.stability == StabilityDemand::Leave
+                && follow.is_none()
+                && left < LEAVES;
+            let lower = if leave {
+                let energy = solution.evaluation.energy;
+                stability::downhill(field, &orbitals, energy, &pairs.vectors[0])?
+            } else {
+                None
+            };
+            let Some(lower) = lower else {
+                if self.occupation.method == Method::Rhf {
+                    let clock = Instant::now();
+                    let before = field.products();
+                    let pairs = stability::lowest_eigenpairs(
+                        field,
+                        &orbitals,
+                        Rotation::Triplet,
+                        triplet.as_ref(),
+                    )?;
+                    settled.stability_seconds += clock.elapsed().as_secs_f64();
+                    products += field.products() - before;
+                    if let Some(pairs) = pairs {
+                        triplet = Some(CarriedVectors::of(&orbitals, &pairs));
+                        triplet_value = pairs.values.first().copied();
+                    }
+                }
+                break;
+            };
+            left += 1;
+            let saddle = solution.evaluation.energy;
+            let before = field.builds() + field.products();
+            let mut onwards = Plan {
+                thresholds: plan.thresholds,
+                limit: before + self.settings.iterations,
+                carried: Vec::new(),
+                follow: None,
+                soft: internal.as_ref(),
+                downhill: false,
+            };
+            solution = self.descend(field, &lower, saddle, &mut onwards)?;
+            settled.fock_builds = field.builds() + field.products() - before;
+        }
+        if let Some(internal) = internal_value {
+            settled.stability = Some(StabilityRecord {
+                internal,
+                triplet: triplet_value,
+                builds: products,
+                left,
+            });
+        }
+        settled.internal = internal;
+        settled.triplet = triplet;
+        settled.solution = solution;
+        Ok(settled)
+    }
+
+    /// Converges from below a saddle without climbing back onto it.
+    fn descend(
+        &self,
+        field: &mut Field<'_>,
+        lower: &Evaluation,
+        saddle: f64,
+        plan: &mut Plan<'_>,
+    ) -> Result<Solution, ScfError> {
+        let mut start = lower.occupied.clone();
+        let mut below = lower.energy.min(saddle) + 1e-9;
+        let mut rounds = 0;
+        loop {
+            plan.limit = field.builds() + field.products() + self.settings.iterations;
+            let beginning = Beginning::Occupied(start.clone());
+            let solution = iteration::converge(field, beginning, plan)?;
+            rounds += 1;
+            let better = solution.evaluation.energy <= below;
+            if (better && solution.stop == StopReason::Converged) || rounds == DESCENTS {
+                return Ok(solution);
+            }
+            plan.downhill = true;
+            if better {
+                below = solution.evaluation.energy + 1e-9;
+                start = solution.evaluation.occupied;
+            }
+        }
+    }
+
+    fn record(
+        &self,
+        geometry: &Geometry,
+        field: &Field<'_>,
+        settled: &Settled,
+    ) -> Result<PointRecord, SurfaceError> {
+        let evaluation = &settled.solution.evaluation;
+        let finite = settled.solution.stop != StopReason::NotFinite;
+        let densities = field.densities(&evaluation.occupied);
+        let total = densities.iter().fold(
+            DMatrix::zeros(geometry.basis.len(), geometry.basis.len()),
+            |sum, p| sum + p,
+        ) * field.occupation().weight();
+        let atoms = geometry.molecule.atoms.len();
+        let places = geometry.basis.function_atoms();
+        let charges = |populations: Vec<f64>| -> Vec<f64> {
+            geometry
+                .molecule
+                .atoms
+                .iter()
+                .zip(populations)
+                .map(|(atom, population)| atom.charge() - population)
+                .collect()
+        };
+        let mulliken = properties::mulliken_populations(&total, &geometry.overlap, &places, atoms);
+        let electrons = mulliken.iter().sum();
+        let spins = match densities.as_slice() {
+            [alpha, beta] => {
+                properties::loewdin_populations(&(alpha - beta), &geometry.frame, &places, atoms)
+            }
+            _ => vec![0.0; atoms],
+        };
+        let s_squared = match evaluation.occupied.as_slice() {
+            [alpha, beta] => properties::s_squared(alpha, beta),
+            _ => 0.0,
+        };
+        let (mut homo, mut lumo): (Option<f64>, Option<f64>) = (None, None);
+        if finite {
+            for block in Canonical::of(field, evaluation)? {
+                if let Some(&top) = block.occupied_energies.iter().last() {
+                    homo = Some(homo.map_or(top, |h| h.max(top)));
+                }
+                if let Some(&bottom) = block.empty_energies.iter().next() {
+                    lumo = Some(lumo.map_or(bottom, |l| l.min(bottom)));
+                }
+            }
+        }
+        let origin = properties::charge_centre(&geometry.molecule);
+        let moments = integrals::dipole(&geometry.basis, &origin);
+        let dipole = properties::dipole(&geometry.molecule, &origin, &total, &moments);
+        let converged = settled.solution.stop == StopReason::Converged;
+        Ok(PointRecord {
+            energy: converged.then_some(evaluation.energy),
+            stop: settled.solution.stop,
+            fock_builds: settled.fock_builds,
+            all_builds: field.builds() + field.products(),
+            s_squared,
+            homo,
+            lumo,
+            dipole: dipole.into(),
+            charges_loewdin: charges(properties::loewdin_populations(
+                &total,
+                &geometry.frame,
+                &places,
+                atoms,
+            )),
+            charges_mulliken: charges(mulliken),
+            spins_loewdin: spins,
+            bond_orders: properties::bond_orders(&densities, &geometry.overlap, &places, atoms),
+            electrons,
+            commutator: evaluation.commutator,
+            kinetic: total.dot(&geometry.kinetic),
+            functions_kept: geometry.frame.kept(),
+            overlap_smallest: geometry.frame.smallest(),
+            gradient: None,
+            positions: None,
+            relaxation: None,
+            stability: settled.stability,
+            integrals: IntegralCounts::default(),
+            seconds: 0.0,
+            scf_seconds: 0.0,
+        })
+    }
+}
+
+fn gradient(geometry: &Geometry, field: &Field<'_>, evaluation: &Evaluation) -> Vec<[f64; 3]> {
+    let densities = field.densities(&evaluation.occupied);
+    let mut weighted = DMatrix::zeros(geometry.basis.len(), geometry.basis.len());
+    for (y, fock) in evaluation.occupied.iter().zip(&evaluation.focks) {
+        // tr over occupied orbitals, in whatever combination they are: Y (YᵀFY) Yᵀ.
+        let energies = y.transpose() * (fock * y);
+        weighted +=
+            geometry.frame.transform(&(y * energies * y.transpose())) * field.occupation().weight();
+    }
+    // A single block stands for both spins.
+    let (Some(alpha), Some(beta)) = (densities.first(), densities.last()) else {
+        return Vec::new();
+    };
+    hartree_fock_gradient(
+        &geometry.molecule,
+        &geometry.basis,
+        alpha,
+        beta,
+        &weighted,
+        &GradientSettings::default(),
+    )
+    .into_iter()
+    .map(Into::into)
+    .collect()
+}
+
+fn counts(counts: integrals::repulsion::IntegralCounts) -> IntegralCounts {
+    IntegralCounts {
+        computed: counts.computed,
+        reused: counts.reused,
+    }
+}
+
+/// The points of a start, nearest last.
+fn start_points<'r, 's>(start: &'r Start<'s, Seed>) -> Vec<&'r SeedPoint<'s, Seed>> {
+    match start {
+        Start::Fresh => Vec::new(),
+        Start::Previous(point) => vec![point],
+        Start::Extrapolated(points) => points.iter().collect(),
+    }
+}
+
+impl Surface for HartreeFock {
+    type Seed = Seed;
+    type Workspace = Workspace;
+
+    fn workspace(&self) -> Workspace {
+        Workspace::default()
+    }
+
+    fn workspace_bytes(&self) -> u64 {
+        if self.is_direct() {
+            0
+        } else {
+            RepulsionList::bytes_needed(self.functions())
+        }
+    }
+
+    fn evaluate(
+        &self,
+        request: &PointRequest<'_, Seed>,
+        workspace: &mut Workspace,
+    ) -> Result<PointOutcome<Seed>, SurfaceError> {
+        let clock = Instant::now();
+        self.check_positions(request.positions)?;
+        let points = start_points(&request.start);
+        let keep = points.last().map(|p| p.seed.state().kept);
+        let geometry = self.geometry(request.positions, keep)?;
+        let direct = self
+            .is_direct()
+            .then(|| DirectRepulsion::new(&geometry.basis, &RepulsionSettings::default()));
+        let mut integrals = IntegralCounts::default();
+        let repulsion = match &direct {
+            Some(direct) => Repulsion::Direct(direct),
+            None => {
+                let list = workspace.list_of(&geometry.basis);
+                integrals = counts(list.counts());
+                Repulsion::Stored(list)
+            }
+        };
+        let mut field = Field::new(
+            geometry.core.clone(),
+            &geometry.frame,
+            repulsion,
+            geometry.nuclear,
+            self.occupation,
+        );
+        let mut settled = self.settle(request, &geometry, &mut field)?;
+        let scf_seconds = clock.elapsed().as_secs_f64() - settled.stability_seconds;
+        if let Some(newest) = points.last() {
+            // One labelling of the spins along a chain.
+            let state = newest.seed.state();
+            if seed::is_swapped(&settled.solution.evaluation.occupied, &state.occupied)? {
+                let solution = &mut settled.solution;
+                solution.evaluation.occupied.swap(0, 1);
+                solution.evaluation.focks.swap(0, 1);
+                solution.evaluation.errors.swap(0, 1);
+                solution.refined.swap(0, 1);
+                // What else was carried belongs to the other labelling.
+                solution.differences.clear();
+                settled.internal = None;
+            }
+        }
+        let mut record = self.record(&geometry, &field, &settled)?;
+        record.integrals = direct.as_ref().map_or(integrals, |d| counts(d.counts()));
+        record.scf_seconds = scf_seconds;
+        record.seconds = clock.elapsed().as_secs_f64();
+        if request.gradient && record.energy.is_some() {
+            record.gradient = Some(gradient(&geometry, &field, &settled.solution.evaluation));
+            record.seconds = clock.elapsed().as_secs_f64();
+        }
+        let seed = record.energy.is_some().then(|| {
+            Seed::new(SeedState {
+                occupied: settled.solution.refined,
+                kept: geometry.frame.kept(),
+                differences: settled.solution.differences,
+                internal: settled.internal,
+                triplet: settled.triplet,
+            })
+        });
+        Ok(PointOutcome { record, seed })
+    }
+
+    fn likeness(&self, one: &Seed, other: &Seed) -> [f64; 2] {
+        // Overlaps of orthonormal orbitals are finite, so that their eigenvalues are found; 0 reports "unlike".
+        one.likeness(other).unwrap_or([0.0, 0.0])
+    }
+}
+
+impl From<ElectronCountError> for SurfaceError {
+    fn from(error: ElectronCountError) -> Self {
+        Self::Electrons(error)
+    }
+}
