@@ -6,9 +6,8 @@ use super::quartet::{BraPrimitive, KetSums, Places, Quartets, Work, places};
 use crate::basis::Basis;
 use crate::integrals::boys;
 use crate::integrals::recurrence::hermite_count;
-use crate::integrals::repulsion::hermite::scratch_len;
 use crate::integrals::repulsion::lanes::{Four, dispatch};
-use crate::integrals::repulsion::primitives::{PRIMITIVES, field};
+use crate::integrals::repulsion::primitives::{field, run_primitives, scratch_len};
 use nalgebra::{DMatrix, Vector3};
 use rayon::prelude::*;
 
@@ -207,7 +206,7 @@ impl Job<'_> {
             hermite_count(degree) * bra_primitives.len(),
             Four::default(),
         );
-        scratch.resize(scratch_len(degree), Four::default());
+        scratch.resize(scratch_len(degree, bra_primitives.len()), Four::default());
         ket_fields.resize(field::SCALARS, Four::default());
         ket_values.resize(ket.len(), Four::default());
         let size = bra.rows_count() * ket.rows_count();
@@ -234,7 +233,8 @@ impl Job<'_> {
                 sources[lane] = &density[one.density..one.density + size];
             }
             interleave(sources, ket_density);
-            let done = PRIMITIVES[degree](
+            let done = run_primitives(
+                degree,
                 ket_fields,
                 bra_fields,
                 field::SCALARS,
