@@ -19,6 +19,8 @@ pub(crate) struct Arguments {
 pub(crate) enum Command {
     /// Run a spec: walk its grid, write tables and figures
     Scan(ScanArgs),
+    /// Find the equilibrium geometry, vibrations and force constants at each level of a spec; needs no sweep
+    Settle(SettleArgs),
     /// Make tables and figures again from a run's journal, without any calculation
     Report(ReportArgs),
     /// Validate a spec and print its grid, sizes and an estimate of the time; run nothing
@@ -41,6 +43,20 @@ pub(crate) enum Command {
 pub(crate) struct ScanArgs {
     /// The spec, a TOML file
     pub(crate) spec: PathBuf,
+    /// Move an existing run folder aside (to NAME.1, NAME.2, …; nothing is deleted)
+    #[arg(long)]
+    pub(crate) fresh: bool,
+    #[command(flatten)]
+    pub(crate) common: CommonArgs,
+}
+
+#[derive(Debug, Args)]
+pub(crate) struct SettleArgs {
+    /// The spec, a TOML file
+    pub(crate) spec: PathBuf,
+    /// Leave saddle points along their imaginary modes until a minimum is reached
+    #[arg(long)]
+    pub(crate) push: bool,
     /// Move an existing run folder aside (to NAME.1, NAME.2, …; nothing is deleted)
     #[arg(long)]
     pub(crate) fresh: bool,

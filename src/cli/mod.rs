@@ -5,6 +5,7 @@ mod check;
 mod exit;
 mod progress;
 mod scan;
+mod settle;
 
 pub use exit::Status;
 
@@ -57,6 +58,7 @@ pub fn run(
     let mut streams = Streams { out, err, terminal };
     let result = match arguments.command {
         Command::Scan(scan) => scan::run(&scan, stop, &mut streams),
+        Command::Settle(args) => settle::run(&args, stop, &mut streams),
         Command::Report(report) => scan::report(&report, &mut streams),
         Command::Check(check) => check::run(&check, &mut streams),
         Command::Basis { name } => basis(name.as_deref(), &mut streams),
@@ -113,12 +115,16 @@ impl From<std::io::Error> for Failure {
     }
 }
 
-/// Reads and validates a spec; its errors are already complete messages.
-fn load(path: &Path) -> Result<Spec, Failure> {
-    spec::load(path).map_err(|errors| Failure {
+/// Reads and validates a spec; its errors are already complete messages. What is allowed but may surprise is told.
+fn load(path: &Path, streams: &mut Streams<'_>) -> Result<Spec, Failure> {
+    let spec = spec::load(path).map_err(|errors| Failure {
         message: errors.to_string().trim_end().to_owned(),
         status: Status::WrongInput,
-    })
+    })?;
+    for note in &spec.notes {
+        writeln!(streams.err, "{note}")?;
+    }
+    Ok(spec)
 }
 
 fn basis(name: Option<&str>, streams: &mut Streams<'_>) -> Result<Status, Failure> {

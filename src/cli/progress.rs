@@ -100,7 +100,10 @@ impl<'a> Progress<'a> {
                 event: Event::Finished,
                 ..
             } => self.line(true),
-            JobEvent::LevelDone(_) => {}
+            JobEvent::Stationary(_)
+            | JobEvent::Limit(_)
+            | JobEvent::Onset(_)
+            | JobEvent::LevelDone(_) => {}
         }
     }
 

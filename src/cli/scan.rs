@@ -3,12 +3,12 @@
 use super::args::{CommonArgs, ReportArgs, ScanArgs};
 use super::progress::Progress;
 use super::{Failure, Status, Streams, load};
+use crate::job::journal::{self, Journal, JournalError, LevelEntry, Line};
 use crate::job::{self, JobError, JobEvent, JobRecord, JobResult};
 use crate::plot::PlotError;
 use crate::report::folder::{FolderError, Occupant, RunFolder};
 use crate::report::{self, figures};
 use crate::scan::Event;
-use crate::scan::journal::{self, Journal, JournalError, LevelEntry, Line};
 use crate::spec::Spec;
 use std::sync::atomic::AtomicBool;
 
@@ -52,7 +52,7 @@ pub(super) fn run(
     stop: &AtomicBool,
     streams: &mut Streams<'_>,
 ) -> Result<Status, Failure> {
-    let spec = load(&args.spec)?;
+    let spec = load(&args.spec, streams)?;
     let folder = RunFolder::at(args.common.out.as_deref().unwrap_or(&spec.output.folder));
     let record = match existing(&folder, &spec, args.fresh, streams)? {
         Some(record) => record,
@@ -63,8 +63,20 @@ pub(super) fn run(
 
 pub(super) fn report(args: &ReportArgs, streams: &mut Streams<'_>) -> Result<Status, Failure> {
     let source = RunFolder::at(&args.run);
-    let mut spec = load(&source.path().join("spec.toml"))?;
+    let mut spec = load(&source.path().join("spec.toml"), streams)?;
     let (header, lines) = journal::read(&source.journal())?;
+    let folder = RunFolder::at(args.common.out.as_deref().unwrap_or(source.path()));
+    let settled = super::settle::report(
+        &spec,
+        &header.fingerprint,
+        &lines,
+        &folder,
+        &args.common,
+        streams,
+    );
+    if let Some(status) = settled {
+        return status;
+    }
     if header.fingerprint != spec.fingerprint() {
         return Err(Failure::usage(format!(
             "{}: the journal belongs to another spec than the spec.toml beside it",
@@ -72,10 +84,9 @@ pub(super) fn report(args: &ReportArgs, streams: &mut Streams<'_>) -> Result<Sta
         )));
     }
     if let Some(path) = &args.spec {
-        spec.take_reporting_from(load(path)?);
+        spec.take_reporting_from(load(path, streams)?);
     }
     let record = record_of(lines);
-    let folder = RunFolder::at(args.common.out.as_deref().unwrap_or(source.path()));
     folder.create()?;
     finish(&spec, &record, &folder, &args.common, streams)
 }
@@ -120,8 +131,11 @@ fn record_of(lines: Vec<Line>) -> JobRecord {
     let mut record = JobRecord::default();
     for line in lines {
         match line {
-            Line::Header(_) => {}
+            Line::Header(_) | Line::Settled(_) => {}
             Line::Point(entry) => record.entries.push(entry),
+            Line::Limit(limit) => record.limits.push(limit),
+            Line::Onset(onset) => record.onsets.push(onset),
+            Line::Stationary(found) => record.stationary.push(found),
             Line::Complete(end) => record.ends.push(end),
         }
     }
@@ -156,6 +170,9 @@ fn walk(
                 level: *level,
                 entry: (**entry).clone(),
             })),
+            JobEvent::Limit(limit) => Some(Line::Limit(limit.clone())),
+            JobEvent::Onset(onset) => Some(Line::Onset(onset.clone())),
+            JobEvent::Stationary(found) => Some(Line::Stationary(found.clone())),
             JobEvent::LevelDone(end) => Some(Line::Complete(end.clone())),
             JobEvent::Walk { .. } => None,
         };

@@ -199,7 +199,7 @@ pub(crate) mod samples {
         }
     }
 
-    /// Two centres with all angular momenta, an sp shell and a generally contracted d shell.
+    /// Two centres with all angular momenta, an sp shell and generally contracted s and d shells.
     pub(crate) fn mixed_basis(kind: FunctionKind, max_l: usize) -> Basis {
         let mut shells = Vec::new();
         for atom in 0..2 {
@@ -209,6 +209,10 @@ pub(crate) mod samples {
         let p = Contraction::normalised(1, &sp.exponents, &[0.2, 0.9]);
         sp.contractions.push(p);
         shells.push(sp);
+        let mut general = shell(1, 0, kind);
+        let second = Contraction::normalised(0, &general.exponents, &[0.7, -0.9]);
+        general.contractions.push(second);
+        shells.push(general);
         if max_l >= 2 {
             let mut general = shell(1, 2, kind);
             let second = Contraction::normalised(2, &general.exponents, &[-0.4, 1.0]);

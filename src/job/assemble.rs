@@ -1,10 +1,12 @@
 //! Evaluations → results: the kept solution of every point, findings and cost.
 
-use super::{JobRecord, scan_of};
+use super::analysis::{LevelAnalysis, Material, analyse};
+use super::{JobRecord, Limit, Onset, scan_of};
 use crate::basis::Shell;
 use crate::scan::audit::{Audited, audit};
 use crate::scan::kept::keep;
-use crate::scan::{Entry, Finding, FindingKind, Grid, Likeness, Scan};
+use crate::scan::sweep::slopes;
+use crate::scan::{Entry, Finding, FindingKind, Grid, Likeness, Scan, Sweep};
 use crate::scf::Method;
 use crate::spec::{Level, Spec};
 use crate::surface::PointRecord;
@@ -62,10 +64,16 @@ pub struct LevelResult {
     pub points: Vec<PointResult>,
     /// What a person should see.
     pub findings: Vec<Finding>,
+    /// Energies of the separated parts.
+    pub limit: Option<Limit>,
+    /// Where the solution becomes unstable towards unrestricted orbitals.
+    pub onset: Option<Onset>,
     /// How alike the kept solutions of neighbouring points are.
     pub likeness: Vec<Likeness>,
     /// Mean Fock builds of the kept solutions, all points but the first; none for a single point.
     pub mean_fock_builds: Option<f64>,
+    /// Minima, fits and vibrational states.
+    pub analysis: LevelAnalysis,
 }
 
 /// The kept solution of a point.
@@ -79,6 +87,8 @@ pub struct PointResult {
     pub values: Vec<f64>,
     /// Positions, bohr.
     pub positions: Vec<Vector3<f64>>,
+    /// dE/dq of every sweep in hartree per ångström or degree, where gradients were asked for.
+    pub slopes: Option<Vec<f64>>,
     /// The numbers.
     pub record: PointRecord,
     /// Energy of another solution that was found here and is not kept, hartree.
@@ -139,6 +149,33 @@ impl JobResult {
 }
 
 impl LevelResult {
+    /// Energy of the lowest minimum, hartree: refined between the points where the sweep holds one, else of the lowest
+    /// point.
+    #[must_use]
+    pub fn bottom(&self) -> Option<f64> {
+        let minima = self.analysis.minima.iter().filter(|m| m.interior);
+        minima
+            .map(|m| m.energy)
+            .chain(self.lowest().and_then(|p| p.record.energy))
+            .min_by(f64::total_cmp)
+    }
+
+    /// Energy from the lowest minimum to the separated parts, hartree; where it was asked for, less what the basis
+    /// functions of the others lend each part.
+    #[must_use]
+    pub fn dissociation_energy(&self) -> Option<f64> {
+        let limit = self.limit.as_ref()?;
+        Some(limit.energy? - self.bottom()? - limit.counterpoise.unwrap_or(0.0))
+    }
+
+    /// The same from the lowest vibrational state, for a molecule of two atoms: atoms keep no zero-point energy.
+    #[must_use]
+    pub fn dissociation_energy_from_zero_point(&self) -> Option<f64> {
+        let found = self.analysis.spectroscopy.as_ref()?;
+        let zero_point = found.zero_point.filter(|_| found.mass.exact)?;
+        Some(self.dissociation_energy()? - zero_point)
+    }
+
     /// The point of lowest energy.
     #[must_use]
     pub fn lowest(&self) -> Option<&PointResult> {
@@ -180,7 +217,24 @@ pub fn assemble(spec: &Spec, record: &JobRecord) -> Result<JobResult, super::Job
                 .collect();
             let end = record.ends.iter().find(|e| e.level == number);
             let likeness = end.map_or(&[][..], |e| &e.likeness);
-            level_result(spec, level, &scan, &entries, likeness)
+            let mut result = level_result(spec, level, &scan, &entries, likeness);
+            let limit = record.limits.iter().find(|l| l.level == number);
+            result.limit = limit.map(|l| l.limit.clone());
+            let onset = record.onsets.iter().find(|o| o.level == number);
+            result.onset = onset.map(|o| o.onset);
+            result.analysis = analyse(&Material {
+                spec,
+                grid: &scan.grid,
+                points: &result.points,
+                findings: &result.findings,
+                stationary: record
+                    .stationary
+                    .iter()
+                    .filter(|s| s.level == number)
+                    .map(|s| &s.stationary)
+                    .collect(),
+            });
+            result
         })
         .collect();
     Ok(JobResult {
@@ -229,6 +283,9 @@ fn cost(record: &JobRecord) -> Cost {
         cost.integrals_computed += record.integrals.computed;
         cost.integrals_reused += record.integrals.reused;
     }
+    for found in &record.stationary {
+        cost.fock_builds += found.stationary.fock_builds;
+    }
     cost
 }
 
@@ -267,11 +324,17 @@ fn level_result(
         .enumerate()
         .filter_map(|(point, kept)| {
             let kept = kept.as_ref()?;
+            let positions = match &kept.entry.record.positions {
+                Some(relaxed) => relaxed.iter().map(|&p| Vector3::from(p)).collect(),
+                None => scan.positions[point].clone(),
+            };
+            let gradient = kept.entry.record.gradient.as_ref();
             Some(PointResult {
                 point,
                 index: scan.grid.index(point),
                 values: scan.coordinates[point].clone(),
-                positions: scan.positions[point].clone(),
+                slopes: gradient.map(|g| reported_slopes(&spec.sweeps, &positions, g)),
+                positions,
                 record: kept.entry.record.clone(),
                 second_energy: kept.second_energy,
                 findings: kinds_at(point, &findings),
@@ -292,9 +355,25 @@ fn level_result(
         points,
         findings,
         likeness: likeness.to_vec(),
+        limit: None,
+        onset: None,
+        analysis: LevelAnalysis::default(),
         mean_fock_builds: (!further.is_empty())
             .then(|| further.iter().sum::<f64>() / further.len() as f64),
     }
+}
+
+/// dE/dq of every sweep in hartree per ångström or degree.
+fn reported_slopes(
+    sweeps: &[Sweep],
+    positions: &[Vector3<f64>],
+    gradient: &[[f64; 3]],
+) -> Vec<f64> {
+    slopes(sweeps, positions, gradient)
+        .iter()
+        .zip(sweeps)
+        .map(|(slope, sweep)| slope / sweep.motion.coordinate.to_reported(1.0))
+        .collect()
 }
 
 /// Kinds of the findings that concern a point, each once.

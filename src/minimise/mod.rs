@@ -6,15 +6,16 @@
 
 pub mod coordinates;
 mod held;
-//X pub mod hessian;
+pub mod hessian;
+pub mod landscape;
 pub mod model_hessian;
-//X pub mod path;
+pub mod path;
 pub mod primitive;
-//X pub mod relaxed;
-//X pub mod settle;
+pub mod relaxed;
+pub mod settle;
 mod solve;
 pub mod step;
-//X pub mod valley;
+pub mod valley;
 
 use crate::molecule::Molecule;
 use crate::molecule::internal::{Coordinate, CoordinateError};
@@ -118,7 +119,7 @@ impl<'a, S> Task<'a, S> {
 }
 
 /// Why an optimisation ended.
-#[derive(Debug, Clone, Copy, PartialEq, Eq, serde::Serialize)]
+#[derive(Debug, Clone, Copy, PartialEq, Eq, serde::Serialize, serde::Deserialize)]
 #[serde(rename_all = "kebab-case")]
 pub enum MinimiseStop {
     /// all thresholds met
@@ -219,7 +220,7 @@ pub enum MinimiseError {
         /// bohr or radian
         coordinates: Vec<f64>,
         /// why
-        reason: crate::molecule::motion::MotionError,
+        reason: Box<crate::molecule::motion::MotionError>,
     },
     /// Arrays that do not belong together.
     #[error("{given} values where {expected} are needed")]
@@ -232,6 +233,12 @@ pub enum MinimiseError {
     /// Moments of inertia that cannot be.
     #[error(transparent)]
     Inertia(#[from] crate::molecule::inertia::InertiaError),
+    /// A Hessian that gives no vibrations.
+    #[error(transparent)]
+    Vibration(#[from] crate::vibration::VibrationError),
+    /// A grid that cannot be interpolated.
+    #[error(transparent)]
+    Grid(#[from] crate::fit::FitError),
     /// Numbers that are not finite.
     #[error("a number on the way to the minimum is not finite")]
     NotFinite,
@@ -265,3 +272,7 @@ pub fn minimise<S: Surface>(
 mod test_fields;
 #[cfg(test)]
 mod tests;
+#[cfg(test)]
+mod tests_settle;
+#[cfg(test)]
+mod tests_valley;

@@ -59,10 +59,11 @@ impl<S: Surface> Evaluator<'_, S> {
         let own = &mut *own;
         let start = match (own.start.take(), &own.seed) {
             (Some(start), _) => start,
-            (None, Some(seed)) => Start::Previous(SeedPoint {
+            // A list of one point: what an extrapolation carries along besides densities comes too.
+            (None, Some(seed)) => Start::Extrapolated(vec![SeedPoint {
                 coordinates: self.coordinates,
                 seed,
-            }),
+            }]),
             (None, None) => Start::Fresh,
         };
         let request = PointRequest {

@@ -1,7 +1,7 @@
 //! Tests of the optimiser on force fields whose minima are known.
 
 use super::coordinates::InternalSet;
-use super::test_fields::{ZMATRICES, distorted, field, from_zmatrix, named};
+use super::test_fields::{distorted, field, from_zmatrix, named, text_of, zmatrices};
 use super::*;
 use crate::surface::model::{Form, ModelSurface};
 use std::f64::consts::PI;
@@ -27,7 +27,7 @@ fn deviation(molecule: &Molecule, positions: &[Vector3<f64>]) -> f64 {
 #[test]
 fn distorted_molecules_find_their_minimum_in_few_calls() {
     let mut calls = Vec::new();
-    for (number, (name, text)) in ZMATRICES.iter().enumerate() {
+    for (number, (name, text)) in zmatrices().iter().enumerate() {
         let reference = from_zmatrix(text);
         let surface = field(&reference);
         let start = distorted(text, 11 + 97 * number as u64);
@@ -48,7 +48,7 @@ fn distorted_molecules_find_their_minimum_in_few_calls() {
 fn tight_thresholds_are_met_and_said() {
     let reference = named("methanol");
     let minimum = run(
-        &distorted(ZMATRICES[12].1, 5),
+        &distorted(text_of("methanol"), 5),
         &field(&reference),
         &MinimiseSettings::tight(),
     );
@@ -60,7 +60,7 @@ fn tight_thresholds_are_met_and_said() {
 #[test]
 fn turning_the_molecule_turns_the_way_and_nothing_else() {
     let surface = field(&named("ethanol"));
-    let start = distorted(ZMATRICES[21].1, 3);
+    let start = distorted(text_of("ethanol"), 3);
     let turn = nalgebra::Rotation3::from_euler_angles(0.3, 1.1, -2.0);
     let turned: Vec<Vector3<f64>> = start
         .positions
@@ -249,11 +249,11 @@ fn what_was_learnt_of_the_hessian_shortens_the_next_optimisation() {
     let reference = named("ethanol");
     let surface = field(&reference);
     let first = run(
-        &distorted(ZMATRICES[21].1, 3),
+        &distorted(text_of("ethanol"), 3),
         &surface,
         &MinimiseSettings::default(),
     );
-    let again = distorted(ZMATRICES[21].1, 8);
+    let again = distorted(text_of("ethanol"), 8);
     let fresh = run(&again, &surface, &MinimiseSettings::default());
     let task = Task {
         curvature: Some(&first.curvature),

@@ -1,6 +1,6 @@
 //! `points.csv`: one row per level and point, units in the column names.
 
-use crate::job::{JobResult, LevelResult, PointResult};
+use crate::job::{JobResult, LevelResult, PointResult, SweepResult};
 use crate::spec::Spec;
 use crate::units::DEBYE_PER_AU;
 
@@ -25,6 +25,14 @@ fn header(spec: &Spec, result: &JobResult) -> Vec<String> {
     let mut names = vec!["level".to_owned()];
     names.extend(result.sweeps.iter().map(|s| s.column.clone()));
     names.push("energy_hartree".to_owned());
+    if spec.output.gradients {
+        names.extend(
+            result
+                .sweeps
+                .iter()
+                .map(|s| format!("slope_{}_hartree_per_{}", stem(s), s.unit)),
+        );
+    }
     names.push(format!("relative_{}", spec.output.energy.column()));
     names.extend(
         [
@@ -41,12 +49,23 @@ fn header(spec: &Spec, result: &JobResult) -> Vec<String> {
     names
 }
 
+/// The name of a sweep's column without its unit.
+fn stem(sweep: &SweepResult) -> String {
+    let column = &sweep.column;
+    let unit = format!("_{}", sweep.unit);
+    column.strip_suffix(&unit).unwrap_or(column).to_owned()
+}
+
 fn row(spec: &Spec, level: &LevelResult, point: &PointResult, zero: Option<f64>) -> Vec<String> {
     let number = |value: Option<f64>| value.map(|v| v.to_string()).unwrap_or_default();
     let record = &point.record;
     let mut fields = vec![level.name.clone()];
     fields.extend(point.values.iter().map(f64::to_string));
     fields.push(number(record.energy));
+    if spec.output.gradients {
+        let slopes = (0..spec.sweeps.len()).map(|k| point.slopes.as_ref().and_then(|s| s.get(k)));
+        fields.extend(slopes.map(|s| number(s.copied().filter(|_| record.energy.is_some()))));
+    }
     fields.push(number(
         record
             .energy

@@ -1,9 +1,9 @@
 //! Results → figures: fills the plain structs of [`plot`](crate::plot) and renders them in the formats asked for.
 
+use super::{figure_fits, state_figures};
 use crate::job::{JobResult, LevelResult, PointResult};
-use crate::plot::{
-    Axis, CurveFigure, CurveLevel, CurveMark, Figure, PlotError, SurfaceFigure, SurfaceMark,
-};
+use crate::plot::{Axis, CurveFigure, CurveLevel, CurveLimit, Figure, PlotError, SurfaceFigure};
+use crate::scan::StationaryKind;
 use crate::spec::{FigureFormat, Spec};
 
 /// Every figure of a result: file name and bytes. A run without a sweep has none.
@@ -25,27 +25,40 @@ pub fn render(spec: &Spec, result: &JobResult) -> Result<Vec<(String, Vec<u8>)>,
 }
 
 fn draw(spec: &Spec, result: &JobResult) -> Result<Vec<(String, Figure)>, PlotError> {
-    match result.sweeps.len() {
-        0 => Ok(Vec::new()),
-        1 => Ok(vec![("curve".to_owned(), curve(spec, result).draw()?)]),
-        _ => result
-            .levels
-            .iter()
-            .enumerate()
-            .map(|(k, level)| {
-                // The first level's figure has the plain name; further ones are numbered from 2.
-                let name = if k == 0 {
-                    "surface".to_owned()
-                } else {
-                    format!("surface-{}", k + 1)
-                };
-                Ok((name, surface(spec, result, level).draw()?))
-            })
-            .collect(),
+    if result.sweeps.is_empty() {
+        return Ok(Vec::new());
+    }
+    let mut figures = vec![("audit".to_owned(), state_figures::audit(result).draw()?)];
+    if result.sweeps.len() == 1 {
+        figures.push(("curve".to_owned(), curve(spec, result).draw()?));
+        for (name, figure) in figure_fits::vibrations(spec, result, &axis(result, 0)) {
+            figures.push((name, figure.draw()?));
+        }
+    }
+    for (k, level) in result.levels.iter().enumerate() {
+        if result.sweeps.len() == 1 {
+            figures.push((
+                numbered("density", k),
+                state_figures::density(result, level).draw()?,
+            ));
+        } else {
+            figures.push((numbered("surface", k), surface(spec, result, level).draw()?));
+        }
+    }
+    Ok(figures)
+}
+
+/// The first level's figure has the plain name; further ones are numbered from 2.
+fn numbered(name: &str, level: usize) -> String {
+    if level == 0 {
+        name.to_owned()
+    } else {
+        format!("{name}-{}", level + 1)
     }
 }
 
-fn axis(result: &JobResult, sweep: usize) -> Axis {
+/// Axis of a sweep.
+pub(super) fn axis(result: &JobResult, sweep: usize) -> Axis {
     let sweep = &result.sweeps[sweep];
     let quantity = match sweep.kind {
         "bond" => "distance",
@@ -98,17 +111,18 @@ fn curve_level(spec: &Spec, result: &JobResult, level: &LevelResult) -> CurveLev
         } else {
             Vec::new()
         },
-        minima: level
-            .lowest()
-            .and_then(|p| {
-                Some(CurveMark {
-                    x: p.values[0],
-                    energy: relative(spec, p, zero)?,
-                    text: None,
-                })
-            })
-            .into_iter()
-            .collect(),
+        minima: figure_fits::curve_minima(level, zero, scale),
+        fits: figure_fits::fits(result, level, zero, scale),
+        breaks: state_figures::breaks(level),
+        limit: level
+            .limit
+            .as_ref()
+            .and_then(|l| l.energy)
+            .map(|e| CurveLimit {
+                energy: (e - zero) * scale,
+                text: None,
+            }),
+        onset: level.onset.map(|o| o.value),
         findings: (0..level.points.len())
             .filter(|&k| {
                 level.points[k].record.energy.is_some()
@@ -121,6 +135,7 @@ fn curve_level(spec: &Spec, result: &JobResult, level: &LevelResult) -> CurveLev
 
 fn surface(spec: &Spec, result: &JobResult, level: &LevelResult) -> SurfaceFigure {
     let zero = level.lowest().and_then(|p| p.record.energy).unwrap_or(0.0);
+    let scale = spec.output.energy.per_hartree();
     let mut energies = vec![None; result.grid.len()];
     for point in &level.points {
         energies[point.point] = relative(spec, point, zero);
@@ -137,18 +152,9 @@ fn surface(spec: &Spec, result: &JobResult, level: &LevelResult) -> SurfaceFigur
         y_values: result.sweeps[1].values.clone(),
         energies,
         cap: None,
-        minima: level
-            .lowest()
-            .map(|p| SurfaceMark {
-                x: p.values[0],
-                y: p.values[1],
-                energy: 0.0,
-                text: None,
-            })
-            .into_iter()
-            .collect(),
-        saddles: Vec::new(),
-        path: Vec::new(),
+        minima: figure_fits::surface_marks(level, StationaryKind::Minimum, zero, scale),
+        saddles: figure_fits::surface_marks(level, StationaryKind::Saddle, zero, scale),
+        path: figure_fits::valley_path(level),
         findings: level
             .points
             .iter()

@@ -1,7 +1,9 @@
 //! `summary.json`: everything a run has to say, for programs.
 
 use super::csv::dipole_debye;
+use super::fitted;
 use crate::job::{Cost, JobResult, LevelResult, PointResult};
+use crate::job::{LimitPart, pieces};
 use crate::scan::{Finding, FindingKind};
 use crate::units::ANGSTROM_PER_BOHR;
 use serde::Serialize;
@@ -32,7 +34,44 @@ struct Level<'a> {
     electrons: usize,
     mean_fock_builds_per_further_point: Option<f64>,
     points: Vec<Point<'a>>,
+    dissociation: Option<Dissociation<'a>>,
+    onset_of_instability: Option<Onset<'a>>,
+    minima: Vec<fitted::Minimum<'a>>,
+    barriers: Vec<fitted::Minimum<'a>>,
+    fits: Vec<fitted::FitEntry<'a>>,
+    force_field: Option<fitted::ForceFieldEntry<'a>>,
+    valleys: Vec<fitted::ValleyEntry>,
+    spectroscopy: Option<fitted::SpectroscopyEntry<'a>>,
+    notes: &'a [String],
     findings: &'a [Finding],
+}
+
+#[derive(Serialize)]
+struct Dissociation<'a> {
+    parts: Vec<Part<'a>>,
+    proposed: bool,
+    limit_hartree: Option<f64>,
+    counterpoise_hartree: Option<f64>,
+    unreachable_hartree: Option<f64>,
+    de_hartree: Option<f64>,
+    d0_hartree: Option<f64>,
+    text: Option<String>,
+}
+
+#[derive(Serialize)]
+struct Part<'a> {
+    atoms: Vec<&'a str>,
+    charge: i32,
+    multiplicity: u32,
+    method: &'static str,
+    energy_hartree: Option<f64>,
+    s_squared: f64,
+}
+
+#[derive(Serialize)]
+struct Onset<'a> {
+    value: f64,
+    unit: &'a str,
 }
 
 #[derive(Serialize)]
@@ -41,6 +80,9 @@ struct Point<'a> {
     values: &'a [f64],
     geometry_angstrom: Vec<(&'a str, f64, f64, f64)>,
     energy_hartree: Option<f64>,
+    /// dE/dq of every sweep, hartree per ångström or degree.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    slopes_hartree_per_unit: Option<&'a [f64]>,
     converged: bool,
     fock_builds: usize,
     s_squared: Option<f64>,
@@ -87,7 +129,46 @@ fn level<'a>(result: &'a JobResult, level: &'a LevelResult) -> Level<'a> {
         electrons: level.electrons,
         mean_fock_builds_per_further_point: level.mean_fock_builds,
         points: level.points.iter().map(|p| point(result, p)).collect(),
+        dissociation: level.limit.as_ref().map(|limit| Dissociation {
+            parts: limit.parts.iter().map(|p| part(result, p)).collect(),
+            proposed: limit.proposed,
+            limit_hartree: limit.energy,
+            counterpoise_hartree: limit.counterpoise,
+            unreachable_hartree: limit.unreachable,
+            de_hartree: level.dissociation_energy(),
+            d0_hartree: level.dissociation_energy_from_zero_point(),
+            text: pieces::sentence(level, &result.labels),
+        }),
+        onset_of_instability: level
+            .onset
+            .zip(result.sweeps.first())
+            .map(|(onset, sweep)| Onset {
+                value: onset.value,
+                unit: sweep.unit,
+            }),
+        minima: fitted::minima(result, &level.analysis.minima),
+        barriers: fitted::minima(result, &level.analysis.barriers),
+        fits: fitted::fits(result, &level.analysis),
+        force_field: level.analysis.force_field.as_ref().map(fitted::force_field),
+        valleys: fitted::valleys(&level.analysis.valleys),
+        spectroscopy: level
+            .analysis
+            .spectroscopy
+            .as_ref()
+            .map(fitted::spectroscopy),
+        notes: &level.analysis.notes,
         findings: &level.findings,
+    }
+}
+
+fn part<'a>(result: &'a JobResult, part: &LimitPart) -> Part<'a> {
+    Part {
+        atoms: part.atoms.iter().map(|&a| &*result.labels[a]).collect(),
+        charge: part.charge,
+        multiplicity: part.multiplicity,
+        method: part.method.name(),
+        energy_hartree: part.energy,
+        s_squared: part.s_squared,
     }
 }
 
@@ -107,6 +188,7 @@ fn point<'a>(result: &'a JobResult, point: &'a PointResult) -> Point<'a> {
             })
             .collect(),
         energy_hartree: record.energy,
+        slopes_hartree_per_unit: point.slopes.as_deref().filter(|_| converged),
         converged,
         fock_builds: record.fock_builds,
         s_squared: converged.then_some(record.s_squared),

@@ -1,5 +1,7 @@
 //! The result as a short table per level, for people.
 
+use super::text_fits;
+use crate::job::pieces;
 use crate::job::{JobResult, LevelResult, PointResult};
 use crate::units::EnergyUnit;
 use std::fmt::Write;
@@ -18,7 +20,8 @@ pub fn render(result: &JobResult, unit: EnergyUnit) -> String {
             level.name, level.basis_functions, level.electrons
         );
         table(&mut text, result, level, unit);
-        summary(&mut text, result, level);
+        summary(&mut text, result, level, unit);
+        text_fits::write(&mut text, result, &level.analysis, unit);
     }
     cost(&mut text, result);
     text
@@ -106,7 +109,7 @@ fn shown<'a>(result: &JobResult, level: &'a LevelResult) -> Vec<&'a PointResult>
     }
 }
 
-fn summary(text: &mut String, result: &JobResult, level: &LevelResult) {
+fn summary(text: &mut String, result: &JobResult, level: &LevelResult, unit: EnergyUnit) {
     if let Some(lowest) = level.lowest() {
         let energy = lowest.record.energy.unwrap_or(f64::NAN);
         let place: Vec<String> = result
@@ -128,8 +131,64 @@ fn summary(text: &mut String, result: &JobResult, level: &LevelResult) {
     if let Some(mean) = level.mean_fock_builds {
         let _ = writeln!(text, "{mean:.2} Fock builds per point after the first");
     }
+    dissociation(text, result, level, unit);
     for finding in &level.findings {
         let _ = writeln!(text, "{}: {}", finding.kind.word(), finding.text);
+    }
+}
+
+fn dissociation(text: &mut String, result: &JobResult, level: &LevelResult, unit: EnergyUnit) {
+    if let (Some(onset), Some(sweep)) = (level.onset, result.sweeps.first()) {
+        let sign = if sweep.unit == "angstrom" { "Å" } else { "°" };
+        let _ = writeln!(
+            text,
+            "unrestricted orbitals become lower from {:.4} {sign} on",
+            onset.value
+        );
+    }
+    let Some(limit) = &level.limit else { return };
+    let parts: Vec<String> = limit
+        .parts
+        .iter()
+        .map(|p| {
+            let atoms: Vec<&str> = p.atoms.iter().map(|&a| &*result.labels[a]).collect();
+            let charge = if p.charge == 0 {
+                String::new()
+            } else {
+                format!(", charge {:+}", p.charge)
+            };
+            format!(
+                "{} ({} multiplicity {}{charge})",
+                atoms.join("+"),
+                p.method.name(),
+                p.multiplicity
+            )
+        })
+        .collect();
+    let origin = if limit.proposed {
+        "parts proposed"
+    } else {
+        "parts"
+    };
+    let energy = limit
+        .energy
+        .map_or_else(|| "not converged".to_owned(), |e| format!("{e:.9} hartree"));
+    let _ = writeln!(text, "{origin}: {}, together {energy}", parts.join(", "));
+    if let Some(de) = level.dissociation_energy() {
+        let (value, word) = (de * unit.per_hartree(), unit.symbol());
+        let corrected = if limit.counterpoise.is_some() {
+            ", counterpoise-corrected"
+        } else {
+            ""
+        };
+        let _ = writeln!(text, "De {value:.3} {word}{corrected}");
+        if let Some(d0) = level.dissociation_energy_from_zero_point() {
+            let value = d0 * unit.per_hartree();
+            let _ = writeln!(text, "D0 {value:.3} {word}{corrected}");
+        }
+    }
+    if let Some(sentence) = pieces::sentence(level, &result.labels) {
+        let _ = writeln!(text, "{sentence}");
     }
 }
 

@@ -98,6 +98,20 @@ pub fn run<S: Surface>(
     stop: &AtomicBool,
     observer: &mut dyn FnMut(&Event),
 ) -> Result<Walked, ScanError> {
+    run_keeping(surface, scan, pool, stop, observer).map(|(walked, _)| walked)
+}
+
+/// As [`run`], and what the kept solution of every point left for calculations that start from it.
+///
+/// # Errors
+/// As [`run`].
+pub fn run_keeping<S: Surface>(
+    surface: &S,
+    scan: &Scan,
+    pool: &ThreadPool,
+    stop: &AtomicBool,
+    observer: &mut dyn FnMut(&Event),
+) -> Result<(Walked, Vec<Option<S::Seed>>), ScanError> {
     let steps = scan.plan();
     observer(&Event::Started {
         planned: steps.len(),
@@ -121,23 +135,17 @@ pub fn run<S: Surface>(
     if scan.walks_back() {
         heal::heal(&evaluator, &mut entries, &mut left, stop, observer)?;
     }
-    let likeness = likeness(surface, scan, &entries, &left);
+    let seeds: Vec<Option<S::Seed>> = keep(&entries, scan.grid.len(), scan.settings.state)
+        .iter()
+        .map(|kept| left.remove(&kept.as_ref()?.entry.order).map(|l| l.seed))
+        .collect();
+    let likeness = likeness(surface, scan, &seeds);
     observer(&Event::Finished);
-    Ok(Walked { entries, likeness })
+    Ok((Walked { entries, likeness }, seeds))
 }
 
 /// How alike the kept solutions of neighbouring points are.
-fn likeness<S: Surface>(
-    surface: &S,
-    scan: &Scan,
-    entries: &[Entry],
-    left: &BTreeMap<usize, Left<S::Seed>>,
-) -> Vec<Likeness> {
-    let kept = keep(entries, scan.grid.len(), scan.settings.state);
-    let seed = |point: usize| {
-        left.get(&kept[point].as_ref()?.entry.order)
-            .map(|l| &l.seed)
-    };
+fn likeness<S: Surface>(surface: &S, scan: &Scan, seeds: &[Option<S::Seed>]) -> Vec<Likeness> {
     let mut all = Vec::new();
     for point in 0..scan.grid.len() {
         for neighbour in scan
@@ -146,7 +154,7 @@ fn likeness<S: Surface>(
             .into_iter()
             .filter(|&n| n > point)
         {
-            if let (Some(one), Some(other)) = (seed(point), seed(neighbour)) {
+            if let (Some(one), Some(other)) = (&seeds[point], &seeds[neighbour]) {
                 let cosines = surface.likeness(one, other);
                 all.push(Likeness {
                     points: [point, neighbour],

@@ -7,6 +7,8 @@ use std::path::{Path, PathBuf};
 
 /// Most problems that are written out; the rest are counted.
 const SHOWN: usize = 50;
+/// Most problems that are kept: finding the line of each costs a pass over the text.
+const KEPT: usize = 500;
 /// Longest stretch of a source line that is kept, bytes on either side of the place.
 const KEPT_BYTES: usize = 160;
 
@@ -90,6 +92,13 @@ impl Diagnostic {
     /// expected, and how to mend it. `colour` adds terminal colours.
     #[must_use]
     pub fn render(&self, colour: bool) -> String {
+        if self.excerpt.is_none() {
+            let notes = [&self.expected, &self.hint].into_iter().flatten();
+            return notes.fold(
+                format!("{}: {}", self.file.display(), self.message),
+                |text, note| format!("{text}\n  = {note}"),
+            );
+        }
         let mut title = self.file.display().to_string();
         if let (Some(line), Some(column)) = (self.line, self.column) {
             title += &format!(":{line}:{column}");
@@ -105,24 +114,20 @@ impl Diagnostic {
             .no_name()
             .primary_title(title.as_str())
             .elements(std::iter::empty::<annotate_snippets::Message<'_>>());
-        let mut notes = Vec::new();
-        match (&self.excerpt, self.line) {
-            (Some((source, underline)), Some(line)) => {
-                let annotation = AnnotationKind::Primary
-                    .span(underline.clone())
-                    .label(self.expected.as_deref());
-                group = group.element(
-                    Snippet::source(source.as_str())
-                        .line_start(line)
-                        .annotation(annotation),
-                );
-            }
-            _ => notes.extend(self.expected.as_deref()),
+        if let (Some((source, underline)), Some(line)) = (&self.excerpt, self.line) {
+            let annotation = AnnotationKind::Primary
+                .span(underline.clone())
+                .label(self.expected.as_deref());
+            group = group.element(
+                Snippet::source(source.as_str())
+                    .line_start(line)
+                    .annotation(annotation),
+            );
         }
-        notes.extend(self.hint.as_deref());
-        let notes: Vec<String> = notes
-            .into_iter()
-            .map(annotate_snippets::normalize_untrusted_str)
+        let notes: Vec<String> = self
+            .hint
+            .iter()
+            .map(|hint| annotate_snippets::normalize_untrusted_str(hint))
             .collect();
         for note in &notes {
             group = group.element(Level::HELP.no_name().message(note.as_str()));
@@ -155,7 +160,11 @@ impl SpecErrors {
             .map(|d| d.render(colour))
             .collect();
         if self.0.len() > SHOWN {
-            parts.push(format!("… and {} more problems", self.0.len() - SHOWN));
+            let least = if self.0.len() < KEPT { "" } else { "at least " };
+            parts.push(format!(
+                "… and {least}{} more problems",
+                self.0.len() - SHOWN
+            ));
         }
         parts.join("\n\n")
     }
@@ -169,7 +178,7 @@ impl fmt::Display for SpecErrors {
 
 impl std::error::Error for SpecErrors {}
 
-/// Problems of one text as they are found.
+/// Problems of one text as they are found; the first few hundred are kept.
 #[derive(Debug)]
 pub(super) struct Problems<'t> {
     /// The file as the user named it.
@@ -178,6 +187,8 @@ pub(super) struct Problems<'t> {
     pub(super) text: &'t str,
     /// What was found so far.
     pub(super) found: Vec<Diagnostic>,
+    /// Takes what is no longer kept.
+    surplus: Diagnostic,
 }
 
 impl<'t> Problems<'t> {
@@ -187,6 +198,7 @@ impl<'t> Problems<'t> {
             file,
             text,
             found: Vec::new(),
+            surplus: Diagnostic::of_file(file, ""),
         }
     }
 
@@ -196,6 +208,9 @@ impl<'t> Problems<'t> {
         span: &Range<usize>,
         message: impl Into<String>,
     ) -> &mut Diagnostic {
+        if self.found.len() >= KEPT {
+            return &mut self.surplus;
+        }
         let diagnostic = Diagnostic::at(self.file, self.text, span, message);
         self.push(diagnostic)
     }
@@ -203,6 +218,9 @@ impl<'t> Problems<'t> {
     /// Records a problem found elsewhere.
     pub(super) fn push(&mut self, diagnostic: Diagnostic) -> &mut Diagnostic {
         let place = self.found.len();
+        if place >= KEPT {
+            return &mut self.surplus;
+        }
         self.found.push(diagnostic);
         &mut self.found[place]
     }
@@ -263,6 +281,22 @@ fn listed<S: AsRef<str>>(words: &[S], last: &str) -> String {
             format!("{} {last} {}", head.join(", "), tail.as_ref())
         }
     }
+}
+
+/// A number as a person would write it: 1, 0.5, 1e-7.
+pub(super) fn number(value: f64) -> String {
+    let whole = value.abs() < 1e15 && value.fract().abs() < f64::MIN_POSITIVE;
+    if whole {
+        format!("{value}")
+    } else {
+        format!("{value:?}")
+    }
+}
+
+/// A count and its noun: 1 point, 2 points.
+pub(super) fn counted(count: usize, noun: &str) -> String {
+    let plural = if count == 1 { "" } else { "s" };
+    format!("{count} {noun}{plural}")
 }
 
 /// A piece of the user's text made fit for a message: in quotes, shortened, without control characters.

@@ -23,7 +23,7 @@ const SMALLEST: &str =
 /// Everything that is wrong with it, or that it cannot be read: missing, a folder, more than
 /// [`MAX_SPEC_BYTES`], not UTF-8.
 pub fn load(path: &Path) -> Result<Spec, SpecErrors> {
-    let text = read_text(path, MAX_SPEC_BYTES).map_err(|d| SpecErrors(vec![d]))?;
+    let text = read_text(path, MAX_SPEC_BYTES).map_err(|d| SpecErrors(vec![*d]))?;
     parse(&text, path)
 }
 
@@ -82,29 +82,35 @@ fn too_large(path: &Path, limit: u64) -> Diagnostic {
 ///
 /// # Errors
 /// A file that is missing, unreadable, no ordinary file, too large or not UTF-8.
-pub(super) fn read_text(path: &Path, limit: u64) -> Result<String, Diagnostic> {
+pub(super) fn read_text(path: &Path, limit: u64) -> Result<String, Box<Diagnostic>> {
     let unreadable = |error: &std::io::Error| {
         let reason = match error.kind() {
             std::io::ErrorKind::NotFound => "there is no such file".to_owned(),
             std::io::ErrorKind::PermissionDenied => "the file may not be read".to_owned(),
             _ => format!("the file cannot be read: {error}"),
         };
-        Diagnostic::of_file(path, reason)
+        Box::new(Diagnostic::of_file(path, reason))
     };
     let about = std::fs::metadata(path).map_err(|e| unreadable(&e))?;
     if about.is_dir() {
-        return Err(Diagnostic::of_file(path, "this is a folder, not a file"));
+        return Err(Box::new(Diagnostic::of_file(
+            path,
+            "this is a folder, not a file",
+        )));
     }
     // A device or pipe may never end; a size that is not there cannot be checked.
     if !about.is_file() {
-        return Err(Diagnostic::of_file(path, "this is not an ordinary file"));
+        return Err(Box::new(Diagnostic::of_file(
+            path,
+            "this is not an ordinary file",
+        )));
     }
     let mut bytes = Vec::new();
     File::open(path)
         .and_then(|file| file.take(limit + 1).read_to_end(&mut bytes))
         .map_err(|e| unreadable(&e))?;
     if bytes.len() as u64 > limit {
-        return Err(too_large(path, limit));
+        return Err(Box::new(too_large(path, limit)));
     }
     String::from_utf8(bytes).map_err(|error| {
         let place = error.utf8_error().valid_up_to();
@@ -121,6 +127,6 @@ pub(super) fn read_text(path: &Path, limit: u64) -> Result<String, Diagnostic> {
             ),
         );
         diagnostic.hint("save it as UTF-8");
-        diagnostic
+        Box::new(diagnostic)
     })
 }

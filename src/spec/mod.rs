@@ -69,18 +69,22 @@ pub struct Spec {
 }
 
 impl Spec {
-    /// Takes title, fits, vibrational states and output from another spec: what a report may change without a calculation.
+    /// Takes title, fits, vibrational states and output from another spec: what a report may change without a
+    /// calculation. Whether gradients are computed stays as it is.
     pub fn take_reporting_from(&mut self, other: Self) {
         self.title = other.title;
         self.fits = other.fits;
         self.vibration = other.vibration;
-        self.output = other.output;
+        self.output = OutputSpec {
+            gradients: self.output.gradients,
+            ..other.output
+        };
         self.text = resolved::text(self);
     }
 
     /// Sixteen hexadecimal digits that differ between specs whose points differ: geometry, masses, basis functions, levels,
-    /// sweeps, walk, SCF settings and whether gradients are computed. Title, fits, vibrational states, separated parts
-    /// and output do not change a point and do not count.
+    /// sweeps, walk, SCF settings, separated parts and whether gradients are computed. Title, fits, vibrational states and
+    /// output do not change a calculation and do not count.
     #[must_use]
     pub fn fingerprint(&self) -> &str {
         &self.fingerprint
@@ -144,7 +148,7 @@ impl Level {
 /// Parts into which the molecule dissociates.
 #[derive(Debug, Clone, PartialEq, Eq)]
 pub struct DissociationSpec {
-    /// The parts; each atom belongs to exactly one.
+    /// The parts; each atom belongs to exactly one. Empty: those that the swept bond cuts.
     pub parts: Vec<Part>,
     /// Whether each part is computed in the basis of the whole as well.
     pub counterpoise: bool,

@@ -22,13 +22,7 @@ pub(super) enum Feature {
 }
 
 /// The features that are not built.
-const NOT_YET: &[Feature] = &[
-    Feature::OthersOptimised,
-    Feature::Dissociation,
-    Feature::Fit,
-    Feature::Vibration,
-    Feature::Gradients,
-];
+const NOT_YET: &[Feature] = &[];
 
 impl Feature {
     /// How it is written in a spec, and what works instead.
@@ -39,9 +33,9 @@ impl Feature {
             Self::OthersOptimised => ("others = \"optimised\"", "others = \"fixed\" works"),
             Self::StateFollow => ("state = \"follow\"", "state = \"lowest\" works"),
             Self::Stability => ("stability = true", "stability = false works"),
-            Self::Dissociation => ("a [dissociation] table", "leave the table out"),
-            Self::Fit => ("a [[fit]] table", "leave the table out"),
-            Self::Vibration => ("a [vibration] table", "leave the table out"),
+            Self::Dissociation => ("[dissociation]", "leave the table out"),
+            Self::Fit => ("[[fit]]", "leave the table out"),
+            Self::Vibration => ("[vibration]", "leave the table out"),
             Self::Gradients => ("gradients = true", "gradients = false works"),
         }
     }
@@ -73,4 +67,54 @@ pub(super) fn default_walk() -> WalkSettings {
     }
     walk.stability &= Feature::Stability.is_built();
     walk
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use crate::spec::parse;
+    use std::path::Path;
+
+    const MOLECULE_AND_LEVEL: &str = "molecule = { cartesian = \"H 0 0 0\\nF 0 0 0.9\" }\nlevel = [{ method = \"rhf\", basis = \"sto-3g\" }]\n";
+
+    #[test]
+    fn what_is_not_built_is_refused_in_those_words_and_the_rest_is_taken() {
+        let features = [
+            (Feature::SeedExtrapolated, "walk.seed = \"extrapolated\""),
+            (Feature::PassesBoth, "walk.passes = \"both\""),
+            (Feature::OthersOptimised, "walk.others = \"optimised\""),
+            (Feature::StateFollow, "walk.state = \"follow\""),
+            (Feature::Stability, "walk.stability = true"),
+            (
+                Feature::Dissociation,
+                "dissociation.parts = [{ atoms = [\"H\"] }, { atoms = [\"F\"] }]",
+            ),
+            (
+                Feature::Fit,
+                "sweep = [{ bond = [\"H\", \"F\"], values = [1] }]\nfit = [{ form = \"morse\" }]",
+            ),
+            (Feature::Vibration, "vibration.states = 3"),
+            (Feature::Gradients, "output.gradients = true"),
+        ];
+        for (feature, asked) in features {
+            let text = format!("{MOLECULE_AND_LEVEL}{asked}\n");
+            match parse(&text, Path::new("a.toml")) {
+                Ok(_) => assert!(feature.is_built(), "{feature:?}"),
+                Err(errors) => {
+                    assert!(!feature.is_built(), "{feature:?}: {errors}");
+                    assert_eq!(errors.0.len(), 1, "{errors}");
+                    let message = &errors.0[0].message;
+                    assert!(message.starts_with("this version cannot do"), "{message}");
+                }
+            }
+        }
+    }
+
+    #[test]
+    fn the_defaults_are_built() {
+        let spec = parse(MOLECULE_AND_LEVEL, Path::new("a.toml")).expect("sound");
+        assert_eq!(spec.walk, default_walk());
+        let again = parse(&spec.text, Path::new("b.toml")).expect("sound");
+        assert_eq!(again.walk, spec.walk);
+    }
 }

@@ -2,7 +2,8 @@
 
 use super::diagnostic::{Problems, all_of};
 use super::read::{
-    Choice, Entries, Field, Given, Read, Word, read_field, table, table_of, unknown_key,
+    Choice, Entries, Field, Given, Read, Word, missing_key, read_field, table, table_of,
+    unknown_key,
 };
 use super::{FigureFormat, FitForm};
 use crate::basis::FunctionKind;
@@ -98,9 +99,9 @@ table! {
         /// Title of the run, for figures and reports; default: the name of the spec file.
         title: String,
         /// The molecule and its geometry.
-        molecule (expected): RawMolecule,
+        molecule (required ()): RawMolecule,
         /// Levels of theory, one or more; each gives a curve.
-        level (expected): Vec<Given<RawLevel>>,
+        level (required ()): Vec<Given<RawLevel>>,
         /// Swept coordinates: one gives a curve, two a surface, none the one point of the input geometry.
         sweep: Vec<Given<RawSweep>>,
         /// How the grid is walked.
@@ -142,9 +143,9 @@ table! {
     /// A level of theory: a method and a basis.
     RawLevel ("[[level]]") {
         /// Hartree–Fock, restricted or unrestricted.
-        method (expected): Word<Method>,
+        method (required ()): Word<Method>,
         /// Name of a built-in basis set, or { file = "set.json" } for a file in the open BSE JSON schema.
-        basis (expected): RawBasis,
+        basis (required ()): RawBasis,
         /// Charge at this level; default: the molecule's.
         charge: i64,
         /// Multiplicity at this level; default: the molecule's.
@@ -235,8 +236,8 @@ table! {
 table! {
     /// Separated parts of the molecule.
     RawDissociation ("[dissociation]") {
-        /// The parts; each atom belongs to one.
-        parts (expected): Vec<Given<RawPart>>,
+        /// The parts; each atom belongs to one. Default: those that the swept bond cuts.
+        parts: Vec<Given<RawPart>>,
         /// Whether each part is computed in the basis of the whole as well (counterpoise correction); default false.
         counterpoise: bool,
     }
@@ -246,7 +247,7 @@ table! {
     /// One separated part.
     RawPart ("a part") {
         /// Labels of its atoms.
-        atoms (expected): RawLabels,
+        atoms (required ()): RawLabels,
         /// Charge; default 0.
         charge: i64,
         /// Multiplicity; default 1, or 2 for an odd number of electrons.
@@ -258,7 +259,7 @@ table! {
     /// A form fitted to each sweep it suits.
     RawFit ("[[fit]]") {
         /// The form.
-        form (expected): Word<FitForm>,
+        form (required ()): Word<FitForm>,
         /// Lowest and highest order, inclusive; the choice and the spread run over them.
         orders: Vec<Given<i64>>,
         /// The points that are fitted.

@@ -11,6 +11,9 @@ use std::ops::Range;
 use toml::Spanned;
 use toml::de::{DeTable, DeValue};
 
+/// Most tables of one kind in a list: some checks compare each with all others.
+const MAX_TABLES: usize = 500;
+
 /// A value and where it stands in the file, in bytes.
 #[derive(Debug, Clone, PartialEq)]
 pub(super) struct Given<T> {
@@ -57,6 +60,8 @@ pub(super) trait Read: Sized + JsonSchema {
 
     /// Whether the type is a table, so that a list of it is written with double brackets.
     const IS_TABLE: bool = false;
+    /// Whether the type is a list of tables.
+    const IS_TABLE_LIST: bool = false;
 }
 
 /// Reads a value with its place.
@@ -100,6 +105,29 @@ pub(super) fn unknown_key(
     if let Some(near) = nearest(word, known.iter().copied()) {
         diagnostic.hint(format!("did you mean \"{near}\"?"));
     }
+}
+
+/// Records a key that a table needs.
+pub(super) fn missing_key<T: Read>(
+    table: &str,
+    key: &str,
+    span: &Range<usize>,
+    problems: &mut Problems<'_>,
+) {
+    // Tables inside tables are written inline, those of the spec itself under a header.
+    let header = match (table, T::IS_TABLE, T::IS_TABLE_LIST) {
+        ("the spec", true, _) => Some(format!("[{key}]")),
+        ("the spec", _, true) => Some(format!("[[{key}]]")),
+        _ => None,
+    };
+    match header {
+        Some(header) => problems
+            .at(span, format!("the spec has no {header}"))
+            .expected(format!("expected a table {header}")),
+        None => problems
+            .at(span, format!("{table} lacks the key \"{key}\""))
+            .expected(format!("expected {key} = {}", T::expected())),
+    };
 }
 
 impl Read for String {
@@ -182,6 +210,8 @@ impl Read for f64 {
 
 /// List of values, each with its place.
 impl<T: Read> Read for Vec<Given<T>> {
+    const IS_TABLE_LIST: bool = T::IS_TABLE;
+
     fn expected() -> Cow<'static, str> {
         format!("a list, each entry {}", T::expected()).into()
     }
@@ -198,6 +228,12 @@ impl<T: Read> Read for Vec<Given<T>> {
             }
             return None;
         };
+        if T::IS_TABLE && array.len() > MAX_TABLES {
+            problems
+                .at(span, format!("{} tables of one kind", array.len()))
+                .expected(format!("expected at most {MAX_TABLES}"));
+            return None;
+        }
         let mut list = Vec::with_capacity(array.len());
         let mut good = true;
         for entry in array {
@@ -353,7 +389,7 @@ macro_rules! table {
     (
         $(#[doc = $table_doc:literal])*
         $name:ident ($written:literal) {
-            $( $(#[doc = $doc:literal])* $key:ident $(($required:ident))? : $type:ty, )*
+            $( $(#[doc = $doc:literal])* $key:ident $((required $required:tt))? : $type:ty, )*
         }
     ) => {
         $(#[doc = $table_doc])*
@@ -387,14 +423,9 @@ macro_rules! table {
                     }
                 }
                 $( $(
+                    let _: () = $required;
                     if out.$key.is_absent() {
-                        problems
-                            .at(span, concat!($written, " lacks the key \"", stringify!($key), "\""))
-                            .$required(format!(
-                                "expected {} = {}",
-                                stringify!($key),
-                                <$type as Read>::expected()
-                            ));
+                        missing_key::<$type>($written, stringify!($key), span, problems);
                     }
                 )? )*
                 Some(out)
@@ -414,7 +445,7 @@ macro_rules! table {
                     properties.insert(stringify!($key).into(), schema.into());
                 )*
                 let required: &[&str] =
-                    &[$( $( { let _ = stringify!($required); stringify!($key) }, )? )*];
+                    &[$( $( { let _: () = $required; stringify!($key) }, )? )*];
                 json_schema!({
                     "type": "object",
                     "description": concat!($($table_doc),*).trim(),

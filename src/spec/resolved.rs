@@ -168,6 +168,9 @@ fn dissociation(spec: &Spec, out: &mut String) -> std::fmt::Result {
     };
     writeln!(out, "\n[dissociation]")?;
     writeln!(out, "counterpoise = {}", dissociation.counterpoise)?;
+    if dissociation.parts.is_empty() {
+        return Ok(());
+    }
     writeln!(out, "parts = [")?;
     for part in &dissociation.parts {
         writeln!(
@@ -268,6 +271,7 @@ fn decisive(spec: &Spec, out: &mut String) -> std::fmt::Result {
             writeln!(out, "{kind:?} {exponents:?} {contractions:?}")?;
         }
     }
+    writeln!(out, "{:?}", spec.dissociation)?;
     for sweep in &spec.sweeps {
         writeln!(
             out,

@@ -5,7 +5,7 @@ use super::{
     StabilityRecord, Start, Surface, SurfaceError,
 };
 use crate::basis::{Basis, Shell};
-use crate::gradient::energy_gradient;
+use crate::gradient::{GradientSettings, hartree_fock_gradient};
 use crate::integrals;
 use crate::integrals::repulsion::{DirectRepulsion, RepulsionList, RepulsionSettings};
 use crate::molecule::{ElectronCountError, Molecule, nuclear};
@@ -35,8 +35,13 @@ pub struct HartreeFock {
     shells_of_atom: Vec<Vec<Shell>>,
     occupation: Occupation,
     settings: ScfSettings,
+<<<<<<< HEAD
     /// One-spin densities of the free atoms; empty where they are not asked for. Computed once and for all beforehand: a lock
     /// that is filled on demand by parallel code may be entered again by the thread that holds it.
+=======
+    /// One-spin densities of the free atoms, where calculations begin from them. They are computed at once: a point
+    /// that waited for them inside the thread pool could wait for itself.
+>>>>>>> main
     atoms: Vec<DMatrix<f64>>,
 }
 
@@ -124,7 +129,11 @@ impl HartreeFock {
         }
         let atoms = match settings.first_density {
             FirstDensity::Atoms => {
+<<<<<<< HEAD
                 atomic_densities(molecule, &shells_of_atom, settings.dependence)?
+=======
+                guess::atomic_densities(molecule, &shells_of_atom, settings.dependence)?
+>>>>>>> main
             }
             FirstDensity::CoreHamiltonian => Vec::new(),
         };
@@ -495,6 +504,8 @@ impl HartreeFock {
             functions_kept: geometry.frame.kept(),
             overlap_smallest: geometry.frame.smallest(),
             gradient: None,
+            positions: None,
+            relaxation: None,
             stability: settled.stability,
             integrals: IntegralCounts::default(),
             seconds: 0.0,
@@ -516,10 +527,17 @@ fn gradient(geometry: &Geometry, field: &Field<'_>, evaluation: &Evaluation) -> 
     let (Some(alpha), Some(beta)) = (densities.first(), densities.last()) else {
         return Vec::new();
     };
-    energy_gradient(&geometry.molecule, &geometry.basis, alpha, beta, &weighted)
-        .into_iter()
-        .map(Into::into)
-        .collect()
+    hartree_fock_gradient(
+        &geometry.molecule,
+        &geometry.basis,
+        alpha,
+        beta,
+        &weighted,
+        &GradientSettings::default(),
+    )
+    .into_iter()
+    .map(Into::into)
+    .collect()
 }
 
 fn counts(counts: integrals::repulsion::IntegralCounts) -> IntegralCounts {
@@ -529,6 +547,7 @@ fn counts(counts: integrals::repulsion::IntegralCounts) -> IntegralCounts {
     }
 }
 
+<<<<<<< HEAD
 /// One-spin densities of all atoms in their shells, ghosts empty.
 fn atomic_densities(
     molecule: &Molecule,
@@ -571,6 +590,8 @@ fn same_shells(one: &[Shell], other: &[Shell]) -> bool {
         })
 }
 
+=======
+>>>>>>> main
 /// The points of a start, nearest last.
 fn start_points<'r, 's>(start: &'r Start<'s, Seed>) -> Vec<&'r SeedPoint<'s, Seed>> {
     match start {

@@ -45,6 +45,31 @@ pub trait Surface: Sync {
     fn likeness(&self, one: &Self::Seed, other: &Self::Seed) -> [f64; 2];
 }
 
+impl<S: Surface> Surface for &S {
+    type Seed = S::Seed;
+    type Workspace = S::Workspace;
+
+    fn workspace(&self) -> Self::Workspace {
+        (**self).workspace()
+    }
+
+    fn workspace_bytes(&self) -> u64 {
+        (**self).workspace_bytes()
+    }
+
+    fn evaluate(
+        &self,
+        request: &PointRequest<'_, Self::Seed>,
+        workspace: &mut Self::Workspace,
+    ) -> Result<PointOutcome<Self::Seed>, SurfaceError> {
+        (**self).evaluate(request, workspace)
+    }
+
+    fn likeness(&self, one: &Self::Seed, other: &Self::Seed) -> [f64; 2] {
+        (**self).likeness(one, other)
+    }
+}
+
 /// A point already computed that the next may start from.
 #[derive(Debug)]
 pub struct SeedPoint<'a, S> {
@@ -116,6 +141,17 @@ pub struct StabilityRecord {
     pub left: usize,
 }
 
+/// How the relaxation of a point went.
+#[derive(Debug, Clone, Copy, PartialEq, Serialize, Deserialize)]
+pub struct RelaxationRecord {
+    /// Gradient calls.
+    pub gradient_calls: usize,
+    /// Whether a stationary point was reached; if not, the record has no energy.
+    pub converged: bool,
+    /// Largest component of the gradient left, swept coordinates apart, hartree/bohr; none without an energy.
+    pub gradient_max: Option<f64>,
+}
+
 /// Unique repulsion integrals computed and taken over.
 #[derive(Debug, Clone, Copy, PartialEq, Eq, Default, Serialize, Deserialize)]
 pub struct IntegralCounts {
@@ -171,6 +207,12 @@ pub struct PointRecord {
     pub overlap_smallest: f64,
     /// Energy gradient in hartree/bohr, one per atom, where it was asked for.
     pub gradient: Option<Vec<[f64; 3]>>,
+    /// Positions in bohr, where they were relaxed; otherwise they are those asked for.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub positions: Option<Vec<[f64; 3]>>,
+    /// How the relaxation went, where there was one.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub relaxation: Option<RelaxationRecord>,
     /// What the stability test found, where there was one.
     pub stability: Option<StabilityRecord>,
     /// Repulsion integrals.

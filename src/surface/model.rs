@@ -214,6 +214,8 @@ impl Surface for ModelSurface {
                     .map(|g| [g.x, g.y, g.z])
                     .collect()
             }),
+            positions: None,
+            relaxation: None,
             stability: None,
             integrals: IntegralCounts::default(),
             seconds: 0.0,

@@ -101,6 +101,8 @@ pub(super) struct Primitive {
     pub(super) fractions: [f64; 2],
     /// −2μ (A − B)
     pub(super) stretch: [f64; 3],
+    /// −2μ
+    pub(super) stretch_factor: f64,
     /// −2b
     pub(super) twice_second: f64,
     /// bound for the derivative of √(ΩΩ|ΩΩ) over all pairs of functions
@@ -183,7 +185,7 @@ impl PairClass {
                                 if factor.abs() < 1e-300 {
                                     continue;
                                 }
-                                products(m, n, factor, key.one_centre, |h, term| add(h, term));
+                                products(m, n, factor, key.one_centre, &mut add);
                                 for axis in (0..3).filter(|_| lowered > 0) {
                                     if n[axis] == 0 {
                                         continue;
@@ -229,7 +231,9 @@ impl PairClass {
             let degree: usize = hermite_powers()[hermite].iter().sum();
             while let Some((_, element)) = elements.next_if(|((c, _), _)| *c == column) {
                 class.rows.push(element.row);
-                class.signs.push(if degree % 2 == 0 { 1.0 } else { -1.0 });
+                class
+                    .signs
+                    .push(if degree.is_multiple_of(2) { 1.0 } else { -1.0 });
                 class.elements.push(element);
             }
             class.starts.push(class.rows.len());
@@ -273,6 +277,7 @@ impl PairClass {
                     centre: [pair.centre[0], pair.centre[1], pair.centre[2]],
                     fractions: [a / p, b / p],
                     stretch: [stretch * apart[0], stretch * apart[1], stretch * apart[2]],
+                    stretch_factor: stretch,
                     twice_second: -2.0 * b,
                     weight: self.weight(p, &values),
                 };

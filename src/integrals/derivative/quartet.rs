@@ -21,8 +21,6 @@ pub(super) struct Places {
     sums: Vec<u16>,
     /// k + 1 in each direction
     up: Vec<[u16; 3]>,
-    /// k − 1 in each direction (0 where there is none)
-    down: Vec<[u16; 3]>,
     /// t, u, v as numbers
     powers: Vec<[f64; 3]>,
 }
@@ -32,13 +30,6 @@ pub(super) fn places() -> &'static Places {
     PLACES.get_or_init(|| {
         let powers = &hermite_powers()[..hermite_count(2 * SIDE_DEGREE)];
         let index = |p: [usize; 3]| hermite_index(p[0], p[1], p[2]) as u16;
-        let shifted = |p: &[usize; 3], shift: fn(usize) -> usize| {
-            std::array::from_fn(|axis| {
-                let mut other = *p;
-                other[axis] = shift(other[axis]);
-                index(other)
-            })
-        };
         Places {
             sums: (0..SIDE * SIDE)
                 .map(|i| {
@@ -46,10 +37,15 @@ pub(super) fn places() -> &'static Places {
                     index(std::array::from_fn(|axis| a[axis] + b[axis]))
                 })
                 .collect(),
-            up: powers.iter().map(|p| shifted(p, |i| i + 1)).collect(),
-            down: powers
+            up: powers
                 .iter()
-                .map(|p| shifted(p, |i| i.saturating_sub(1)))
+                .map(|p| {
+                    std::array::from_fn(|axis| {
+                        let mut raised = *p;
+                        raised[axis] += 1;
+                        index(raised)
+                    })
+                })
                 .collect(),
             powers: powers.iter().map(|p| p.map(|i| i as f64)).collect(),
         }
@@ -82,6 +78,7 @@ pub(super) struct Work {
 pub(super) struct BraPrimitive {
     pub(super) fractions: [f64; 2],
     pub(super) stretch: [f64; 3],
+    pub(super) stretch_factor: f64,
     pub(super) twice_second: f64,
 }
 
@@ -91,6 +88,8 @@ pub(super) struct Quartets<'a> {
     pub(super) bra: &'a PairClass,
     pub(super) ket: &'a PairClass,
     pub(super) primitives: &'a [BraPrimitive],
+    /// A − B of the bra pair
+    pub(super) apart: [f64; 3],
     /// coefficients of the bra primitives with (−1)^|h|, `bra.len()` each
     pub(super) bra_values: &'a [f64],
     /// coefficients of the ket primitives
@@ -109,6 +108,9 @@ impl Kernel for Quartets<'_> {
 
     #[inline(always)]
     fn run<V: Lanes>(self) -> KetSums {
+        if self.bra.hermites == 1 && self.bra.rows_count() == 1 {
+            return self.run_spherical::<V>();
+        }
         let (bra, ket) = (self.bra, self.ket);
         let (rows, columns) = (bra.columns(), ket.columns());
         let (bra_pairs, ket_pairs) = (bra.rows_count(), ket.rows_count());
@@ -198,7 +200,8 @@ impl Kernel for Quartets<'_> {
                         .mul_add(one.ket.energy, one.bra_lowered[axis])
                         .sub(V::splat(primitive.twice_second).mul(one.bra_shifted[axis]));
                 }
-                let [first, second] = primitive.fractions.map(V::splat);
+                let first = V::splat(primitive.fractions[0]);
+                let second = V::splat(primitive.fractions[1]);
                 let [a, b] = &mut bra_sums;
                 a[axis] = a[axis].add(split.sub(first.mul(force)));
                 b[axis] = b[axis].sub(second.mul_add(force, split));
@@ -210,6 +213,96 @@ impl Kernel for Quartets<'_> {
             }
         }
         sums.stored()
+    }
+}
+
+impl Quartets<'_> {
+    /// The same for two s functions as bra: all depends on the bra primitives through three sums of R
+    /// with factors E, E a/p and −2μE, so that the ket is worked off only once.
+    #[inline(always)]
+    fn run_spherical<V: Lanes>(self) -> KetSums {
+        let (places, ket) = (self.places, self.ket);
+        let columns = ket.columns();
+        let count = hermite_count(ket.degree + 1);
+        let work = self.work;
+        resize(&mut work.half, columns);
+        resize(&mut work.folded, 3 * count);
+        let ket_pairs = ket.rows_count();
+        let half = (&mut work.half[..], columns);
+        from_right::<V>(
+            ket,
+            0..columns,
+            self.ket_values,
+            (self.density, ket_pairs),
+            half,
+            1,
+        );
+        let (plain, rest) = work.folded.split_at_mut(count);
+        let (first, stretched) = rest.split_at_mut(count);
+        let stretched = &mut stretched[..count];
+        let two_centre = self.bra.two_centre;
+        plain.fill(Four::default());
+        first.fill(Four::default());
+        stretched.fill(Four::default());
+        let of_primitives = self.primitives.iter().zip(self.bra_values);
+        for ((primitive, &value), r) in of_primitives.zip(self.coulomb.chunks_exact(count)) {
+            add_scaled::<V>(plain, value, r);
+            if two_centre {
+                add_scaled::<V>(first, value * primitive.fractions[0], r);
+                add_scaled::<V>(stretched, value * primitive.stretch_factor, r);
+            }
+        }
+        let mut sums = Sums::<V>::zero();
+        let mut first_force = [V::zero(); 3];
+        let mut stretched_energy = V::zero();
+        for (k, w) in work.half[..ket.hermites].iter().enumerate() {
+            let w = V::load(w);
+            sums.energy = w.mul_add(V::load(&plain[k]), sums.energy);
+            stretched_energy = w.mul_add(V::load(&stretched[k]), stretched_energy);
+            for axis in 0..3 {
+                let up = usize::from(places.up[k][axis]);
+                sums.force[axis] = w.mul_add(V::load(&plain[up]), sums.force[axis]);
+                first_force[axis] = w.mul_add(V::load(&first[up]), first_force[axis]);
+            }
+        }
+        if ket.two_centre && ket.degree > 0 {
+            for h in 0..hermite_count(ket.degree - 1) {
+                let r = V::load(&plain[h]);
+                for axis in 0..3 {
+                    let w = V::load(&work.half[usize::from(places.up[h][axis])]);
+                    let factor = w.mul(V::splat(places.powers[h][axis] + 1.0));
+                    sums.shifted[axis] = factor.mul_add(r, sums.shifted[axis]);
+                }
+            }
+        }
+        for axis in 0..3 {
+            let start = ket.hermites + axis * ket.lowered;
+            for (value, r) in work.half[start..start + ket.lowered].iter().zip(&*plain) {
+                sums.lowered[axis] = V::load(value).mul_add(V::load(r), sums.lowered[axis]);
+            }
+        }
+        let [a, b] = self.bra_gradient;
+        for axis in 0..3 {
+            let split = V::splat(self.apart[axis]).mul(stretched_energy);
+            // On one centre all of the force goes to the first: the two atoms are the same.
+            let mut first = sums.force[axis];
+            if two_centre {
+                first = first_force[axis];
+                let second = sums.force[axis].sub(first);
+                V::load(&b[axis]).sub(second.add(split)).store(&mut b[axis]);
+            }
+            V::load(&a[axis]).add(split.sub(first)).store(&mut a[axis]);
+        }
+        sums.stored()
+    }
+}
+
+/// sum += factor · values
+#[inline(always)]
+fn add_scaled<V: Lanes>(sum: &mut [Four], factor: f64, values: &[Four]) {
+    let factor = V::splat(factor);
+    for (sum, value) in sum.iter_mut().zip(values) {
+        factor.mul_add(V::load(value), V::load(sum)).store(sum);
     }
 }
 
@@ -249,19 +342,18 @@ impl<V: Lanes> Sums<V> {
         }
     }
 
+    /// Writes to memory. No closures: they would be functions of their own, without the vector
+    /// instructions.
     #[inline(always)]
     fn stored(&self) -> KetSums {
-        let four = |v: V| {
-            let mut out = Four::default();
-            v.store(&mut out);
-            out
-        };
-        KetSums {
-            force: self.force.map(four),
-            energy: four(self.energy),
-            lowered: self.lowered.map(four),
-            shifted: self.shifted.map(four),
+        let mut sums = KetSums::default();
+        self.energy.store(&mut sums.energy);
+        for axis in 0..3 {
+            self.force[axis].store(&mut sums.force[axis]);
+            self.lowered[axis].store(&mut sums.lowered[axis]);
+            self.shifted[axis].store(&mut sums.shifted[axis]);
         }
+        sums
     }
 }
 
@@ -283,64 +375,95 @@ fn reduce<V: Lanes>(
     coulomb: &[Four],
 ) -> Reduced<V> {
     let columns = ket.columns();
+    let degree = bra.degree + ket.degree;
     let mut sums = Sums::<V>::zero();
     let mut bra_lowered = [V::zero(); 3];
-    let mut bra_shifted = [V::zero(); 3];
-    let folded = &mut folded[..hermite_count(bra.degree + ket.degree)];
-    folded.fill(Four::default());
-    let shift = bra.two_centre || ket.two_centre;
-    for h in 0..bra.hermites {
-        let row = &hermite[h * columns..(h + 1) * columns];
-        let (plain, lowered) = row.split_at(ket.hermites);
-        let sums_of = &places.sums[h * SIDE..];
-        for (value, &k) in plain.iter().zip(sums_of) {
+    let folded = &mut folded[..hermite_count(degree)];
+    folded[..ket.hermites].copy_from_slice(&hermite[..ket.hermites]);
+    folded[ket.hermites..].fill(Four::default());
+    for h in 1..bra.hermites {
+        let row = &hermite[h * columns..h * columns + ket.hermites];
+        for (value, &k) in row.iter().zip(&places.sums[h * SIDE..]) {
             let target = &mut folded[usize::from(k)];
             V::load(target).add(V::load(value)).store(target);
-        }
-        if shift {
-            for axis in 0..3 {
-                let power = places.powers[h][axis];
-                if power > 0.0 {
-                    let down = usize::from(places.down[h][axis]);
-                    let sum = dot::<V>(plain, &places.sums[down * SIDE..], coulomb);
-                    bra_shifted[axis] = V::splat(power).mul_add(sum, bra_shifted[axis]);
-                }
-            }
-        }
-        if ket.lowered > 0 {
-            for axis in 0..3 {
-                let values = &lowered[axis * ket.lowered..(axis + 1) * ket.lowered];
-                sums.lowered[axis] = sums.lowered[axis].add(dot::<V>(values, sums_of, coulomb));
-            }
-        }
-    }
-    for axis in 0..3 {
-        for h in 0..bra.lowered {
-            let start = (bra.hermites + axis * bra.lowered + h) * columns;
-            let values = &hermite[start..start + ket.hermites];
-            let sum = dot::<V>(values, &places.sums[h * SIDE..], coulomb);
-            bra_lowered[axis] = bra_lowered[axis].add(sum);
         }
     }
     for (k, w) in folded.iter().enumerate() {
         let w = V::load(w);
         sums.energy = w.mul_add(V::load(&coulomb[k]), sums.energy);
+        let up = &places.up[k];
         for axis in 0..3 {
-            let r = V::load(&coulomb[usize::from(places.up[k][axis])]);
+            let r = V::load(&coulomb[usize::from(up[axis])]);
             sums.force[axis] = w.mul_add(r, sums.force[axis]);
         }
     }
-    if ket.two_centre {
-        for (k, w) in folded.iter().enumerate().skip(1) {
-            let w = V::load(w);
-            for axis in 0..3 {
-                let r = V::load(&coulomb[usize::from(places.down[k][axis])]);
-                let factor = w.mul(V::splat(places.powers[k][axis]));
-                sums.shifted[axis] = factor.mul_add(r, sums.shifted[axis]);
+    if ket.lowered > 0 {
+        for h in 0..bra.hermites {
+            let start = h * columns + ket.hermites;
+            let values = &hermite[start..start + 3 * ket.lowered];
+            let sums_of = &places.sums[h * SIDE..];
+            dots::<V>(three_parts(values), sums_of, coulomb, &mut sums.lowered);
+        }
+    }
+    for h in 0..bra.lowered {
+        let rows = std::array::from_fn(|axis| {
+            let start = (bra.hermites + axis * bra.lowered + h) * columns;
+            &hermite[start..start + ket.hermites]
+        });
+        dots::<V>(rows, &places.sums[h * SIDE..], coulomb, &mut bra_lowered);
+    }
+    let mut bra_shifted = [V::zero(); 3];
+    if bra.two_centre || ket.two_centre {
+        // Σ k_x W_k R_{k−x} is the sum over both sides; the side of lower degree is computed.
+        let mut both = [V::zero(); 3];
+        if degree > 0 {
+            for h in 0..hermite_count(degree - 1) {
+                let r = V::load(&coulomb[h]);
+                for axis in 0..3 {
+                    let w = V::load(&folded[usize::from(places.up[h][axis])]);
+                    let factor = w.mul(V::splat(places.powers[h][axis] + 1.0));
+                    both[axis] = factor.mul_add(r, both[axis]);
+                }
+            }
+        }
+        let on_bra = bra.degree <= ket.degree;
+        let mut side = [V::zero(); 3];
+        if on_bra && bra.degree > 0 {
+            for h in 0..hermite_count(bra.degree - 1) {
+                let rows = std::array::from_fn(|axis| {
+                    let start = usize::from(places.up[h][axis]) * columns;
+                    &hermite[start..start + ket.hermites]
+                });
+                let mut parts = [V::zero(); 3];
+                dots::<V>(rows, &places.sums[h * SIDE..], coulomb, &mut parts);
+                for axis in 0..3 {
+                    let power = V::splat(places.powers[h][axis] + 1.0);
+                    side[axis] = power.mul_add(parts[axis], side[axis]);
+                }
+            }
+        } else if !on_bra && ket.degree > 0 {
+            for h in 0..bra.hermites {
+                let row = &hermite[h * columns..h * columns + ket.hermites];
+                let sums_of = &places.sums[h * SIDE..];
+                for k in 0..hermite_count(ket.degree - 1) {
+                    let r = V::load(&coulomb[usize::from(sums_of[k])]);
+                    for axis in 0..3 {
+                        let value = V::load(&row[usize::from(places.up[k][axis])]);
+                        let factor = r.mul(V::splat(places.powers[k][axis] + 1.0));
+                        side[axis] = factor.mul_add(value, side[axis]);
+                    }
+                }
             }
         }
         for axis in 0..3 {
-            sums.shifted[axis] = sums.shifted[axis].sub(bra_shifted[axis]);
+            let other = both[axis].sub(side[axis]);
+            let (of_bra, of_ket) = if on_bra {
+                (side[axis], other)
+            } else {
+                (other, side[axis])
+            };
+            bra_shifted[axis] = of_bra;
+            sums.shifted[axis] = of_ket;
         }
     }
     Reduced {
@@ -350,14 +473,27 @@ fn reduce<V: Lanes>(
     }
 }
 
-/// Σ values · R at the places given.
+/// Thirds of a slice.
 #[inline(always)]
-fn dot<V: Lanes>(values: &[Four], places: &[u16], coulomb: &[Four]) -> V {
-    let mut sum = V::zero();
-    for (value, &k) in values.iter().zip(places) {
-        sum = V::load(value).mul_add(V::load(&coulomb[usize::from(k)]), sum);
+fn three_parts(values: &[Four]) -> [&[Four]; 3] {
+    let third = values.len() / 3;
+    let (first, rest) = values.split_at(third);
+    let (second, last) = rest.split_at(third);
+    [first, second, last]
+}
+
+/// sums[axis] += Σ rows[axis] · R at the places given, for rows of one length.
+#[inline(always)]
+fn dots<V: Lanes>(rows: [&[Four]; 3], places: &[u16], coulomb: &[Four], sums: &mut [V; 3]) {
+    let [x, y, z] = rows;
+    let [mut a, mut b, mut c] = *sums;
+    for (((x, y), z), &k) in x.iter().zip(y).zip(z).zip(places) {
+        let r = V::load(&coulomb[usize::from(k)]);
+        a = V::load(x).mul_add(r, a);
+        b = V::load(y).mul_add(r, b);
+        c = V::load(z).mul_add(r, c);
     }
-    sum
+    *sums = [a, b, c];
 }
 
 /// out[row, column] = Σ_ij input[row, ij] · E_column^{ij} for the columns of the range.

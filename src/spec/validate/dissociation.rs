@@ -4,7 +4,7 @@ use super::electrons::{self, spin_word};
 use super::molecule::{charge, multiplicity};
 use super::{atoms, span_or};
 use crate::molecule::Molecule;
-use crate::spec::diagnostic::{Problems, all_of, quoted};
+use crate::spec::diagnostic::{Problems, all_of, counted, quoted};
 use crate::spec::not_yet::Feature;
 use crate::spec::raw::{RawDissociation, RawPart};
 use crate::spec::read::{Field, Given};
@@ -20,7 +20,12 @@ pub(super) fn dissociation(
     let given = raw.get()?;
     Feature::Dissociation.demand(&given.span, problems);
     let counterpoise = given.value.counterpoise.get().is_some_and(|c| c.value);
-    let list = given.value.parts.get()?;
+    let Some(list) = given.value.parts.get() else {
+        return Some(DissociationSpec {
+            parts: Vec::new(),
+            counterpoise,
+        });
+    };
     if list.value.len() < 2 {
         problems
             .at(
@@ -119,7 +124,11 @@ fn part(given: &Given<RawPart>, molecule: &Molecule, problems: &mut Problems<'_>
         problems
             .at(
                 span_or(&raw.multiplicity, &given.span),
-                format!("{count} electrons cannot be a {}", spin_word(multiplicity)),
+                format!(
+                    "{} cannot be a {}",
+                    counted(count, "electron"),
+                    spin_word(multiplicity)
+                ),
             )
             .expected(format!("possible: {}", electrons::possible(count)));
         return None;

@@ -11,7 +11,7 @@ pub(super) fn electrons(nuclear_charge: i64, charge: i32) -> Result<usize, Strin
     match usize::try_from(left) {
         Ok(electrons) if electrons > 0 => Ok(electrons),
         _ => Err(format!(
-            "a charge of {charge} leaves no electron of the {nuclear_charge} of the neutral atoms"
+            "a charge of {charge} leaves none of the {nuclear_charge} electrons of the neutral atoms"
         )),
     }
 }

@@ -7,7 +7,7 @@ use crate::basis::{BasisError, BasisSet, FunctionKind, Shell, library};
 use crate::molecule::Molecule;
 use crate::scf::Method;
 use crate::spec::Level;
-use crate::spec::diagnostic::{Problems, all_of, nearest, quoted};
+use crate::spec::diagnostic::{Problems, all_of, counted, nearest, quoted};
 use crate::spec::load::{MAX_BASIS_BYTES, read_text};
 use crate::spec::raw::{RawBasis, RawLevel};
 use crate::spec::read::{Field, Given};
@@ -63,26 +63,31 @@ fn draft(
     let method = raw.method.get().map(|word| word.value.0);
     let input = input?;
     let molecule = input.molecule.as_ref()?;
-    let charge = own_charge.unwrap_or(input.charge);
-    let count = match electrons::electrons(molecule.nuclear_charge(), charge) {
-        Ok(count) => Some(count),
-        Err(problem) => {
-            problems.at(span_or(&raw.charge, &given.span), problem);
-            None
-        }
+    // A wrong charge of its own, or of the molecule, is reported where it stands.
+    let charge = match own_charge {
+        None if raw.charge.is_absent() => Some(input.charge),
+        own => own,
     };
+    let count = charge.and_then(|charge| {
+        let count = electrons::electrons(molecule.nuclear_charge(), charge);
+        if let (Err(problem), Some(own)) = (&count, raw.charge.get()) {
+            problems.at(&own.span, problem);
+        }
+        count.ok()
+    });
     let shells = raw
         .basis
         .get()
         .zip(basis.as_ref())
         .and_then(|(place, found)| shells(found, molecule, functions, &place.span, problems));
-    let multiplicity =
-        count.and_then(|count| spin_state(given, count, charge, own_multiplicity, input, problems));
-    let (method, count, multiplicity) = (method?, count?, multiplicity?);
+    let multiplicity = charge.zip(count).and_then(|(charge, count)| {
+        spin_state(given, count, charge, own_multiplicity, input, problems)
+    });
+    let (method, charge, count, multiplicity) = (method?, charge?, count?, multiplicity?);
     if method == Method::Rhf && multiplicity != 1 {
         let mut reason = String::new();
         if count % 2 == 1 {
-            reason = format!(", with {count} electrons");
+            reason = format!(" of {}", counted(count, "electron"));
         }
         problems
             .at(
@@ -102,7 +107,11 @@ fn draft(
     if most > room {
         problems.at(
             span_or(&raw.basis, &given.span),
-            format!("{room} basis functions cannot hold {most} electrons of one spin"),
+            format!(
+                "{} cannot hold {} of one spin",
+                counted(room, "basis function"),
+                counted(most, "electron")
+            ),
         );
         return None;
     }
@@ -162,7 +171,10 @@ fn spin_state(
         problems
             .at(
                 span,
-                format!("{count} electrons cannot have multiplicity {asked}{whose}"),
+                format!(
+                    "{} cannot have multiplicity {asked}{whose}",
+                    counted(count, "electron")
+                ),
             )
             .expected(format!("possible: {}", electrons::possible(count)));
     }

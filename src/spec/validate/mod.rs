@@ -10,10 +10,10 @@ mod settings;
 mod sweep;
 mod values;
 
-use super::diagnostic::{Problems, nearest, quoted};
+use super::diagnostic::{Problems, nearest, number, quoted};
 use super::raw::{RawLabels, RawSpec};
 use super::read::{Field, Given};
-use super::{Spec, VibrationSpec};
+use super::{MAX_ATOMS, Spec};
 use crate::molecule::Molecule;
 use std::ops::Range;
 
@@ -65,7 +65,7 @@ pub(super) fn validate(raw: &RawSpec, problems: &mut Problems<'_>) -> Option<Spe
         scf,
         dissociation,
         fits,
-        vibration: vibration.unwrap_or(VibrationSpec::default()),
+        vibration: vibration.unwrap_or_default(),
         output,
         unit,
         text: String::new(),
@@ -104,6 +104,11 @@ fn atoms(
     molecule: &Molecule,
     problems: &mut Problems<'_>,
 ) -> Option<Vec<usize>> {
+    if labels.len() > MAX_ATOMS {
+        let span = labels[0].span.start..labels[labels.len() - 1].span.end;
+        problems.at(&span, format!("{} labels", labels.len()));
+        return None;
+    }
     let found: Vec<Option<usize>> = labels.iter().map(|l| atom(l, molecule, problems)).collect();
     let mut good = found.iter().all(Option::is_some);
     for (place, label) in labels.iter().enumerate() {
@@ -127,7 +132,10 @@ fn positive(field: &Field<f64>, default: f64, what: &str, problems: &mut Problem
         return given.value;
     }
     problems
-        .at(&given.span, format!("{} cannot be {what}", given.value))
+        .at(
+            &given.span,
+            format!("{} cannot be {what}", number(given.value)),
+        )
         .expected("expected a number greater than zero");
     default
 }

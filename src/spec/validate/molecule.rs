@@ -7,7 +7,7 @@ use crate::molecule::cartesian::{
 };
 use crate::molecule::geometry_error::{GeometryError, GeometryProblem};
 use crate::molecule::{Atom, Molecule, zmatrix};
-use crate::spec::diagnostic::{Diagnostic, Problems, nearest};
+use crate::spec::diagnostic::{Diagnostic, Problems, counted, nearest, number};
 use crate::spec::load::{MAX_SPEC_BYTES, read_text};
 use crate::spec::raw::{RawMolecule, RawSpec};
 use crate::spec::read::Given;
@@ -95,7 +95,11 @@ pub(super) fn molecule(
                 problems
                     .at(
                         &given.span,
-                        format!("{count} electrons cannot have multiplicity {}", given.value),
+                        format!(
+                            "{} cannot have multiplicity {}",
+                            counted(count, "electron"),
+                            given.value
+                        ),
                     )
                     .expected(format!("possible: {}", electrons::possible(count)));
             }
@@ -111,13 +115,19 @@ pub(super) fn molecule(
 
 fn masses_u(raw: &RawMolecule, molecule: &Molecule, problems: &mut Problems<'_>) -> Vec<f64> {
     let mut masses: Vec<f64> = molecule.atoms.iter().map(|a| a.element.mass_u()).collect();
+    if let Some(given) = raw.isotopes.get()
+        && given.value.0.len() > MAX_ATOMS
+    {
+        problems.at(&given.span, format!("{} masses", given.value.0.len()));
+        return masses;
+    }
     for (label, mass) in raw.isotopes.get().map_or(&[][..], |e| &e.value.0) {
         let index = atom(label, molecule, problems);
         if !(mass.value > 0.0 && mass.value <= MAX_MASS_U) {
             problems
                 .at(
                     &mass.span,
-                    format!("{} u is no mass of an atom", mass.value),
+                    format!("{} u is no mass of an atom", number(mass.value)),
                 )
                 .expected(format!("expected a number above 0 and up to {MAX_MASS_U}"));
         } else if let Some(index) = index {
@@ -287,11 +297,14 @@ fn sound(
 ) -> Option<()> {
     if let Some(far) = positions
         .iter()
-        .position(|p| p.iter().any(|x| !(x.abs() <= MAX_COORDINATE)))
+        .position(|p| p.iter().any(|x| !x.is_finite() || x.abs() > MAX_COORDINATE))
     {
         problems.at(
             &rows[far],
-            format!("{} lies outside ±{MAX_COORDINATE} bohr", atoms[far].label),
+            format!(
+                "{} is more than {MAX_COORDINATE} bohr from the origin",
+                atoms[far].label
+            ),
         );
         return None;
     }

@@ -3,7 +3,7 @@
 use super::{positive, short_text, whole};
 use crate::scan::{Others, Passes, SeedKind, StateChoice, WalkSettings};
 use crate::scf::ScfSettings;
-use crate::spec::diagnostic::Problems;
+use crate::spec::diagnostic::{Problems, counted, number};
 use crate::spec::not_yet::{Feature, default_walk};
 use crate::spec::raw::{RawFit, RawOutput, RawScf, RawVibration, RawWalk, RawWindow};
 use crate::spec::read::{Choice, Field, Given, Word};
@@ -104,7 +104,7 @@ pub(super) fn scf(raw: &Field<RawScf>, problems: &mut Problems<'_>) -> ScfSettin
         problems
             .at(
                 &given.span,
-                format!("{} would drop most of the basis", given.value),
+                format!("{} would drop most of the basis", number(given.value)),
             )
             .expected("expected a number between 0 and 1");
     }
@@ -208,7 +208,10 @@ fn orders(
         problems
             .at(
                 &list.span,
-                format!("{} numbers are no range of orders", list.value.len()),
+                format!(
+                    "{} cannot be a range of orders",
+                    counted(list.value.len(), "number")
+                ),
             )
             .expected("expected [lowest, highest]");
         return None;

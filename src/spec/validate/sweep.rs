@@ -7,7 +7,7 @@ use crate::molecule::connectivity::Connectivity;
 use crate::molecule::internal::{Coordinate, CoordinateError};
 use crate::molecule::motion::{Motion, MotionError};
 use crate::scan::sweep::positions_at;
-use crate::spec::diagnostic::{Problems, all_of};
+use crate::spec::diagnostic::{Problems, all_of, number};
 use crate::spec::raw::{RawLabels, RawSweep, RawTied};
 use crate::spec::read::{Field, Given};
 use crate::spec::{MAX_POINTS, Sweep};
@@ -33,12 +33,11 @@ pub(super) enum Kind {
 }
 
 impl Kind {
-    /// The key in the spec.
-    pub(super) fn word(self) -> &'static str {
+    fn with_article(self) -> &'static str {
         match self {
-            Self::Bond => "bond",
-            Self::Angle => "angle",
-            Self::Dihedral => "dihedral",
+            Self::Bond => "a bond",
+            Self::Angle => "an angle",
+            Self::Dihedral => "a dihedral",
         }
     }
 
@@ -94,6 +93,7 @@ pub(super) fn sweeps(
             .expected("one sweep gives a curve, two a surface; more are not scanned")
             .hint("tie coordinates together with also = [{ … }]");
     }
+    let before = problems.found.len();
     let connectivity = context.molecule.map(Connectivity::of);
     let mut taken: Vec<Coordinate> = Vec::new();
     let mut sweeps = Vec::new();
@@ -137,9 +137,9 @@ pub(super) fn sweeps(
                     .at(
                         &other.span,
                         format!(
-                            "a {} cannot be moved in step with a {}",
-                            other.kind.word(),
-                            target.kind.word()
+                            "{} cannot be moved in step with {}",
+                            other.kind.with_article(),
+                            target.kind.with_article()
                         ),
                     )
                     .expected(format!("expected {}", target.kind.form()));
@@ -171,8 +171,8 @@ pub(super) fn sweeps(
             });
         }
     }
-    // A grid of which a sweep is missing, or whose molecule is wrong, says nothing.
-    if let (Some(molecule), true) = (context.molecule, sweeps.len() == list.value.len()) {
+    // A grid whose sweeps or molecule are wrong says nothing.
+    if let (Some(molecule), true) = (context.molecule, problems.found.len() == before) {
         grid(molecule, &sweeps, &places, problems);
     }
     sweeps
@@ -204,7 +204,11 @@ fn target(
             problems
                 .at(
                     &given.span,
-                    format!("{written} names a {} and a {}", kind.word(), other.word()),
+                    format!(
+                        "{written} names {} and {}",
+                        kind.with_article(),
+                        other.with_article()
+                    ),
                 )
                 .expected(forms);
         }
@@ -215,7 +219,11 @@ fn target(
         problems
             .at(
                 &given.span,
-                format!("a {} has {} atoms, not {count}", kind.word(), kind.atoms()),
+                format!(
+                    "{} has {} atoms, not {count}",
+                    kind.with_article(),
+                    kind.atoms()
+                ),
             )
             .expected(format!("expected {}", kind.form()));
     }
@@ -353,8 +361,9 @@ fn grid(
                     " Å"
                 };
                 format!(
-                    "{} = {value}{unit}",
-                    sweep.motion.coordinate.describe(&molecule.atoms)
+                    "{} = {}{unit}",
+                    sweep.motion.coordinate.describe(&molecule.atoms),
+                    number((value * 1e6).round() / 1e6)
                 )
             })
             .collect();

@@ -2,7 +2,7 @@
 
 use super::sweep::Kind;
 use crate::molecule::cartesian::COINCIDENT_WITHIN_ANGSTROM;
-use crate::spec::diagnostic::Problems;
+use crate::spec::diagnostic::{Problems, all_of, number};
 use crate::spec::raw::RawSweep;
 use crate::spec::read::{Field, Given};
 use crate::spec::{MAX_POINTS, SweepValues};
@@ -90,20 +90,28 @@ fn in_range(
             };
             if value <= 0.0 {
                 problems
-                    .at(span, format!("{value} cannot be a bond length"))
+                    .at(span, format!("{} cannot be a bond length", number(value)))
                     .expected("expected a number greater than zero");
             } else if length_angstrom < COINCIDENT_WITHIN_ANGSTROM {
                 problems
                     .at(
                         span,
-                        format!("{value} {} is no distance of two nuclei", unit.word()),
+                        format!(
+                            "{} {} is no distance of two nuclei",
+                            number(value),
+                            unit.word()
+                        ),
                     )
                     .expected(format!("expected at least {COINCIDENT_WITHIN_ANGSTROM} Å"));
             } else if length_angstrom > MAX_BOND_ANGSTROM {
                 problems
                     .at(
                         span,
-                        format!("{value} {} is beyond every interaction", unit.word()),
+                        format!(
+                            "{} {} is beyond every interaction",
+                            number(value),
+                            unit.word()
+                        ),
                     )
                     .expected(format!("expected at most {MAX_BOND_ANGSTROM} Å"));
             }
@@ -111,7 +119,7 @@ fn in_range(
         Kind::Angle => {
             if !(0.0..=180.0).contains(&value) {
                 problems
-                    .at(span, format!("{value}° cannot be an angle"))
+                    .at(span, format!("{}° cannot be an angle", number(value)))
                     .expected("expected a number from 0 to 180");
             }
         }
@@ -138,7 +146,11 @@ fn listed(field: &Field<Vec<Given<f64>>>, problems: &mut Problems<'_>) -> Option
             problems
                 .at(
                     &pair[1].span,
-                    format!("{} does not lie above {}", pair[1].value, pair[0].value),
+                    format!(
+                        "{} does not lie above {}",
+                        number(pair[1].value),
+                        number(pair[0].value)
+                    ),
                 )
                 .expected("expected values in increasing order")
                 .hint("start = \"last\" in [walk] begins at the other end");
@@ -159,7 +171,7 @@ fn range(
         ("from", raw.from.is_absent()),
         ("to", raw.to.is_absent()),
         (
-            "step or points",
+            "step (or points)",
             raw.step.is_absent() && raw.points.is_absent(),
         ),
     ]
@@ -168,13 +180,7 @@ fn range(
     .collect();
     if !lacking.is_empty() {
         problems
-            .at(
-                &given.span,
-                format!(
-                    "[[sweep]] lacks {}",
-                    crate::spec::diagnostic::all_of(&lacking)
-                ),
-            )
+            .at(&given.span, format!("[[sweep]] lacks {}", all_of(&lacking)))
             .expected("expected from, to and one of step and points, or values = […]");
     }
     if let (Some(_), Some(points)) = (raw.step.get(), raw.points.get()) {
@@ -188,7 +194,10 @@ fn range(
         && step.value <= 0.0
     {
         problems
-            .at(&step.span, format!("{} cannot be a step", step.value))
+            .at(
+                &step.span,
+                format!("{} cannot be a step", number(step.value)),
+            )
             .expected("expected a number greater than zero")
             .hint("start = \"last\" in [walk] begins at the other end");
     }
@@ -197,7 +206,10 @@ fn range(
         && points.value < 1
     {
         problems
-            .at(&points.span, format!("{} points are no grid", points.value))
+            .at(
+                &points.span,
+                format!("{} cannot be a number of points", points.value),
+            )
             .expected("expected a whole number of at least 1");
     }
     let (from, to) = (raw.from.get()?, raw.to.get()?);
@@ -205,7 +217,11 @@ fn range(
         problems
             .at(
                 &to.span,
-                format!("to = {} lies below from = {}", to.value, from.value),
+                format!(
+                    "to = {} lies below from = {}",
+                    number(to.value),
+                    number(from.value)
+                ),
             )
             .expected("expected from to be the smaller")
             .hint("swap the two; start = \"last\" in [walk] begins at the other end");
@@ -227,14 +243,14 @@ fn range(
                 step: step.value,
             };
             if (steps - steps.round()).abs() > WHOLE_STEPS
-                && let Some(last) = written.expanded().last()
+                && let Some(last) = written.expanded().pop()
             {
                 notes
                     .at(
                         &step.span,
-                        format!("this step does not reach to = {}", to.value),
+                        format!("this step does not reach to = {}", number(to.value)),
                     )
-                    .expected(format!("the last value is {last}"));
+                    .expected(format!("the last value is {}", number(last)));
             }
             Some(written)
         }
@@ -251,15 +267,22 @@ fn range(
                     .at(
                         &points.span,
                         if count == 1 {
-                            format!("one point cannot reach from {} to {}", from.value, to.value)
+                            format!(
+                                "one point cannot reach from {} to {}",
+                                number(from.value),
+                                number(to.value)
+                            )
                         } else {
-                            format!("{count} points, but from and to are both {}", to.value)
+                            format!(
+                                "{count} points, but from and to are both {}",
+                                number(to.value)
+                            )
                         },
                     )
                     .expected(
                         "expected two points or more between two different ends, or one value",
                     )
-                    .hint(format!("values = [{}] is one point", from.value));
+                    .hint(format!("values = [{}] is one point", number(from.value)));
                 return None;
             }
             Some(SweepValues::Points {
@@ -325,7 +348,7 @@ mod tests {
             points: 47,
         };
         assert_eq!(points.expanded().len(), 47);
-        assert_eq!(points.expanded()[46], 3.0);
+        assert_eq!(points.expanded()[46..], [3.0]);
         let short = SweepValues::Step {
             from: 0.0,
             to: 1.0,
@@ -352,7 +375,7 @@ mod tests {
                 let values = written.expanded();
                 prop_assert_eq!(values.len(), steps + 1);
                 prop_assert!(values.windows(2).all(|p| p[0] < p[1]));
-                prop_assert!(values[0] == from && values[steps] <= to);
+                prop_assert!(values[0].to_bits() == from.to_bits() && values[steps] <= to);
                 prop_assert!((values[steps] - to).abs() < 1e-6 * width);
             }
         }

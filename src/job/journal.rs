@@ -4,7 +4,11 @@
 //! The first line holds the format version and the fingerprint of the spec. A last line that was cut off
 //! (the machine went down while it was written) is dropped on reading; any other damage is an error.
 
-use super::event::{Entry, Likeness};
+use super::dissociation::Limit;
+use super::onset::Onset;
+use super::settle::SettledLevel;
+use crate::scan::event::Stationary;
+use crate::scan::{Entry, Likeness};
 use serde::{Deserialize, Serialize};
 use serde_json::value::RawValue;
 use std::fs::{File, OpenOptions, TryLockError};
@@ -22,8 +26,16 @@ pub enum Line {
     Header(Header),
     /// A finished evaluation.
     Point(LevelEntry),
+    /// Energies of a level's separated parts.
+    Limit(LevelLimit),
+    /// Where a level's solution becomes unstable.
+    Onset(LevelOnset),
+    /// A stationary point located after a level's walk.
+    Stationary(LevelStationary),
     /// A level is complete.
     Complete(LevelEnd),
+    /// A level's molecule is settled.
+    Settled(Box<SettledLevel>),
 }
 
 /// What a journal belongs to.
@@ -44,6 +56,33 @@ pub struct LevelEntry {
     pub level: usize,
     /// The evaluation.
     pub entry: Entry,
+}
+
+/// Energies of the separated parts and the level they belong to.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+pub struct LevelLimit {
+    /// Number of the level in the spec.
+    pub level: usize,
+    /// The parts.
+    pub limit: Limit,
+}
+
+/// The onset of an instability and the level it belongs to.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+pub struct LevelOnset {
+    /// Number of the level in the spec.
+    pub level: usize,
+    /// The onset.
+    pub onset: Onset,
+}
+
+/// A stationary point and the level it belongs to.
+#[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
+pub struct LevelStationary {
+    /// Number of the level in the spec.
+    pub level: usize,
+    /// The stationary point.
+    pub stationary: Stationary,
 }
 
 /// The end of a level.

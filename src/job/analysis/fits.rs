@@ -1,0 +1,213 @@
+//! Fits of curves as the spec asks for them, each with the derivative-based force constant beside it.
+
+use super::lines::Line;
+use super::{LevelAnalysis, Material, MinimumResult};
+use crate::fit::{Coordinate, Fit, FitError, FitSettings, Form, Window, fit_curve};
+use crate::scan::Sweep;
+use crate::spec::{FitForm, FitSpec, FitWindow};
+
+/// What the coordinates that are not swept do along a curve.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, serde::Serialize)]
+#[serde(rename_all = "lowercase")]
+pub enum PathKind {
+    /// they keep their values
+    Rigid,
+    /// they are optimised at every point
+    Relaxed,
+}
+
+impl PathKind {
+    /// The word used in files.
+    #[must_use]
+    pub fn word(self) -> &'static str {
+        match self {
+            Self::Rigid => "rigid",
+            Self::Relaxed => "relaxed",
+        }
+    }
+}
+
+/// One fit and the path it belongs to.
+#[derive(Debug, Clone, PartialEq)]
+pub struct FitResult {
+    /// Number of the sweep.
+    pub sweep: usize,
+    /// The fit, in atomic units.
+    pub fit: Fit,
+    /// Labels of the coordinate's atoms; further ones are tied to it, and the force constant then sums theirs and
+    /// their couplings.
+    pub coordinates: Vec<Vec<String>>,
+    /// Labels of the atoms that move.
+    pub moves: Vec<String>,
+    /// Rigid or relaxed.
+    pub path: PathKind,
+    /// Values of all sweeps at the fitted minimum, ångström or degree.
+    pub values: Vec<f64>,
+}
+
+/// Fits every form of the spec to lines of one sweep.
+pub(super) fn fit_lines(material: &Material<'_>, lines: &[Line], analysis: &mut LevelAnalysis) {
+    for wanted in &material.spec.fits {
+        let mut found = Vec::new();
+        let mut refusal = None;
+        for line in lines {
+            let sweep = &material.spec.sweeps[line.sweep];
+            if !wanted.form.suits(sweep.kind()) {
+                continue;
+            }
+            let settings = settings(material, wanted, sweep, line);
+            let fits = fit_curve(
+                &line.x,
+                &line.energies,
+                form(wanted.form),
+                coordinate(sweep),
+                &settings,
+            );
+            match fits {
+                Ok(fits) => {
+                    found.extend(
+                        fits.fits
+                            .into_iter()
+                            .map(|fit| result(material, line, fit, &analysis.minima)),
+                    );
+                    for failure in fits.failures {
+                        let text = format!(
+                            "no {} fit of one minimum: {}",
+                            wanted.form.word(),
+                            reason(&failure, sweep)
+                        );
+                        analysis.notes.push(text);
+                    }
+                }
+                Err(error) => refusal = Some((line.sweep, error)),
+            }
+        }
+        // That one piece of a curve has no minimum is worth a word only where no other has one.
+        if let (true, Some((sweep, error))) = (found.is_empty(), refusal) {
+            let sweep = &material.spec.sweeps[sweep];
+            analysis.notes.push(format!(
+                "no {} fit of the {} {}: {}",
+                wanted.form.word(),
+                sweep.kind(),
+                sweep.labels(&material.spec.molecule).join("–"),
+                reason(&error, sweep)
+            ));
+        }
+        analysis.fits.extend(found);
+    }
+}
+
+/// A refusal with its place in the sweep's own unit.
+fn reason(error: &FitError, sweep: &Sweep) -> String {
+    match error {
+        FitError::NoFit { at, points, needed } => {
+            let unit = if sweep.unit() == "degree" {
+                "°"
+            } else {
+                " Å"
+            };
+            format!(
+                "near {:.3}{unit} no order and window holds; {points} points are there and the lowest order needs \
+                 {needed}",
+                sweep.motion.coordinate.to_reported(*at)
+            )
+        }
+        other => other.to_string(),
+    }
+}
+
+fn form(form: FitForm) -> Form {
+    match form {
+        FitForm::Polynomial => Form::Polynomial,
+        FitForm::Morse => Form::Morse,
+        FitForm::Fourier => Form::Fourier,
+    }
+}
+
+pub(super) fn coordinate(sweep: &Sweep) -> Coordinate {
+    if sweep.unit() == "degree" {
+        Coordinate::Angle
+    } else {
+        Coordinate::Length
+    }
+}
+
+fn settings(material: &Material<'_>, wanted: &FitSpec, sweep: &Sweep, line: &Line) -> FitSettings {
+    let default = FitSettings::default();
+    let width = wanted
+        .window
+        .half_width(sweep.kind(), material.spec.unit)
+        .map(|w| sweep.motion.coordinate.from_reported(w));
+    FitSettings {
+        orders: wanted.orders.unwrap_or(default.orders),
+        window: match (wanted.window, width) {
+            (FitWindow::Below { energy, unit }, _) => Window::Below {
+                hartree: energy / unit.per_hartree(),
+            },
+            (FitWindow::Within(_), Some(half_width)) => Window::Within { half_width },
+            (FitWindow::Within(_), None) => default.window,
+        },
+        noise_hartree: material.spec.scf.energy,
+        extrema: line.settings,
+        ..default
+    }
+}
+
+fn result(
+    material: &Material<'_>,
+    line: &Line,
+    mut fit: Fit,
+    minima: &[MinimumResult],
+) -> FitResult {
+    let sweep = &material.spec.sweeps[line.sweep];
+    let molecule = &material.spec.molecule;
+    let mut values = line.others.clone();
+    values[line.sweep] = sweep.motion.coordinate.to_reported(fit.equilibrium);
+    if let Some(second) = material
+        .minimum_at(minima, &values)
+        .and_then(|m| second_derivative(m, line.sweep, material.path_kind()))
+    {
+        fit.check_against(second);
+    }
+    let mut moving: Vec<usize> = sweep.motions().flat_map(|m| m.moves.clone()).collect();
+    moving.sort_unstable();
+    moving.dedup();
+    FitResult {
+        sweep: line.sweep,
+        coordinates: sweep
+            .motions()
+            .map(|m| {
+                crate::scan::sweep::labels(m.coordinate.atoms(), molecule)
+                    .into_iter()
+                    .map(str::to_owned)
+                    .collect()
+            })
+            .collect(),
+        moves: crate::scan::sweep::labels(&moving, molecule)
+            .into_iter()
+            .map(str::to_owned)
+            .collect(),
+        path: material.path_kind(),
+        values,
+        fit,
+    }
+}
+
+/// The second derivative from gradients along a sweep at a minimum, hartree per bohr² or radian²: from the Hessian with
+/// all else following for a relaxed path, from differences of dE/dq for a rigid one.
+pub(super) fn second_derivative(
+    minimum: &MinimumResult,
+    sweep: usize,
+    path: PathKind,
+) -> Option<f64> {
+    let refined = minimum.refined.as_ref()?;
+    let relaxed = refined
+        .harmonic
+        .as_ref()
+        .filter(|_| path == PathKind::Relaxed && refined.curvature.len() == 1)
+        .and_then(|h| h.relaxed.get(sweep));
+    match relaxed {
+        Some(second) => Some(*second),
+        None => refined.curvature.get(sweep)?.get(sweep).copied(),
+    }
+}

@@ -1,0 +1,55 @@
+//! Curves to be fitted: the whole of a sweep, or its pieces between changes of the electronic state.
+
+use super::Material;
+use crate::fit::ExtremaSettings;
+use crate::scan::FindingKind;
+
+/// Points that belong on one smooth curve.
+#[derive(Debug, Clone, PartialEq)]
+pub(super) struct Line {
+    /// Which sweep.
+    pub(super) sweep: usize,
+    /// Bohr or radian, rising.
+    pub(super) x: Vec<f64>,
+    /// Hartree.
+    pub(super) energies: Vec<f64>,
+    /// How its extrema are told.
+    pub(super) settings: ExtremaSettings,
+    /// Values of all sweeps along it, ångström or degree; the swept one's entry is of no meaning.
+    pub(super) others: Vec<f64>,
+}
+
+/// The pieces of a scan of one sweep: a curve is cut where the electronic state changes, because no smooth function
+/// runs through both sides.
+pub(super) fn of_curve(material: &Material<'_>) -> Vec<Line> {
+    let axis = material.path().axis(0);
+    let energies = material.energies();
+    let jumps: Vec<usize> = material
+        .findings
+        .iter()
+        .filter(|f| f.kind == FindingKind::StateJump)
+        .filter_map(|f| f.points.iter().max().copied())
+        .collect();
+    let mut pieces: Vec<(Vec<f64>, Vec<f64>)> = vec![Default::default()];
+    for (point, (&x, energy)) in axis.iter().zip(&energies).enumerate() {
+        if jumps.contains(&point) {
+            pieces.push(Default::default());
+        }
+        if let (Some(energy), Some(piece)) = (energy, pieces.last_mut()) {
+            piece.0.push(x);
+            piece.1.push(*energy);
+        }
+    }
+    let sweep = &material.spec.sweeps[0];
+    pieces
+        .into_iter()
+        .filter(|(x, _)| !x.is_empty())
+        .map(|(x, energies)| Line {
+            sweep: 0,
+            settings: super::super::stationary::curve_settings(sweep, &x, material.spec.scf.energy),
+            x,
+            energies,
+            others: vec![0.0],
+        })
+        .collect()
+}

@@ -1,0 +1,246 @@
+//! Finished points → what a practitioner asks of them: minima, force constants, vibrational states.
+//!
+//! Everything here is made from the points and stationary points of a run, so that changed `[[fit]]` and
+//! `[vibration]` tables need no further calculation.
+
+mod fits;
+mod lines;
+mod spectroscopy;
+mod surface;
+
+pub use fits::{FitResult, PathKind};
+pub use spectroscopy::{Spectroscopy, StateResult, VibratingMass};
+pub use surface::{ForceField, Valley};
+
+use super::assemble::PointResult;
+use crate::fit::{Kind, Place, extrema};
+use crate::scan::{Finding, Grid, Others, Stationary, StationaryKind};
+use crate::spec::Spec;
+use nalgebra::Vector3;
+
+/// Everything made from one level's points.
+#[derive(Debug, Clone, Default)]
+pub struct LevelAnalysis {
+    /// Minima in the order of energy, those at the ends of the sweep among them.
+    pub minima: Vec<MinimumResult>,
+    /// Maxima of a curve and saddle points of a surface, in the order of energy; not the ends of the sweep.
+    pub barriers: Vec<MinimumResult>,
+    /// One fit per `[[fit]]`, sweep and minimum.
+    pub fits: Vec<FitResult>,
+    /// Quadratic force field of two sweeps.
+    pub force_field: Option<ForceField>,
+    /// Paths of least energy between neighbouring minima of a surface.
+    pub valleys: Vec<Valley>,
+    /// Vibrational states of a curve.
+    pub spectroscopy: Option<Spectroscopy>,
+    /// What a reader must know, in sentences: fits that could not be made and why.
+    pub notes: Vec<String>,
+}
+
+/// A stationary point of a curve or surface, or a minimum at the end of a sweep.
+#[derive(Debug, Clone, PartialEq)]
+pub struct MinimumResult {
+    /// Minimum, maximum or saddle point.
+    pub kind: StationaryKind,
+    /// Whether it lies inside the sweeps; at an end the energy goes on falling beyond, and there is no stationary point.
+    pub interior: bool,
+    /// Values of the sweeps, ångström or degree.
+    pub values: Vec<f64>,
+    /// Energy, hartree.
+    pub energy: f64,
+    /// Positions, bohr; none where the swept coordinates cannot be set there.
+    pub positions: Option<Vec<Vector3<f64>>>,
+    /// What gradients say about it; none where it comes from the interpolated points alone.
+    pub refined: Option<Stationary>,
+}
+
+impl MinimumResult {
+    /// Largest component of the Cartesian gradient, hartree/bohr: what pulls on the coordinates that are not swept.
+    #[must_use]
+    pub fn gradient_max(&self) -> Option<f64> {
+        let gradient = self.refined.as_ref()?.record.gradient.as_ref()?;
+        Some(
+            gradient
+                .iter()
+                .flatten()
+                .fold(0.0, |most: f64, g| most.max(g.abs())),
+        )
+    }
+
+    fn of(stationary: &Stationary) -> Option<Self> {
+        Some(Self {
+            kind: stationary.kind,
+            interior: true,
+            values: stationary.values.clone(),
+            energy: stationary.record.energy?,
+            positions: Some(
+                stationary
+                    .positions
+                    .iter()
+                    .map(|&p| Vector3::from(p))
+                    .collect(),
+            ),
+            refined: Some(stationary.clone()),
+        })
+    }
+}
+
+/// What the analysis of a level is made from.
+pub(super) struct Material<'a> {
+    pub(super) spec: &'a Spec,
+    pub(super) grid: &'a Grid,
+    pub(super) points: &'a [PointResult],
+    pub(super) findings: &'a [Finding],
+    pub(super) stationary: Vec<&'a Stationary>,
+}
+
+impl Material<'_> {
+    /// Energies of all points of the grid.
+    fn energies(&self) -> Vec<Option<f64>> {
+        let mut energies = vec![None; self.grid.len()];
+        for point in self.points {
+            energies[point.point] = point.record.energy;
+        }
+        energies
+    }
+
+    fn path(&self) -> super::stationary::ScanPath<'_> {
+        super::stationary::ScanPath {
+            sweeps: &self.spec.sweeps,
+            input: &self.spec.molecule.positions,
+        }
+    }
+
+    fn path_kind(&self) -> PathKind {
+        match self.spec.walk.others {
+            Others::Fixed => PathKind::Rigid,
+            Others::Optimised => PathKind::Relaxed,
+        }
+    }
+
+    /// How far two values of a sweep are apart, bohr or radian.
+    fn apart(&self, sweep: usize, one: f64, other: f64) -> f64 {
+        let coordinate = &self.spec.sweeps[sweep].motion.coordinate;
+        coordinate
+            .difference(
+                coordinate.from_reported(one),
+                coordinate.from_reported(other),
+            )
+            .abs()
+    }
+
+    /// Half the widest step of a sweep, bohr or radian: nearer than this, two minima are one.
+    fn half_step(&self, sweep: usize) -> f64 {
+        let axis = self.path().axis(sweep);
+        0.5 * axis.windows(2).map(|w| w[1] - w[0]).fold(0.0, f64::max)
+    }
+
+    /// Whether two places (ångström or degree) are one.
+    fn is_same_place(&self, one: &[f64], other: &[f64]) -> bool {
+        one.iter()
+            .zip(other)
+            .enumerate()
+            .all(|(k, (&a, &b))| self.apart(k, a, b) <= self.half_step(k))
+    }
+
+    /// The minimum at a place.
+    fn minimum_at<'m>(
+        &self,
+        minima: &'m [MinimumResult],
+        values: &[f64],
+    ) -> Option<&'m MinimumResult> {
+        minima
+            .iter()
+            .filter(|m| m.interior && self.is_same_place(&m.values, values))
+            .min_by(|a, b| a.energy.total_cmp(&b.energy))
+    }
+}
+
+/// Analyses the points of a level.
+pub(super) fn analyse(material: &Material<'_>) -> LevelAnalysis {
+    let mut analysis = LevelAnalysis::default();
+    let (mut minima, barriers): (Vec<_>, Vec<_>) = material
+        .stationary
+        .iter()
+        .filter_map(|s| MinimumResult::of(s))
+        .partition(|m| m.kind == StationaryKind::Minimum);
+    analysis.barriers = barriers;
+    match material.spec.sweeps.len() {
+        1 => {
+            add_unrefined(material, &mut minima, &mut analysis.barriers);
+            analysis.minima = minima;
+            let lines = lines::of_curve(material);
+            fits::fit_lines(material, &lines, &mut analysis);
+            spectroscopy::of_curve(material, &lines, &mut analysis);
+        }
+        2 => {
+            surface::add_edge(material, &mut minima);
+            analysis.minima = minima;
+            surface::analyse(material, &mut analysis);
+        }
+        _ => {}
+    }
+    let by_energy = |a: &MinimumResult, b: &MinimumResult| a.energy.total_cmp(&b.energy);
+    analysis.minima.sort_by(by_energy);
+    analysis.barriers.sort_by(by_energy);
+    analysis
+}
+
+/// Adds the extrema of a curve that gradients were not asked about: minima at its ends, and what could not be refined.
+fn add_unrefined(
+    material: &Material<'_>,
+    minima: &mut Vec<MinimumResult>,
+    barriers: &mut Vec<MinimumResult>,
+) {
+    let sweep = &material.spec.sweeps[0];
+    let energies = material.energies();
+    let (x, e): (Vec<f64>, Vec<f64>) = material
+        .path()
+        .axis(0)
+        .into_iter()
+        .zip(&energies)
+        .filter_map(|(x, e)| Some((x, (*e)?)))
+        .unzip();
+    let settings = super::stationary::curve_settings(sweep, &x, material.spec.scf.energy);
+    for found in extrema(&x, &e, &settings).unwrap_or_default() {
+        let interior = found.place == Place::Interior;
+        let values = vec![sweep.motion.coordinate.to_reported(found.x)];
+        let kind = match found.kind {
+            Kind::Minimum => StationaryKind::Minimum,
+            Kind::Maximum => StationaryKind::Maximum,
+        };
+        let list = match found.kind {
+            Kind::Minimum => &mut *minima,
+            Kind::Maximum if interior => &mut *barriers,
+            Kind::Maximum => continue,
+        };
+        let known = list
+            .iter()
+            .any(|m| m.interior == interior && material.is_same_place(&m.values, &values));
+        if !known {
+            list.push(MinimumResult {
+                kind,
+                interior,
+                positions: positions_near(material, &values),
+                values,
+                energy: found.energy,
+                refined: None,
+            });
+        }
+    }
+}
+
+/// Positions at values: those of the grid point, of the rigid path, or nothing on a relaxed scan between its points.
+fn positions_near(material: &Material<'_>, values: &[f64]) -> Option<Vec<Vector3<f64>>> {
+    let here = material.points.iter().find(|p| {
+        p.values
+            .iter()
+            .zip(values)
+            .all(|(a, b)| (a - b).abs() < 1e-9)
+    });
+    match here {
+        Some(point) => Some(point.positions.clone()),
+        None if material.path_kind() == PathKind::Rigid => material.spec.positions_at(values).ok(),
+        None => None,
+    }
+}

@@ -1,0 +1,350 @@
+//! Vibrational states on a curve and the constants that belong to them.
+
+use super::lines::Line;
+use super::{LevelAnalysis, Material, MinimumResult, PathKind};
+use crate::fit::{Fit, Form};
+use crate::scan::Sweep;
+use crate::units::{ANGSTROM_PER_BOHR, ELECTRON_MASSES_PER_U, PER_CM_PER_HARTREE};
+use crate::vibration::diatomic::{
+    DunhamConstants, MinimumDerivatives, StateConstants, dunham, from_states,
+};
+use crate::vibration::states::Multiplet;
+use crate::vibration::{
+    Potential, States, StatesSettings, VibrationError, states, wavenumber_per_cm,
+};
+use nalgebra::Vector3;
+
+/// The inverse mass that a coordinate vibrates with.
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub struct VibratingMass {
+    /// g in 1/mₑ for a length, 1/(mₑ bohr²) for an angle.
+    pub inverse: f64,
+    /// True for a molecule of two atoms; otherwise g is the G element of the coordinate at the minimum.
+    pub exact: bool,
+    /// Whether the coordinate is a length.
+    pub is_length: bool,
+}
+
+impl VibratingMass {
+    /// Reduced mass 1/g in u, or moment of inertia in u Å².
+    #[must_use]
+    pub fn reduced(&self) -> f64 {
+        let reduced = 1.0 / (self.inverse * ELECTRON_MASSES_PER_U);
+        if self.is_length {
+            reduced
+        } else {
+            reduced * ANGSTROM_PER_BOHR * ANGSTROM_PER_BOHR
+        }
+    }
+}
+
+/// One vibrational state.
+#[derive(Debug, Clone, PartialEq)]
+pub struct StateResult {
+    /// Energy above the minimum, hartree.
+    pub energy: f64,
+    /// Change from the next coarser grid, hartree.
+    pub convergence: f64,
+    /// How much what lies beyond the ends of the curve can matter, hartree.
+    pub edge_uncertainty: f64,
+    /// Mean of the coordinate, ångström or degree.
+    pub mean: f64,
+    /// Probability density over the coordinate (per ångström or degree), where it is worth drawing.
+    pub density: Vec<(f64, f64)>,
+}
+
+/// Vibrations of one coordinate at one level.
+#[derive(Debug, Clone, PartialEq)]
+pub struct Spectroscopy {
+    /// Which sweep.
+    pub sweep: usize,
+    /// Value of the sweep at the minimum that energies count from, ångström or degree.
+    pub minimum: f64,
+    /// Energy of that minimum, hartree.
+    pub minimum_energy: f64,
+    /// What vibrates.
+    pub mass: VibratingMass,
+    /// Harmonic wavenumber of the fitted curve, cm⁻¹.
+    pub omega_e_cm1: Option<f64>,
+    /// Dunham's constants of the fitted curve, for a molecule of two atoms.
+    pub dunham: Option<DunhamConstants>,
+    /// The same from the states.
+    pub from_states: Option<StateConstants>,
+    /// The states, lowest first.
+    pub states: Vec<StateResult>,
+    /// Energy of the lowest state above the minimum, hartree; without states, Dunham's.
+    pub zero_point: Option<f64>,
+    /// Number of equal wells.
+    pub wells: usize,
+    /// States that tunnelling between equal wells has split, with the width in hartree.
+    pub multiplets: Vec<Multiplet>,
+    /// What a reader must know.
+    pub notes: Vec<String>,
+}
+
+/// Energies (hartree) of wells that count as equal.
+const EQUAL_WELLS: f64 = 1e-6;
+
+/// States on the piece of a curve that holds its lowest minimum.
+pub(super) fn of_curve(material: &Material<'_>, lines: &[Line], analysis: &mut LevelAnalysis) {
+    let lowest = analysis
+        .minima
+        .iter()
+        .filter(|m| m.interior)
+        .min_by(|a, b| a.energy.total_cmp(&b.energy));
+    let Some(minimum) = lowest else {
+        return;
+    };
+    let sweep = &material.spec.sweeps[0];
+    let place = sweep.motion.coordinate.from_reported(minimum.values[0]);
+    let holds = |line: &&Line| {
+        let (first, last) = (line.x[0], line.x[line.x.len() - 1]);
+        line.settings.period.is_some() || (first..=last).contains(&place)
+    };
+    let Some(line) = lines.iter().find(holds) else {
+        return;
+    };
+    let Some(positions) = &minimum.positions else {
+        return;
+    };
+    let Some(mass) = mass_of(material, sweep, positions) else {
+        return;
+    };
+    let fit = best_fit(material, minimum, analysis);
+    match spectroscopy(material, line, minimum, mass, fit) {
+        Ok(found) => analysis.spectroscopy = Some(found),
+        Err(error) => analysis
+            .notes
+            .push(format!("no vibrational states: {error}")),
+    }
+}
+
+/// The fit at a minimum that knows most derivatives: a polynomial before other forms.
+fn best_fit<'a>(
+    material: &Material<'_>,
+    minimum: &MinimumResult,
+    analysis: &'a LevelAnalysis,
+) -> Option<&'a Fit> {
+    analysis
+        .fits
+        .iter()
+        .filter(|f| f.sweep == 0 && material.is_same_place(&f.values, &minimum.values))
+        .map(|f| &f.fit)
+        .min_by_key(|fit| {
+            (
+                fit.fourth_derivative.is_none(),
+                fit.form != Form::Polynomial,
+            )
+        })
+}
+
+/// Inverse mass of a sweep's common coordinate. Of tied coordinates it is the G element of their mean, which they all
+/// equal (E. B. Wilson, J. C. Decius, P. C. Cross, Molecular Vibrations, 1955, chapter 4: g = Σ |∂q/∂x|²/m).
+fn mass_of(
+    material: &Material<'_>,
+    sweep: &Sweep,
+    positions: &[Vector3<f64>],
+) -> Option<VibratingMass> {
+    let count = sweep.motions().count() as f64;
+    let mut rows = vec![Vector3::zeros(); positions.len()];
+    for motion in sweep.motions() {
+        for (atom, d) in motion.coordinate.derivative(positions) {
+            rows[atom] += d / count;
+        }
+    }
+    let inverse: f64 = rows
+        .iter()
+        .zip(&material.spec.masses_u)
+        .map(|(row, mass)| row.norm_squared() / (mass * ELECTRON_MASSES_PER_U))
+        .sum();
+    let atoms = material.spec.molecule.atoms.iter();
+    (inverse.is_finite() && inverse > 0.0).then(|| VibratingMass {
+        inverse,
+        exact: atoms.filter(|a| !a.ghost).count() == 2 && sweep.kind() == "bond",
+        is_length: sweep.unit() == "angstrom",
+    })
+}
+
+/// The potential of a line, and how often each of its wells stands on the whole circle.
+fn potential<'a>(
+    sweep: &Sweep,
+    line: &Line,
+    notes: &mut Vec<String>,
+) -> Result<Potential<'a>, VibrationError> {
+    let (x, e) = (&line.x, &line.energies);
+    match sweep.kind() {
+        "bond" => Potential::of_length(x, e),
+        "dihedral" if line.settings.period.is_some() => Potential::of_torsion(x, e),
+        "dihedral" => match Potential::of_even_torsion(x, e) {
+            Ok(potential) => {
+                notes.push(
+                    "the torsion is taken to be even in the angle, which its points over half a turn cannot show"
+                        .to_owned(),
+                );
+                Ok(potential)
+            }
+            Err(_) => {
+                notes.push(
+                    "the points do not go round: states are those of the part that was scanned"
+                        .to_owned(),
+                );
+                Potential::of_line(x, e)
+            }
+        },
+        _ => Potential::of_line(x, e),
+    }
+}
+
+fn spectroscopy(
+    material: &Material<'_>,
+    line: &Line,
+    minimum: &MinimumResult,
+    mass: VibratingMass,
+    fit: Option<&Fit>,
+) -> Result<Spectroscopy, VibrationError> {
+    let sweep = &material.spec.sweeps[0];
+    let mut notes = Vec::new();
+    if !mass.exact {
+        notes.push(match material.path_kind() {
+            PathKind::Rigid => {
+                "states of this one coordinate with its G element at the minimum as inverse mass: an approximation \
+                 that leaves out its coupling to the others"
+                    .to_owned()
+            }
+            PathKind::Relaxed => {
+                "states of this one coordinate with its G element at the minimum as inverse mass: an approximation \
+                 that leaves out what the atoms that follow do to the mass"
+                    .to_owned()
+            }
+        });
+    }
+    let potential = potential(sweep, line, &mut notes)?;
+    let settings = StatesSettings {
+        count: material.spec.vibration.states,
+        ..StatesSettings::default()
+    };
+    let found = states(&potential, mass.inverse, &settings)?;
+    if found.cut_by_edge {
+        notes.push(format!(
+            "{} of {} states lie below the ends of the curve; a longer sweep would hold more",
+            found.states.len(),
+            settings.count
+        ));
+    }
+    let floor = minimum.energy;
+    let curvature = fit
+        .map(|f| f.force_constant)
+        .or_else(|| super::fits::second_derivative(minimum, 0, material.path_kind()));
+    let omega = curvature.and_then(|k| wavenumber_per_cm(k, mass.inverse).ok());
+    let dunham = fit.filter(|_| mass.exact).and_then(|fit| {
+        let at = MinimumDerivatives {
+            equilibrium: fit.equilibrium,
+            second: fit.force_constant,
+            third: fit.third_derivative?,
+            fourth: fit.fourth_derivative?,
+        };
+        dunham(&at, 1.0 / mass.inverse).ok()
+    });
+    let (wells, multiplets) = multiplets(&potential, &found);
+    let zero_point = found
+        .states
+        .first()
+        .map(|s| s.energy - floor)
+        .or(dunham.map(|d| d.zero_point_cm1 / PER_CM_PER_HARTREE));
+    Ok(Spectroscopy {
+        sweep: 0,
+        minimum: minimum.values[0],
+        minimum_energy: floor,
+        omega_e_cm1: omega,
+        from_states: if mass.exact {
+            from_states(&found, 1.0 / mass.inverse, floor)
+        } else {
+            None
+        },
+        dunham,
+        states: results(sweep, &found, floor),
+        zero_point,
+        wells,
+        multiplets,
+        mass,
+        notes,
+    })
+}
+
+fn results(sweep: &Sweep, found: &States, floor: f64) -> Vec<StateResult> {
+    let coordinate = &sweep.motion.coordinate;
+    let unit = coordinate.to_reported(1.0);
+    found
+        .states
+        .iter()
+        .map(|state| StateResult {
+            energy: state.energy - floor,
+            convergence: state.convergence,
+            edge_uncertainty: state.edge_uncertainty,
+            mean: state.mean * unit,
+            density: found
+                .grid
+                .iter()
+                .zip(&state.wavefunction)
+                .map(|(q, psi)| (q * unit, psi * psi / unit))
+                .collect(),
+        })
+        .collect()
+}
+
+/// Equal wells of a potential, and the states below the lowest barrier between them taken that many at a time.
+fn multiplets(potential: &Potential<'_>, states: &States) -> (usize, Vec<Multiplet>) {
+    const PLACES: usize = 2000;
+    let (lower, upper) = potential.range();
+    let round = potential.edges().is_none();
+    let at = |i: usize| lower + (upper - lower) * i as f64 / PLACES as f64;
+    let energies: Vec<f64> = (0..=PLACES).map(|i| potential.energy(at(i))).collect();
+    let before = |i: usize| match i {
+        0 if round => Some(PLACES - 1),
+        0 => None,
+        i => Some(i - 1),
+    };
+    let after = |i: usize| match i {
+        PLACES if round => Some(1),
+        PLACES => None,
+        i => Some(i + 1),
+    };
+    let last = if round { PLACES - 1 } else { PLACES };
+    let minima: Vec<usize> = (0..=last)
+        .filter(|&i| match (before(i), after(i)) {
+            (Some(b), Some(a)) => energies[i] < energies[b] && energies[i] <= energies[a],
+            _ => false,
+        })
+        .collect();
+    let lowest = minima
+        .iter()
+        .map(|&i| energies[i])
+        .fold(f64::INFINITY, f64::min);
+    // Places on a raster miss a bottom by half a step's rise at most, alike in equal wells to second order only.
+    let slack = EQUAL_WELLS
+        + minima
+            .iter()
+            .filter_map(|&i| Some(0.5 * (energies[after(i)?] - energies[i]).abs()))
+            .fold(0.0, f64::max);
+    let wells: Vec<usize> = minima
+        .into_iter()
+        .filter(|&i| energies[i] - lowest < slack)
+        .collect();
+    if wells.len() < 2 {
+        return (wells.len(), Vec::new());
+    }
+    let top = |from: usize, to: usize| {
+        let range: Box<dyn Iterator<Item = usize>> = if from < to {
+            Box::new(from..=to)
+        } else {
+            Box::new((from..=PLACES).chain(0..=to))
+        };
+        range.map(|i| energies[i]).fold(f64::NEG_INFINITY, f64::max)
+    };
+    let mut barriers: Vec<f64> = wells.windows(2).map(|w| top(w[0], w[1])).collect();
+    if round {
+        barriers.push(top(wells[wells.len() - 1], wells[0]));
+    }
+    let barrier = barriers.into_iter().fold(f64::INFINITY, f64::min);
+    (wells.len(), states.multiplets(wells.len(), barrier))
+}
