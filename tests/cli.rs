@@ -341,3 +341,151 @@ fn report_makes_the_same_files_again() {
     assert_eq!(place.read("run/points.csv"), table);
     assert_eq!(place.read("run/curve.svg"), figure);
 }
+
+#[test]
+fn fits_minima_and_states_are_in_every_file() {
+    let place = Place::new().with("h2.toml", HYDROGEN);
+    let ran = place.run(&["scan", "h2.toml", "--out", "run"]);
+    assert_eq!(ran.status, 0, "{}", ran.err);
+    assert!(ran.out.contains("minimum H1–H2 0.71"), "{}", ran.out);
+    assert!(ran.out.contains("polynomial of order"), "{}", ran.out);
+    let summary = place.summary("run");
+    let level = &summary["levels"][0];
+    // RHF/STO-3G hydrogen: 0.712 Å, −1.1175 hartree (W. J. Hehre, L. Radom, P. v. R. Schleyer, J. A. Pople, Ab Initio
+    // Molecular Orbital Theory, 1986).
+    let minimum = &level["minima"][0];
+    assert!((minimum["values"][0].as_f64().unwrap() - 0.712).abs() < 1e-3);
+    assert!((minimum["energy_hartree"].as_f64().unwrap() + 1.1175).abs() < 1e-4);
+    assert!(minimum["gradient_max_hartree_per_bohr"].as_f64().unwrap() < 1e-5);
+    assert_eq!(minimum["frequencies_cm1"].as_array().unwrap().len(), 1);
+    let fits = level["fits"].as_array().unwrap();
+    assert_eq!(fits.len(), 2, "polynomial and Morse");
+    for fit in fits {
+        assert_eq!(fit["sweep"], 0);
+        assert_eq!(fit["moves"], serde_json::json!(["H2"]));
+        assert_eq!(fit["convention"], "E = E0 + k/2 (q-q0)^2");
+        let k = |key: &str| fit["force_constant"][key].as_f64().unwrap();
+        assert!((k("newton_per_metre") - 100.0 * k("mdyne_per_angstrom")).abs() < 1e-9);
+        let half = fit["without_half"]["force_constant"]["mdyne_per_angstrom"]
+            .as_f64()
+            .unwrap();
+        assert!((k("mdyne_per_angstrom") - 2.0 * half).abs() < 1e-12);
+        assert!(fit["window"]["from"].as_f64().unwrap() >= 0.5);
+    }
+    let spectroscopy = &level["spectroscopy"];
+    let omega = spectroscopy["omega_e_cm1"].as_f64().unwrap();
+    assert!(omega > 5000.0 && omega < 6000.0, "{omega}");
+    assert!(!spectroscopy["states_cm1"].as_array().unwrap().is_empty());
+    let table = place.read("run/parameters.csv");
+    assert!(table.starts_with("term,atoms,equilibrium,k,unit,convention,level,spread,"));
+    assert!(
+        table
+            .lines()
+            .any(|l| l.starts_with("bond,H1 H2,0.71") && l.contains("kcal_per_mol_angstrom2"))
+    );
+    for file in ["vibration.png", "vibration.svg"] {
+        assert!(place.path(&format!("run/{file}")).exists());
+    }
+}
+
+#[test]
+fn a_report_needs_the_journal_alone_and_takes_other_fits() {
+    let other = HYDROGEN.to_owned()
+        + "[[fit]]\nform = \"morse\"\nwindow = { within = 0.35 }\n[vibration]\nstates = 2\n";
+    let place = Place::new()
+        .with("h2.toml", HYDROGEN)
+        .with("other.toml", other);
+    assert_eq!(place.run(&["scan", "h2.toml", "--out", "run"]).status, 0);
+    let files = place.names("run");
+    let before: Vec<Vec<u8>> = files
+        .iter()
+        .map(|f| std::fs::read(place.path(&format!("run/{f}"))).unwrap_or_default())
+        .collect();
+    assert_eq!(place.run(&["report", "run"]).status, 0);
+    assert_eq!(place.names("run"), files);
+    for (file, bytes) in files.iter().zip(&before) {
+        let now = std::fs::read(place.path(&format!("run/{file}"))).unwrap_or_default();
+        assert!(now == *bytes, "{file} has changed");
+    }
+    let ran = place.run(&["report", "run", "--spec", "other.toml", "--out", "again"]);
+    assert_eq!(ran.status, 0, "{}", ran.err);
+    let (first, again) = (place.summary("run"), place.summary("again"));
+    let (first, again) = (&first["levels"][0], &again["levels"][0]);
+    assert_eq!(first["points"], again["points"]);
+    assert_eq!(first["minima"], again["minima"]);
+    let fits = again["fits"].as_array().unwrap();
+    assert_eq!(fits.len(), 1);
+    assert_eq!(fits[0]["form"], "morse");
+    let width =
+        fits[0]["window"]["to"].as_f64().unwrap() - fits[0]["window"]["from"].as_f64().unwrap();
+    assert!(width <= 0.71);
+    assert_eq!(
+        again["spectroscopy"]["states_cm1"]
+            .as_array()
+            .unwrap()
+            .len(),
+        2
+    );
+}
+
+const WATER: &str = r#"
+title = "Water"
+[molecule]
+zmatrix = """
+O
+H1 O 0.96
+H2 O 0.96 H1 104
+"""
+[[level]]
+method = "rhf"
+basis = "sto-3g"
+"#;
+
+#[test]
+fn a_molecule_is_settled_without_a_sweep() {
+    let place = Place::new().with("water.toml", WATER);
+    let ran = place.run(&["settle", "water.toml"]);
+    assert_eq!(ran.status, 0, "{}", ran.err);
+    assert!(
+        ran.out.contains("a minimum: all vibrations are real"),
+        "{}",
+        ran.out
+    );
+    let folder = "runs/water-settled";
+    let names = place.names(folder);
+    for file in [
+        "journal.jsonl",
+        "parameters.csv",
+        "settled.xyz",
+        "spec.toml",
+        "summary.json",
+    ] {
+        assert!(
+            names.iter().any(|n| n == file),
+            "{file} is not among {names:?}"
+        );
+    }
+    let summary = place.summary(folder);
+    let minimum = &summary["levels"][0]["minima"][0];
+    // RHF/STO-3G: 0.9894 Å, 100.03°, −74.965 90 hartree (W. J. Hehre, L. Radom, P. v. R. Schleyer, J. A. Pople, Ab Initio
+    // Molecular Orbital Theory, 1986).
+    assert!((minimum["energy_hartree"].as_f64().unwrap() + 74.965_90).abs() < 2e-5);
+    assert_eq!(minimum["frequencies_cm1"].as_array().unwrap().len(), 3);
+    assert_eq!(minimum["converged"], true);
+    let internal = summary["levels"][0]["internal"].as_array().unwrap();
+    assert_eq!(internal.len(), 3);
+    assert!((internal[0]["equilibrium"].as_f64().unwrap() - 0.9894).abs() < 2e-4);
+    assert!((internal[2]["equilibrium"].as_f64().unwrap() - 100.03).abs() < 0.03);
+    // Again: nothing is calculated, and a report says the same.
+    let again = place.run(&["settle", "water.toml", "--json", "--quiet"]);
+    assert_eq!(
+        (again.status, again.out),
+        (0, place.read("runs/water-settled/summary.json"))
+    );
+    let text = place.read("runs/water-settled/summary.json");
+    assert_eq!(place.run(&["report", folder]).status, 0);
+    assert_eq!(place.read("runs/water-settled/summary.json"), text);
+    // A folder of settled molecules is no scan's.
+    let refused = place.run(&["scan", "water.toml", "--out", folder]);
+    assert_eq!(refused.status, 2);
+}

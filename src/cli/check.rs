@@ -21,7 +21,7 @@ const FRESH_BUILDS: f64 = 12.0;
 const SEEDED_BUILDS: f64 = 8.0;
 
 pub(super) fn run(args: &CheckArgs, streams: &mut Streams<'_>) -> Result<Status, Failure> {
-    let spec = load(&args.spec)?;
+    let spec = load(&args.spec, streams)?;
     let scan = job::scan_of(&spec)?;
     let out = &mut streams.out;
     writeln!(out, "{}", spec.title)?;

@@ -115,12 +115,16 @@ impl From<std::io::Error> for Failure {
     }
 }
 
-/// Reads and validates a spec; its errors are already complete messages.
-fn load(path: &Path) -> Result<Spec, Failure> {
-    spec::load(path).map_err(|errors| Failure {
+/// Reads and validates a spec; its errors are already complete messages. What is allowed but may surprise is told.
+fn load(path: &Path, streams: &mut Streams<'_>) -> Result<Spec, Failure> {
+    let spec = spec::load(path).map_err(|errors| Failure {
         message: errors.to_string().trim_end().to_owned(),
         status: Status::WrongInput,
-    })
+    })?;
+    for note in &spec.notes {
+        writeln!(streams.err, "{note}")?;
+    }
+    Ok(spec)
 }
 
 fn basis(name: Option<&str>, streams: &mut Streams<'_>) -> Result<Status, Failure> {

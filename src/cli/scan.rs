@@ -52,7 +52,7 @@ pub(super) fn run(
     stop: &AtomicBool,
     streams: &mut Streams<'_>,
 ) -> Result<Status, Failure> {
-    let spec = load(&args.spec)?;
+    let spec = load(&args.spec, streams)?;
     let folder = RunFolder::at(args.common.out.as_deref().unwrap_or(&spec.output.folder));
     let record = match existing(&folder, &spec, args.fresh, streams)? {
         Some(record) => record,
@@ -63,7 +63,7 @@ pub(super) fn run(
 
 pub(super) fn report(args: &ReportArgs, streams: &mut Streams<'_>) -> Result<Status, Failure> {
     let source = RunFolder::at(&args.run);
-    let mut spec = load(&source.path().join("spec.toml"))?;
+    let mut spec = load(&source.path().join("spec.toml"), streams)?;
     let (header, lines) = journal::read(&source.journal())?;
     let folder = RunFolder::at(args.common.out.as_deref().unwrap_or(source.path()));
     let settled = super::settle::report(
@@ -84,7 +84,7 @@ pub(super) fn report(args: &ReportArgs, streams: &mut Streams<'_>) -> Result<Sta
         )));
     }
     if let Some(path) = &args.spec {
-        spec.take_reporting_from(load(path)?);
+        spec.take_reporting_from(load(path, streams)?);
     }
     let record = record_of(lines);
     folder.create()?;

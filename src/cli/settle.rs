@@ -20,7 +20,7 @@ pub(super) fn run(
     stop: &AtomicBool,
     streams: &mut Streams<'_>,
 ) -> Result<Status, Failure> {
-    let spec = load(&args.spec)?;
+    let spec = load(&args.spec, streams)?;
     let place = args
         .common
         .out

@@ -16,6 +16,7 @@ pub(super) fn form_words(fit: &Fit) -> String {
     match fit.form {
         Form::Polynomial => format!("polynomial of order {}", fit.order),
         Form::Morse if fit.order == 0 => "Morse".to_owned(),
+        Form::Morse if fit.order == 1 => "Morse, 1 further exponent".to_owned(),
         Form::Morse => format!("Morse, {} further exponents", fit.order),
         Form::Fourier => format!("Fourier series to n = {}", fit.order),
     }
@@ -68,6 +69,7 @@ fn stationary(text: &mut String, result: &JobResult, point: &MinimumResult) {
         .zip(&point.values)
         .map(|(s, v)| {
             let decimals = if s.unit == "angstrom" { 5 } else { 3 };
+            let v = without_negative_zero(*v);
             format!("{} {v:.decimals$}{}", s.atoms.join("–"), unit_sign(s))
         })
         .collect();
@@ -128,6 +130,11 @@ fn constants(sweep: &SweepResult, second_derivative: f64) -> String {
         .join(" = ")
 }
 
+/// Rounding noise below zero is no sign.
+fn without_negative_zero(value: f64) -> f64 {
+    if value.abs() < 1e-6 { 0.0 } else { value }
+}
+
 /// Five significant digits.
 fn digits(value: f64) -> String {
     let size = value.abs().max(1e-99).log10().floor();
@@ -147,7 +154,7 @@ fn fit_lines(text: &mut String, sweep: &SweepResult, entry: &FitResult) {
         ),
     };
     let path = match entry.path {
-        PathKind::Rigid => format!("rigid, {} moves", entry.moves.join(" ")),
+        PathKind::Rigid => format!("rigid, moving {}", entry.moves.join(" ")),
         PathKind::Relaxed => "relaxed".to_owned(),
     };
     let _ = writeln!(
@@ -175,7 +182,7 @@ fn fit_lines(text: &mut String, sweep: &SweepResult, entry: &FitResult) {
                     text,
                     "  V{}/2 (1 + cos({0}q − {:.1}°)), V{0} = {kj:.3} kJ/mol",
                     term.multiple,
-                    term.phase.to_degrees()
+                    without_negative_zero(term.phase.to_degrees())
                 );
             }
         }
@@ -211,7 +218,7 @@ fn force_field(text: &mut String, result: &JobResult, field: &ForceField) {
     let shown: Vec<String> = units
         .iter()
         .filter(|(unit, _)| unit.starts_with("mdyne") || unit.starts_with("kj"))
-        .map(|(unit, k)| format!("{} {}", digits(*k), unit.replace('_', " ")))
+        .map(|(unit, k)| format!("{} {}", digits(*k), coupling_symbol(unit)))
         .collect();
     let _ = writeln!(
         text,
@@ -223,6 +230,19 @@ fn force_field(text: &mut String, result: &JobResult, field: &ForceField) {
         if !verdict.agrees {
             let _ = writeln!(text, "  {name}: {}", verdict.text);
         }
+    }
+}
+
+/// A unit of a coupling constant as printed.
+fn coupling_symbol(unit: &str) -> &str {
+    match unit {
+        "mdyne_per_angstrom" => "mdyn/Å",
+        "mdyne_angstrom_per_rad2" => "mdyn Å/rad²",
+        "mdyne_per_rad" => "mdyn/rad",
+        "kj_per_mol_angstrom2" => "kJ/mol/Å²",
+        "kj_per_mol_per_rad2" => "kJ/mol/rad²",
+        "kj_per_mol_angstrom_rad" => "kJ/mol/Å/rad",
+        other => other,
     }
 }
 

@@ -200,3 +200,75 @@ pub fn slopes(sweeps: &[Sweep], positions: &[Vector3<f64>], gradient: &[[f64; 3]
         })
         .collect()
 }
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use crate::molecule::internal::Coordinate;
+
+    /// Water with its bonds tied, and the angle as a second sweep.
+    fn sweeps() -> (Vec<Vector3<f64>>, Vec<Sweep>) {
+        let positions = vec![
+            Vector3::new(0.1, -0.2, 0.3),
+            Vector3::new(1.9, 0.1, 0.2),
+            Vector3::new(-0.4, 1.5, 0.6),
+        ];
+        let motion = |coordinate, moves: &[usize]| Motion {
+            coordinate,
+            moves: moves.to_vec(),
+        };
+        let sweep = |motion, also| Sweep {
+            motion,
+            also,
+            values: vec![1.0],
+            written: SweepValues::List(vec![1.0]),
+        };
+        let stretch = sweep(
+            motion(Coordinate::Bond([0, 1]), &[1]),
+            vec![motion(Coordinate::Bond([0, 2]), &[2])],
+        );
+        let bend = sweep(motion(Coordinate::Angle([1, 0, 2]), &[2]), Vec::new());
+        (positions, vec![stretch, bend])
+    }
+
+    #[test]
+    fn tangents_are_the_derivatives_of_the_path() {
+        let (input, sweeps) = sweeps();
+        let at = |values: [f64; 2]| positions_at(&input, &sweeps, &values).expect("a geometry");
+        let here = [0.97, 101.0];
+        let positions = at(here);
+        let found = tangents(&sweeps, &positions);
+        for k in 0..2 {
+            let h = 1e-4;
+            let mut values = [here, here];
+            let step = sweeps[k].motion.coordinate.to_reported(h);
+            values[0][k] += step;
+            values[1][k] -= step;
+            let (above, below) = (at(values[0]), at(values[1]));
+            for atom in 0..3 {
+                let exact = (above[atom] - below[atom]) / (2.0 * h);
+                assert!((found[k][atom] - exact).norm() < 1e-7, "{k} {atom}");
+            }
+        }
+    }
+
+    #[test]
+    fn slopes_follow_the_energy() {
+        let (input, sweeps) = sweeps();
+        // The H–H distance as an energy: it depends on all that is swept.
+        let energy = |p: &[Vector3<f64>]| (p[1] - p[2]).norm();
+        let here = [0.97, 101.0];
+        let positions = positions_at(&input, &sweeps, &here).expect("a geometry");
+        let along = (positions[1] - positions[2]).normalize();
+        let gradient = [[0.0; 3], along.into(), (-along).into()];
+        for (k, slope) in slopes(&sweeps, &positions, &gradient).iter().enumerate() {
+            let at = |h: f64| {
+                let mut values = here;
+                values[k] += sweeps[k].motion.coordinate.to_reported(h);
+                energy(&positions_at(&input, &sweeps, &values).expect("a geometry"))
+            };
+            let exact = (at(1e-4) - at(-1e-4)) / 2e-4;
+            assert!((slope - exact).abs() < 1e-7, "{slope} {exact}");
+        }
+    }
+}

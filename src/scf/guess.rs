@@ -7,10 +7,11 @@
 use super::ScfError;
 use super::diis::Extrapolation;
 use super::orthogonal::{Orbitals, Orthogonal};
-use crate::basis::Basis;
+use crate::basis::{Basis, Shell};
 use crate::elements::Element;
 use crate::integrals;
-use crate::integrals::repulsion::CoulombExchange;
+use crate::integrals::repulsion::{CoulombExchange, RepulsionList, RepulsionSettings};
+use crate::molecule::Molecule;
 use nalgebra::{DMatrix, Vector3};
 
 /// Iterations of an atom; a density that is not quite converged still serves.
@@ -143,6 +144,52 @@ pub fn superposed(blocks: &[DMatrix<f64>], functions: usize) -> DMatrix<f64> {
         offset += n;
     }
     density
+}
+
+/// One-spin densities of all atoms of a molecule in their own functions; those of ghosts are zero. Atoms alike in
+/// element and shells are computed once.
+///
+/// # Errors
+/// [`ScfError::Eigenproblem`].
+pub fn atomic_densities(
+    molecule: &Molecule,
+    shells_of_atom: &[Vec<Shell>],
+    dependence: f64,
+) -> Result<Vec<DMatrix<f64>>, ScfError> {
+    let mut known: Vec<(usize, DMatrix<f64>)> = Vec::new();
+    let mut all = Vec::with_capacity(molecule.atoms.len());
+    for (i, (atom, shells)) in molecule.atoms.iter().zip(shells_of_atom).enumerate() {
+        let twin = known.iter().find(|(j, _)| {
+            molecule.atoms[*j].element == atom.element && same_shells(&shells_of_atom[*j], shells)
+        });
+        let placed: Vec<Shell> = shells
+            .iter()
+            .map(|s| Shell {
+                atom: 0,
+                ..s.clone()
+            })
+            .collect();
+        let basis = Basis::new(placed, vec![Vector3::zeros()]);
+        if atom.ghost || basis.is_empty() {
+            all.push(DMatrix::zeros(basis.len(), basis.len()));
+        } else if let Some((_, density)) = twin {
+            all.push(density.clone());
+        } else {
+            let list = RepulsionList::compute(&basis, &RepulsionSettings::default());
+            let density = atomic_density(atom.element, &basis, &list, dependence)?;
+            known.push((i, density.clone()));
+            all.push(density);
+        }
+    }
+    Ok(all)
+}
+
+/// The same exponents and coefficients, wherever the shells sit.
+fn same_shells(one: &[Shell], other: &[Shell]) -> bool {
+    one.len() == other.len()
+        && one.iter().zip(other).all(|(a, b)| {
+            a.exponents == b.exponents && a.contractions == b.contractions && a.kind == b.kind
+        })
 }
 
 #[cfg(test)]

@@ -19,7 +19,6 @@ use crate::scf::{
     FirstDensity, Method, ScfError, ScfSettings, StopReason, guess, properties, second_order,
 };
 use nalgebra::{DMatrix, Vector3};
-use std::sync::OnceLock;
 use std::time::Instant;
 
 /// Nuclei nearer than this (bohr) count as being on one spot.
@@ -36,8 +35,9 @@ pub struct HartreeFock {
     shells_of_atom: Vec<Vec<Shell>>,
     occupation: Occupation,
     settings: ScfSettings,
-    /// One-spin densities of the free atoms, computed when first needed.
-    atoms: OnceLock<Result<Vec<DMatrix<f64>>, ScfError>>,
+    /// One-spin densities of the free atoms, where calculations begin from them. They are computed at once: a point
+    /// that waited for them inside the thread pool could wait for itself.
+    atoms: Vec<DMatrix<f64>>,
 }
 
 /// Repulsion integrals kept from one point to the next.
@@ -122,6 +122,12 @@ impl HartreeFock {
                 occupied: alpha,
             });
         }
+        let atoms = match settings.first_density {
+            FirstDensity::Atoms => {
+                guess::atomic_densities(molecule, &shells_of_atom, settings.dependence)?
+            }
+            FirstDensity::CoreHamiltonian => Vec::new(),
+        };
         Ok(Self {
             molecule: molecule.clone(),
             shells_of_atom,
@@ -131,7 +137,7 @@ impl HartreeFock {
                 beta,
             },
             settings,
-            atoms: OnceLock::new(),
+            atoms,
         })
     }
 
@@ -208,63 +214,15 @@ impl HartreeFock {
         })
     }
 
-    /// One-spin densities of all atoms, ghosts empty.
-    fn atomic_densities(&self) -> Result<&[DMatrix<f64>], ScfError> {
-        let densities = self.atoms.get_or_init(|| {
-            let mut known: Vec<(usize, DMatrix<f64>)> = Vec::new();
-            let mut all = Vec::with_capacity(self.molecule.atoms.len());
-            for (i, (atom, shells)) in self
-                .molecule
-                .atoms
-                .iter()
-                .zip(&self.shells_of_atom)
-                .enumerate()
-            {
-                let twin = known.iter().find(|(j, _)| {
-                    self.molecule.atoms[*j].element == atom.element
-                        && same_shells(&self.shells_of_atom[*j], shells)
-                });
-                let placed: Vec<Shell> = shells
-                    .iter()
-                    .map(|s| Shell {
-                        atom: 0,
-                        ..s.clone()
-                    })
-                    .collect();
-                let basis = Basis::new(placed, vec![Vector3::zeros()]);
-                if atom.ghost || basis.is_empty() {
-                    all.push(DMatrix::zeros(basis.len(), basis.len()));
-                } else if let Some((_, density)) = twin {
-                    all.push(density.clone());
-                } else {
-                    let list = RepulsionList::compute(&basis, &RepulsionSettings::default());
-                    let density = guess::atomic_density(
-                        atom.element,
-                        &basis,
-                        &list,
-                        self.settings.dependence,
-                    )?;
-                    known.push((i, density.clone()));
-                    all.push(density);
-                }
-            }
-            Ok(all)
-        });
-        match densities {
-            Ok(list) => Ok(list),
-            Err(error) => Err(*error),
-        }
-    }
-
     /// What a calculation without a seed starts from.
-    fn fresh(&self, functions: usize) -> Result<Beginning, ScfError> {
-        Ok(match self.settings.first_density {
+    fn fresh(&self, functions: usize) -> Beginning {
+        match self.settings.first_density {
             FirstDensity::CoreHamiltonian => Beginning::Core,
             FirstDensity::Atoms => {
-                let density = guess::superposed(self.atomic_densities()?, functions);
+                let density = guess::superposed(&self.atoms, functions);
                 Beginning::Densities(vec![density; self.occupation.blocks().len()])
             }
-        })
+        }
     }
 
     /// Whether a seed belongs to a calculation like this one.
@@ -300,7 +258,7 @@ impl HartreeFock {
             Some(_) => seed::predict(&usable, request.coordinates)?,
         };
         let Some(prediction) = prediction else {
-            return Ok((self.fresh(functions)?, Vec::new()));
+            return Ok((self.fresh(functions), Vec::new()));
         };
         let occupied = prediction
             .occupied
@@ -570,14 +528,6 @@ fn counts(counts: integrals::repulsion::IntegralCounts) -> IntegralCounts {
         computed: counts.computed,
         reused: counts.reused,
     }
-}
-
-/// The same exponents and coefficients, wherever the shells sit.
-fn same_shells(one: &[Shell], other: &[Shell]) -> bool {
-    one.len() == other.len()
-        && one.iter().zip(other).all(|(a, b)| {
-            a.exponents == b.exponents && a.contractions == b.contractions && a.kind == b.kind
-        })
 }
 
 /// The points of a start, nearest last.
