@@ -7,8 +7,8 @@
 //! neighbouring geometry where they are known: those soft modes are what makes a difficult case difficult.
 
 use super::ScfError;
-use super::diis::Extrapolation;
 use super::canonical::{Canonical, Kappa, combined, inner, scaled};
+use super::diis::Extrapolation;
 use super::fock::{Evaluation, Field};
 use super::iteration::{self, Thresholds};
 use super::orthogonal::{symmetric_eigen, symmetrise};
