@@ -5,7 +5,6 @@
 //! surface of a relaxed scan; [`path`] and [`valley`] find stationary points of scans.
 
 pub mod coordinates;
-mod held;
 pub mod hessian;
 pub mod landscape;
 pub mod model_hessian;
@@ -13,9 +12,12 @@ pub mod path;
 pub mod primitive;
 pub mod relaxed;
 pub mod settle;
-mod solve;
 pub mod step;
 pub mod valley;
+
+mod evaluator;
+mod held;
+mod solve;
 
 use crate::molecule::Molecule;
 use crate::molecule::internal::{Coordinate, CoordinateError};
@@ -202,6 +204,9 @@ pub enum MinimiseError {
     /// The surface gave an energy without a gradient.
     #[error("the surface gives no gradient")]
     NoGradient,
+    /// The first calculation did not converge.
+    #[error("the calculation at the starting geometry did not converge")]
+    NoEnergy,
     /// A calculation that a derivative needs did not converge.
     #[error("the calculation with atom number {} displaced did not converge", atom + 1)]
     NotConverged {

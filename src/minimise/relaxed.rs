@@ -307,3 +307,42 @@ impl<S: Surface> Surface for Relaxed<S> {
         self.inner.likeness(&one.inner, &other.inner)
     }
 }
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    fn predicted(places: &[&[f64]], target: &[f64], f: impl Fn(&[f64]) -> f64) -> f64 {
+        let weights = weights(places, target).expect("enough points");
+        // Weights are those of changes from the last point.
+        let here = f(places[places.len() - 1]);
+        let changes = places.iter().map(|p| f(p) - here);
+        here + changes.zip(&weights).map(|(c, w)| c * w).sum::<f64>()
+    }
+
+    #[test]
+    fn a_parabola_along_a_line_is_followed() {
+        let f = |q: &[f64]| 1.0 + 0.3 * q[0] - 0.2 * q[0] * q[0];
+        let places: [&[f64]; 5] = [&[9.0], &[1.0], &[1.5], &[1.5], &[2.5]];
+        assert!((predicted(&places, &[3.0], f) - f(&[3.0])).abs() < 1e-12);
+        // Along the second of two coordinates, with points off the line left out.
+        let f = |q: &[f64]| q[0] + 0.3 * q[1] - 0.2 * q[1] * q[1];
+        let places: [&[f64]; 4] = [&[1.0, 7.0], &[2.0, 0.0], &[2.0, 1.0], &[2.0, 2.0]];
+        assert!((predicted(&places, &[2.0, 3.0], f) - f(&[2.0, 3.0])).abs() < 1e-12);
+    }
+
+    #[test]
+    fn a_plane_is_followed_across() {
+        let f = |q: &[f64]| 1.0 + 0.3 * q[0] - 0.2 * q[1];
+        let places: [&[f64]; 3] = [&[0.0, 0.0], &[0.0, 1.0], &[1.0, 0.0]];
+        assert!((predicted(&places, &[1.0, 1.0], f) - 1.1).abs() < 1e-12);
+    }
+
+    #[test]
+    fn one_point_predicts_nothing() {
+        assert_eq!(weights(&[&[1.0]], &[2.0]), None);
+        assert_eq!(weights(&[], &[2.0]), None);
+        // Nor do two points on a line that does not lead there.
+        assert_eq!(weights(&[&[0.0, 0.0], &[1.0, 0.0]], &[1.0, 2.0]), None);
+    }
+}

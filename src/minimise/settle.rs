@@ -120,9 +120,7 @@ pub fn settle<S: Surface>(
         };
         let minimum = minimise(surface, task, &settings.minimise, workspace)?;
         if minimum.record.energy.is_none() {
-            return Err(MinimiseError::NotConvergedOnPath {
-                coordinates: Vec::new(),
-            });
+            return Err(MinimiseError::NoEnergy);
         }
         moved.positions.clone_from(&minimum.positions);
         let hessian = hessian(

@@ -1,118 +1,17 @@
 //! The optimisation itself, as a solver of argmin: the only file that names that library.
 
 use super::coordinates::{Frame, InternalSet};
+use super::evaluator::{Evaluator, Point};
 use super::held::{self, Condition};
 use super::model_hessian::model_hessian;
 use super::step::{self, Step, Trust};
 use super::{Call, Curvature, MinimiseError, MinimiseSettings, MinimiseStop, Minimum, Task};
 use crate::molecule::Molecule;
-use crate::surface::{PointRecord, PointRequest, SeedPoint, StabilityDemand, Start, Surface};
+use crate::surface::{PointRecord, StabilityDemand, Surface};
 use argmin::core::{
     Error, Executor, IterState, KV, Problem, Solver, TerminationReason, TerminationStatus,
 };
 use nalgebra::{DMatrix, DVector, Vector3};
-use std::cell::RefCell;
-
-/// The surface as argmin's problem: counts calls, carries seeds and the workspace.
-struct Evaluator<'a, S: Surface> {
-    surface: &'a S,
-    coordinates: &'a [f64],
-    follow: Option<&'a S::Seed>,
-    own: RefCell<Own<'a, S>>,
-}
-
-/// What changes from call to call.
-struct Own<'a, S: Surface> {
-    workspace: &'a mut S::Workspace,
-    /// What the first call starts from.
-    start: Option<Start<'a, S::Seed>>,
-    /// What the last converged call left.
-    seed: Option<S::Seed>,
-    all_builds: usize,
-    seconds: f64,
-    scf_seconds: f64,
-}
-
-/// One geometry with what the surface says of it.
-#[derive(Clone)]
-struct Point<T> {
-    positions: Vec<Vector3<f64>>,
-    record: PointRecord,
-    seed: Option<T>,
-    energy: f64,
-    /// 3N
-    gradient: DVector<f64>,
-}
-
-impl<S: Surface> Evaluator<'_, S> {
-    /// Energy and gradient; none where the calculation did not converge.
-    fn evaluate(
-        &self,
-        positions: &[Vector3<f64>],
-        stability: StabilityDemand,
-        gradient: bool,
-    ) -> Result<(PointRecord, Option<S::Seed>), MinimiseError> {
-        if !positions.iter().all(|p| p.iter().all(|x| x.is_finite())) {
-            return Err(MinimiseError::NotFinite);
-        }
-        let mut own = self.own.borrow_mut();
-        let own = &mut *own;
-        let start = match (own.start.take(), &own.seed) {
-            (Some(start), _) => start,
-            // A list of one point: what an extrapolation carries along besides densities comes too.
-            (None, Some(seed)) => Start::Extrapolated(vec![SeedPoint {
-                coordinates: self.coordinates,
-                seed,
-            }]),
-            (None, None) => Start::Fresh,
-        };
-        let request = PointRequest {
-            positions,
-            coordinates: self.coordinates,
-            start,
-            gradient,
-            stability,
-            follow: self.follow,
-        };
-        let outcome = self.surface.evaluate(&request, own.workspace)?;
-        own.all_builds += outcome.record.all_builds;
-        own.seconds += outcome.record.seconds;
-        own.scf_seconds += outcome.record.scf_seconds;
-        if outcome.seed.is_some() {
-            own.seed.clone_from(&outcome.seed);
-        }
-        Ok((outcome.record, outcome.seed))
-    }
-
-    fn point(
-        &self,
-        positions: Vec<Vector3<f64>>,
-        stability: StabilityDemand,
-    ) -> Result<Result<Point<S::Seed>, PointRecord>, MinimiseError> {
-        let (record, seed) = self.evaluate(&positions, stability, true)?;
-        let Some(energy) = record.energy else {
-            return Ok(Err(record));
-        };
-        let rows = record.gradient.as_ref().ok_or(MinimiseError::NoGradient)?;
-        if rows.len() != positions.len() {
-            return Err(MinimiseError::Counts {
-                expected: positions.len(),
-                given: rows.len(),
-            });
-        }
-        let gradient = DVector::from_iterator(3 * rows.len(), rows.iter().flatten().copied());
-        if !(energy.is_finite() && gradient.iter().all(|g| g.is_finite())) {
-            return Err(MinimiseError::NotFinite);
-        }
-        Ok(Ok(Point {
-            positions,
-            record,
-            seed,
-            energy,
-            gradient,
-        }))
-    }
-}
 
 /// The solver: coordinates, Hessian and trust, and the point it stands at.
 struct Descent<'a, T> {
@@ -429,19 +328,13 @@ pub(super) fn run<S: Surface>(
         base,
         held,
     } = prepare(&task)?;
-    let evaluator = Evaluator {
+    let evaluator = Evaluator::new(
         surface,
-        coordinates: task.coordinates,
-        follow: task.follow,
-        own: RefCell::new(Own {
-            workspace,
-            start: Some(task.start),
-            seed: None,
-            all_builds: 0,
-            seconds: 0.0,
-            scf_seconds: 0.0,
-        }),
-    };
+        task.coordinates,
+        task.follow,
+        task.start,
+        workspace,
+    );
     let started = molecule.positions.clone();
     let mut descent = Descent {
         molecule,
@@ -588,22 +481,22 @@ fn finish<S: Surface>(
     evaluator: &Evaluator<'_, S>,
     started: Vec<Vector3<f64>>,
 ) -> Result<Minimum<S::Seed>, MinimiseError> {
-    let own = evaluator.own.borrow();
+    let spent = evaluator.spent();
     let (positions, mut record, seed) = match (done.point, done.refused) {
         (Some(point), _) => (point.positions, point.record, point.seed),
         (None, Some(record)) => (started, record, None),
         (None, None) => return Err(MinimiseError::NotFinite),
     };
-    record.all_builds = own.all_builds;
-    record.seconds = own.seconds;
-    record.scf_seconds = own.scf_seconds;
+    record.all_builds = spent.all_builds;
+    record.seconds = spent.seconds;
+    record.scf_seconds = spent.scf_seconds;
     Ok(Minimum {
         positions,
         record,
         seed,
         stop: done.stop.unwrap_or(MinimiseStop::CallLimit),
         calls: done.calls,
-        all_builds: own.all_builds,
+        all_builds: spent.all_builds,
         curvature: done.curvature,
     })
 }

@@ -242,6 +242,18 @@ fn a_saddle_point_is_reported_and_left_on_request() {
 }
 
 #[test]
+fn an_atom_settles_without_vibrations() {
+    let mut atom = named("water");
+    atom.atoms.truncate(1);
+    atom.positions.truncate(1);
+    let surface = ModelSurface::simple(-1.0, vec![]);
+    let settings = SettleSettings::default();
+    let settled = settle(&surface, &atom, &masses(&atom), &[], &settings, &mut ()).unwrap();
+    assert!(settled.analysis.modes.is_empty() && settled.internal.is_empty());
+    assert_eq!(settled.character, Character::Minimum);
+}
+
+#[test]
 fn a_direction_without_force_is_called_flat() {
     let (_, mut surface) = peroxide_field();
     surface.states[0]

@@ -16,7 +16,7 @@ use serde::{Deserialize, Serialize};
 const OWN_NOVELTY: f64 = 1e-5;
 /// A carried difference is left out if less than this fraction of it is new: it holds only to first order in
 /// the step between geometries, and dividing by a small rest would blow that error up.
-const CARRIED_NOVELTY: f64 = 0.05;
+const CARRIED_NOVELTY: f64 = 0.02;
 /// Own differences that are kept.
 const OWN_LIMIT: usize = 12;
 /// Iterates among which the energy is minimised; all subsets are tried, so the cost doubles with each.

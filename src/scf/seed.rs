@@ -14,8 +14,8 @@ use serde::{Deserialize, Serialize};
 use std::sync::Arc;
 
 /// Highest order of the polynomial.
-const ORDER: usize = 4;
-/// Sum of the absolute weights above which a polynomial would amplify noise too much (five equidistant points have 31).
+const ORDER: usize = 5;
+/// Sum of the absolute weights above which a polynomial would amplify noise too much (six equidistant points have 63).
 const LARGEST_WEIGHTS: f64 = 80.0;
 /// An estimated error (norm of the tangent) above which the newest point alone is safer.
 const LARGEST_ERROR: f64 = 0.4;

@@ -49,13 +49,13 @@ fn monomial_density(
 /// `visit(gradient, work, pair, blocks with their coefficient, (atom of s, atom of t))`.
 fn accumulate<W: Default>(
     basis: &Basis,
-    atoms: usize,
     density: &DMatrix<f64>,
     one_centre: bool,
     (bra_raise, ket_raise): (usize, usize),
     visit: impl Fn(&mut [Vector3<f64>], &mut W, &PrimitivePair, &[(f64, &Block<'_>)], [usize; 2]) + Sync,
 ) -> Vec<Vector3<f64>> {
     let shells = basis.shells();
+    let atoms = basis.centres().len();
     let pairs: Vec<_> = (0..shells.len())
         .flat_map(|s| (0..=s).map(move |t| (s, t)))
         .filter(|&(s, t)| one_centre || shells[s].atom != shells[t].atom)
@@ -119,19 +119,12 @@ fn accumulate<W: Default>(
     gradient
 }
 
-/// Gradient of a two-centre operator that moves with its functions and separates into directions:
-/// `integrals(pair, axis, i, j)` gives up to two factors whose products are summed over the choice
-/// of the direction in which the second stands (overlap: only the first counts).
-fn separable(
-    basis: &Basis,
-    atoms: usize,
-    density: &DMatrix<f64>,
-    kinetic: bool,
-) -> Vec<Vector3<f64>> {
+/// Gradient of the overlap or of the kinetic energy, whose integrals over primitives are products of
+/// one-dimensional ones and depend on the two centres of the functions only.
+fn separable(basis: &Basis, density: &DMatrix<f64>, kinetic: bool) -> Vec<Vector3<f64>> {
     let raise = (1, if kinetic { 2 } else { 0 });
     accumulate(
         basis,
-        atoms,
         density,
         false,
         raise,
@@ -179,13 +172,13 @@ fn separable(
 /// Σ_ab W_ab ∂⟨a|b⟩ for every atom, per bohr; `weights` symmetric or taken as its symmetric part.
 #[must_use]
 pub fn overlap_gradient(basis: &Basis, weights: &DMatrix<f64>) -> Vec<Vector3<f64>> {
-    separable(basis, basis.centres().len(), weights, false)
+    separable(basis, weights, false)
 }
 
 /// Σ_ab D_ab ∂⟨a|−½∇²|b⟩ for every atom, in hartree/bohr.
 #[must_use]
 pub fn kinetic_gradient(basis: &Basis, density: &DMatrix<f64>) -> Vec<Vector3<f64>> {
-    separable(basis, basis.centres().len(), density, true)
+    separable(basis, density, true)
 }
 
 /// What the attraction needs per primitive pair.
@@ -211,7 +204,6 @@ pub fn attraction_gradient(
     let powers = hermite_powers();
     accumulate(
         basis,
-        charges.len(),
         density,
         true,
         (1, 0),
@@ -226,7 +218,7 @@ pub fn attraction_gradient(
             work.product.clear();
             work.product.resize(count, 0.0);
             for (coefficient, block) in blocks {
-                expand(pair, block, |h, _, e| work.product[h] += coefficient * e);
+                expand(pair, block, |h, e| work.product[h] += coefficient * e);
             }
             work.potential.clear();
             work.potential.resize(raised, 0.0);
@@ -261,8 +253,8 @@ pub fn attraction_gradient(
     )
 }
 
-/// Hermite coefficients of the density of a block: `add(h, place, value)`.
-fn expand(pair: &PrimitivePair, block: &Block<'_>, mut add: impl FnMut(usize, usize, f64)) {
+/// Hermite coefficients of the density of a block: `add(h, value)`.
+fn expand(pair: &PrimitivePair, block: &Block<'_>, mut add: impl FnMut(usize, f64)) {
     let monomials = cartesian_count(block.ket.l);
     for (m, a) in cartesian_powers(block.bra.l).enumerate() {
         for (n, b) in cartesian_powers(block.ket.l).enumerate() {
@@ -272,7 +264,7 @@ fn expand(pair: &PrimitivePair, block: &Block<'_>, mut add: impl FnMut(usize, us
             for (t, ex) in x.iter().enumerate() {
                 for (u, ey) in y.iter().enumerate() {
                     for (v, ez) in z.iter().enumerate() {
-                        add(hermite_index(t, u, v), place, d * ex * ey * ez);
+                        add(hermite_index(t, u, v), d * ex * ey * ez);
                     }
                 }
             }

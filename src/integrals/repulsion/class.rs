@@ -11,13 +11,16 @@
 //! primitives enter by their *scalars* c_a c_b (b/p)^i (a/p)^j (1/2p)^n only. Contraction over
 //! primitives is done with these, and the polynomials in AB are applied once for each contracted
 //! quartet (the idea of contracting before the transformation: P. M. W. Gill, B. G. Johnson,
-//! J. A. Pople, Int. J. Quantum Chem. 40, 745 (1991)). Pairs of one primitive each have the scalar
-//! folded into the polynomials.
+//! J. A. Pople, Int. J. Quantum Chem. 40, 745 (1991)).
+//!
+//! Where one shell has a single primitive, say b, everything is a power of y = b/p: a/p = 1 − y and
+//! 1/2p = y/2b. Then the scalars are c_a y^m, far fewer, and the rest (c_b and powers of 1/2b) is
+//! *folded* into the polynomials. Where both are single, all of the scalar is.
 
 use crate::basis::shell::{cartesian_count, cartesian_powers};
 use crate::basis::{FunctionKind, Shell};
 use crate::integrals::harmonics::function_transform;
-use crate::integrals::recurrence::{hermite_count, hermite_index, hermite_powers};
+use crate::integrals::recurrence::{hermite_index, hermite_powers};
 use std::collections::{BTreeMap, HashMap};
 use std::sync::{Arc, Mutex, OnceLock};
 
@@ -62,8 +65,8 @@ impl ShellType {
 /// bra where cost does not.
 #[derive(Debug, Clone, PartialEq, Eq, Hash, PartialOrd, Ord)]
 pub(super) struct ClassKey {
-    /// More than one primitive pair: scalars are kept apart from the polynomials.
-    pub(super) contracted: bool,
+    /// Whether each shell has more than one primitive.
+    pub(super) contracted: [bool; 2],
     pub(super) types: [ShellType; 2],
     /// Both shells on one centre: AB = 0, and all terms with powers of AB are absent.
     pub(super) one_centre: bool,
@@ -71,16 +74,33 @@ pub(super) struct ClassKey {
     pub(super) same_shell: bool,
 }
 
-/// c_a c_b (b/p)^power_b (a/p)^power_a (1/2p)^power_p.
-#[derive(Debug, Clone, Copy, PartialEq, Eq, Hash, PartialOrd, Ord)]
+/// Highest angular momentum of a single primitive whose scalars are folded. (1 − y)^l in powers of y
+/// loses digits when it is multiplied by a large |AB|^l: about 1e-11 in an integral over a tight g and
+/// a diffuse function, at most 1e-12 for f.
+const MAX_FOLDED_L: usize = 3;
+
+impl ClassKey {
+    /// Whether scalars that only single primitives determine go into the transformation.
+    fn folds(&self) -> bool {
+        match self.contracted {
+            [true, true] => false,
+            [false, false] => true,
+            [true, false] => self.types[1].max_l() <= MAX_FOLDED_L,
+            [false, true] => self.types[0].max_l() <= MAX_FOLDED_L,
+        }
+    }
+}
+
+/// Product of the contraction coefficients named, (b/p)^power_b (a/p)^power_a (1/2p)^power_p and
+/// (1/2e)^power_single, with e the exponent of the shell that has only one.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Hash, PartialOrd, Ord, Default)]
 pub(super) struct Scalar {
-    /// Degree of the Hermite functions that it multiplies.
-    pub(super) degree: usize,
-    pub(super) contraction_a: usize,
-    pub(super) contraction_b: usize,
+    pub(super) contraction_a: Option<usize>,
+    pub(super) contraction_b: Option<usize>,
     pub(super) power_b: usize,
     pub(super) power_a: usize,
     pub(super) power_p: usize,
+    pub(super) power_single: usize,
 }
 
 /// Scalars whose Hermite functions have the same range of degrees.
@@ -92,7 +112,7 @@ pub(super) struct ScalarGroup {
     pub(super) high: usize,
 }
 
-/// One term of an element of the transformation: coefficient · scalar · monomial of AB.
+/// One term of an element of the transformation: coefficient · folded scalar · monomial of AB.
 #[derive(Debug, Clone, Copy)]
 pub(super) struct Term {
     pub(super) scalar: u32,
@@ -109,10 +129,11 @@ pub(super) struct PairClass {
     pub(super) degree: usize,
     /// Pairs of functions (within shell A, within shell B), A slower.
     pub(super) functions: Vec<(usize, usize)>,
-    /// Scalars by degree. For uncontracted pairs they enter the elements only.
-    pub(super) scalars: Vec<Scalar>,
-    /// Ranges of the scalars that primitives carry; one group of one scalar (worth 1, all degrees)
-    /// for uncontracted pairs.
+    /// Scalars that primitives carry, by the degrees of their Hermite functions.
+    pub(super) carried: Vec<Scalar>,
+    /// Scalars that are folded into the elements of the transformation.
+    pub(super) folded: Vec<Scalar>,
+    /// Ranges of `carried`.
     pub(super) groups: Vec<ScalarGroup>,
     /// (Hermite index, carried scalar) of each scaled Hermite function.
     pub(super) hermites: Vec<(usize, usize)>,
@@ -164,17 +185,71 @@ fn power_in_hermites(k: usize) -> Vec<f64> {
     h
 }
 
-type Symbolic = BTreeMap<(Scalar, usize), BTreeMap<usize, f64>>;
+/// Terms of one function pair, by carried scalar and Hermite index.
+type Symbolic = BTreeMap<(Scalar, usize), Polynomial>;
 
-/// Terms of the product of two monomials, keyed by (scalar, Hermite index) and monomial of AB.
+/// Coefficients by folded scalar and monomial of AB.
+type Polynomial = BTreeMap<(Scalar, usize), f64>;
+
+/// One term of the product of two monomials.
+#[derive(Debug, Clone, Copy)]
+struct ProductTerm {
+    carried: Scalar,
+    folded: Scalar,
+    hermite: usize,
+    monomial: usize,
+    coefficient: f64,
+}
+
+/// Divides a scalar into sums of what primitives carry and what is folded into the elements.
+fn divided(scalar: Scalar, key: &ClassKey) -> Vec<(Scalar, Scalar, f64)> {
+    let contracted = key.contracted;
+    let (same, other) = match contracted {
+        _ if !key.folds() => return vec![(scalar, Scalar::default(), 1.0)],
+        [true, true] => return vec![(scalar, Scalar::default(), 1.0)],
+        [false, false] => return vec![(Scalar::default(), scalar, 1.0)],
+        // b is the single one: powers of y = b/p.
+        [true, false] => (scalar.power_b, scalar.power_a),
+        [false, true] => (scalar.power_a, scalar.power_b),
+    };
+    (0..=other)
+        .map(|l| {
+            let power = same + l + scalar.power_p;
+            let sign = if l.is_multiple_of(2) { 1.0 } else { -1.0 };
+            let carried = if contracted[0] {
+                Scalar {
+                    contraction_a: scalar.contraction_a,
+                    power_b: power,
+                    ..Scalar::default()
+                }
+            } else {
+                Scalar {
+                    contraction_b: scalar.contraction_b,
+                    power_a: power,
+                    ..Scalar::default()
+                }
+            };
+            let folded = Scalar {
+                contraction_a: scalar.contraction_a.filter(|_| !contracted[0]),
+                contraction_b: scalar.contraction_b.filter(|_| !contracted[1]),
+                power_single: scalar.power_p,
+                ..Scalar::default()
+            };
+            (carried, folded, sign * binomial(other, l))
+        })
+        .collect()
+}
+
+/// Terms of the product of two monomials of the contractions (ca, cb).
 fn monomial_product(
     a: [usize; 3],
     b: [usize; 3],
-    one_centre: bool,
-) -> Vec<(Scalar, usize, usize, f64)> {
+    [ca, cb]: [usize; 2],
+    key: &ClassKey,
+) -> Vec<ProductTerm> {
     let directions: [_; 3] = std::array::from_fn(|k| {
         let mut terms = one_direction(a[k], b[k]);
-        terms.retain(|term| !one_centre || term.1 == 0);
+        terms.retain(|term| !key.one_centre || term.1 == 0);
         terms
     });
     let mut all = Vec::new();
@@ -182,16 +257,22 @@ fn monomial_product(
         for y in &directions[1] {
             for z in &directions[2] {
                 let scalar = Scalar {
-                    degree: x.0 + y.0 + z.0,
-                    contraction_a: 0,
-                    contraction_b: 0,
+                    contraction_a: Some(ca),
+                    contraction_b: Some(cb),
                     power_b: x.2 + y.2 + z.2,
                     power_a: x.3 + y.3 + z.3,
                     power_p: x.4 + y.4 + z.4,
+                    power_single: 0,
                 };
-                let hermite = hermite_index(x.0, y.0, z.0);
-                let monomial = hermite_index(x.1, y.1, z.1);
-                all.push((scalar, hermite, monomial, x.5 * y.5 * z.5));
+                let coefficient = x.5 * y.5 * z.5;
+                let parts = divided(scalar, key);
+                all.extend(parts.into_iter().map(|(carried, folded, c)| ProductTerm {
+                    carried,
+                    folded,
+                    hermite: hermite_index(x.0, y.0, z.0),
+                    monomial: hermite_index(x.1, y.1, z.1),
+                    coefficient: c * coefficient,
+                }));
             }
         }
     }
@@ -215,11 +296,16 @@ impl PairClass {
 
     fn build(key: ClassKey) -> Self {
         let [a, b] = &key.types;
-        let products: HashMap<_, _> =
-            a.ls.iter()
-                .flat_map(|&la| b.ls.iter().map(move |&lb| (la, lb)))
-                .map(|(la, lb)| ((la, lb), Self::monomial_products(la, lb, key.one_centre)))
-                .collect();
+        let mut products: HashMap<[usize; 2], Vec<Vec<ProductTerm>>> = HashMap::new();
+        for (ca, &la) in a.ls.iter().enumerate() {
+            for (cb, &lb) in b.ls.iter().enumerate() {
+                let all = cartesian_powers(la)
+                    .flat_map(|x| cartesian_powers(lb).map(move |y| (x, y)))
+                    .map(|(x, y)| monomial_product(x, y, [ca, cb], &key))
+                    .collect();
+                products.insert([ca, cb], all);
+            }
+        }
         let mut functions = Vec::new();
         let mut rows: Vec<Symbolic> = Vec::new();
         for (fa, &(ca, ia)) in a.functions().iter().enumerate() {
@@ -234,18 +320,11 @@ impl PairClass {
                 let mut row = Symbolic::new();
                 for (ma, wa) in row_a.iter().enumerate().filter(|(_, w)| **w != 0.0) {
                     for (mb, wb) in row_b.iter().enumerate().filter(|(_, w)| **w != 0.0) {
-                        for &(scalar, hermite, monomial, c) in
-                            &products[&(la, lb)][ma * cartesian_count(lb) + mb]
-                        {
-                            let scalar = Scalar {
-                                contraction_a: ca,
-                                contraction_b: cb,
-                                ..scalar
-                            };
-                            *row.entry((scalar, hermite))
+                        for term in &products[&[ca, cb]][ma * cartesian_count(lb) + mb] {
+                            *row.entry((term.carried, term.hermite))
                                 .or_default()
-                                .entry(monomial)
-                                .or_insert(0.0) += wa * wb * c;
+                                .entry((term.folded, term.monomial))
+                                .or_insert(0.0) += wa * wb * term.coefficient;
                         }
                     }
                 }
@@ -260,59 +339,52 @@ impl PairClass {
         Self::assemble(key, functions, &rows)
     }
 
-    fn monomial_products(
-        la: usize,
-        lb: usize,
-        one_centre: bool,
-    ) -> Vec<Vec<(Scalar, usize, usize, f64)>> {
-        cartesian_powers(la)
-            .flat_map(|a| cartesian_powers(lb).map(move |b| (a, b)))
-            .map(|(a, b)| monomial_product(a, b, one_centre))
-            .collect()
-    }
-
     fn assemble(key: ClassKey, functions: Vec<(usize, usize)>, rows: &[Symbolic]) -> Self {
         let degree = key.types[0].max_l() + key.types[1].max_l();
-        let mut scalars: Vec<Scalar> = rows
-            .iter()
-            .flat_map(|row| row.keys().map(|(s, _)| *s))
+        let degree_of = |hermite: usize| hermite_powers()[hermite].iter().sum::<usize>();
+        // Carried scalars with the range of degrees of their Hermite functions.
+        let mut ranges: BTreeMap<Scalar, (usize, usize)> = BTreeMap::new();
+        let mut folded: Vec<Scalar> = Vec::new();
+        for ((scalar, hermite), polynomial) in rows.iter().flatten() {
+            let d = degree_of(*hermite);
+            let range = ranges.entry(*scalar).or_insert((d, d));
+            *range = (range.0.min(d), range.1.max(d));
+            folded.extend(polynomial.keys().map(|(scalar, _)| *scalar));
+        }
+        folded.sort_unstable();
+        folded.dedup();
+        if key.contracted == [false; 2] {
+            // The primitive's integrals are used as they come, all degrees.
+            ranges.insert(Scalar::default(), (0, degree));
+        }
+        let mut ordered: Vec<((usize, usize), Scalar)> = ranges
+            .into_iter()
+            .map(|(scalar, range)| (range, scalar))
             .collect();
-        scalars.sort_unstable();
-        scalars.dedup();
-        let index: HashMap<Scalar, usize> =
-            scalars.iter().enumerate().map(|(i, s)| (*s, i)).collect();
-        let groups = if key.contracted {
-            let mut groups: Vec<ScalarGroup> = Vec::new();
-            for (i, s) in scalars.iter().enumerate() {
-                match groups.last_mut() {
-                    Some(group) if group.low == s.degree => group.count += 1,
-                    _ => groups.push(ScalarGroup {
-                        first: i,
-                        count: 1,
-                        low: s.degree,
-                        high: s.degree,
-                    }),
-                }
-            }
-            groups
-        } else {
-            vec![ScalarGroup {
-                first: 0,
-                count: 1,
-                low: 0,
-                high: degree,
-            }]
+        ordered.sort_unstable();
+        let groups = ordered
+            .chunk_by(|x, y| x.0 == y.0)
+            .scan(0, |first, alike| {
+                let group = ScalarGroup {
+                    first: *first,
+                    count: alike.len(),
+                    low: alike[0].0.0,
+                    high: alike[0].0.1,
+                };
+                *first += alike.len();
+                Some(group)
+            })
+            .collect();
+        let carried: Vec<Scalar> = ordered.into_iter().map(|(_, scalar)| scalar).collect();
+        let place = |list: &[Scalar]| -> HashMap<Scalar, usize> {
+            list.iter().enumerate().map(|(i, s)| (*s, i)).collect()
         };
-        let mut hermites: Vec<(usize, usize)> = if key.contracted {
-            let mut used: Vec<_> = rows
-                .iter()
-                .flat_map(|row| row.keys().map(|(s, h)| (*h, index[s])))
-                .collect();
-            used.sort_unstable_by_key(|&(h, s)| (s, h));
-            used
-        } else {
-            (0..hermite_count(degree)).map(|h| (h, 0)).collect()
-        };
+        let (carried_place, folded_place) = (place(&carried), place(&folded));
+        let mut hermites: Vec<(usize, usize)> = rows
+            .iter()
+            .flat_map(|row| row.keys().map(|(s, h)| (*h, carried_place[s])))
+            .collect();
+        hermites.sort_unstable_by_key(|&(h, s)| (s, h));
         hermites.dedup();
         let column: HashMap<(usize, usize), usize> = hermites
             .iter()
@@ -323,7 +395,8 @@ impl PairClass {
             key,
             degree,
             functions,
-            scalars,
+            carried,
+            folded,
             groups,
             hermites,
             row_ends: Vec::new(),
@@ -333,25 +406,24 @@ impl PairClass {
             terms: Vec::new(),
         };
         for row in rows {
-            // Elements by column; an uncontracted element sums over scalars.
-            let mut elements: BTreeMap<usize, Vec<Term>> = BTreeMap::new();
-            for ((scalar, hermite), polynomial) in row {
-                let scalar = index[scalar];
-                let carried = if class.key.contracted { scalar } else { 0 };
-                let terms = elements.entry(column[&(*hermite, carried)]).or_default();
-                terms.extend(polynomial.iter().map(|(&monomial, &coefficient)| Term {
-                    scalar: scalar as u32,
-                    monomial: monomial as u32,
-                    coefficient,
-                }));
-            }
-            for (u, terms) in elements {
+            let mut elements: Vec<(usize, &Polynomial)> = row
+                .iter()
+                .map(|((s, h), polynomial)| (column[&(*h, carried_place[s])], polynomial))
+                .collect();
+            elements.sort_unstable_by_key(|(u, _)| *u);
+            for (u, polynomial) in elements {
                 class.columns.push(u as u16);
-                let degree: usize = hermite_powers()[class.hermites[u].0].iter().sum();
+                let degree = degree_of(class.hermites[u].0);
                 class
                     .ket_signs
                     .push(if degree.is_multiple_of(2) { 1.0 } else { -1.0 });
-                class.terms.extend(terms);
+                class
+                    .terms
+                    .extend(polynomial.iter().map(|((scalar, monomial), &c)| Term {
+                        scalar: folded_place[scalar] as u32,
+                        monomial: *monomial as u32,
+                        coefficient: c,
+                    }));
                 class.term_ends.push(class.terms.len() as u32);
             }
             class.row_ends.push(class.columns.len() as u32);
@@ -359,8 +431,13 @@ impl PairClass {
         class
     }
 
+    /// Whether any primitives are contracted.
+    pub(super) fn contracted(&self) -> bool {
+        self.key.contracted != [false; 2]
+    }
+
     /// Number of scalars that a primitive carries.
     pub(super) fn carried(&self) -> usize {
-        self.groups.iter().map(|g| g.count).sum()
+        self.carried.len()
     }
 }

@@ -25,32 +25,37 @@ const INTEGRALS_PER_TASK: usize = 1 << 20;
 /// Most tasks: each holds matrices of its own.
 const MOST_TASKS: usize = 16;
 
-/// A density in the forms that the pass over the list needs, and the sums that it makes.
-struct Sums {
+/// What whole vectors may read and write beyond the end of a row.
+const PADDING: usize = 3;
+
+/// A density in the forms that the pass over the list needs.
+struct Density {
     /// P, rows contiguous.
     full: Vec<f64>,
     /// (2 − δ_cd) P_cd at packed place cd.
     packed: Vec<f64>,
+}
+
+/// The sums that a pass makes for one density.
+struct Sums {
     /// J at packed places.
     coulomb: Vec<f64>,
     /// Half of the exchange matrix: K is this plus its transpose.
     exchange: Vec<f64>,
 }
 
-impl Sums {
+impl Density {
     fn new(density: &DMatrix<f64>) -> Self {
         let n = density.nrows();
-        let mut packed = Vec::with_capacity(pair_count(n));
+        let mut full = density.as_slice().to_vec();
+        let mut packed = Vec::with_capacity(pair_count(n) + PADDING);
         for c in 0..n {
             packed.extend((0..c).map(|d| 2.0 * density[(c, d)]));
             packed.push(density[(c, c)]);
         }
-        Self {
-            full: density.as_slice().to_vec(),
-            packed,
-            coulomb: vec![0.0; pair_count(n)],
-            exchange: vec![0.0; n * n],
-        }
+        full.extend([0.0; PADDING]);
+        packed.extend([0.0; PADDING]);
+        Self { full, packed }
     }
 }
 
@@ -67,35 +72,21 @@ pub(super) fn coulomb_exchange_packed(
     let ends: Vec<usize> = (0..=tasks)
         .map(|k| ((k as f64 / tasks as f64).sqrt() * pairs as f64).round() as usize)
         .collect();
-    let mut results = Vec::with_capacity(densities.len());
-    // Two densities (α and β) share one pass.
-    for few in densities.chunks(2) {
-        let parts: Vec<Vec<Sums>> = (0..tasks)
-            .into_par_iter()
-            .map(|k| {
-                let mut sums: Vec<Sums> = few.iter().map(Sums::new).collect();
-                let rows = ends[k]..ends[k + 1];
-                match sums.as_mut_slice() {
-                    [one] => dispatch(Rows {
-                        list,
-                        rows,
-                        sums: [one],
-                    }),
-                    [one, two] => dispatch(Rows {
-                        list,
-                        rows,
-                        sums: [one, two],
-                    }),
-                    _ => {}
-                }
-                sums
+    let densities: Vec<Density> = densities.iter().map(Density::new).collect();
+    let parts: Vec<Vec<Sums>> = (0..tasks)
+        .into_par_iter()
+        .map(|k| {
+            dispatch(Rows {
+                list,
+                n,
+                rows: ends[k]..ends[k + 1],
+                densities: &densities,
             })
-            .collect();
-        for index in 0..few.len() {
-            results.push(add_up(n, parts.iter().map(|part| &part[index])));
-        }
-    }
-    results
+        })
+        .collect();
+    (0..densities.len())
+        .map(|index| add_up(n, parts.iter().map(|part| &part[index])))
+        .collect()
 }
 
 /// Adds the sums of all tasks in order.
@@ -116,90 +107,59 @@ fn add_up<'a>(n: usize, parts: impl Iterator<Item = &'a Sums>) -> CoulombExchang
     }
 }
 
-/// A range of rows ab of the list, for `D` densities at once.
-///
-/// A stretch of a row with fixed c is contiguous over d, and serves two dot products (K_ac, K_bc) and
-/// two updates (rows a and b of K) besides the two of J. For K, integrals with a = b, c = d or ab = cd
-/// count half for each of these.
-struct Rows<'a, const D: usize> {
+/// A range of rows ab of the list.
+struct Rows<'a> {
     list: &'a [f64],
+    n: usize,
     rows: std::ops::Range<usize>,
-    sums: [&'a mut Sums; D],
+    densities: &'a [Density],
 }
 
-/// Rows a and b of the exchange sums while row ab is at work (a = b is possible, so they cannot be
-/// borrowed from the matrix), and the sum for J_ab.
-struct RowSums {
-    a: Vec<f64>,
-    b: Vec<f64>,
-    coulomb: f64,
-}
-
-/// What one density lends to a stretch of integrals over d < `last`.
-struct Stretch<'a> {
-    density_a: &'a [[f64; 4]],
-    density_b: &'a [[f64; 4]],
-    density_cd: &'a [[f64; 4]],
-    exchange_a: &'a mut [[f64; 4]],
-    exchange_b: &'a mut [[f64; 4]],
-    coulomb_cd: &'a mut [[f64; 4]],
-    /// P_ac, P_bc, (2 − δ_ab) P_ab
-    density_ac: f64,
-    density_bc: f64,
-    density_ab: f64,
-    /// Σ_d v P_bd, Σ_d v P_ad, Σ_d v P'_cd
-    dots: [f64; 3],
-}
-
-impl<const D: usize> Kernel for Rows<'_, D> {
-    type Output = ();
+impl Kernel for Rows<'_> {
+    type Output = Vec<Sums>;
 
     #[inline(always)]
-    fn run<V: Lanes>(self) {
-        let Self {
-            list,
-            rows,
-            mut sums,
-        } = self;
-        let n = sums[0].full.len().isqrt();
+    fn run<V: Lanes>(self) -> Vec<Sums> {
+        let n = self.n;
+        let mut all: Vec<Sums> = self
+            .densities
+            .iter()
+            .map(|_| Sums {
+                coulomb: vec![0.0; pair_count(n) + PADDING],
+                exchange: vec![0.0; n * n],
+            })
+            .collect();
+        // Rows a and b of K while row ab is at work: a = b is possible, so they are kept apart.
+        let mut exchange_a = vec![0.0; n + PADDING];
+        let mut exchange_b = vec![0.0; n + PADDING];
         // Row ab: a is the largest with a(a+1)/2 ≤ ab.
-        let mut a = ((8 * rows.start + 1).isqrt() - 1) / 2;
-        let mut b = rows.start - pair_count(a);
-        let mut row_sums = [(); D].map(|()| RowSums {
-            a: vec![0.0; n],
-            b: vec![0.0; n],
-            coulomb: 0.0,
-        });
-        for ab in rows {
-            let row = &list[pair_count(ab)..][..=ab];
-            for c in 0..=a {
-                let start = pair_count(c);
-                // The last d of a stretch has c = d, or ab = cd, or both.
-                let last = if c == a { b } else { c };
-                let values = &row[start..=start + last];
-                let mut lenders = sums.iter_mut().zip(&mut row_sums);
-                let mut stretches = [(); D].map(|()| {
-                    lenders
-                        .next()
-                        .map(|(sums, rows)| Stretch::new(sums, rows, [n, a, b, c, ab], last))
-                });
-                pass::<V, D>(&values[..last], &mut stretches);
-                let dots = stretches.map(|s| s.map_or([0.0; 3], |s| s.dots));
-                for ((sums, rows), dots) in sums.iter_mut().zip(&mut row_sums).zip(dots) {
-                    finish_stretch(sums, rows, [n, a, b, c, ab], values, dots);
+        let mut a = ((8 * self.rows.start + 1).isqrt() - 1) / 2;
+        let mut b = self.rows.start - pair_count(a);
+        for ab in self.rows {
+            // The row is read from memory once and then, for further densities, from the cache.
+            let integrals = &self.list[pair_count(ab)..][..=ab];
+            for (density, sums) in self.densities.iter().zip(&mut all) {
+                let coulomb_ab = Row {
+                    integrals,
+                    a,
+                    b,
+                    density_a: &density.full[a * n..],
+                    density_b: &density.full[b * n..],
+                    packed: &density.packed,
+                    exchange_a: &mut exchange_a,
+                    exchange_b: &mut exchange_b,
+                    coulomb: &mut sums.coulomb,
                 }
-            }
-            let weight = if a == b { 0.5 } else { 1.0 };
-            for (sums, rows) in sums.iter_mut().zip(&mut row_sums) {
-                for (row, from) in [(a, &mut rows.a), (b, &mut rows.b)] {
+                .add::<V>();
+                sums.coulomb[ab] += coulomb_ab;
+                let weight = if a == b { 0.5 } else { 1.0 };
+                for (row, from) in [(a, &mut exchange_a), (b, &mut exchange_b)] {
                     let to = &mut sums.exchange[row * n..][..=a];
                     for (to, from) in to.iter_mut().zip(&mut from[..=a]) {
                         *to += weight * *from;
                         *from = 0.0;
                     }
                 }
-                sums.coulomb[ab] += rows.coulomb;
-                rows.coulomb = 0.0;
             }
             b += 1;
             if b > a {
@@ -207,105 +167,183 @@ impl<const D: usize> Kernel for Rows<'_, D> {
                 b = 0;
             }
         }
+        all
     }
 }
 
-impl<'a> Stretch<'a> {
+/// One row ab of the list with one density.
+///
+/// A stretch of a row with fixed c is contiguous over d, and serves two dot products (K_ac, K_bc) and
+/// two updates (rows a and b of K) besides the two of J. For K, integrals with c = d or ab = cd
+/// count half for each of these (a = b is dealt with by the caller).
+struct Row<'a> {
+    integrals: &'a [f64],
+    a: usize,
+    b: usize,
+    density_a: &'a [f64],
+    density_b: &'a [f64],
+    packed: &'a [f64],
+    exchange_a: &'a mut [f64],
+    exchange_b: &'a mut [f64],
+    coulomb: &'a mut [f64],
+}
+
+/// Weights, for J and for K, of the four integrals of which the one with this index is the last (c = d).
+const LAST_FOUR: [[[f64; 4]; 2]; 4] = [
+    [[1.0, 0.0, 0.0, 0.0], [0.5, 0.0, 0.0, 0.0]],
+    [[1.0, 1.0, 0.0, 0.0], [1.0, 0.5, 0.0, 0.0]],
+    [[1.0, 1.0, 1.0, 0.0], [1.0, 1.0, 0.5, 0.0]],
+    [[1.0, 1.0, 1.0, 1.0], [1.0, 1.0, 1.0, 0.5]],
+];
+
+/// Sums of one stretch: Σ_d v P_bd, Σ_d v P_ad, Σ_d v P'_cd.
+#[derive(Clone, Copy)]
+struct Dots<V>([V; 3]);
+
+impl Row<'_> {
+    /// Adds the row to everything but J_ab, which it returns.
     #[inline(always)]
-    fn new(
-        sums: &'a mut Sums,
-        rows: &'a mut RowSums,
-        [n, a, b, c, ab]: [usize; 5],
-        last: usize,
-    ) -> Self {
-        let whole = last / 4 * 4;
-        let start = pair_count(c);
-        Self {
-            density_ac: sums.full[a * n + c],
-            density_bc: sums.full[b * n + c],
-            density_ab: sums.packed[ab],
-            density_a: sums.full[a * n..][..whole].as_chunks().0,
-            density_b: sums.full[b * n..][..whole].as_chunks().0,
-            density_cd: sums.packed[start..][..whole].as_chunks().0,
-            exchange_a: rows.a[..whole].as_chunks_mut().0,
-            exchange_b: rows.b[..whole].as_chunks_mut().0,
-            coulomb_cd: sums.coulomb[start..][..whole].as_chunks_mut().0,
-            dots: [0.0; 3],
+    fn add<V: Lanes>(mut self) -> f64 {
+        let density_ab = V::splat(self.packed[self.integrals.len() - 1]);
+        let mut coulomb_ab = 0.0;
+        for c in 0..self.a {
+            let start = pair_count(c);
+            let whole = c / 4 * 4;
+            let mut dots = self.whole_fours::<V>(c, start, whole, density_ab);
+            if start + whole + 4 <= self.integrals.len() {
+                let [weight_j, weight_k] = &LAST_FOUR[c - whole];
+                let value = V::from_array(four(self.integrals, start + whole));
+                let value_j = value.mul(V::from_array(weight_j));
+                let value_k = value.mul(V::from_array(weight_k));
+                self.four::<V>(c, whole, start, [value_j, value_k], density_ab, &mut dots);
+                let [k_ac, k_bc, j_ab] = dots.sums();
+                self.exchange_a[c] += k_ac;
+                self.exchange_b[c] += k_bc;
+                coulomb_ab += j_ab;
+            } else {
+                coulomb_ab += self.last_singly(c, start, whole, c, dots.sums());
+            }
         }
+        let start = pair_count(self.a);
+        let whole = self.b / 4 * 4;
+        let dots = self.whole_fours::<V>(self.a, start, whole, density_ab);
+        coulomb_ab + self.last_singly(self.a, start, whole, self.b, dots.sums())
     }
-}
 
-/// The whole fours of a stretch of integrals, for all densities.
-#[inline(always)]
-fn pass<V: Lanes, const D: usize>(values: &[f64], stretches: &mut [Option<Stretch<'_>>; D]) {
-    let values = values.as_chunks::<4>().0;
-    for stretch in stretches.iter_mut().flatten() {
+    /// The integrals d < `whole` of a stretch.
+    #[inline(always)]
+    fn whole_fours<V: Lanes>(
+        &mut self,
+        c: usize,
+        start: usize,
+        whole: usize,
+        density_ab: V,
+    ) -> Dots<V> {
+        let factor_a = V::splat(self.density_b[c]);
+        let factor_b = V::splat(self.density_a[c]);
+        let mut dots = Dots([V::zero(); 3]);
+        let values = fours(self.integrals, start, whole);
         let count = values.len();
-        let density_a = &stretch.density_a[..count];
-        let density_b = &stretch.density_b[..count];
-        let density_cd = &stretch.density_cd[..count];
-        let exchange_a = &mut stretch.exchange_a[..count];
-        let exchange_b = &mut stretch.exchange_b[..count];
-        let coulomb_cd = &mut stretch.coulomb_cd[..count];
-        let ac = V::splat(stretch.density_ac);
-        let bc = V::splat(stretch.density_bc);
-        let ab = V::splat(stretch.density_ab);
-        let mut dots = [V::zero(); 3];
+        let density_a = &fours(self.density_a, 0, whole)[..count];
+        let density_b = &fours(self.density_b, 0, whole)[..count];
+        let packed = &fours(self.packed, start, whole)[..count];
+        let exchange_a = &mut self.exchange_a[..whole].as_chunks_mut::<4>().0[..count];
+        let exchange_b = &mut self.exchange_b[..whole].as_chunks_mut::<4>().0[..count];
+        let coulomb = &mut self.coulomb[start..][..whole].as_chunks_mut::<4>().0[..count];
         for i in 0..count {
-            let v = V::from_array(values[i]);
-            dots[0] = v.mul_add(V::from_array(density_b[i]), dots[0]);
-            dots[1] = v.mul_add(V::from_array(density_a[i]), dots[1]);
-            dots[2] = v.mul_add(V::from_array(density_cd[i]), dots[2]);
-            let update = |to: &mut [f64; 4], factor: V| {
-                *to = v.mul_add(factor, V::from_array(*to)).to_array();
-            };
-            update(&mut exchange_a[i], bc);
-            update(&mut exchange_b[i], ac);
-            update(&mut coulomb_cd[i], ab);
+            let value = V::from_array(&values[i]);
+            dots.0[0] = value.mul_add(V::from_array(&density_b[i]), dots.0[0]);
+            dots.0[1] = value.mul_add(V::from_array(&density_a[i]), dots.0[1]);
+            dots.0[2] = value.mul_add(V::from_array(&packed[i]), dots.0[2]);
+            let sum = value.mul_add(factor_a, V::from_array(&exchange_a[i]));
+            exchange_a[i] = sum.to_array();
+            let sum = value.mul_add(factor_b, V::from_array(&exchange_b[i]));
+            exchange_b[i] = sum.to_array();
+            let sum = value.mul_add(density_ab, V::from_array(&coulomb[i]));
+            coulomb[i] = sum.to_array();
         }
-        stretch.dots = dots.map(|dot| {
-            let [p, q, r, s] = dot.to_array();
-            (p + q) + (r + s)
-        });
+        dots
+    }
+
+    /// Four integrals from d on, already weighted for J and for K.
+    #[inline(always)]
+    fn four<V: Lanes>(
+        &mut self,
+        c: usize,
+        d: usize,
+        start: usize,
+        [value_j, value_k]: [V; 2],
+        density_ab: V,
+        dots: &mut Dots<V>,
+    ) {
+        let add = |to: &mut [f64], at: usize, value: V, factor: V| {
+            if let Some(to) = to[at..].first_chunk_mut::<4>() {
+                *to = value.mul_add(factor, V::from_array(to)).to_array();
+            }
+        };
+        dots.0[0] = value_k.mul_add(V::from_array(four(self.density_b, d)), dots.0[0]);
+        dots.0[1] = value_k.mul_add(V::from_array(four(self.density_a, d)), dots.0[1]);
+        dots.0[2] = value_j.mul_add(V::from_array(four(self.packed, start + d)), dots.0[2]);
+        add(self.exchange_a, d, value_k, V::splat(self.density_b[c]));
+        add(self.exchange_b, d, value_k, V::splat(self.density_a[c]));
+        add(self.coulomb, start + d, value_j, density_ab);
+    }
+
+    /// The integrals from d = `whole` to `last` one by one, and the end of the stretch.
+    fn last_singly(
+        &mut self,
+        c: usize,
+        start: usize,
+        whole: usize,
+        last: usize,
+        [mut k_ac, mut k_bc, mut j_ab]: [f64; 3],
+    ) -> f64 {
+        let ab = self.integrals.len() - 1;
+        for d in whole..=last {
+            let cd = start + d;
+            let mut value = self.integrals[cd];
+            j_ab += value * self.packed[cd];
+            if cd < ab {
+                self.coulomb[cd] += value * self.packed[ab];
+            } else {
+                value *= 0.5;
+            }
+            if d == c {
+                value *= 0.5;
+            }
+            k_ac += value * self.density_b[d];
+            k_bc += value * self.density_a[d];
+            self.exchange_a[d] += value * self.density_b[c];
+            self.exchange_b[d] += value * self.density_a[c];
+        }
+        self.exchange_a[c] += k_ac;
+        self.exchange_b[c] += k_bc;
+        j_ab
     }
 }
 
-/// The integrals of a stretch beyond its whole fours, and the sums over all of it.
-#[inline(always)]
-fn finish_stretch(
-    sums: &mut Sums,
-    rows: &mut RowSums,
-    [n, a, b, c, ab]: [usize; 5],
-    values: &[f64],
-    dots: [f64; 3],
-) {
-    let last = values.len() - 1;
-    let start = pair_count(c);
-    let [mut k_ac, mut k_bc, mut j_ab] = dots;
-    let (density_ac, density_bc) = (sums.full[a * n + c], sums.full[b * n + c]);
-    let density_ab = sums.packed[ab];
-    for d in last / 4 * 4..=last {
-        let value = values[d];
-        j_ab += value * sums.packed[start + d];
-        if start + d < ab {
-            sums.coulomb[start + d] += value * density_ab;
+impl<V: Lanes> Dots<V> {
+    #[inline(always)]
+    fn sums(self) -> [f64; 3] {
+        let mut sums = [0.0; 3];
+        for (sum, dot) in sums.iter_mut().zip(self.0) {
+            let [p, q, r, s] = dot.to_array();
+            *sum = (p + q) + (r + s);
         }
-        let mut weight = 1.0;
-        if d == c {
-            weight *= 0.5;
-        }
-        if start + d == ab {
-            weight *= 0.5;
-        }
-        let value = weight * value;
-        k_ac += value * sums.full[b * n + d];
-        k_bc += value * sums.full[a * n + d];
-        rows.a[d] += value * density_bc;
-        rows.b[d] += value * density_ac;
+        sums
     }
-    rows.a[c] += k_ac;
-    rows.b[c] += k_bc;
-    rows.coulomb += j_ab;
+}
+
+/// The four numbers from `at` on.
+#[inline(always)]
+fn four(list: &[f64], at: usize) -> &[f64; 4] {
+    list[at..].first_chunk().unwrap_or(&[0.0; 4])
+}
+
+/// `count` numbers from `at` on, by four.
+#[inline(always)]
+fn fours(list: &[f64], at: usize, count: usize) -> &[[f64; 4]] {
+    list[at..][..count].as_chunks().0
 }
 
 #[cfg(test)]

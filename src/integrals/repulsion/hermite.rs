@@ -14,7 +14,7 @@ use crate::integrals::recurrence::{hermite_count, hermite_index};
 /// Highest degree whose recursion is unrolled.
 pub(super) const UNROLLED: usize = 6;
 /// Highest degree: a derivative of (gg|gg).
-pub(in crate::integrals) const MAX_DEGREE: usize = 17;
+pub(super) const MAX_DEGREE: usize = 17;
 
 /// One step: work[target] = PQ[axis] · work[first] + factor · work[second].
 #[derive(Clone, Copy)]
@@ -101,16 +101,6 @@ const fn steps<const N: usize>(degree: usize) -> [Step; N] {
     list
 }
 
-/// The compile-time tables of one degree.
-struct Table<const L: usize>;
-
-impl<const L: usize> Table<L> {
-    /// Unrolled steps: none where the loop takes over.
-    const COUNT: usize = if L > UNROLLED { 0 } else { work_len(L) - L - 1 };
-    const UNROLLED_STEPS: [Step; MAX_UNROLLED_STEPS] = steps(if L > UNROLLED { 0 } else { L });
-    const ROOTS: [usize; MAX_DEGREE + 1] = roots(L);
-}
-
 /// Places of R^(m)_000.
 const fn roots(degree: usize) -> [usize; MAX_DEGREE + 1] {
     let mut list = [0; MAX_DEGREE + 1];
@@ -122,105 +112,163 @@ const fn roots(degree: usize) -> [usize; MAX_DEGREE + 1] {
     list
 }
 
-/// All steps of the degrees beyond `UNROLLED`, in one table.
-static LONG_STEPS: [&[Step]; MAX_DEGREE + 1] = {
-    const fn of<const L: usize, const N: usize>() -> &'static [Step] {
-        const { &steps::<N>(L) }
-    }
-    macro_rules! table {
+/// The tables of one degree.
+#[derive(Clone, Copy)]
+struct Table {
+    steps: &'static [Step],
+    roots: [usize; MAX_DEGREE + 1],
+}
+
+/// All tables by degree.
+static TABLES: [Table; MAX_DEGREE + 1] = {
+    macro_rules! tables {
         ($($degree:literal)*) => {
-            [&[], &[], &[], &[], &[], &[], &[],
-             $(of::<$degree, { work_len($degree) - $degree - 1 }>()),*]
+            [$(Table {
+                steps: const { &steps::<{ work_len($degree) - $degree - 1 }>($degree) },
+                roots: roots($degree),
+            }),*]
         };
     }
-    table!(7 8 9 10 11 12 13 14 15 16 17)
+    tables!(0 1 2 3 4 5 6 7 8 9 10 11 12 13 14 15 16 17)
 };
 
-#[inline(always)]
-fn step<V: Lanes, const L: usize, const I: usize>(
-    work: &mut [V; work_len(UNROLLED)],
-    pq: &[V; 3],
-    small: &[V; UNROLLED],
-) {
-    if const { I < Table::<L>::COUNT } {
-        let s = const { Table::<L>::UNROLLED_STEPS[I] };
-        let product = pq[s.axis as usize].mul(work[s.first as usize]);
-        work[s.target as usize] = match s.factor {
-            0 => product,
-            1 => pq[s.axis as usize].mul_add(work[s.first as usize], work[s.second as usize]),
-            n => small[n as usize].mul_add(work[s.second as usize], product),
-        };
+/// A way to run the recursion of one degree.
+pub(super) trait Recursion: Copy {
+    /// The degree L.
+    fn degree(self) -> usize;
+
+    /// All R^(0) of degree up to L, in Hermite order, into `out`.
+    ///
+    /// `roots[m]` is (−2α)^m F_m times whatever factor the integrals carry. `scratch` holds
+    /// [`work_elements`] elements.
+    fn run<V: Lanes>(
+        self,
+        roots: &[V; MAX_DEGREE + 1],
+        pq: &[V; 3],
+        out: &mut [Four],
+        scratch: &mut [Four],
+    );
+}
+
+/// The recursion as a loop over its table.
+#[derive(Clone, Copy)]
+pub(super) struct Looped(pub(super) usize);
+
+impl Recursion for Looped {
+    #[inline(always)]
+    fn degree(self) -> usize {
+        self.0
+    }
+
+    #[inline(always)]
+    fn run<V: Lanes>(
+        self,
+        roots: &[V; MAX_DEGREE + 1],
+        pq: &[V; 3],
+        out: &mut [Four],
+        scratch: &mut [Four],
+    ) {
+        let table = &TABLES[self.0];
+        let work = &mut scratch[..work_len(self.0)];
+        for m in 0..=self.0 {
+            roots[m].store(&mut work[table.roots[m]]);
+        }
+        for s in table.steps {
+            let product = pq[s.axis as usize].mul(V::load(&work[s.first as usize]));
+            let second = V::load(&work[s.second as usize]);
+            let sum = V::splat(f64::from(s.factor)).mul_add(second, product);
+            sum.store(&mut work[s.target as usize]);
+        }
+        let count = hermite_count(self.0);
+        out[..count].copy_from_slice(&work[..count]);
+    }
+}
+
+/// The recursion as straight code.
+#[derive(Clone, Copy)]
+pub(super) struct Unrolled<const L: usize>;
+
+impl<const L: usize> Unrolled<L> {
+    const COUNT: usize = work_len(L) - L - 1;
+    /// The steps, and room for whole tens.
+    const STEPS: [Step; MAX_UNROLLED_STEPS] = steps(L);
+    const ROOTS: [usize; MAX_DEGREE + 1] = roots(L);
+
+    #[inline(always)]
+    fn step<V: Lanes, const I: usize>(
+        work: &mut [V; work_len(UNROLLED)],
+        pq: &[V; 3],
+        small: &[V; UNROLLED],
+    ) {
+        if const { I < Self::COUNT } {
+            let s = const { Self::STEPS[I] };
+            let product = pq[s.axis as usize].mul(work[s.first as usize]);
+            work[s.target as usize] = match s.factor {
+                0 => product,
+                1 => pq[s.axis as usize].mul_add(work[s.first as usize], work[s.second as usize]),
+                n => small[n as usize].mul_add(work[s.second as usize], product),
+            };
+        }
     }
 }
 
 macro_rules! unrolled {
-    ($work:ident $pq:ident $small:ident $L:ident: $($ten:literal)*) => {
-        $(
-            step::<V, $L, { 10 * $ten }>($work, $pq, $small);
-            step::<V, $L, { 10 * $ten + 1 }>($work, $pq, $small);
-            step::<V, $L, { 10 * $ten + 2 }>($work, $pq, $small);
-            step::<V, $L, { 10 * $ten + 3 }>($work, $pq, $small);
-            step::<V, $L, { 10 * $ten + 4 }>($work, $pq, $small);
-            step::<V, $L, { 10 * $ten + 5 }>($work, $pq, $small);
-            step::<V, $L, { 10 * $ten + 6 }>($work, $pq, $small);
-            step::<V, $L, { 10 * $ten + 7 }>($work, $pq, $small);
-            step::<V, $L, { 10 * $ten + 8 }>($work, $pq, $small);
-            step::<V, $L, { 10 * $ten + 9 }>($work, $pq, $small);
-        )*
+    ($($degree:literal: $($ten:literal)*;)*) => {
+        $(impl Recursion for Unrolled<$degree> {
+            #[inline(always)]
+            fn degree(self) -> usize {
+                $degree
+            }
+
+            #[inline(always)]
+            fn run<V: Lanes>(
+                self,
+                roots: &[V; MAX_DEGREE + 1],
+                pq: &[V; 3],
+                out: &mut [Four],
+                _scratch: &mut [Four],
+            ) {
+                let out = &mut out[..const { hermite_count($degree) }];
+                let mut work = [V::zero(); work_len(UNROLLED)];
+                for m in 0..=$degree {
+                    work[Self::ROOTS[m]] = roots[m];
+                }
+                let mut small = [V::zero(); UNROLLED];
+                for (i, number) in small.iter_mut().enumerate() {
+                    *number = V::splat(i as f64);
+                }
+                $(
+                    Self::step::<V, { 10 * $ten }>(&mut work, pq, &small);
+                    Self::step::<V, { 10 * $ten + 1 }>(&mut work, pq, &small);
+                    Self::step::<V, { 10 * $ten + 2 }>(&mut work, pq, &small);
+                    Self::step::<V, { 10 * $ten + 3 }>(&mut work, pq, &small);
+                    Self::step::<V, { 10 * $ten + 4 }>(&mut work, pq, &small);
+                    Self::step::<V, { 10 * $ten + 5 }>(&mut work, pq, &small);
+                    Self::step::<V, { 10 * $ten + 6 }>(&mut work, pq, &small);
+                    Self::step::<V, { 10 * $ten + 7 }>(&mut work, pq, &small);
+                    Self::step::<V, { 10 * $ten + 8 }>(&mut work, pq, &small);
+                    Self::step::<V, { 10 * $ten + 9 }>(&mut work, pq, &small);
+                )*
+                let _ = pq;
+                for (to, from) in out.iter_mut().zip(work.iter()) {
+                    from.store(to);
+                }
+            }
+        })*
     };
 }
 
-/// All R^(0) of degree up to `L`, in Hermite order, into `out`.
-///
-/// `roots[m]` is (−2α)^m F_m times whatever factor the integrals carry. `scratch` serves the degrees
-/// beyond [`UNROLLED`] and holds [`scratch_len`] elements.
-#[inline(always)]
-pub(super) fn hermite_coulomb<V: Lanes, const L: usize>(
-    roots: &[V; MAX_DEGREE + 1],
-    pq: &[V; 3],
-    out: &mut [Four],
-    scratch: &mut [Four],
-) {
-    let out = &mut out[..const { hermite_count(L) }];
-    if L > UNROLLED {
-        looped::<V, L>(roots, pq, out, scratch);
-        return;
-    }
-    let work = &mut [V::zero(); work_len(UNROLLED)];
-    for m in 0..=L {
-        work[Table::<L>::ROOTS[m]] = roots[m];
-    }
-    let small: &[V; UNROLLED] = &std::array::from_fn(|i| V::splat(i as f64));
-    unrolled!(work pq small L: 0 1 2 3 4 5 6 7 8 9 10 11 12 13 14 15 16 17 18 19 20);
-    for (to, from) in out.iter_mut().zip(work.iter()) {
-        from.store(to);
-    }
+unrolled! {
+    0: ;
+    1: 0;
+    2: 0 1;
+    3: 0 1 2 3;
+    4: 0 1 2 3 4 5 6;
+    5: 0 1 2 3 4 5 6 7 8 9 10 11;
+    6: 0 1 2 3 4 5 6 7 8 9 10 11 12 13 14 15 16 17 18 19 20;
 }
 
-/// Scratch that [`hermite_coulomb`] needs for `degree`.
-pub(in crate::integrals) const fn scratch_len(degree: usize) -> usize {
-    if degree > UNROLLED {
-        work_len(degree)
-    } else {
-        0
-    }
-}
-
-#[inline(always)]
-fn looped<V: Lanes, const L: usize>(
-    roots: &[V; MAX_DEGREE + 1],
-    pq: &[V; 3],
-    out: &mut [Four],
-    scratch: &mut [Four],
-) {
-    let work = &mut scratch[..const { work_len(L) }];
-    for m in 0..=L {
-        roots[m].store(&mut work[Table::<L>::ROOTS[m]]);
-    }
-    for s in LONG_STEPS[L] {
-        let product = pq[s.axis as usize].mul(V::load(&work[s.first as usize]));
-        let sum = V::splat(f64::from(s.factor)).mul_add(V::load(&work[s.second as usize]), product);
-        sum.store(&mut work[s.target as usize]);
-    }
-    out.copy_from_slice(&work[..out.len()]);
+/// Scratch that the recursion of `degree` needs.
+pub(super) const fn work_elements(degree: usize) -> usize {
+    work_len(degree)
 }

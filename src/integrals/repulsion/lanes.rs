@@ -11,6 +11,7 @@
     reason = "vector instructions, and disjoint writes from several threads"
 )]
 
+use super::pair_count;
 use crate::integrals::boys::CellPolynomial;
 
 /// Four doubles in memory, one per lane.
@@ -20,11 +21,19 @@ pub(in crate::integrals) struct Four(pub(in crate::integrals) [f64; 4]);
 
 /// Arithmetic on four lanes at once.
 pub(in crate::integrals) trait Lanes: Copy {
+    /// Whether straight code and large register tiles pay: not where four lanes are more than one
+    /// register, and the compiler would need long for it.
+    const WIDE: bool;
     fn load(from: &Four) -> Self;
     fn store(self, to: &mut Four);
     fn splat(value: f64) -> Self;
-    fn from_array(values: [f64; 4]) -> Self;
+    fn from_array(values: &[f64; 4]) -> Self;
     fn to_array(self) -> [f64; 4];
+    /// Writes four doubles anywhere.
+    ///
+    /// # Safety
+    /// `to` must be valid for writes.
+    unsafe fn write(self, to: *mut [f64; 4]);
     fn add(self, other: Self) -> Self;
     fn sub(self, other: Self) -> Self;
     fn mul(self, other: Self) -> Self;
@@ -45,6 +54,10 @@ pub(in crate::integrals) trait Lanes: Copy {
     fn truncate(self) -> ([usize; 4], Self);
     /// Row l goes to lane l: coefficient k of all four rows in one vector.
     fn transposed(rows: [&CellPolynomial; 4]) -> [Self; 8];
+    /// Element l of the four goes to lane of its place in vector l.
+    fn transposed_square(square: [Self; 4]) -> [Self; 4];
+    /// Runs a kernel compiled for these lanes.
+    fn call<K: Kernel>(kernel: K) -> K::Output;
     /// Zero in all lanes.
     #[inline(always)]
     fn zero() -> Self {
@@ -88,6 +101,7 @@ impl Portable {
 }
 
 impl Lanes for Portable {
+    const WIDE: bool = false;
     #[inline(always)]
     fn load(from: &Four) -> Self {
         Self(from.0)
@@ -101,12 +115,17 @@ impl Lanes for Portable {
         Self([value; 4])
     }
     #[inline(always)]
-    fn from_array(values: [f64; 4]) -> Self {
-        Self(values)
+    fn from_array(values: &[f64; 4]) -> Self {
+        Self(*values)
     }
     #[inline(always)]
     fn to_array(self) -> [f64; 4] {
         self.0
+    }
+    #[inline(always)]
+    unsafe fn write(self, to: *mut [f64; 4]) {
+        // SAFETY: promised by the caller.
+        unsafe { *to = self.0 }
     }
     #[inline(always)]
     fn add(self, other: Self) -> Self {
@@ -169,11 +188,19 @@ impl Lanes for Portable {
     fn transposed(rows: [&CellPolynomial; 4]) -> [Self; 8] {
         std::array::from_fn(|k| Self(rows.map(|row| row[k])))
     }
+    #[inline(always)]
+    fn transposed_square(square: [Self; 4]) -> [Self; 4] {
+        std::array::from_fn(|l| Self(square.map(|v| v.0[l])))
+    }
+    #[inline(always)]
+    fn call<K: Kernel>(kernel: K) -> K::Output {
+        kernel.run::<Self>()
+    }
 }
 
 #[cfg(target_arch = "x86_64")]
 mod avx2 {
-    use super::{CellPolynomial, Four, Lanes};
+    use super::{CellPolynomial, Four, Kernel, Lanes};
     use std::arch::x86_64::*;
 
     /// Four lanes in one AVX register.
@@ -184,6 +211,7 @@ mod avx2 {
     pub(super) struct Avx2(__m256d);
 
     impl Lanes for Avx2 {
+        const WIDE: bool = true;
         #[inline(always)]
         fn load(from: &Four) -> Self {
             // SAFETY: features as said at the type; `Four` is 32 bytes, aligned to 32.
@@ -200,7 +228,7 @@ mod avx2 {
             Self(unsafe { _mm256_set1_pd(value) })
         }
         #[inline(always)]
-        fn from_array(values: [f64; 4]) -> Self {
+        fn from_array(values: &[f64; 4]) -> Self {
             // SAFETY: features as said at the type; four doubles are read.
             Self(unsafe { _mm256_loadu_pd(values.as_ptr()) })
         }
@@ -210,6 +238,11 @@ mod avx2 {
             // SAFETY: features as said at the type; four doubles are written.
             unsafe { _mm256_storeu_pd(values.as_mut_ptr(), self.0) };
             values
+        }
+        #[inline(always)]
+        unsafe fn write(self, to: *mut [f64; 4]) {
+            // SAFETY: features as said at the type; the place is promised by the caller.
+            unsafe { _mm256_storeu_pd(to.cast(), self.0) }
         }
         #[inline(always)]
         fn add(self, other: Self) -> Self {
@@ -281,29 +314,209 @@ mod avx2 {
         fn transposed(rows: [&CellPolynomial; 4]) -> [Self; 8] {
             // No closures here: they would be functions of their own, without the features, into which
             // the intrinsics cannot be inlined.
-            macro_rules! half {
-                ($offset:literal) => {{
-                    let a = _mm256_loadu_pd(rows[0].as_ptr().add($offset));
-                    let b = _mm256_loadu_pd(rows[1].as_ptr().add($offset));
-                    let c = _mm256_loadu_pd(rows[2].as_ptr().add($offset));
-                    let d = _mm256_loadu_pd(rows[3].as_ptr().add($offset));
-                    let ab_even = _mm256_unpacklo_pd(a, b);
-                    let ab_odd = _mm256_unpackhi_pd(a, b);
-                    let cd_even = _mm256_unpacklo_pd(c, d);
-                    let cd_odd = _mm256_unpackhi_pd(c, d);
-                    [
-                        Self(_mm256_permute2f128_pd::<0x20>(ab_even, cd_even)),
-                        Self(_mm256_permute2f128_pd::<0x20>(ab_odd, cd_odd)),
-                        Self(_mm256_permute2f128_pd::<0x31>(ab_even, cd_even)),
-                        Self(_mm256_permute2f128_pd::<0x31>(ab_odd, cd_odd)),
-                    ]
-                }};
+            macro_rules! square {
+                ($offset:literal) => {
+                    // SAFETY: features as said at the type; each row holds eight doubles.
+                    unsafe {
+                        [
+                            Self(_mm256_loadu_pd(rows[0].as_ptr().add($offset))),
+                            Self(_mm256_loadu_pd(rows[1].as_ptr().add($offset))),
+                            Self(_mm256_loadu_pd(rows[2].as_ptr().add($offset))),
+                            Self(_mm256_loadu_pd(rows[3].as_ptr().add($offset))),
+                        ]
+                    }
+                };
             }
-            // SAFETY: features as said at the type; each row holds eight doubles.
+            let [a, b, c, d] = Self::transposed_square(square!(0));
+            let [e, f, g, h] = Self::transposed_square(square!(4));
+            [a, b, c, d, e, f, g, h]
+        }
+        #[inline(always)]
+        fn transposed_square([a, b, c, d]: [Self; 4]) -> [Self; 4] {
+            // SAFETY: features as said at the type.
             unsafe {
-                let [a, b, c, d] = half!(0);
-                let [e, f, g, h] = half!(4);
-                [a, b, c, d, e, f, g, h]
+                let ab_even = _mm256_unpacklo_pd(a.0, b.0);
+                let ab_odd = _mm256_unpackhi_pd(a.0, b.0);
+                let cd_even = _mm256_unpacklo_pd(c.0, d.0);
+                let cd_odd = _mm256_unpackhi_pd(c.0, d.0);
+                [
+                    Self(_mm256_permute2f128_pd::<0x20>(ab_even, cd_even)),
+                    Self(_mm256_permute2f128_pd::<0x20>(ab_odd, cd_odd)),
+                    Self(_mm256_permute2f128_pd::<0x31>(ab_even, cd_even)),
+                    Self(_mm256_permute2f128_pd::<0x31>(ab_odd, cd_odd)),
+                ]
+            }
+        }
+        #[inline(always)]
+        fn call<K: Kernel>(kernel: K) -> K::Output {
+            // SAFETY: features as said at the type.
+            unsafe { super::run_avx2(kernel) }
+        }
+    }
+}
+
+/// Indices that have been checked once, for copying without a check for each element.
+#[derive(Debug, Default)]
+pub(super) struct Gather {
+    index: Vec<u32>,
+    /// One more than the largest index.
+    needed: usize,
+}
+
+impl Gather {
+    pub(super) fn new(index: Vec<u32>) -> Self {
+        let needed = index.iter().max().map_or(0, |&i| i as usize + 1);
+        Self { index, needed }
+    }
+
+    /// to[i] = from[index[i]]
+    ///
+    /// # Panics
+    /// If `to` is shorter than the index, or `from` does not hold the largest.
+    #[inline(always)]
+    pub(super) fn copy<V: Lanes>(&self, from: &[Four], to: &mut [Four]) {
+        assert!(from.len() >= self.needed);
+        for (to, &i) in to[..self.index.len()].iter_mut().zip(&self.index) {
+            // SAFETY: the largest index was checked above.
+            V::load(unsafe { from.get_unchecked(i as usize) }).store(to);
+        }
+    }
+}
+
+/// Function pairs of a shell pair whose places in the packed list follow one another.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub(super) struct Run {
+    /// Index of the first function pair.
+    pub(super) first: usize,
+    /// Place of the first.
+    pub(super) place: usize,
+    pub(super) len: usize,
+}
+
+/// Four quartets on their way from lanes to the packed list.
+pub(super) struct Scatter<'a> {
+    pub(super) list: SharedList<'a>,
+    /// For each lane the places of the later pairs.
+    pub(super) rows: [&'a [u32]; 4],
+    /// For each lane the earlier pairs in runs, which differ by their places only.
+    pub(super) runs: [&'a [Run]; 4],
+    /// Distance of the function pairs of a run.
+    pub(super) run_stride: usize,
+    pub(super) values: &'a [Four],
+    /// Distance in `values` of rows, and of function pairs of the columns.
+    pub(super) strides: [usize; 2],
+    /// Lanes to write.
+    pub(super) lanes: usize,
+}
+
+impl Kernel for Scatter<'_> {
+    type Output = ();
+
+    #[inline(always)]
+    fn run<V: Lanes>(self) {
+        let [row_stride, column_stride] = self.strides;
+        let step = self.run_stride * column_stride;
+        let row_count = self.rows[0].len();
+        let mut last_value = 0;
+        for lane in 0..self.lanes {
+            let rows = self.rows[lane].iter().copied().max().unwrap_or(0) as usize;
+            assert_eq!(self.rows[lane].len(), row_count);
+            assert_eq!(self.runs[lane].len(), self.runs[0].len());
+            for (run, first) in self.runs[lane].iter().zip(self.runs[0]) {
+                assert!(run.len == first.len && run.len > 0);
+                assert!(pair_count(rows) + run.place + run.len <= self.list.len);
+                last_value = last_value.max(first.first * column_stride + (run.len - 1) * step);
+            }
+        }
+        if row_count == 0 || self.lanes == 0 {
+            return;
+        }
+        assert!((row_count - 1) * row_stride + last_value < self.values.len());
+        // SAFETY: all places and all indices into `values` were checked just now, by the largest; places
+        // are disjoint between threads.
+        unsafe {
+            if self.lanes == 4 {
+                self.write::<V, 4>();
+            } else {
+                for lane in 0..self.lanes {
+                    self.write_lane(lane);
+                }
+            }
+        }
+    }
+}
+
+impl Scatter<'_> {
+    /// # Safety
+    /// All places must be inside the list, and all values inside `values`.
+    #[inline(always)]
+    unsafe fn write<V: Lanes, const LANES: usize>(&self) {
+        let [row_stride, column_stride] = self.strides;
+        let step = self.run_stride * column_stride;
+        for r in 0..self.rows[0].len() {
+            let mut starts = [self.list.start; LANES];
+            for lane in 0..LANES {
+                // SAFETY: promised by the caller.
+                unsafe {
+                    let row = *self.rows[lane].get_unchecked(r) as usize;
+                    starts[lane] = starts[lane].add(pair_count(row));
+                }
+            }
+            for k in 0..self.runs[0].len() {
+                let Run { first, len, .. } = self.runs[0][k];
+                let mut value = r * row_stride + first * column_stride;
+                let mut places = starts;
+                let mut left = len;
+                // SAFETY: promised by the caller.
+                unsafe {
+                    for lane in 0..LANES {
+                        places[lane] = places[lane].add(self.runs[lane].get_unchecked(k).place);
+                    }
+                    while left >= 4 {
+                        let square = [
+                            V::load(self.values.get_unchecked(value)),
+                            V::load(self.values.get_unchecked(value + step)),
+                            V::load(self.values.get_unchecked(value + 2 * step)),
+                            V::load(self.values.get_unchecked(value + 3 * step)),
+                        ];
+                        let rows = V::transposed_square(square);
+                        for lane in 0..LANES {
+                            rows[lane].write(places[lane].cast::<[f64; 4]>());
+                            places[lane] = places[lane].add(4);
+                        }
+                        value += 4 * step;
+                        left -= 4;
+                    }
+                    while left > 0 {
+                        let from = self.values.get_unchecked(value);
+                        for lane in 0..LANES {
+                            *places[lane] = from.0[lane];
+                            places[lane] = places[lane].add(1);
+                        }
+                        value += step;
+                        left -= 1;
+                    }
+                }
+            }
+        }
+    }
+
+    /// # Safety
+    /// As for [`Self::write`].
+    unsafe fn write_lane(&self, lane: usize) {
+        let [row_stride, column_stride] = self.strides;
+        let step = self.run_stride * column_stride;
+        for (r, &row) in self.rows[lane].iter().enumerate() {
+            for run in self.runs[lane] {
+                let value = r * row_stride + run.first * column_stride;
+                let place = pair_count(row as usize) + run.place;
+                for i in 0..run.len {
+                    // SAFETY: promised by the caller.
+                    unsafe {
+                        let value = self.values.get_unchecked(value + i * step).0[lane];
+                        *self.list.start.add(place + i) = value;
+                    }
+                }
             }
         }
     }
@@ -330,6 +543,40 @@ impl<'a> SharedList<'a> {
             start: list.as_mut_ptr(),
             len: list.len(),
             owner: std::marker::PhantomData,
+        }
+    }
+
+    /// Writes one lane of a block of values: the one for row r and column c, at r · strides[0] +
+    /// c · strides[1] of `values`, to place rows[r](rows[r] + 1)/2 + columns[c].
+    ///
+    /// # Panics
+    /// If a place is beyond the end of the list, or `values` is too short.
+    #[inline]
+    pub(super) fn scatter(
+        &self,
+        rows: &[u32],
+        columns: &[u32],
+        values: &[Four],
+        lane: usize,
+        strides: [usize; 2],
+    ) {
+        let (Some(&last_row), Some(&last_column)) = (rows.iter().max(), columns.iter().max())
+        else {
+            return;
+        };
+        assert!(pair_count(last_row as usize) + (last_column as usize) < self.len);
+        assert!((rows.len() - 1) * strides[0] + (columns.len() - 1) * strides[1] < values.len());
+        assert!(lane < 4);
+        for (r, &row) in rows.iter().enumerate() {
+            let start = pair_count(row as usize);
+            for (c, &column) in columns.iter().enumerate() {
+                // SAFETY: the largest place and the largest index were checked above; places are
+                // disjoint between threads.
+                unsafe {
+                    let value = values.get_unchecked(r * strides[0] + c * strides[1]);
+                    *self.start.add(start + column as usize) = *value.0.get_unchecked(lane);
+                }
+            }
         }
     }
 

@@ -2,11 +2,12 @@
 
 use super::digestion::{CoulombExchange, CoulombExchangePair, coulomb_exchange_packed};
 use super::groups::{PairSet, QuartetSink};
-use super::lanes::{Four, SharedList};
+use super::lanes::{Four, Scatter, SharedList, dispatch};
 use super::pairs::ShellPair;
 use super::{IntegralCounts, RepulsionSettings, pair_count};
 use crate::basis::Basis;
 use nalgebra::DMatrix;
+use std::cmp::Ordering;
 
 /// All unique integrals of one geometry, packed with their eight-fold symmetry.
 ///
@@ -129,19 +130,31 @@ struct ListSink<'a> {
 }
 
 impl ListSink<'_> {
+    /// Writes the quartet of a bra and a ket: `values` row by row, of which one lane counts.
     #[inline]
-    fn write(&self, bra: &ShellPair, ket: &ShellPair, value: impl Fn(usize, usize) -> f64) {
-        // A pair with itself has every integral twice, and the two may differ by rounding.
-        let same = std::ptr::eq(bra, ket);
-        for (f, &ab) in bra.places.iter().enumerate() {
-            let ab = ab as usize;
-            for (g, &cd) in ket.places.iter().enumerate() {
-                let cd = cd as usize;
-                if same && ab < cd {
-                    continue;
+    fn write(&self, bra: &ShellPair, ket: &ShellPair, values: &[Four], lane: usize) {
+        let width = ket.places.len();
+        // Pairs are ordered by their higher shell first, as are the places of their functions.
+        match bra.shells[0].cmp(&ket.shells[0]) {
+            Ordering::Greater => {
+                self.list
+                    .scatter(&bra.places, &ket.places, values, lane, [width, 1]);
+            }
+            Ordering::Less => {
+                self.list
+                    .scatter(&ket.places, &bra.places, values, lane, [1, width]);
+            }
+            Ordering::Equal => {
+                // A pair with itself has every integral twice, and the two may differ by rounding.
+                let same = std::ptr::eq(bra, ket);
+                for (f, &ab) in bra.places.iter().enumerate() {
+                    for (g, &cd) in ket.places.iter().enumerate() {
+                        if !(same && ab < cd) {
+                            let place = pair_count(ab.max(cd) as usize) + ab.min(cd) as usize;
+                            self.list.set(place, values[f * width + g].0[lane]);
+                        }
+                    }
                 }
-                let (high, low) = (ab.max(cd), ab.min(cd));
-                self.list.set(pair_count(high) + low, value(f, g));
             }
         }
     }
@@ -149,15 +162,47 @@ impl ListSink<'_> {
 
 impl QuartetSink for ListSink<'_> {
     fn take(&mut self, bra: &[&ShellPair], ket: &[&ShellPair], result: &[Four]) {
-        for (lane, (bra, ket)) in bra.iter().zip(ket).enumerate() {
-            let width = ket.places.len();
-            self.write(bra, ket, |f, g| result[f * width + g].0[lane]);
+        let width = ket[0].places.len();
+        let lanes = bra.len();
+        let all = |order: Ordering| {
+            let mut orders = bra
+                .iter()
+                .zip(ket)
+                .map(|(b, k)| b.shells[0].cmp(&k.shells[0]));
+            orders.all(|o| o == order)
+        };
+        let sides = if all(Ordering::Greater) {
+            Some((bra, ket, [width, 1]))
+        } else if all(Ordering::Less) {
+            Some((ket, bra, [1, width]))
+        } else {
+            None
+        };
+        // Pairs of one class have the same runs if their shells come in the same order.
+        let order = |c: &ShellPair| (c.run_stride, c.runs.len());
+        let alike = |columns: &[&ShellPair]| columns.iter().all(|c| order(c) == order(columns[0]));
+        if let Some((rows, columns, strides)) = sides.filter(|(_, columns, _)| alike(columns)) {
+            let lane = |l: usize| l.min(lanes - 1);
+            dispatch(Scatter {
+                list: self.list,
+                rows: [0, 1, 2, 3].map(|l| rows[lane(l)].places.as_slice()),
+                runs: [0, 1, 2, 3].map(|l| columns[lane(l)].runs.as_slice()),
+                run_stride: columns[0].run_stride,
+                values: result,
+                strides,
+                lanes,
+            });
+        } else {
+            for (lane, (bra, ket)) in bra.iter().zip(ket).enumerate() {
+                self.write(bra, ket, result, lane);
+            }
         }
     }
 
     fn skip(&mut self, bra: &ShellPair, ket: &ShellPair) {
         if self.erase_skipped {
-            self.write(bra, ket, |_, _| 0.0);
+            let count = bra.places.len() * ket.places.len();
+            self.write(bra, ket, &vec![Four::default(); count], 0);
         }
     }
 }

@@ -12,7 +12,7 @@ mod class;
 mod digestion;
 mod direct;
 mod groups;
-pub(in crate::integrals) mod hermite;
+mod hermite;
 pub(in crate::integrals) mod lanes;
 mod list;
 mod pairs;

@@ -1,7 +1,7 @@
 //! Shell pairs prepared once per geometry, and packed four at a time into lanes.
 
 use super::class::{ClassKey, PairClass, Scalar, ShellType};
-use super::lanes::Four;
+use super::lanes::{Four, Kernel, Lanes, Run, dispatch};
 use super::primitives::field;
 use crate::basis::{Basis, Shell};
 use crate::integrals::recurrence::{hermite_count, hermite_powers};
@@ -17,6 +17,10 @@ pub(super) struct ShellPair {
     pub(super) class: Arc<PairClass>,
     /// Packed index a(a+1)/2 + b of each function pair, in the order of the class.
     pub(super) places: Vec<u32>,
+    /// The same in runs of places that follow one another, and the distance of the function pairs in a
+    /// run: 1, or the number of functions of shell B where A's functions come first.
+    pub(super) runs: Vec<Run>,
+    pub(super) run_stride: usize,
     /// Functions (a, b) of each function pair.
     pub(super) functions: Vec<[u32; 2]>,
     /// Primitive pairs kept, largest bound first.
@@ -53,7 +57,7 @@ impl ShellPair {
         let displacement = basis.centre(a) - basis.centre(b);
         let one_centre = shell_a.atom == shell_b.atom;
         let key = ClassKey {
-            contracted: shell_a.exponents.len() * shell_b.exponents.len() > 1,
+            contracted: [shell_a, shell_b].map(|s| s.exponents.len() > 1),
             types: [a, b].map(|i| ShellType::of(&shells[i])),
             one_centre,
             same_shell: a == b,
@@ -64,13 +68,14 @@ impl ShellPair {
             .iter()
             .map(|&(f, g)| [(basis.offset(a) + f) as u32, (basis.offset(b) + g) as u32])
             .collect();
-        let places = functions
+        let places: Vec<u32> = functions
             .iter()
             .map(|&[f, g]| {
                 let (high, low) = (f.max(g), f.min(g));
                 high * (high + 1) / 2 + low
             })
             .collect();
+        let run_stride = if a < b { shell_b.functions() } else { 1 };
         let monomials: Vec<f64> = {
             let axes = [0, 1, 2].map(|i| powers(displacement[i], class.degree));
             hermite_powers()[..hermite_count(class.degree)]
@@ -78,10 +83,12 @@ impl ShellPair {
                 .map(|m| axes[0][m[0]] * axes[1][m[1]] * axes[2][m[2]])
                 .collect()
         };
-        let mut elements = Vec::new();
-        if class.key.contracted {
-            elements = class.elements(&monomials, |_| 1.0);
-        }
+        // What is folded depends on the exponents of single primitives only: any primitive will do.
+        let pair = [shell_a, shell_b];
+        let elements = class.elements(
+            &monomials,
+            &scalar_values(&class, &class.folded, pair, [0, 0]),
+        );
         let mut primitives = Vec::new();
         for i in 0..shell_a.exponents.len() {
             for j in 0..shell_b.exponents.len() {
@@ -91,13 +98,7 @@ impl ShellPair {
                 let factor = (2.0 * PI.powf(2.5)).sqrt() / p
                     * (-reduced * displacement.norm_squared()).exp();
                 let centre = basis.centre(a) - displacement * (exponents[1] / p);
-                let scalars = scalar_values(&class, [shell_a, shell_b], [i, j]);
-                let carried = if class.key.contracted {
-                    scalars
-                } else {
-                    elements = class.elements(&monomials, |s| scalars[s]);
-                    vec![1.0]
-                };
+                let carried = scalar_values(&class, &class.carried, pair, [i, j]);
                 let bound =
                     factor / (2.0 * p).powf(0.25) * class.largest_norm(&elements, &carried, p);
                 if bound * largest < PRIMITIVE_FLOOR {
@@ -112,6 +113,8 @@ impl ShellPair {
         Self {
             shells: [s, t],
             atoms: [shell_a.atom, shell_b.atom],
+            runs: runs(&places, run_stride),
+            run_stride,
             places,
             functions,
             primitives: primitives.len(),
@@ -130,9 +133,35 @@ impl ShellPair {
             .sum()
     }
 
+    /// Whether one of the shells is on an atom that moves.
+    pub(super) fn touches(&self, moved: &[bool]) -> bool {
+        self.atoms.iter().any(|&atom| moved[atom])
+    }
+
     fn stride(&self) -> usize {
         field::SCALARS + self.class.carried()
     }
+}
+
+/// Divides places, visited every `stride`, into runs.
+fn runs(places: &[u32], stride: usize) -> Vec<Run> {
+    let mut runs: Vec<Run> = Vec::new();
+    for start in 0..stride {
+        for index in (start..places.len()).step_by(stride) {
+            let place = places[index] as usize;
+            match runs.last_mut() {
+                Some(run) if place == run.place + run.len && index >= start + stride => {
+                    run.len += 1;
+                }
+                _ => runs.push(Run {
+                    first: index,
+                    place,
+                    len: 1,
+                }),
+            }
+        }
+    }
+    runs
 }
 
 /// An upper bound of the norm of every pair of the basis, independent of where the centres are:
@@ -143,25 +172,36 @@ pub(super) fn largest_bound(basis: &Basis) -> f64 {
         .fold(0.0, f64::max)
 }
 
-/// Values of all scalars of a class for primitives i and j.
-fn scalar_values(class: &PairClass, shells: [&Shell; 2], [i, j]: [usize; 2]) -> Vec<f64> {
+/// Values of scalars for primitives i and j.
+fn scalar_values(
+    class: &PairClass,
+    scalars: &[Scalar],
+    shells: [&Shell; 2],
+    [i, j]: [usize; 2],
+) -> Vec<f64> {
     let (a, b) = (shells[0].exponents[i], shells[1].exponents[j]);
     let p = a + b;
-    let degree = class.degree;
-    let [from_b, from_a, from_p] = [b / p, a / p, 0.5 / p].map(|x| powers(x, degree));
-    let value = |s: &Scalar| {
-        shells[0].contractions[s.contraction_a].coefficients[i]
-            * shells[1].contractions[s.contraction_b].coefficients[j]
-            * from_b[s.power_b]
-            * from_a[s.power_a]
-            * from_p[s.power_p]
+    let single = if class.key.contracted[0] { b } else { a };
+    let powers_of = [b / p, a / p, 0.5 / p, 0.5 / single].map(|x| powers(x, 2 * class.degree));
+    let coefficient = |shell: usize, contraction: Option<usize>, primitive: usize| {
+        contraction.map_or(1.0, |c| {
+            shells[shell].contractions[c].coefficients[primitive]
+        })
     };
-    class.scalars.iter().map(value).collect()
+    let value = |s: &Scalar| {
+        coefficient(0, s.contraction_a, i)
+            * coefficient(1, s.contraction_b, j)
+            * powers_of[0][s.power_b]
+            * powers_of[1][s.power_a]
+            * powers_of[2][s.power_p]
+            * powers_of[3][s.power_single]
+    };
+    scalars.iter().map(value).collect()
 }
 
 impl PairClass {
     /// Elements of the transformation for given monomials of AB and scalars.
-    fn elements(&self, monomials: &[f64], scalar: impl Fn(usize) -> f64) -> Vec<f64> {
+    fn elements(&self, monomials: &[f64], folded: &[f64]) -> Vec<f64> {
         let mut start = 0;
         self.term_ends
             .iter()
@@ -170,7 +210,7 @@ impl PairClass {
                 let sum = self.terms[start..end]
                     .iter()
                     .map(|t| {
-                        t.coefficient * monomials[t.monomial as usize] * scalar(t.scalar as usize)
+                        t.coefficient * monomials[t.monomial as usize] * folded[t.scalar as usize]
                     })
                     .sum();
                 start = end;
@@ -239,8 +279,17 @@ impl PairBlock {
         self.numbers.clear();
         self.numbers
             .resize(self.primitives * stride, Four::default());
+        let mut shortest = self.numbers.len();
+        for pair in pairs {
+            shortest = shortest.min(pair.numbers.len());
+        }
+        dispatch(Interleave {
+            from: pairs.map(|p| &p.numbers[..shortest]),
+            to: &mut self.numbers[..shortest],
+        });
         for (lane, pair) in pairs.iter().enumerate() {
-            for (to, from) in self.numbers.iter_mut().zip(&pair.numbers) {
+            let rest = self.numbers[shortest..].iter_mut();
+            for (to, from) in rest.zip(&pair.numbers[shortest..]) {
                 to.0[lane] = *from;
             }
             let bounds = field::BOUND..;
@@ -267,15 +316,50 @@ impl PairBlock {
         }
         self.elements.clear();
         self.elements.resize(class.columns.len(), Four::default());
-        for (lane, pair) in pairs.iter().enumerate() {
-            for (to, from) in self.elements.iter_mut().zip(&pair.elements) {
-                to.0[lane] = *from;
-            }
-        }
+        dispatch(Interleave {
+            from: pairs.map(|p| p.elements.as_slice()),
+            to: &mut self.elements,
+        });
         if side == Side::Ket {
             for (element, sign) in self.elements.iter_mut().zip(&class.ket_signs) {
                 element.0.iter_mut().for_each(|e| *e *= sign);
             }
+        }
+    }
+}
+
+/// Four lists of one length become one list of lanes.
+struct Interleave<'a> {
+    from: [&'a [f64]; 4],
+    to: &'a mut [Four],
+}
+
+impl Kernel for Interleave<'_> {
+    type Output = ();
+
+    #[inline(always)]
+    fn run<V: Lanes>(self) {
+        let count = self.to.len();
+        let [a, b, c, d] = self.from;
+        let (a, b, c, d) = (&a[..count], &b[..count], &c[..count], &d[..count]);
+        let (a_fours, a_rest) = a.as_chunks::<4>();
+        let (b_fours, b_rest) = b.as_chunks::<4>();
+        let (c_fours, c_rest) = c.as_chunks::<4>();
+        let (d_fours, d_rest) = d.as_chunks::<4>();
+        let (to_fours, to_rest) = self.to.as_chunks_mut::<4>();
+        for i in 0..to_fours.len() {
+            let square = V::transposed_square([
+                V::from_array(&a_fours[i]),
+                V::from_array(&b_fours[i]),
+                V::from_array(&c_fours[i]),
+                V::from_array(&d_fours[i]),
+            ]);
+            for (to, column) in to_fours[i].iter_mut().zip(square) {
+                column.store(to);
+            }
+        }
+        for (i, to) in to_rest.iter_mut().enumerate() {
+            to.0 = [a_rest[i], b_rest[i], c_rest[i], d_rest[i]];
         }
     }
 }

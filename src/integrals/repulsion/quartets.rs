@@ -9,21 +9,22 @@
 //! Hermite functions of bra and ket enter R by their sum only, so that stages 2 and 3 hold each number
 //! once for each pair of scalars, and are plain products over contiguous ranges of degrees.
 
-use super::class::{ClassKey, PairClass, ScalarGroup};
-use super::hermite::scratch_len;
-use super::lanes::{Four, dispatch};
+use super::class::{PairClass, ScalarGroup};
+use super::lanes::{Four, Gather, Kernel, Lanes, dispatch};
 use super::pairs::PairBlock;
-use super::primitives::{PRIMITIVES, field};
-use super::products::{Contraction, SparseProduct};
+use super::primitives::{field, primitives, scratch_len};
+use super::products::{Contraction, Layout, SparseProduct, Tiled};
 use crate::integrals::boys::{self, BoysTable};
 use crate::integrals::recurrence::{hermite_count, hermite_index, hermite_powers};
 use std::collections::HashMap;
 use std::sync::{Arc, Mutex, OnceLock, PoisonError};
 
-/// Most ket primitives between two contractions.
-const KET_BATCH: usize = 8;
+/// Most Hermite integrals of primitives between two contractions.
+const BATCH_NUMBERS: usize = 512;
+/// Bounds of the number of ket primitives between two contractions.
+const KET_BATCH: std::ops::RangeInclusive<usize> = 8..=36;
 /// Most numbers that the half-contracted integrals of one batch of bra primitives may take.
-const HALF_NUMBERS: usize = 640;
+const HALF_NUMBERS: usize = 8192;
 
 /// Number of Hermite functions of degree below `degree`.
 const fn below(degree: usize) -> usize {
@@ -44,13 +45,19 @@ pub(super) struct QuartetPlan {
     /// For each ket group: where it starts among the half-contracted numbers, and how many each scalar has.
     half: Vec<(usize, usize)>,
     half_len: usize,
+    /// Ket primitives contracted together.
+    ket_batch: usize,
     /// Bra primitives contracted together.
     bra_batch: usize,
     /// Contractions of stage 3.
     steps: Vec<BraStep>,
     full_len: usize,
-    /// Place among the fully contracted numbers of each (ket Hermite, bra Hermite).
-    expansion: Vec<u32>,
+    /// Ket Hermites by bra Hermites, as the first transformation wants them, and for each element its
+    /// place among the fully contracted numbers.
+    expanded: Tiled,
+    /// Bra Hermites by ket functions.
+    ket_done: Tiled,
+    expansion: Gather,
 }
 
 /// One contraction over bra primitives: a group of bra scalars with one ket scalar.
@@ -65,15 +72,25 @@ struct BraStep {
 }
 
 impl QuartetPlan {
-    /// The plan for two classes, made on first use.
-    pub(super) fn get(bra: &Arc<PairClass>, ket: &Arc<PairClass>) -> Arc<Self> {
-        static PLANS: OnceLock<Mutex<HashMap<[ClassKey; 2], Arc<QuartetPlan>>>> = OnceLock::new();
+    /// The plan for the quartets of two classes, made on first use. Which class is the bra is a matter of
+    /// cost, unless they are one.
+    pub(super) fn get(x: &Arc<PairClass>, y: &Arc<PairClass>) -> Arc<Self> {
+        static PLANS: OnceLock<Mutex<HashMap<[usize; 2], Arc<QuartetPlan>>>> = OnceLock::new();
         let plans = PLANS.get_or_init(Mutex::default);
         let mut plans = plans.lock().unwrap_or_else(PoisonError::into_inner);
-        let plan = plans
-            .entry([bra.key.clone(), ket.key.clone()])
-            .or_insert_with(|| Arc::new(Self::new(bra, ket)));
-        Arc::clone(plan)
+        // Classes live as long as the program: their addresses name them.
+        let key = [x, y].map(|class| Arc::as_ptr(class) as usize);
+        if let Some(plan) = plans.get(&key).or_else(|| plans.get(&[key[1], key[0]])) {
+            return Arc::clone(plan);
+        }
+        let x_first = (cost(x, y), &x.key) <= (cost(y, x), &y.key);
+        let plan = Arc::new(if x_first {
+            Self::new(x, y)
+        } else {
+            Self::new(y, x)
+        });
+        plans.insert(key, Arc::clone(&plan));
+        plan
     }
 
     fn new(bra: &Arc<PairClass>, ket: &Arc<PairClass>) -> Self {
@@ -107,19 +124,21 @@ impl QuartetPlan {
         }
         let ket_scalars = ket.carried();
         let powers = hermite_powers();
-        let mut expansion = Vec::with_capacity(bra.hermites.len() * ket.hermites.len());
-        for &(ket_hermite, ket_scalar) in &ket.hermites {
-            for &(bra_hermite, bra_scalar) in &bra.hermites {
-                let group = bra
-                    .groups
-                    .iter()
-                    .position(|g| bra_scalar < g.first + g.count)
-                    .unwrap_or(0);
+        let expanded = Tiled::new(ket.hermites.len(), bra.hermites.len());
+        let mut expansion = vec![0; expanded.len()];
+        for (column, &(bra_hermite, bra_scalar)) in bra.hermites.iter().enumerate() {
+            let group = bra
+                .groups
+                .iter()
+                .position(|g| bra_scalar < g.first + g.count)
+                .unwrap_or(0);
+            let (to, step) = expanded.column(column);
+            for (row, &(ket_hermite, ket_scalar)) in ket.hermites.iter().enumerate() {
                 let (start, columns, first) = layout[group * ket_scalars + ket_scalar];
                 let (t, u) = (powers[bra_hermite], powers[ket_hermite]);
                 let sum = hermite_index(t[0] + u[0], t[1] + u[1], t[2] + u[2]);
                 let place = start + (bra_scalar - bra.groups[group].first) * columns + sum - first;
-                expansion.push(place as u32);
+                expansion[to + row * step] = place as u32;
             }
         }
         Self {
@@ -129,10 +148,14 @@ impl QuartetPlan {
             table: boys::table(degree),
             half,
             half_len,
+            ket_batch: (BATCH_NUMBERS / hermite_count(degree))
+                .clamp(*KET_BATCH.start(), *KET_BATCH.end()),
             bra_batch: (HALF_NUMBERS / half_len).clamp(1, 8),
             steps,
             full_len,
-            expansion,
+            expanded,
+            ket_done: Tiled::new(bra.hermites.len(), ket.functions.len()),
+            expansion: Gather::new(expansion),
         }
     }
 
@@ -142,17 +165,34 @@ impl QuartetPlan {
     }
 }
 
-/// Which pair of a quartet is the bra, by their classes: the one with fewer primitives to loop over
-/// inside; a contracted pair is the ket. Equal classes are decided elsewhere.
-pub(super) fn bra_first(x: &PairClass, y: &PairClass) -> bool {
-    let cost = |bra: &PairClass, ket: &PairClass| -> usize {
-        ket.groups
-            .iter()
-            .map(|g| g.count * (hermite_count(g.high + bra.degree) - below(g.low)))
-            .sum()
+/// Primitives that a contracted pair is taken to have when costs are compared.
+const TYPICAL_PRIMITIVES: usize = 6;
+
+/// Multiply-adds of a quartet, roughly.
+fn cost(bra: &PairClass, ket: &PairClass) -> usize {
+    let primitives = |class: &PairClass| {
+        if class.contracted() {
+            TYPICAL_PRIMITIVES
+        } else {
+            1
+        }
     };
-    let rank = |bra: &PairClass, ket: &PairClass| (bra.key.contracted, cost(bra, ket));
-    (rank(x, y), &x.key) < (rank(y, x), &y.key)
+    let mut half = 0;
+    let mut full = 0;
+    for k in &ket.groups {
+        half += k.count * (hermite_count(k.high + bra.degree) - below(k.low));
+        for b in &bra.groups {
+            full += k.count * b.count * (hermite_count(k.high + b.high) - below(k.low + b.low));
+        }
+    }
+    let mut cost = bra.hermites.len() * ket.columns.len() + ket.functions.len() * bra.columns.len();
+    if ket.contracted() {
+        cost += primitives(bra) * primitives(ket) * half;
+    }
+    if bra.contracted() {
+        cost += primitives(bra) * full;
+    }
+    cost
 }
 
 /// Buffers for the evaluation of quartets; one for each thread.
@@ -174,7 +214,7 @@ fn reserve(buffer: &mut Vec<Four>, len: usize) {
 }
 
 impl QuartetEngine {
-    /// The integrals of four quartets: result[f · ket functions + g], one quartet in each lane.
+    /// Evaluates the integrals of four quartets, for [`Self::result`].
     ///
     /// Primitives are left out as [`crate::integrals::screening`] says, with `budget` the error allowed.
     pub(super) fn evaluate(
@@ -183,124 +223,141 @@ impl QuartetEngine {
         bra: &PairBlock,
         ket: &PairBlock,
         budget: f64,
-    ) -> &[Four] {
+    ) {
         let nherm = hermite_count(plan.degree);
         let (bra_functions, ket_functions) = plan.shape();
-        let (bra_hermites, ket_hermites) = (plan.bra.hermites.len(), plan.ket.hermites.len());
-        reserve(&mut self.hermites, KET_BATCH * nherm);
-        reserve(&mut self.scratch, scratch_len(plan.degree));
+        reserve(&mut self.hermites, plan.ket_batch * nherm);
+        reserve(&mut self.scratch, scratch_len(plan.degree, plan.ket_batch));
         reserve(&mut self.half, plan.bra_batch * plan.half_len);
         reserve(&mut self.full, plan.full_len);
-        reserve(&mut self.expanded, bra_hermites * ket_hermites);
-        reserve(&mut self.ket_done, bra_hermites * ket_functions);
+        reserve(&mut self.expanded, plan.expanded.len());
+        reserve(&mut self.ket_done, plan.ket_done.len());
         reserve(&mut self.result, bra_functions * ket_functions);
-        let cut = Four([budget; 4]);
+        dispatch(Evaluation {
+            engine: self,
+            plan,
+            bra,
+            ket,
+            cut: Four([budget; 4]),
+        });
+    }
 
+    /// What [`Self::evaluate`] found last: element f · ket functions + g, one quartet in each lane.
+    pub(super) fn result(&self, plan: &QuartetPlan) -> &[Four] {
+        let (bra_functions, ket_functions) = plan.shape();
+        &self.result[..bra_functions * ket_functions]
+    }
+}
+
+/// The evaluation of one block.
+struct Evaluation<'a> {
+    engine: &'a mut QuartetEngine,
+    plan: &'a QuartetPlan,
+    bra: &'a PairBlock,
+    ket: &'a PairBlock,
+    cut: Four,
+}
+
+impl Kernel for Evaluation<'_> {
+    type Output = ();
+
+    #[inline(always)]
+    fn run<V: Lanes>(mut self) {
+        let (plan, bra) = (self.plan, self.bra);
+        let (bra_functions, ket_functions) = plan.shape();
         let mut start = 0;
-        let mut any = false;
         while start < bra.primitives {
+            let wanted = plan.bra_batch.min(bra.primitives - start);
             let mut active = 0;
-            while active < plan.bra_batch && start + active < bra.primitives {
-                let numbers = &bra.numbers[(start + active) * bra.stride..][..bra.stride];
-                if !self.half_contract(plan, numbers, ket, active, &cut) {
-                    break;
-                }
+            while active < wanted && self.half_contract::<V>(start + active, active) {
                 active += 1;
             }
-            if active == 0 {
-                break;
+            if active > 0 && plan.bra.contracted() {
+                self.bra_contract::<V>(start, active);
             }
-            if plan.bra.key.contracted {
-                self.bra_contract(plan, bra, start, active, any);
-            }
-            any = true;
             start += active;
-            if active < plan.bra_batch {
+            if active < wanted {
                 break;
             }
         }
-        let result = &mut self.result[..bra_functions * ket_functions];
-        if !any {
+        let engine = self.engine;
+        let result = &mut engine.result[..bra_functions * ket_functions];
+        if start == 0 {
             result.fill(Four::default());
-            return result;
+            return;
         }
-        let full = if plan.bra.key.contracted {
-            &self.full
+        let full = if plan.bra.contracted() {
+            &engine.full
         } else {
-            &self.half
+            &engine.half
         };
-        for (to, &from) in self.expanded.iter_mut().zip(&plan.expansion) {
-            *to = full[from as usize];
-        }
-        dispatch(SparseProduct {
+        plan.expansion.copy::<V>(full, &mut engine.expanded);
+        V::call(SparseProduct {
             row_ends: &plan.ket.row_ends,
             columns: &plan.ket.columns,
-            elements: &ket.elements,
-            values: &self.expanded,
-            width: bra_hermites,
-            out: &mut self.ket_done,
-            out_row: 1,
-            out_column: ket_functions,
+            elements: &self.ket.elements,
+            values: &engine.expanded,
+            shape: plan.expanded,
+            out: &mut engine.ket_done,
+            layout: Layout::TiledColumns(plan.ket_done),
         });
-        dispatch(SparseProduct {
+        V::call(SparseProduct {
             row_ends: &plan.bra.row_ends,
             columns: &plan.bra.columns,
             elements: &bra.elements,
-            values: &self.ket_done,
-            width: ket_functions,
+            values: &engine.ket_done,
+            shape: plan.ket_done,
             out: result,
-            out_row: ket_functions,
-            out_column: 1,
+            layout: Layout::Rows,
         });
-        result
     }
+}
 
+impl Evaluation<'_> {
     /// Stages 1 and 2 for one bra primitive; false when all its primitive quartets are negligible.
-    fn half_contract(
-        &mut self,
-        plan: &QuartetPlan,
-        bra: &[Four],
-        ket: &PairBlock,
-        slot: usize,
-        cut: &Four,
-    ) -> bool {
+    #[inline(always)]
+    fn half_contract<V: Lanes>(&mut self, primitive: usize, slot: usize) -> bool {
+        let (plan, ket) = (self.plan, self.ket);
+        let engine = &mut *self.engine;
+        let bra = &self.bra.numbers[primitive * self.bra.stride..][..self.bra.stride];
         let nherm = hermite_count(plan.degree);
-        let primitives = PRIMITIVES[plan.degree];
-        let half = &mut self.half[slot * plan.half_len..][..plan.half_len];
-        if !plan.ket.key.contracted {
-            // The one ket primitive needs no contraction: its R are the half-contracted numbers.
-            let out = &mut half[..nherm];
-            let scratch = &mut self.scratch;
-            return primitives(bra, &ket.numbers, ket.stride, cut, plan.table, out, scratch) > 0;
-        }
+        let half = &mut engine.half[slot * plan.half_len..][..plan.half_len];
+        let contracted = plan.ket.contracted();
         let mut k = 0;
         while k < ket.primitives {
-            let batch = KET_BATCH.min(ket.primitives - k);
+            let batch = plan.ket_batch.min(ket.primitives - k);
             let numbers = &ket.numbers[k * ket.stride..][..batch * ket.stride];
-            let done = primitives(
+            // The one ket primitive of an uncontracted pair needs no contraction: its R are the
+            // half-contracted numbers.
+            let out = if contracted {
+                &mut engine.hermites[..batch * nherm]
+            } else {
+                &mut half[..nherm]
+            };
+            let done = primitives::<V>(
+                plan.degree,
                 bra,
                 numbers,
                 ket.stride,
-                cut,
+                &self.cut,
                 plan.table,
-                &mut self.hermites[..batch * nherm],
-                &mut self.scratch,
+                out,
+                &mut engine.scratch,
             );
-            if done == 0 {
-                break;
-            }
-            for (group, &(start, columns)) in plan.ket.groups.iter().zip(&plan.half) {
-                dispatch(Contraction {
-                    values: &self.hermites[below(group.low)..],
-                    value_stride: nherm,
-                    scalars: &numbers[field::SCALARS + group.first..],
-                    scalar_stride: ket.stride,
-                    primitives: done,
-                    columns,
-                    scalar_count: group.count,
-                    out: &mut half[start..],
-                    accumulate: k > 0,
-                });
+            if done > 0 && contracted {
+                for (group, &(start, columns)) in plan.ket.groups.iter().zip(&plan.half) {
+                    V::call(Contraction {
+                        values: &engine.hermites[below(group.low)..],
+                        value_stride: nherm,
+                        scalars: &numbers[field::SCALARS + group.first..],
+                        scalar_stride: ket.stride,
+                        primitives: done,
+                        columns,
+                        scalar_count: group.count,
+                        out: &mut half[start..],
+                        accumulate: k > 0,
+                    });
+                }
             }
             k += done;
             if done < batch {
@@ -311,25 +368,21 @@ impl QuartetEngine {
     }
 
     /// Stage 3 for `count` bra primitives from `start` on.
-    fn bra_contract(
-        &mut self,
-        plan: &QuartetPlan,
-        bra: &PairBlock,
-        start: usize,
-        count: usize,
-        accumulate: bool,
-    ) {
-        for step in &plan.steps {
-            dispatch(Contraction {
-                values: &self.half[step.from..],
-                value_stride: plan.half_len,
-                scalars: &bra.numbers[start * bra.stride + field::SCALARS + step.group.first..],
+    #[inline(always)]
+    fn bra_contract<V: Lanes>(&mut self, start: usize, count: usize) {
+        let bra = self.bra;
+        let scalars = &bra.numbers[start * bra.stride + field::SCALARS..];
+        for step in &self.plan.steps {
+            V::call(Contraction {
+                values: &self.engine.half[step.from..],
+                value_stride: self.plan.half_len,
+                scalars: &scalars[step.group.first..],
                 scalar_stride: bra.stride,
                 primitives: count,
                 columns: step.columns,
                 scalar_count: step.group.count,
-                out: &mut self.full[step.to..],
-                accumulate,
+                out: &mut self.engine.full[step.to..],
+                accumulate: start > 0,
             });
         }
     }

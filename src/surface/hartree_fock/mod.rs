@@ -1,11 +1,12 @@
 //! Hartree–Fock as a potential-energy surface.
 
+mod record;
+
 use super::{
-    IntegralCounts, PointOutcome, PointRecord, PointRequest, SeedPoint, StabilityDemand,
-    StabilityRecord, Start, Surface, SurfaceError,
+    IntegralCounts, PointOutcome, PointRequest, SeedPoint, StabilityDemand, StabilityRecord, Start,
+    Surface, SurfaceError,
 };
 use crate::basis::{Basis, Shell};
-use crate::gradient::{GradientSettings, hartree_fock_gradient};
 use crate::integrals;
 use crate::integrals::repulsion::{DirectRepulsion, RepulsionList, RepulsionSettings};
 use crate::molecule::{ElectronCountError, Molecule, nuclear};
@@ -15,9 +16,7 @@ use crate::scf::iteration::{self, Beginning, Plan, Solution, Thresholds};
 use crate::scf::orthogonal::Orthogonal;
 use crate::scf::seed::{self, Seed, SeedState};
 use crate::scf::stability::{self, CarriedVectors};
-use crate::scf::{
-    FirstDensity, Method, ScfError, ScfSettings, StopReason, guess, properties, second_order,
-};
+use crate::scf::{FirstDensity, Method, ScfError, ScfSettings, StopReason, guess, second_order};
 use nalgebra::{DMatrix, Vector3};
 use std::time::Instant;
 
@@ -102,7 +101,7 @@ impl HartreeFock {
     ///
     /// # Errors
     /// [`SurfaceError::Electrons`] when charge and multiplicity do not fit, [`SurfaceError::OpenShell`] for RHF with unpaired
-    /// electrons, [`SurfaceError::TooFewFunctions`] when the basis cannot hold the electrons.
+    /// electrons, [`SurfaceError::TooFewFunctions`] when the basis cannot hold the electrons, [`SurfaceError::Eigenproblem`].
     pub fn new(
         molecule: &Molecule,
         shells_of_atom: Vec<Vec<Shell>>,
@@ -411,116 +410,6 @@ impl HartreeFock {
             }
         }
     }
-
-    fn record(
-        &self,
-        geometry: &Geometry,
-        field: &Field<'_>,
-        settled: &Settled,
-    ) -> Result<PointRecord, SurfaceError> {
-        let evaluation = &settled.solution.evaluation;
-        let finite = settled.solution.stop != StopReason::NotFinite;
-        let densities = field.densities(&evaluation.occupied);
-        let total = densities.iter().fold(
-            DMatrix::zeros(geometry.basis.len(), geometry.basis.len()),
-            |sum, p| sum + p,
-        ) * field.occupation().weight();
-        let atoms = geometry.molecule.atoms.len();
-        let places = geometry.basis.function_atoms();
-        let charges = |populations: Vec<f64>| -> Vec<f64> {
-            geometry
-                .molecule
-                .atoms
-                .iter()
-                .zip(populations)
-                .map(|(atom, population)| atom.charge() - population)
-                .collect()
-        };
-        let mulliken = properties::mulliken_populations(&total, &geometry.overlap, &places, atoms);
-        let electrons = mulliken.iter().sum();
-        let spins = match densities.as_slice() {
-            [alpha, beta] => {
-                properties::loewdin_populations(&(alpha - beta), &geometry.frame, &places, atoms)
-            }
-            _ => vec![0.0; atoms],
-        };
-        let s_squared = match evaluation.occupied.as_slice() {
-            [alpha, beta] => properties::s_squared(alpha, beta),
-            _ => 0.0,
-        };
-        let (mut homo, mut lumo): (Option<f64>, Option<f64>) = (None, None);
-        if finite {
-            for block in Canonical::of(field, evaluation)? {
-                if let Some(&top) = block.occupied_energies.iter().last() {
-                    homo = Some(homo.map_or(top, |h| h.max(top)));
-                }
-                if let Some(&bottom) = block.empty_energies.iter().next() {
-                    lumo = Some(lumo.map_or(bottom, |l| l.min(bottom)));
-                }
-            }
-        }
-        let origin = properties::charge_centre(&geometry.molecule);
-        let moments = integrals::dipole(&geometry.basis, &origin);
-        let dipole = properties::dipole(&geometry.molecule, &origin, &total, &moments);
-        let converged = settled.solution.stop == StopReason::Converged;
-        Ok(PointRecord {
-            energy: converged.then_some(evaluation.energy),
-            stop: settled.solution.stop,
-            fock_builds: settled.fock_builds,
-            all_builds: field.builds() + field.products(),
-            s_squared,
-            homo,
-            lumo,
-            dipole: dipole.into(),
-            charges_loewdin: charges(properties::loewdin_populations(
-                &total,
-                &geometry.frame,
-                &places,
-                atoms,
-            )),
-            charges_mulliken: charges(mulliken),
-            spins_loewdin: spins,
-            bond_orders: properties::bond_orders(&densities, &geometry.overlap, &places, atoms),
-            electrons,
-            commutator: evaluation.commutator,
-            kinetic: total.dot(&geometry.kinetic),
-            functions_kept: geometry.frame.kept(),
-            overlap_smallest: geometry.frame.smallest(),
-            gradient: None,
-            positions: None,
-            relaxation: None,
-            stability: settled.stability,
-            integrals: IntegralCounts::default(),
-            seconds: 0.0,
-            scf_seconds: 0.0,
-        })
-    }
-}
-
-fn gradient(geometry: &Geometry, field: &Field<'_>, evaluation: &Evaluation) -> Vec<[f64; 3]> {
-    let densities = field.densities(&evaluation.occupied);
-    let mut weighted = DMatrix::zeros(geometry.basis.len(), geometry.basis.len());
-    for (y, fock) in evaluation.occupied.iter().zip(&evaluation.focks) {
-        // tr over occupied orbitals, in whatever combination they are: Y (YᵀFY) Yᵀ.
-        let energies = y.transpose() * (fock * y);
-        weighted +=
-            geometry.frame.transform(&(y * energies * y.transpose())) * field.occupation().weight();
-    }
-    // A single block stands for both spins.
-    let (Some(alpha), Some(beta)) = (densities.first(), densities.last()) else {
-        return Vec::new();
-    };
-    hartree_fock_gradient(
-        &geometry.molecule,
-        &geometry.basis,
-        alpha,
-        beta,
-        &weighted,
-        &GradientSettings::default(),
-    )
-    .into_iter()
-    .map(Into::into)
-    .collect()
 }
 
 fn counts(counts: integrals::repulsion::IntegralCounts) -> IntegralCounts {
@@ -600,12 +489,16 @@ impl Surface for HartreeFock {
                 settled.internal = None;
             }
         }
-        let mut record = self.record(&geometry, &field, &settled)?;
+        let mut record = record::point_record(&geometry, &field, &settled)?;
         record.integrals = direct.as_ref().map_or(integrals, |d| counts(d.counts()));
         record.scf_seconds = scf_seconds;
         record.seconds = clock.elapsed().as_secs_f64();
         if request.gradient && record.energy.is_some() {
-            record.gradient = Some(gradient(&geometry, &field, &settled.solution.evaluation));
+            record.gradient = Some(record::gradient(
+                &geometry,
+                &field,
+                &settled.solution.evaluation,
+            ));
             record.seconds = clock.elapsed().as_secs_f64();
         }
         let seed = record.energy.is_some().then(|| {

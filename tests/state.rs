@@ -1,0 +1,337 @@
+//! The right electronic state at every point: clean scans stay silent, forced failures do not.
+
+use std::path::Path;
+use std::sync::atomic::AtomicBool;
+use thalweg::job::{self, JobResult, LevelResult};
+use thalweg::scan::FindingKind;
+use thalweg::scf::{FirstDensity, ScfSettings};
+use thalweg::spec::{Spec, parse};
+use thalweg::surface::{HartreeFock, PointRequest, StabilityDemand, Start, Surface};
+
+/// Energies that differ by less (hartree) belong to one solution.
+const SAME: f64 = 1e-6;
+
+fn spec(text: &str) -> Spec {
+    parse(text, Path::new("test.toml")).unwrap_or_else(|errors| panic!("{errors}"))
+}
+
+fn run(spec: &Spec) -> JobResult {
+    let pool = rayon::ThreadPoolBuilder::new()
+        .num_threads(2)
+        .build()
+        .unwrap();
+    let record = job::run(spec, &pool, &AtomicBool::new(false), &mut |_| {}).unwrap();
+    job::assemble(spec, &record).unwrap()
+}
+
+/// A spec of one level and one sweep; `extra` holds further tables.
+fn scan(zmatrix: &str, level: &str, sweep: &str, extra: &str) -> Spec {
+    spec(&format!(
+        "[molecule]\nzmatrix = \"\"\"\n{zmatrix}\n\"\"\"\n[[level]]\n{level}\n[[sweep]]\n{sweep}\n{extra}\n"
+    ))
+}
+
+/// The lowest energy that starts without a seed find at a point: atoms and core Hamiltonian, each made stable.
+fn lowest_fresh(spec: &Spec, values: &[f64]) -> f64 {
+    let level = &spec.levels[0];
+    let positions = spec.positions_at(values).unwrap();
+    [FirstDensity::Atoms, FirstDensity::CoreHamiltonian]
+        .into_iter()
+        .filter_map(|first_density| {
+            let settings = ScfSettings {
+                first_density,
+                ..ScfSettings::default()
+            };
+            let molecule = level.molecule(&spec.molecule);
+            let shells = level.shells_of_atom.clone();
+            let surface = HartreeFock::new(&molecule, shells, level.method, settings).unwrap();
+            let request = PointRequest {
+                positions: &positions,
+                coordinates: values,
+                start: Start::Fresh,
+                gradient: false,
+                stability: StabilityDemand::Leave,
+                follow: None,
+            };
+            surface
+                .evaluate(&request, &mut surface.workspace())
+                .unwrap()
+                .record
+                .energy
+        })
+        .fold(f64::INFINITY, f64::min)
+}
+
+fn kinds(level: &LevelResult) -> Vec<FindingKind> {
+    level.findings.iter().map(|f| f.kind).collect()
+}
+
+/// Twenty scans through ordinary chemistry, closed and open shells, bonds, angles and torsions.
+const CLEAN: [(&str, &str, &str); 20] = [
+    (
+        "H1\nH2 H1 0.74",
+        "method = \"rhf\"\nbasis = \"6-31g**\"",
+        "bond = [\"H1\", \"H2\"]\nfrom = 0.5\nto = 2.5\nstep = 0.1",
+    ),
+    (
+        "H1\nH2 H1 0.74",
+        "method = \"uhf\"\nbasis = \"6-31g**\"",
+        "bond = [\"H1\", \"H2\"]\nfrom = 0.5\nto = 3.0\nstep = 0.1",
+    ),
+    (
+        "F\nH F 0.91",
+        "method = \"rhf\"\nbasis = \"6-31g\"",
+        "bond = [\"F\", \"H\"]\nfrom = 0.7\nto = 2.0\nstep = 0.1",
+    ),
+    (
+        "F\nH F 0.91",
+        "method = \"uhf\"\nbasis = \"6-31g\"",
+        "bond = [\"F\", \"H\"]\nfrom = 0.7\nto = 2.7\nstep = 0.1",
+    ),
+    (
+        "Cl\nH Cl 1.27",
+        "method = \"uhf\"\nbasis = \"sto-3g\"",
+        "bond = [\"Cl\", \"H\"]\nfrom = 1.0\nto = 2.5\nstep = 0.1",
+    ),
+    (
+        "Li\nH Li 1.6",
+        "method = \"rhf\"\nbasis = \"6-31g\"",
+        "bond = [\"Li\", \"H\"]\nfrom = 1.2\nto = 2.6\nstep = 0.1",
+    ),
+    (
+        "N1\nN2 N1 1.08",
+        "method = \"rhf\"\nbasis = \"6-31g\"",
+        "bond = [\"N1\", \"N2\"]\nfrom = 0.9\nto = 1.4\nstep = 0.05",
+    ),
+    (
+        "N1\nN2 N1 1.08",
+        "method = \"uhf\"\nbasis = \"sto-3g\"",
+        "bond = [\"N1\", \"N2\"]\nfrom = 0.9\nto = 2.4\nstep = 0.1",
+    ),
+    (
+        "C\nO C 1.11",
+        "method = \"rhf\"\nbasis = \"6-31g\"",
+        "bond = [\"C\", \"O\"]\nfrom = 0.9\nto = 1.5\nstep = 0.05",
+    ),
+    (
+        "O\nH O 0.96",
+        "method = \"uhf\"\nbasis = \"6-31g\"\nmultiplicity = 2",
+        "bond = [\"O\", \"H\"]\nfrom = 0.7\nto = 2.0\nstep = 0.1",
+    ),
+    (
+        "O1\nO2 O1 1.2",
+        "method = \"uhf\"\nbasis = \"sto-3g\"\nmultiplicity = 3",
+        "bond = [\"O1\", \"O2\"]\nfrom = 1.0\nto = 1.6\nstep = 0.05",
+    ),
+    (
+        "O\nH1 O 0.95\nH2 O 0.95 H1 105",
+        "method = \"rhf\"\nbasis = \"6-31g\"",
+        "bond = [\"O\", \"H1\"]\nfrom = 0.75\nto = 1.6\nstep = 0.05",
+    ),
+    (
+        "O\nH1 O 0.95\nH2 O 0.95 H1 105",
+        "method = \"rhf\"\nbasis = \"6-31g\"",
+        "angle = [\"H1\", \"O\", \"H2\"]\nfrom = 75\nto = 180\nstep = 7.5",
+    ),
+    (
+        "O\nH1 O 0.95\nH2 O 0.95 H1 105",
+        "method = \"uhf\"\nbasis = \"sto-3g\"",
+        "bond = [\"O\", \"H1\"]\nfrom = 0.8\nto = 2.6\nstep = 0.1\nalso = [{ bond = [\"O\", \"H2\"] }]",
+    ),
+    (
+        "N\nH1 N 1.0\nH2 N 1.0 H1 107\nH3 N 1.0 H1 107 H2 114",
+        "method = \"rhf\"\nbasis = \"sto-3g\"",
+        "bond = [\"N\", \"H1\"]\nfrom = 0.8\nto = 1.6\nstep = 0.1",
+    ),
+    (
+        "C\nH1 C 1.09\nH2 C 1.09 H1 109.5\nH3 C 1.09 H1 109.5 H2 120\nH4 C 1.09 H1 109.5 H2 240",
+        "method = \"rhf\"\nbasis = \"sto-3g\"",
+        "bond = [\"C\", \"H1\"]\nfrom = 0.8\nto = 1.6\nstep = 0.1",
+    ),
+    (
+        "C\nH1 C 1.08\nH2 C 1.08 H1 120\nH3 C 1.08 H1 120 H2 180",
+        "method = \"uhf\"\nbasis = \"sto-3g\"\nmultiplicity = 2",
+        "bond = [\"C\", \"H1\"]\nfrom = 0.9\nto = 1.6\nstep = 0.1",
+    ),
+    (
+        "O1\nO2 O1 1.4\nH1 O1 0.95 O2 102\nH2 O2 0.95 O1 102 H1 115",
+        "method = \"rhf\"\nbasis = \"sto-3g\"",
+        "dihedral = [\"H1\", \"O1\", \"O2\", \"H2\"]\nfrom = 0\nto = 180\nstep = 15",
+    ),
+    (
+        "H1\nC H1 1.06\nN C 1.14 H1 180",
+        "method = \"rhf\"\nbasis = \"sto-3g\"",
+        "bond = [\"C\", \"N\"]\nfrom = 1.0\nto = 1.5\nstep = 0.05",
+    ),
+    (
+        "F\nH1 F 1.2\nH2 F 1.2 H1 180",
+        "method = \"rhf\"\nbasis = \"sto-3g\"\ncharge = -1",
+        "bond = [\"F\", \"H1\"]\nfrom = 1.0\nto = 1.6\nstep = 0.1",
+    ),
+];
+
+#[test]
+fn clean_scans_report_neither_jump_nor_hysteresis() {
+    let mut wrong = Vec::new();
+    for (number, (zmatrix, level, sweep)) in CLEAN.iter().enumerate() {
+        let result = run(&scan(zmatrix, level, sweep, ""));
+        let found = kinds(&result.levels[0]);
+        let silent = [
+            FindingKind::StateJump,
+            FindingKind::Hysteresis,
+            FindingKind::NotConverged,
+        ]
+        .iter()
+        .all(|kind| !found.contains(kind));
+        if !silent {
+            let texts: Vec<String> = result.levels[0]
+                .findings
+                .iter()
+                .map(|f| f.text.clone())
+                .collect();
+            wrong.push((number, zmatrix, texts));
+        }
+    }
+    assert!(wrong.is_empty(), "{wrong:#?}");
+}
+
+/// Scans that start on a wrong solution, cross another state, or are told to trust their seeds.
+const FORCED: [(&str, &str, &str, &str); 10] = [
+    // The core Hamiltonian of stretched F₂ fills the wrong orbitals.
+    (
+        "F1\nF2 F1 1.4",
+        "method = \"uhf\"\nbasis = \"sto-3g\"",
+        "bond = [\"F1\", \"F2\"]\nfrom = 1.2\nto = 2.4\nstep = 0.1",
+        "[walk]\nstart = \"last\"\n[scf]\nfirst_density = \"core-hamiltonian\"",
+    ),
+    // Ionic and neutral states of LiF cross far out.
+    (
+        "Li\nF Li 1.6",
+        "method = \"uhf\"\nbasis = \"sto-3g\"",
+        "bond = [\"Li\", \"F\"]\nfrom = 1.3\nto = 5.1\nstep = 0.2",
+        "",
+    ),
+    // The same walked inwards, from the neutral atoms.
+    (
+        "Li\nF Li 1.6",
+        "method = \"uhf\"\nbasis = \"sto-3g\"",
+        "bond = [\"Li\", \"F\"]\nfrom = 1.3\nto = 5.1\nstep = 0.2",
+        "[walk]\nstart = \"last\"",
+    ),
+    // A radical whose core Hamiltonian puts the hole into the wrong orbital.
+    (
+        "C\nN C 1.17",
+        "method = \"uhf\"\nbasis = \"sto-3g\"\nmultiplicity = 2",
+        "bond = [\"C\", \"N\"]\nfrom = 1.0\nto = 1.6\nstep = 0.05",
+        "[scf]\nfirst_density = \"core-hamiltonian\"",
+    ),
+    // Restricted N₂ has two solutions beyond 1.5 Å.
+    (
+        "N1\nN2 N1 1.1",
+        "method = \"rhf\"\nbasis = \"sto-3g\"",
+        "bond = [\"N1\", \"N2\"]\nfrom = 1.0\nto = 2.6\nstep = 0.1",
+        "",
+    ),
+    // N₂ from broken spin symmetry inwards.
+    (
+        "N1\nN2 N1 1.1",
+        "method = \"uhf\"\nbasis = \"sto-3g\"",
+        "bond = [\"N1\", \"N2\"]\nfrom = 0.9\nto = 2.5\nstep = 0.1",
+        "[walk]\nstart = \"last\"",
+    ),
+    // Ethylene turned: bonding and antibonding π orbitals change places at 90°.
+    (
+        "C1\nC2 C1 1.32\nH1 C1 1.08 C2 121.5\nH2 C1 1.08 C2 121.5 H1 180\nH3 C2 1.08 C1 121.5 H1 0\nH4 C2 1.08 C1 121.5 H1 180",
+        "method = \"rhf\"\nbasis = \"sto-3g\"",
+        "dihedral = [\"H1\", \"C1\", \"C2\", \"H3\"]\nfrom = 0\nto = 180\nstep = 15",
+        "",
+    ),
+    // Two hydrogen molecules pulled through a square: the occupied orbitals change symmetry there.
+    (
+        "H1\nH2 H1 1.0\nH3 H2 1.2 H1 90\nH4 H1 1.2 H2 90 H3 0",
+        "method = \"rhf\"\nbasis = \"6-31g\"",
+        "bond = [\"H1\", \"H4\"]\nfrom = 0.7\nto = 1.4\nstep = 0.1\nmoves = [\"H3\", \"H4\"]",
+        "",
+    ),
+    // Only one pass, and no test of what it finds.
+    (
+        "Li\nF Li 1.6",
+        "method = \"uhf\"\nbasis = \"sto-3g\"",
+        "bond = [\"Li\", \"F\"]\nfrom = 1.3\nto = 5.1\nstep = 0.2",
+        "[walk]\npasses = \"one\"\nseed = \"previous\"",
+    ),
+    // A step far too large for its seeds.
+    (
+        "C1\nC2 C1 1.25",
+        "method = \"rhf\"\nbasis = \"sto-3g\"",
+        "bond = [\"C1\", \"C2\"]\nfrom = 1.0\nto = 2.6\nstep = 0.2",
+        "",
+    ),
+];
+
+#[test]
+fn forced_failures_end_on_the_lower_curve_or_in_a_finding() {
+    let mut unreported = Vec::new();
+    for (number, (zmatrix, level, sweep, extra)) in FORCED.iter().enumerate() {
+        let spec = scan(zmatrix, level, sweep, extra);
+        let result = run(&spec);
+        let level = &result.levels[0];
+        for point in &level.points {
+            let named = level.findings.iter().any(|f| {
+                f.points.contains(&point.point)
+                    && f.kind != FindingKind::SpinContaminated
+                    && f.kind != FindingKind::SmallGap
+            });
+            let Some(energy) = point.record.energy else {
+                assert!(named);
+                continue;
+            };
+            let fresh = lowest_fresh(&spec, &point.values);
+            if energy > fresh + SAME && !named {
+                unreported.push((number, point.values.clone(), energy - fresh));
+            }
+        }
+    }
+    assert!(unreported.is_empty(), "{unreported:#?}");
+}
+
+#[test]
+fn charges_and_spins_of_every_point_add_up() {
+    let spec = scan(
+        "O\nH O 0.96",
+        "method = \"uhf\"\nbasis = \"6-31g\"\nmultiplicity = 2",
+        "bond = [\"O\", \"H\"]\nfrom = 0.8\nto = 2.4\nstep = 0.2",
+        "",
+    );
+    for point in &run(&spec).levels[0].points {
+        let sum = |values: &[f64]| values.iter().sum::<f64>();
+        assert!(sum(&point.record.charges_mulliken).abs() < 1e-9);
+        assert!(sum(&point.record.charges_loewdin).abs() < 1e-9);
+        assert!((sum(&point.record.spins_loewdin) - 1.0).abs() < 1e-9);
+    }
+}
+
+#[test]
+fn stretched_bonds_reach_the_separated_parts_where_spins_allow() {
+    // Far apart, UHF must equal the sum of the parts (size consistency, common practice).
+    for (zmatrix, one, other) in [
+        ("F1\nF2 F1 1.4", "F1", "F2"),
+        ("Li\nH Li 1.6", "Li", "H"),
+        ("F\nH F 0.9", "F", "H"),
+    ] {
+        let spec = scan(
+            zmatrix,
+            "method = \"uhf\"\nbasis = \"sto-3g\"",
+            &format!("bond = [\"{one}\", \"{other}\"]\nvalues = [1.4, 2.0, 3.0, 5.0, 10.0, 50.0]"),
+            "",
+        );
+        let result = run(&spec);
+        let level = &result.levels[0];
+        let far = level.points.last().and_then(|p| p.record.energy).unwrap();
+        let parts = level.limit.as_ref().and_then(|l| l.energy).unwrap();
+        assert!(
+            (far - parts).abs() < 1e-7,
+            "{zmatrix}: {far} against {parts}"
+        );
+    }
+}
