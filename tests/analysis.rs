@@ -542,6 +542,34 @@ fn a_relaxed_scan_ends_in_the_settled_molecule() {
 }
 
 #[test]
+fn a_curve_is_cut_where_unrestricted_orbitals_set_in() {
+    let sweep = "from = 0.90\nto = 1.60\nstep = 0.025";
+    let text = diatomic("N1", "N2", 1.08, sweep)
+        .replace("rhf", "uhf")
+        .replace("sto-3g", "6-31g");
+    let result = at_level(&text);
+    let level = &result.levels[0];
+    let onset = level
+        .points
+        .iter()
+        .find(|p| p.record.s_squared > 1e-3)
+        .expect("unrestricted orbitals")
+        .values[0];
+    let fit = &fit_of(&result, FitForm::Polynomial).fit;
+    assert!(fit.window.to * ANGSTROM_PER_BOHR < onset);
+    let check = fit.derivative_check.as_ref().expect("gradients");
+    assert!(check.verdict.agrees, "{}", check.verdict.text);
+    assert!((fit.force_constant - check.force_constant).abs() < CONSTANT * fit.force_constant);
+    assert!(
+        level
+            .analysis
+            .notes
+            .iter()
+            .any(|n| n.contains("second derivative of the curve jumps"))
+    );
+}
+
+#[test]
 fn ammonia_inverts_through_a_double_well_on_which_two_solvers_agree() {
     // Inversion as the torsion of one hydrogen through the plane of the others: planar at 180°.
     let result = at_level(

@@ -227,6 +227,7 @@ pub fn assemble(spec: &Spec, record: &JobRecord) -> Result<JobResult, super::Job
                 grid: &scan.grid,
                 points: &result.points,
                 findings: &result.findings,
+                pure_s_squared: pure_s_squared(spec, level),
                 stationary: record
                     .stationary
                     .iter()
@@ -289,6 +290,16 @@ fn cost(record: &JobRecord) -> Cost {
     cost
 }
 
+/// ⟨S²⟩ of the pure spin state of a level.
+fn pure_s_squared(spec: &Spec, level: &Level) -> f64 {
+    let (alpha, beta) = level
+        .molecule(&spec.molecule)
+        .electrons()
+        .unwrap_or_default();
+    let spin = 0.5 * (alpha as f64 - beta as f64);
+    spin * (spin + 1.0)
+}
+
 fn level_result(
     spec: &Spec,
     level: &Level,
@@ -298,7 +309,6 @@ fn level_result(
 ) -> LevelResult {
     let molecule = level.molecule(&spec.molecule);
     let (alpha, beta) = molecule.electrons().unwrap_or_default();
-    let spin = 0.5 * (alpha as f64 - beta as f64);
     let functions = level
         .shells_of_atom
         .iter()
@@ -315,7 +325,7 @@ fn level_result(
         coordinates: &scan.coordinates,
         kept: &kept,
         likeness,
-        pure_s_squared: spin * (spin + 1.0),
+        pure_s_squared: pure_s_squared(spec, level),
         functions,
         restricted: level.method == Method::Rhf,
     });

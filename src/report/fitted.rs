@@ -25,6 +25,11 @@ pub(super) struct Minimum<'a> {
     slopes_hartree_per_unit: Option<Vec<f64>>,
     force_constants: Option<Vec<Units>>,
     coupling_atomic_units: Option<f64>,
+    /// From the Hessian, while all other coordinates follow, and along the rigid motion.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    relaxed_force_constants: Option<Vec<Units>>,
+    #[serde(skip_serializing_if = "Option::is_none")]
+    rigid_force_constants: Option<Vec<Option<Units>>>,
     frequencies_cm1: Option<&'a [f64]>,
     intensities_km_per_mol: Option<&'a [f64]>,
     zero_point_hartree: Option<f64>,
@@ -74,6 +79,20 @@ pub(super) fn minima<'a>(result: &'a JobResult, list: &'a [MinimumResult]) -> Ve
                         .collect()
                 }),
                 coupling_atomic_units: refined.and_then(|r| r.curvature.first()?.get(1).copied()),
+                relaxed_force_constants: harmonic.map(|h| {
+                    h.relaxed
+                        .iter()
+                        .zip(&result.sweeps)
+                        .map(|(k, sweep)| constant(sweep, *k).in_units(Convention::HalfK))
+                        .collect()
+                }),
+                rigid_force_constants: harmonic.map(|h| {
+                    h.rigid
+                        .iter()
+                        .zip(&result.sweeps)
+                        .map(|(k, sweep)| k.map(|k| constant(sweep, k).in_units(Convention::HalfK)))
+                        .collect()
+                }),
                 frequencies_cm1: harmonic.map(|h| &h.wavenumbers_cm1[..]),
                 intensities_km_per_mol: harmonic.map(|h| &h.intensities_km_per_mol[..]),
                 zero_point_hartree: harmonic.map(|h| h.zero_point_hartree),

@@ -19,9 +19,31 @@ pub(super) struct Line {
     pub(super) others: Vec<f64>,
 }
 
-/// The pieces of a scan of one sweep: a curve is cut where the electronic state changes, because no smooth function
-/// runs through both sides.
-pub(super) fn of_curve(material: &Material<'_>) -> Vec<Line> {
+/// An excess of ⟨S²⟩ over that of the pure spin state below which orbitals count as not broken.
+const UNBROKEN: f64 = 1e-3;
+
+/// First points of the sides on which unrestricted orbitals have just become lower, or are so no more: energy and slope
+/// go on smoothly there, but the second derivative jumps (C. A. Coulson, I. Fischer, Phil. Mag. 40, 386 (1949)).
+pub(super) fn kinks(material: &Material<'_>) -> Vec<usize> {
+    let broken: Vec<(usize, bool)> = material
+        .points
+        .iter()
+        .filter(|p| p.record.energy.is_some())
+        .map(|p| {
+            let excess = p.record.s_squared - material.pure_s_squared;
+            (p.point, excess > UNBROKEN)
+        })
+        .collect();
+    broken
+        .windows(2)
+        .filter(|w| w[0].1 != w[1].1)
+        .map(|w| w[1].0)
+        .collect()
+}
+
+/// The pieces of a scan of one sweep: a curve is cut where the electronic state changes and before the points in
+/// `further`, because no smooth function runs through both sides.
+pub(super) fn of_curve(material: &Material<'_>, further: &[usize]) -> Vec<Line> {
     let axis = material.path().axis(0);
     let energies = material.energies();
     let jumps: Vec<usize> = material
@@ -29,6 +51,7 @@ pub(super) fn of_curve(material: &Material<'_>) -> Vec<Line> {
         .iter()
         .filter(|f| f.kind == FindingKind::StateJump)
         .filter_map(|f| f.points.iter().max().copied())
+        .chain(further.iter().copied())
         .collect();
     let mut pieces: Vec<(Vec<f64>, Vec<f64>)> = vec![Default::default()];
     for (point, (&x, energy)) in axis.iter().zip(&energies).enumerate() {

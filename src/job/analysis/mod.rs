@@ -91,6 +91,8 @@ pub(super) struct Material<'a> {
     pub(super) grid: &'a Grid,
     pub(super) points: &'a [PointResult],
     pub(super) findings: &'a [Finding],
+    /// ⟨S²⟩ of the pure spin state.
+    pub(super) pure_s_squared: f64,
     pub(super) stationary: Vec<&'a Stationary>,
 }
 
@@ -169,9 +171,24 @@ pub(super) fn analyse(material: &Material<'_>) -> LevelAnalysis {
         1 => {
             add_unrefined(material, &mut minima, &mut analysis.barriers);
             analysis.minima = minima;
-            let lines = lines::of_curve(material);
-            fits::fit_lines(material, &lines, &mut analysis);
-            spectroscopy::of_curve(material, &lines, &mut analysis);
+            let kinks = lines::kinks(material);
+            let smooth = lines::of_curve(material, &kinks);
+            fits::fit_lines(material, &smooth, &mut analysis);
+            let whole = lines::of_curve(material, &[]);
+            spectroscopy::of_curve(material, &whole, &mut analysis);
+            let sweep = &material.spec.sweeps[0];
+            let unit = if sweep.unit() == "degree" {
+                "°"
+            } else {
+                " Å"
+            };
+            for point in kinks {
+                analysis.notes.push(format!(
+                    "unrestricted orbitals set in or cease just before {}{unit}: the second derivative of the curve jumps \
+                     there, so each side is fitted by itself, and states that reach it are those of both sides",
+                    sweep.values[point]
+                ));
+            }
         }
         2 => {
             surface::add_edge(material, &mut minima);
