@@ -88,6 +88,9 @@ pub enum Repulsion<'a> {
     Direct(&'a dyn CoulombExchange),
 }
 
+/// Density matrices and the two-electron matrices made of them.
+type DirectBuild = (Vec<DMatrix<f64>>, Vec<DMatrix<f64>>);
+
 /// The mean field at one geometry: integrals, frame, and a count of the Fock builds.
 pub struct Field<'a> {
     core: DMatrix<f64>,
@@ -96,7 +99,7 @@ pub struct Field<'a> {
     nuclear: f64,
     occupation: Occupation,
     /// Density matrices and their two-electron matrices of the last direct build.
-    last: Option<(Vec<DMatrix<f64>>, Vec<DMatrix<f64>>)>,
+    last: Option<DirectBuild>,
     since_fresh: usize,
     builds: usize,
     products: usize,
