@@ -543,8 +543,8 @@ fn a_relaxed_scan_ends_in_the_settled_molecule() {
 
 #[test]
 fn a_curve_is_cut_where_unrestricted_orbitals_set_in() {
-    let sweep = "from = 0.90\nto = 1.60\nstep = 0.025";
-    let text = diatomic("N1", "N2", 1.08, sweep)
+    let sweep = "from = 0.70\nto = 2.00\nstep = 0.05";
+    let text = diatomic("F", "H", 0.92, sweep)
         .replace("rhf", "uhf")
         .replace("sto-3g", "6-31g");
     let result = at_level(&text);
