@@ -75,9 +75,9 @@ pub(super) struct ClassKey {
 }
 
 /// Highest angular momentum of a single primitive whose scalars are folded. (1 − y)^l in powers of y
-/// loses digits when it is multiplied by a large |AB|^l: about 1e-11 in an integral over a tight g and
-/// a diffuse function, at most 1e-12 for f.
-const MAX_FOLDED_L: usize = 3;
+/// loses digits when it is multiplied by a large |AB|^l: more than 1e-11 in an integral over a tight f or g and
+/// a diffuse function, at most 1e-13 for d.
+const MAX_FOLDED_L: usize = 2;
 
 impl ClassKey {
     /// Whether scalars that only single primitives determine go into the transformation.
