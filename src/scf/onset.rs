@@ -170,10 +170,11 @@ pub fn predict(
             return Ok(Some(vec![midpoint.clone(), midpoint]));
         }
         let mut direction = directions[0].clone();
-        if order > 0 && directions.len() > 1 {
-            if let Some(weights) = polynomial_weights(&at[..2], target, 1) {
-                direction = &directions[0] * weights[0] + &directions[1] * weights[1];
-            }
+        if order > 0
+            && directions.len() > 1
+            && let Some(weights) = polynomial_weights(&at[..2], target, 1)
+        {
+            direction = &directions[0] * weights[0] + &directions[1] * weights[1];
         }
         // Carried along to the new midpoint.
         let turn = orthonormalised(&(first.midpoint.transpose() * &midpoint))?;

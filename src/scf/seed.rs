@@ -316,15 +316,15 @@ pub fn predict(points: &[(&[f64], &Seed)], target: &[f64]) -> Result<Option<Pred
         order = 0;
         tangent = gammas[0].clone();
     }
-    if let Some(near_onset) = onset::predict(points, target)? {
-        if near_onset.estimate < estimate {
-            return Ok(Some(Prediction {
-                occupied: near_onset.occupied,
-                differences,
-                order: 1,
-                estimate: near_onset.estimate,
-            }));
-        }
+    if let Some(near_onset) = onset::predict(points, target)?
+        && near_onset.estimate < estimate
+    {
+        return Ok(Some(Prediction {
+            occupied: near_onset.occupied,
+            differences,
+            order: 1,
+            estimate: near_onset.estimate,
+        }));
     }
     let occupied = base
         .iter()
