@@ -66,20 +66,23 @@ pub fn run(
             .map(|()| Status::Done)
             .map_err(Failure::from),
         Command::Completions { shell } => {
-            clap_complete::generate(
-                shell,
-                &mut Arguments::command(),
-                "thalweg",
-                &mut streams.out,
-            );
-            Ok(Status::Done)
+            // The generator panics where a stream is closed; memory never is.
+            let mut text = Vec::new();
+            clap_complete::generate(shell, &mut Arguments::command(), "thalweg", &mut text);
+            streams
+                .out
+                .write_all(&text)
+                .map(|()| Status::Done)
+                .map_err(Failure::from)
         }
     };
     match result {
         Ok(status) => status,
         Err(failure) => {
             // If even stderr is gone there is nobody left to tell.
-            let _ = writeln!(streams.err, "{}", failure.message);
+            if !failure.message.is_empty() {
+                let _ = writeln!(streams.err, "{}", failure.message);
+            }
             failure.status
         }
     }
@@ -111,6 +114,13 @@ impl Failure {
 
 impl From<std::io::Error> for Failure {
     fn from(error: std::io::Error) -> Self {
+        if error.kind() == std::io::ErrorKind::BrokenPipe {
+            // The reader has seen enough.
+            return Self {
+                message: String::new(),
+                status: Status::Done,
+            };
+        }
         Self::system(error)
     }
 }

@@ -36,13 +36,13 @@ impl From<PlotError> for Failure {
 
 impl From<JobError> for Failure {
     fn from(error: JobError) -> Self {
-        if error.is_interruption() {
-            Self {
+        match error {
+            error if error.is_interruption() => Self {
                 message: error.to_string(),
                 status: Status::Interrupted,
-            }
-        } else {
-            Self::usage(error)
+            },
+            JobError::Level { .. } | JobError::Geometry { .. } => Self::usage(error),
+            JobError::Scan { .. } | JobError::Settle { .. } => Self::system(error),
         }
     }
 }
@@ -87,6 +87,14 @@ pub(super) fn report(args: &ReportArgs, streams: &mut Streams<'_>) -> Result<Sta
         spec.take_reporting_from(load(path, streams)?);
     }
     let record = record_of(lines);
+    if record.ends.len() < spec.levels.len() {
+        return Err(Failure::usage(format!(
+            "{}: the run is not complete ({} of {} levels); run `thalweg scan` on its spec first",
+            source.path().display(),
+            record.ends.len(),
+            spec.levels.len()
+        )));
+    }
     folder.create()?;
     finish(&spec, &record, &folder, &args.common, streams)
 }
@@ -116,13 +124,24 @@ fn existing(
         Occupant::Nothing => Ok(None),
         Occupant::Other => Err(FolderError::NotARun { path: path() }.into()),
         Occupant::Run => {
+            if journal::is_unwritten(&folder.journal()) {
+                return Ok(None);
+            }
             let (header, lines) = journal::read(&folder.journal())?;
             if header.fingerprint != spec.fingerprint() {
                 return Err(FolderError::OtherRun { path: path() }.into());
             }
             let record = record_of(lines);
-            let complete = record.ends.len() == spec.levels.len();
-            Ok((complete && header.version == env!("CARGO_PKG_VERSION")).then_some(record))
+            let complete = record.ends.len() == spec.levels.len()
+                && header.version == env!("CARGO_PKG_VERSION");
+            if !complete {
+                let folder = folder.path().display();
+                writeln!(
+                    streams.err,
+                    "{folder}: the run is not complete and starts again from its first point"
+                )?;
+            }
+            Ok(complete.then_some(record))
         }
     }
 }

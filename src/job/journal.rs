@@ -205,6 +205,12 @@ impl Journal {
     }
 }
 
+/// Whether a journal has no complete line yet: the program was ended before it could write one.
+#[must_use]
+pub fn is_unwritten(path: &Path) -> bool {
+    std::fs::read(path).is_ok_and(|bytes| !bytes.contains(&b'\n'))
+}
+
 /// Reads a journal whole.
 ///
 /// # Errors

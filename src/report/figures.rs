@@ -68,6 +68,18 @@ pub(super) fn axis(result: &JobResult, sweep: usize) -> Axis {
     Axis::new(format!("{} {quantity}", sweep.atoms.join("–")), unit)
 }
 
+/// An energy in the figure's unit, with as many decimals as a reader needs.
+fn energy_words(spec: &Spec, hartree: f64) -> String {
+    let unit = spec.output.energy;
+    let value = hartree * unit.per_hartree();
+    let decimals = match value.abs() {
+        v if v >= 100.0 => 1,
+        v if v >= 1.0 => 3,
+        _ => 5,
+    };
+    format!("{value:.decimals$} {}", unit.symbol())
+}
+
 fn relative(spec: &Spec, point: &PointResult, zero: f64) -> Option<f64> {
     point
         .record
@@ -120,7 +132,10 @@ fn curve_level(spec: &Spec, result: &JobResult, level: &LevelResult) -> CurveLev
             .and_then(|l| l.energy)
             .map(|e| CurveLimit {
                 energy: (e - zero) * scale,
-                text: None,
+                // The zero is a grid point, the dissociation energy counts from the refined minimum.
+                text: level
+                    .dissociation_energy()
+                    .map(|de| format!("separated parts, De {}", energy_words(spec, de))),
             }),
         onset: level.onset.map(|o| o.value),
         findings: (0..level.points.len())

@@ -64,7 +64,11 @@ fn table(text: &mut String, result: &JobResult, level: &LevelResult, unit: Energ
                 let relative = (energy - zero) * unit.per_hartree();
                 let decimals = if unit == EnergyUnit::Hartree { 6 } else { 3 };
                 let _ = write!(text, "{energy:>19.9}{relative:>14.decimals$}");
-                let _ = write!(text, "{:>10.4}{builds:>8}", point.record.s_squared);
+                let _ = write!(
+                    text,
+                    "{:>10.4}{builds:>8}",
+                    without_negative_zero(point.record.s_squared)
+                );
             }
             _ => {
                 let _ = write!(
@@ -216,4 +220,9 @@ fn cost(text: &mut String, result: &JobResult) {
 fn trim_line_ends(text: &mut String) {
     let trimmed: Vec<&str> = text.split('\n').map(str::trim_end).collect();
     *text = trimmed.join("\n");
+}
+
+/// A number that would be printed as −0.0000 as plain zero.
+fn without_negative_zero(value: f64) -> f64 {
+    if value.abs() < 5e-5 { 0.0 } else { value }
 }

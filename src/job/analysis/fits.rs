@@ -45,56 +45,80 @@ pub struct FitResult {
     pub values: Vec<f64>,
 }
 
-/// Fits every form of the spec to lines of one sweep.
-pub(super) fn fit_lines(material: &Material<'_>, lines: &[Line], analysis: &mut LevelAnalysis) {
+/// Fits every form of the spec to lines; where a form finds nothing on them, to those of `instead`.
+pub(super) fn fit_lines(
+    material: &Material<'_>,
+    lines: &[Line],
+    instead: &[Line],
+    analysis: &mut LevelAnalysis,
+) {
     for wanted in &material.spec.fits {
-        let mut found = Vec::new();
-        let mut refusal = None;
-        for line in lines {
-            let sweep = &material.spec.sweeps[line.sweep];
-            if !wanted.form.suits(sweep.kind()) {
-                continue;
-            }
-            let settings = settings(material, wanted, sweep, line);
-            let fits = fit_curve(
-                &line.x,
-                &line.energies,
-                form(wanted.form),
-                coordinate(sweep),
-                &settings,
-            );
-            match fits {
-                Ok(fits) => {
-                    found.extend(
-                        fits.fits
-                            .into_iter()
-                            .map(|fit| result(material, line, fit, &analysis.minima)),
-                    );
-                    for failure in fits.failures {
-                        let text = format!(
-                            "no {} fit of one minimum: {}",
-                            wanted.form.word(),
-                            reason(&failure, sweep)
-                        );
-                        analysis.notes.push(text);
-                    }
-                }
-                Err(error) => refusal = Some((line.sweep, error)),
-            }
+        let mut found = fit_form(material, wanted, lines, &analysis.minima);
+        if found.fits.is_empty() && !instead.is_empty() && instead != lines {
+            found = fit_form(material, wanted, instead, &analysis.minima);
         }
-        // That one piece of a curve has no minimum is worth a word only where no other has one.
-        if let (true, Some((sweep, error))) = (found.is_empty(), refusal) {
-            let sweep = &material.spec.sweeps[sweep];
-            analysis.notes.push(format!(
-                "no {} fit of the {} {}: {}",
-                wanted.form.word(),
-                sweep.kind(),
-                sweep.labels(&material.spec.molecule).join("–"),
-                reason(&error, sweep)
-            ));
-        }
-        analysis.fits.extend(found);
+        analysis.fits.extend(found.fits);
+        analysis.notes.extend(found.notes);
     }
+}
+
+/// What came of one form.
+#[derive(Default)]
+struct Found {
+    fits: Vec<FitResult>,
+    notes: Vec<String>,
+}
+
+fn fit_form(
+    material: &Material<'_>,
+    wanted: &FitSpec,
+    lines: &[Line],
+    minima: &[MinimumResult],
+) -> Found {
+    let mut found = Found::default();
+    let mut refusal = None;
+    for line in lines {
+        let sweep = &material.spec.sweeps[line.sweep];
+        if !wanted.form.suits(sweep.kind()) {
+            continue;
+        }
+        let settings = settings(material, wanted, sweep, line);
+        let fits = fit_curve(
+            &line.x,
+            &line.energies,
+            form(wanted.form),
+            coordinate(sweep),
+            &settings,
+        );
+        match fits {
+            Ok(fits) => {
+                let results = fits.fits.into_iter();
+                found
+                    .fits
+                    .extend(results.map(|fit| result(material, line, fit, minima)));
+                found.notes.extend(fits.failures.iter().map(|failure| {
+                    format!(
+                        "no {} fit of one minimum: {}",
+                        wanted.form.word(),
+                        reason(failure, sweep)
+                    )
+                }));
+            }
+            Err(error) => refusal = Some((line.sweep, error)),
+        }
+    }
+    // That one piece of a curve has no minimum is worth a word only where no other has one.
+    if let (true, Some((sweep, error))) = (found.fits.is_empty(), refusal) {
+        let sweep = &material.spec.sweeps[sweep];
+        found.notes.push(format!(
+            "no {} fit of the {} {}: {}",
+            wanted.form.word(),
+            sweep.kind(),
+            sweep.labels(&material.spec.molecule).join("–"),
+            reason(&error, sweep)
+        ));
+    }
+    found
 }
 
 /// A refusal with its place in the sweep's own unit.

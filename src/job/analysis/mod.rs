@@ -173,8 +173,9 @@ pub(super) fn analyse(material: &Material<'_>) -> LevelAnalysis {
             analysis.minima = minima;
             let kinks = lines::kinks(material);
             let smooth = lines::of_curve(material, &kinks);
-            fits::fit_lines(material, &smooth, &mut analysis);
             let whole = lines::of_curve(material, &[]);
+            // Where a minimum is too close to a kink for a fit of its side, one across it still tells its wide spread.
+            fits::fit_lines(material, &smooth, &whole, &mut analysis);
             spectroscopy::of_curve(material, &whole, &mut analysis);
             let sweep = &material.spec.sweeps[0];
             let unit = if sweep.unit() == "degree" {
@@ -185,7 +186,7 @@ pub(super) fn analyse(material: &Material<'_>) -> LevelAnalysis {
             for point in kinks {
                 analysis.notes.push(format!(
                     "unrestricted orbitals set in or cease just before {}{unit}: the second derivative of the curve jumps \
-                     there, so each side is fitted by itself, and states that reach it are those of both sides",
+                     there, so each side is fitted by itself where it holds enough points, and states that reach it are those of both sides",
                     sweep.values[point]
                 ));
             }

@@ -92,7 +92,7 @@ pub(super) fn analyse(material: &Material<'_>, analysis: &mut LevelAnalysis) {
         .flat_map(|place| [0, 1].map(|sweep| cut(material, &axes, &energies, place, sweep)))
         .flatten()
         .collect();
-    fits::fit_lines(material, &lines, analysis);
+    fits::fit_lines(material, &lines, &[], analysis);
     keep_at_their_minima(material, &places, analysis);
     valleys(material, &energies, analysis);
 }
