@@ -79,6 +79,13 @@ impl LengthUnit {
     }
 }
 
+/// A swept value as people read it: at most six decimals, none that say nothing.
+#[must_use]
+pub fn short(value: f64) -> String {
+    let text = format!("{value:.6}");
+    text.trim_end_matches('0').trim_end_matches('.').to_owned()
+}
+
 /// A unit for energies that people read; hartree inside.
 #[derive(Debug, Clone, Copy, PartialEq, Eq, Default, serde::Serialize, serde::Deserialize)]
 pub enum EnergyUnit {

@@ -237,7 +237,7 @@ fn every_broken_spec_has_its_message_and_leaves_nothing() {
         // An empty file has no line to point at.
         let place_in_file = place_in_file || name == "empty.toml";
         assert!(place_in_file, "{name}: no file:line:column in {}", ran.err);
-        assert_eq!(place.names("."), [name.clone()], "{name} left files");
+        assert_eq!(place.names("."), [name.as_str()], "{name} left files");
         messages.insert(ran.err.replace(&name, ""));
     }
     assert!(

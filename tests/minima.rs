@@ -183,6 +183,53 @@ fn val_peroxide_has_the_bond_and_the_barriers_of_the_textbook() {
     }
 }
 
+/// Ethane, eclipsed against staggered, both relaxed: 3.0 kcal/mol in RHF/6-31G* (W. J. Hehre, L. Radom, P. v. R. Schleyer,
+/// J. A. Pople, Ab Initio Molecular Orbital Theory, 1986, from memory).
+#[test]
+fn val_the_torsion_barrier_of_ethane() {
+    let ethane = |degree: f64| {
+        let rows: Vec<String> = (1..=3)
+            .map(|k| format!("H{k} C1 1.086 C2 111.2{}", turned(k, 0.0)))
+            .chain((4..=6).map(|k| {
+                format!(
+                    "H{k} C2 1.086 C1 111.2 H1 {}",
+                    degree + 120.0 * f64::from(k - 4)
+                )
+            }))
+            .collect();
+        from_zmatrix(&format!("C1\nC2 C1 1.527\n{}", rows.join("\n")))
+    };
+    let start = ethane(60.0);
+    let surface = surface(&start, "6-31G*", Method::Rhf);
+    let mut workspace = surface.workspace();
+    let mut energy = |degree: f64| {
+        let molecule = ethane(degree);
+        let held = [Held {
+            coordinate: Coordinate::Dihedral([2, 0, 1, 5]),
+            value: degree.to_radians(),
+        }];
+        let task = Task {
+            held: &held,
+            ..Task::of(&molecule)
+        };
+        let minimum = minimise(&surface, task, &MinimiseSettings::tight(), &mut workspace)
+            .expect("a geometry");
+        assert!(minimum.converged());
+        minimum.record.energy.expect("an energy")
+    };
+    let barrier = (energy(0.0) - energy(60.0)) * KCAL_PER_MOL_PER_HARTREE;
+    assert!((barrier - 3.0).abs() < 0.05, "{barrier}");
+}
+
+/// The dihedral of the k-th hydrogen of a methyl group against the first, as the rest of a z-matrix row.
+fn turned(k: i32, degree: f64) -> String {
+    if k == 1 {
+        String::new()
+    } else {
+        format!(" H1 {}", degree + 120.0 * f64::from(k - 1))
+    }
+}
+
 /// See the head of `data/minima.toml`: the remembered bond length is not where the energy is least.
 #[test]
 fn regress_the_bond_of_peroxide_in_a_polarised_basis() {

@@ -120,7 +120,7 @@ const CLEAN: [(&str, &str, &str); 20] = [
     ),
     (
         "O1\nO2 O1 1.2",
-        "method = \"uhf\"\nbasis = \"sto-3g\"\nmultiplicity = 3",
+        "method = \"uhf\"\nbasis = \"6-31g\"\nmultiplicity = 3",
         "bond = [\"O1\", \"O2\"]\nfrom = 1.0\nto = 1.6\nstep = 0.05",
     ),
     (

@@ -153,7 +153,7 @@ fn walk(
 ) -> Result<JobRecord, Failure> {
     folder.create()?;
     folder.write("spec.toml", spec.text.as_bytes())?;
-    let mut journal = Journal::create(&folder.journal(), &spec.fingerprint())?;
+    let mut journal = Journal::create(&folder.journal(), spec.fingerprint())?;
     let pool = rayon::ThreadPoolBuilder::new()
         .num_threads(common.threads.map_or(0, usize::from))
         .build()
@@ -170,10 +170,10 @@ fn walk(
                 level: *level,
                 entry: (**entry).clone(),
             })),
-            JobEvent::Limit(limit) => Some(Line::Limit(limit.clone())),
-            JobEvent::Onset(onset) => Some(Line::Onset(onset.clone())),
-            JobEvent::Stationary(found) => Some(Line::Stationary(found.clone())),
-            JobEvent::LevelDone(end) => Some(Line::Complete(end.clone())),
+            JobEvent::Limit(limit) => Some(Line::Limit((*limit).clone())),
+            JobEvent::Onset(onset) => Some(Line::Onset((*onset).clone())),
+            JobEvent::Stationary(found) => Some(Line::Stationary((*found).clone())),
+            JobEvent::LevelDone(end) => Some(Line::Complete((*end).clone())),
             JobEvent::Walk { .. } => None,
         };
         if let Some(Err(error)) = line.map(|l| journal.append(&l)) {

@@ -136,7 +136,12 @@ pub fn proposed(
         for (atoms, &charge) in parts.iter().zip(&charges) {
             let mut states = Vec::new();
             for multiplicity in multiplicities(molecule, atoms, charge) {
-                states.push(whole.part(atoms, charge, multiplicity, Method::Uhf)?);
+                match whole.part(atoms, charge, multiplicity, Method::Uhf) {
+                    Ok(part) => states.push(part),
+                    // A minimal basis has no room for the highest spins.
+                    Err(SurfaceError::TooFewFunctions { .. }) => {}
+                    Err(error) => return Err(error),
+                }
             }
             states.retain(|s| s.energy.is_some());
             candidates.push(states);

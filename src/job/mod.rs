@@ -63,7 +63,7 @@ pub enum JobError {
         /// values of the sweeps, ångström or degree
         values: Vec<f64>,
         /// what is wrong
-        source: MotionError,
+        source: Box<MotionError>,
     },
 }
 
@@ -94,13 +94,13 @@ pub enum JobEvent<'a> {
         event: &'a Event,
     },
     /// The energies of a level's separated parts are known.
-    Limit(LevelLimit),
+    Limit(&'a LevelLimit),
     /// The onset of an instability is located.
-    Onset(LevelOnset),
+    Onset(&'a LevelOnset),
     /// A stationary point of a level's curve or surface is located.
-    Stationary(LevelStationary),
+    Stationary(&'a LevelStationary),
     /// A level is complete.
-    LevelDone(LevelEnd),
+    LevelDone(&'a LevelEnd),
 }
 
 /// What a job leaves: all evaluations and how long each level took.
@@ -131,7 +131,12 @@ pub fn scan_of(spec: &Spec) -> Result<Scan, JobError> {
         let values = grid::values_at(&spec.sweeps, &grid, point);
         match spec.positions_at(&values) {
             Ok(places) => positions.push(places),
-            Err(source) => return Err(JobError::Geometry { values, source }),
+            Err(source) => {
+                return Err(JobError::Geometry {
+                    values,
+                    source: Box::new(source),
+                });
+            }
         }
         coordinates.push(values);
     }
@@ -219,7 +224,7 @@ pub fn run(
         }?;
         beside_the_walk(spec, number, &scan, pool, observer, &mut record)?;
         end.wall_seconds = before.elapsed().as_secs_f64();
-        observer(&JobEvent::LevelDone(end.clone()));
+        observer(&JobEvent::LevelDone(&end));
         record.ends.push(end);
     }
     Ok(record)
@@ -252,7 +257,7 @@ fn beside_the_walk(
             level: number,
             limit,
         };
-        observer(&JobEvent::Limit(limit.clone()));
+        observer(&JobEvent::Limit(&limit));
         record.limits.push(limit);
     }
     if level.method == Method::Rhf
@@ -262,7 +267,7 @@ fn beside_the_walk(
             level: number,
             onset,
         };
-        observer(&JobEvent::Onset(onset.clone()));
+        observer(&JobEvent::Onset(&onset));
         record.onsets.push(onset);
     }
     Ok(())
@@ -396,7 +401,7 @@ pub fn walk_level<S: Surface, U: Surface>(
         })
         .map_err(|source| failed(ScanError::Point { point: 0, source }))?;
         let found = LevelStationary { level, stationary };
-        observer(&JobEvent::Stationary(found.clone()));
+        observer(&JobEvent::Stationary(&found));
         record.stationary.push(found);
     }
     record.entries.extend(

@@ -3,7 +3,7 @@
 use super::assemble::{LevelResult, PointResult};
 use super::dissociation::Limit;
 use crate::scf::Method;
-use crate::units::KJ_PER_MOL_PER_HARTREE;
+use crate::units::{KJ_PER_MOL_PER_HARTREE, short};
 
 /// A charge of a piece below this (e) is none worth the name.
 const NEUTRAL: f64 = 0.05;
@@ -77,7 +77,11 @@ pub fn sentence(level: &LevelResult, labels: &[String]) -> Option<String> {
         .iter()
         .zip(&expected)
         .any(|(p, &charge)| (p.charge - f64::from(charge)).abs() > NEUTRAL);
-    let mut text = format!("at {distance} Å the pieces are {}. ", described.join("; "));
+    let mut text = format!(
+        "at {} Å the pieces are {}. ",
+        short(distance),
+        described.join("; ")
+    );
     let excess = format!(
         "{:.0} kJ/mol above the separated parts",
         above * KJ_PER_MOL_PER_HARTREE

@@ -129,7 +129,6 @@ fn curve_level(spec: &Spec, result: &JobResult, level: &LevelResult) -> CurveLev
                     && level.points[k].findings.iter().any(|f| f.is_ringed())
             })
             .collect(),
-        ..CurveLevel::default()
     }
 }
 

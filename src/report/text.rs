@@ -3,7 +3,7 @@
 use super::text_fits;
 use crate::job::pieces;
 use crate::job::{JobResult, LevelResult, PointResult};
-use crate::units::EnergyUnit;
+use crate::units::{EnergyUnit, short};
 use std::fmt::Write;
 
 /// Longest curve that is printed point by point.
@@ -116,7 +116,13 @@ fn summary(text: &mut String, result: &JobResult, level: &LevelResult, unit: Ene
             .sweeps
             .iter()
             .zip(&lowest.values)
-            .map(|(s, v)| format!("{v} {}", if s.unit == "angstrom" { "Å" } else { "°" }))
+            .map(|(s, v)| {
+                format!(
+                    "{} {}",
+                    short(*v),
+                    if s.unit == "angstrom" { "Å" } else { "°" }
+                )
+            })
             .collect();
         if place.is_empty() {
             let _ = writeln!(text, "energy {energy:.9} hartree");

@@ -8,6 +8,7 @@ use super::grid::Grid;
 use super::kept::Kept;
 use super::smooth;
 use crate::surface::PointRecord;
+use crate::units::short;
 
 /// Smallest cosine between occupied spaces below which neighbours are not on one state, whatever the energy does: an
 /// electron has moved to an orbital at more than 60° from its own.
@@ -62,13 +63,9 @@ impl Audited<'_> {
     /// Points in words: how many, and from where to where if they are few.
     fn places(&self, points: &[usize]) -> String {
         let place = |p: usize| {
-            let values: Vec<String> = self.coordinates[p]
+            self.coordinates[p]
                 .iter()
-                .map(|v| format!("{v:.4}"))
-                .collect();
-            values
-                .iter()
-                .map(|v| v.trim_end_matches('0').trim_end_matches('.'))
+                .map(|&v| short(v))
                 .collect::<Vec<_>>()
                 .join(", ")
         };

@@ -101,6 +101,9 @@ pub fn run<S: Surface>(
     run_keeping(surface, scan, pool, stop, observer).map(|(walked, _)| walked)
 }
 
+/// For every point what its kept solution left to start from, where there is one.
+pub type PointSeeds<S> = Vec<Option<<S as Surface>::Seed>>;
+
 /// As [`run`], and what the kept solution of every point left for calculations that start from it.
 ///
 /// # Errors
@@ -111,7 +114,7 @@ pub fn run_keeping<S: Surface>(
     pool: &ThreadPool,
     stop: &AtomicBool,
     observer: &mut dyn FnMut(&Event),
-) -> Result<(Walked, Vec<Option<S::Seed>>), ScanError> {
+) -> Result<(Walked, PointSeeds<S>), ScanError> {
     let steps = scan.plan();
     observer(&Event::Started {
         planned: steps.len(),

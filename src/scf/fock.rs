@@ -88,6 +88,9 @@ pub enum Repulsion<'a> {
     Direct(&'a dyn CoulombExchange),
 }
 
+/// Density matrices and their two-electron matrices of the last direct build.
+type LastBuild = (Vec<DMatrix<f64>>, Vec<DMatrix<f64>>);
+
 /// The mean field at one geometry: integrals, frame, and a count of the Fock builds.
 pub struct Field<'a> {
     core: DMatrix<f64>,
@@ -95,8 +98,7 @@ pub struct Field<'a> {
     repulsion: Repulsion<'a>,
     nuclear: f64,
     occupation: Occupation,
-    /// Density matrices and their two-electron matrices of the last direct build.
-    last: Option<(Vec<DMatrix<f64>>, Vec<DMatrix<f64>>)>,
+    last: Option<LastBuild>,
     since_fresh: usize,
     builds: usize,
     products: usize,

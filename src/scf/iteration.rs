@@ -273,7 +273,8 @@ pub fn converge(
         // Choice of the rung.
         let mut downhill = plan.downhill;
         let stalled = since_best >= PATIENCE;
-        let climbs = here.energy > lowest_energy + RISE && here.commutator < NEARBY;
+        // With a good seed any rise tells that carried differences mislead.
+        let climbs = here.energy > lowest_energy + RISE && (good_seed || here.commutator < NEARBY);
         match rung {
             _ if climbs => downhill = true,
             Rung::Extrapolated if good_seed => downhill |= rung_builds >= SEEDED_RUNG,

@@ -10,6 +10,7 @@ pub mod fock;
 pub mod grassmann;
 pub mod guess;
 pub mod iteration;
+pub mod onset;
 pub mod orthogonal;
 pub mod properties;
 pub mod quasi_newton;

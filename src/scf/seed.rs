@@ -8,6 +8,7 @@
 use super::ScfError;
 use super::diis::Difference;
 use super::grassmann::{exponential, logarithm, smallest_cosine};
+use super::onset;
 use super::stability::CarriedVectors;
 use nalgebra::{DMatrix, DVector};
 use serde::{Deserialize, Serialize};
@@ -42,6 +43,8 @@ pub struct SeedState {
     pub internal: Option<CarriedVectors>,
     /// Lowest eigenvectors of the triplet orbital Hessian.
     pub triplet: Option<CarriedVectors>,
+    /// Lowest eigenvalue of the internal orbital Hessian, hartree, where this very solution was tested.
+    pub lowest_eigenvalue: Option<f64>,
 }
 
 impl Seed {
@@ -127,7 +130,11 @@ pub struct Prediction {
 
 /// Weights of the points for the value at `target` of the polynomial of total degree `degree` through (or, with
 /// more points than terms, fitted to) them; nothing if the points do not determine it.
-fn polynomial_weights(points: &[&[f64]], target: &[f64], degree: usize) -> Option<Vec<f64>> {
+pub(super) fn polynomial_weights(
+    points: &[&[f64]],
+    target: &[f64],
+    degree: usize,
+) -> Option<Vec<f64>> {
     let dimensions = target.len();
     // Scaled offsets from the target keep the system well conditioned.
     let scales: Vec<f64> = (0..dimensions)
@@ -309,6 +316,16 @@ pub fn predict(points: &[(&[f64], &Seed)], target: &[f64]) -> Result<Option<Pred
         order = 0;
         tangent = gammas[0].clone();
     }
+    if let Some(near_onset) = onset::predict(points, target)?
+        && near_onset.estimate < estimate
+    {
+        return Ok(Some(Prediction {
+            occupied: near_onset.occupied,
+            differences,
+            order: 1,
+            estimate: near_onset.estimate,
+        }));
+    }
     let occupied = base
         .iter()
         .zip(&tangent)
@@ -344,6 +361,7 @@ struct StoredSeed {
     differences: Vec<Difference>,
     internal: Option<StoredVectors>,
     triplet: Option<StoredVectors>,
+    lowest_eigenvalue: Option<f64>,
 }
 
 fn store(matrices: &[DMatrix<f64>]) -> Vec<StoredMatrix> {
@@ -397,6 +415,7 @@ impl From<Seed> for StoredSeed {
             differences: state.differences.clone(),
             internal: state.internal.as_ref().map(Into::into),
             triplet: state.triplet.as_ref().map(Into::into),
+            lowest_eigenvalue: state.lowest_eigenvalue,
         }
     }
 }
@@ -409,6 +428,7 @@ impl From<StoredSeed> for Seed {
             differences: stored.differences,
             internal: stored.internal.map(Into::into),
             triplet: stored.triplet.map(Into::into),
+            lowest_eigenvalue: stored.lowest_eigenvalue,
         })
     }
 }
@@ -428,6 +448,7 @@ mod tests {
             differences: Vec::new(),
             internal: None,
             triplet: None,
+            lowest_eigenvalue: None,
         })
     }
 

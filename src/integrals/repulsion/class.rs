@@ -74,19 +74,23 @@ pub(super) struct ClassKey {
     pub(super) same_shell: bool,
 }
 
-/// Highest angular momentum of a single primitive whose scalars are folded. (1 − y)^l in powers of y
-/// loses digits when it is multiplied by a large |AB|^l: about 1e-11 in an integral over a tight g and
-/// a diffuse function, at most 1e-12 for f.
-const MAX_FOLDED_L: usize = 3;
+/// Highest angular momentum of a single primitive whose scalars are folded: with any partner, and with
+/// a partner that keeps the sum of both within the third number. (1 − y)^l in powers of y loses digits
+/// when it is multiplied by a large |AB|^l: more than 1e-11 in integrals over a tight and a diffuse f
+/// or g function, below 1e-12 within these limits.
+const FOLDED_L: [usize; 3] = [2, 3, 4];
 
 impl ClassKey {
     /// Whether scalars that only single primitives determine go into the transformation.
     fn folds(&self) -> bool {
+        let [la, lb] = [0, 1].map(|i| self.types[i].max_l());
+        let [any, some, sum] = FOLDED_L;
+        let safe = |single: usize| single <= any || (single <= some && la + lb <= sum);
         match self.contracted {
             [true, true] => false,
             [false, false] => true,
-            [true, false] => self.types[1].max_l() <= MAX_FOLDED_L,
-            [false, true] => self.types[0].max_l() <= MAX_FOLDED_L,
+            [true, false] => safe(lb),
+            [false, true] => safe(la),
         }
     }
 }

@@ -16,6 +16,7 @@ mod hermite;
 pub(in crate::integrals) mod lanes;
 mod list;
 mod pairs;
+pub mod peak;
 pub(in crate::integrals) mod primitives;
 mod products;
 mod quartets;

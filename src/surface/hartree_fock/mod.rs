@@ -508,6 +508,7 @@ impl Surface for HartreeFock {
                 differences: settled.solution.differences,
                 internal: settled.internal,
                 triplet: settled.triplet,
+                lowest_eigenvalue: settled.stability.map(|s| s.internal),
             })
         });
         Ok(PointOutcome { record, seed })

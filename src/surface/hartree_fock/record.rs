@@ -52,7 +52,7 @@ pub(super) fn point_record(
     let (mut homo, mut lumo): (Option<f64>, Option<f64>) = (None, None);
     if finite {
         for block in Canonical::of(field, evaluation)? {
-            if let Some(&top) = block.occupied_energies.iter().last() {
+            if let Some(&top) = block.occupied_energies.iter().next_back() {
                 homo = Some(homo.map_or(top, |h| h.max(top)));
             }
             if let Some(&bottom) = block.empty_energies.iter().next() {
