@@ -1,7 +1,7 @@
 //! Evaluations → results: the kept solution of every point, findings and cost.
 
 use super::analysis::{LevelAnalysis, Material, analyse};
-use super::{JobRecord, Limit, Onset, scan_of};
+use super::{JobRecord, Limit, Onset, pieces, scan_of};
 use crate::basis::Shell;
 use crate::scan::audit::{Audited, audit};
 use crate::scan::kept::keep;
@@ -220,6 +220,13 @@ pub fn assemble(spec: &Spec, record: &JobRecord) -> Result<JobResult, super::Job
             let mut result = level_result(spec, level, &scan, &entries, likeness);
             let limit = record.limits.iter().find(|l| l.level == number);
             result.limit = limit.map(|l| l.limit.clone());
+            if let Some(finding) = pieces::unreachable(&result, &labels) {
+                for &point in &finding.points {
+                    let here = result.points.iter_mut().find(|p| p.point == point);
+                    here.into_iter().for_each(|p| p.findings.push(finding.kind));
+                }
+                result.findings.push(finding);
+            }
             let onset = record.onsets.iter().find(|o| o.level == number);
             result.onset = onset.map(|o| o.onset);
             result.analysis = analyse(&Material {

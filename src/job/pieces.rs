@@ -2,6 +2,7 @@
 
 use super::assemble::{LevelResult, PointResult};
 use super::dissociation::Limit;
+use crate::scan::{Finding, FindingKind};
 use crate::scf::Method;
 use crate::units::{KJ_PER_MOL_PER_HARTREE, short};
 
@@ -38,13 +39,9 @@ pub fn pieces(limit: &Limit, point: &PointResult, labels: &[String]) -> Vec<Piec
         .collect()
 }
 
-/// What the end of a stretched bond looks like at a level, and what its dissociation energy is worth. None if the sweep
-/// does not reach far enough to tell.
-#[must_use]
-pub fn sentence(level: &LevelResult, labels: &[String]) -> Option<String> {
-    let limit = level.limit.as_ref()?;
-    let energy_of_parts = limit.energy?;
-    let far = level
+/// The point farthest out that has an energy.
+fn farthest(level: &LevelResult) -> Option<&PointResult> {
+    level
         .points
         .iter()
         .filter(|p| p.record.energy.is_some())
@@ -53,7 +50,44 @@ pub fn sentence(level: &LevelResult, labels: &[String]) -> Option<String> {
                 .first()
                 .partial_cmp(&b.values.first())
                 .unwrap_or(std::cmp::Ordering::Equal)
-        })?;
+        })
+}
+
+/// A finding where one determinant of the molecule's spin cannot become the parts in their lowest states.
+/// It belongs to the point farthest out.
+#[must_use]
+pub fn unreachable(level: &LevelResult, labels: &[String]) -> Option<Finding> {
+    let limit = level.limit.as_ref()?;
+    let below = limit.energy? - limit.unreachable?;
+    let far = farthest(level)?;
+    let parts: Vec<String> = limit
+        .parts
+        .iter()
+        .map(|p| {
+            let names: Vec<&str> = p.atoms.iter().map(|&a| labels[a].as_str()).collect();
+            format!("{} with multiplicity {}", names.join("+"), p.multiplicity)
+        })
+        .collect();
+    Some(Finding {
+        kind: FindingKind::UnreachableParts,
+        points: vec![far.point],
+        text: format!(
+            "the parts in their lowest states lie {:.0} kJ/mol below those that one determinant of this spin can reach \
+             ({}): their spin projections do not add up to the molecule's. The curve cannot end there, and its \
+             dissociation energy is that of the higher parts",
+            below * KJ_PER_MOL_PER_HARTREE,
+            parts.join("; ")
+        ),
+    })
+}
+
+/// What the end of a stretched bond looks like at a level, and what its dissociation energy is worth. None if the sweep
+/// does not reach far enough to tell.
+#[must_use]
+pub fn sentence(level: &LevelResult, labels: &[String]) -> Option<String> {
+    let limit = level.limit.as_ref()?;
+    let energy_of_parts = limit.energy?;
+    let far = farthest(level)?;
     let distance = *far.values.first()?;
     if distance < FAR_ANGSTROM {
         return None;

@@ -20,6 +20,8 @@ pub enum FindingKind {
     SmallGap,
     /// Near-dependent combinations of basis functions were dropped.
     NearDependentBasis,
+    /// The lowest states of the separated parts cannot be reached by one determinant of the molecule's spin.
+    UnreachableParts,
 }
 
 impl FindingKind {
@@ -34,14 +36,18 @@ impl FindingKind {
             Self::SpinContaminated => "spin-contaminated",
             Self::SmallGap => "small-gap",
             Self::NearDependentBasis => "near-dependent-basis",
+            Self::UnreachableParts => "unreachable-parts",
         }
     }
 
     /// Whether it casts doubt on a single point's place on the curve, so that the point is ringed on figures. Spin
-    /// contamination and an instability that the method was asked to ignore belong to whole regions.
+    /// contamination, an instability that the method was asked to ignore and a limit out of reach belong to whole regions.
     #[must_use]
     pub fn is_ringed(self) -> bool {
-        !matches!(self, Self::SpinContaminated | Self::Unstable)
+        !matches!(
+            self,
+            Self::SpinContaminated | Self::Unstable | Self::UnreachableParts
+        )
     }
 }
 

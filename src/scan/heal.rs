@@ -28,7 +28,9 @@ pub(super) fn heal<S: Surface>(
             continue;
         };
         let known = best.entry(entry.point).or_insert((energy, entry.order));
-        if (energy - known.0).abs() > SAME_SOLUTION {
+        let differs = (energy - known.0).abs() > SAME_SOLUTION;
+        // A fresh start that ends higher leaves nothing to spread.
+        if differs && (entry.pass != Pass::Probe || energy < known.0) {
             disputed.insert(entry.point);
         }
         if energy < known.0 - SAME_SOLUTION {

@@ -79,6 +79,8 @@ fn followed<'a>(list: &[&'a Entry]) -> Option<Kept<'a>> {
 /// Lowest energy among solutions other than that of energy `kept`.
 fn other(list: &[&Entry], kept: f64) -> Option<f64> {
     list.iter()
+        // That a fresh start ends higher than the walk says nothing about the walk.
+        .filter(|e| e.pass != Pass::Probe)
         .filter_map(|e| e.record.energy)
         .filter(|e| (e - kept).abs() > SAME_SOLUTION)
         .min_by(f64::total_cmp)

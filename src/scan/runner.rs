@@ -7,7 +7,7 @@ use super::event::{Entry, Event, Likeness};
 use super::heal;
 use super::kept::keep;
 use super::settings::{Passes, StateChoice, WalkSettings};
-use super::walk::{self, Pass, Step};
+use super::walk::{self, Extras, Pass, Step};
 use crate::surface::{Surface, SurfaceError};
 use nalgebra::Vector3;
 use rayon::ThreadPool;
@@ -47,12 +47,13 @@ impl Scan {
     /// The steps of the walk, healing not counted.
     #[must_use]
     pub fn plan(&self) -> Vec<Step> {
-        walk::plan(
-            &self.grid,
-            self.start,
-            self.settings.seed,
-            self.walks_back(),
-        )
+        let back = self.walks_back();
+        let extras = Extras {
+            back,
+            // A fresh solution of unknown stability is no better than the walk's.
+            probes: back && self.settings.stability,
+        };
+        walk::plan(&self.grid, self.start, self.settings.seed, extras)
     }
 }
 
@@ -179,7 +180,7 @@ struct Runner<'a, S: Surface> {
     /// For each step how many of those it starts from are still to come.
     waiting: Vec<AtomicUsize>,
     followers: Vec<Vec<usize>>,
-    /// For each step of the way back, the one of the way out at its point.
+    /// For each step beside the way out, the one of the way out at its point.
     out: Vec<Option<usize>>,
     failure: OnceLock<ScanError>,
 }
@@ -197,17 +198,17 @@ impl<'a, S: Surface> Runner<'a, S> {
         let out: Vec<Option<usize>> = steps
             .iter()
             .map(|s| {
-                if s.pass == Pass::Back {
-                    out_of_point[s.point]
-                } else {
+                if s.pass == Pass::Out {
                     None
+                } else {
+                    out_of_point[s.point]
                 }
             })
             .collect();
         let mut followers = vec![Vec::new(); steps.len()];
         let mut waiting = Vec::with_capacity(steps.len());
         for (k, step) in steps.iter().enumerate() {
-            // A step of the way back is compared with the way out, and waits for it too.
+            // A step beside the way out is compared with it, and waits for it too.
             let awaited = step.history.iter().copied().chain(out[k]);
             let mut awaited: Vec<usize> = awaited.collect();
             awaited.sort_unstable();
@@ -271,7 +272,10 @@ impl<'a, S: Surface> Runner<'a, S> {
                 })
             })
             .collect();
-        let before = self.out[k].and_then(|h| Some(self.solved[h].get()?.as_ref()?.energy));
+        // A fresh solution is often a saddle: only its stability test tells whether a lower one lies beside it.
+        let before = self.out[k]
+            .filter(|_| step.pass != Pass::Probe)
+            .and_then(|h| Some(self.solved[h].get()?.as_ref()?.energy));
         match self
             .evaluator
             .evaluate(step.point, step.pass, step.row, &known, before, k)

@@ -19,6 +19,8 @@ pub enum Pass {
     Out,
     /// on the way back from the far end of an arm
     Back,
+    /// at the far end of an arm without a seed: walks only find states that continue one another
+    Probe,
     /// again, from a neighbour's lower solution
     Heal,
 }
@@ -41,9 +43,19 @@ const REACH: usize = 6;
 /// Points behind that a carried density may fall back on, should the nearest not have converged.
 const FALLBACK: usize = 3;
 
-/// Plans the way out (and back, if `both`) over a grid from the point `start`.
+/// What a plan holds beside the way out.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Default)]
+pub struct Extras {
+    /// The way back.
+    pub back: bool,
+    /// Fresh starts at the far ends of the arms.
+    pub probes: bool,
+}
+
+/// Plans a walk over a grid from the point `start`. Where every point starts fresh there is nothing to add to the
+/// way out.
 #[must_use]
-pub fn plan(grid: &Grid, start: usize, seed: SeedKind, both: bool) -> Vec<Step> {
+pub fn plan(grid: &Grid, start: usize, seed: SeedKind, extras: Extras) -> Vec<Step> {
     let index = grid.index(start);
     let mut planner = Planner {
         grid,
@@ -57,8 +69,13 @@ pub fn plan(grid: &Grid, start: usize, seed: SeedKind, both: bool) -> Vec<Step> 
         [rows, columns] => planner.surface(rows, columns, index[0], index[1]),
         _ => unreachable!("the spec allows two sweeps at most"),
     }
-    if both && seed != SeedKind::Fresh {
-        planner.back(&index);
+    if seed != SeedKind::Fresh {
+        if extras.back {
+            planner.back(&index);
+        }
+        if extras.probes {
+            planner.probes(start);
+        }
     }
     planner.steps
 }
@@ -186,6 +203,24 @@ impl Planner<'_> {
         }
     }
 
+    /// A fresh start at both ends of a curve, or at the corners of a surface.
+    fn probes(&mut self, start: usize) {
+        let ends = |n: usize| if n > 1 { vec![0, n - 1] } else { vec![0] };
+        let places: Vec<(usize, usize)> = match *self.grid.shape() {
+            [n] => ends(n).into_iter().map(|i| (i, 0)).collect(),
+            [rows, columns] => ends(rows)
+                .into_iter()
+                .flat_map(|i| ends(columns).into_iter().map(move |j| (i * columns + j, i)))
+                .collect(),
+            _ => Vec::new(),
+        };
+        for (point, row) in places {
+            if point != start {
+                self.push(point, Pass::Probe, Vec::new(), row);
+            }
+        }
+    }
+
     fn arm_back(&mut self, arm: &[usize], row: usize) {
         let Some(far) = arm.first().and_then(|&p| self.out[p]) else {
             return;
@@ -204,13 +239,18 @@ mod tests {
     use super::*;
     use std::collections::BTreeSet;
 
+    const ALL: Extras = Extras {
+        back: true,
+        probes: true,
+    };
+
     fn points(steps: &[Step]) -> Vec<usize> {
         steps.iter().map(|s| s.point).collect()
     }
 
     #[test]
     fn a_curve_is_walked_outwards_from_its_start() {
-        let steps = plan(&Grid::new(&[6]), 2, SeedKind::Previous, false);
+        let steps = plan(&Grid::new(&[6]), 2, SeedKind::Previous, Extras::default());
         assert_eq!(points(&steps), [2, 3, 4, 5, 1, 0]);
         let nearest = |s: &Step| s.history.last().map(|&h| steps[h].point);
         assert_eq!(
@@ -221,7 +261,12 @@ mod tests {
 
     #[test]
     fn the_inner_arm_extrapolates_through_the_start() {
-        let steps = plan(&Grid::new(&[9]), 4, SeedKind::Extrapolated, false);
+        let steps = plan(
+            &Grid::new(&[9]),
+            4,
+            SeedKind::Extrapolated,
+            Extras::default(),
+        );
         let down = steps.iter().find(|s| s.point == 3).unwrap();
         let history: Vec<usize> = down.history.iter().map(|&h| steps[h].point).collect();
         assert_eq!(history, [8, 7, 6, 5, 4]);
@@ -229,7 +274,7 @@ mod tests {
 
     #[test]
     fn fresh_points_depend_on_nothing() {
-        let steps = plan(&Grid::new(&[4, 3]), 5, SeedKind::Fresh, true);
+        let steps = plan(&Grid::new(&[4, 3]), 5, SeedKind::Fresh, ALL);
         assert_eq!(steps.len(), 12);
         assert!(steps.iter().all(|s| s.history.is_empty()));
     }
@@ -248,7 +293,7 @@ mod tests {
             let grid = Grid::new(&shape);
             for seed in [SeedKind::Previous, SeedKind::Extrapolated, SeedKind::Fresh] {
                 for start in 0..grid.len() {
-                    let steps = plan(&grid, start, seed, true);
+                    let steps = plan(&grid, start, seed, ALL);
                     let out: Vec<usize> = steps
                         .iter()
                         .filter(|s| s.pass == Pass::Out)
@@ -259,7 +304,8 @@ mod tests {
                     assert_eq!(out[0], start);
                     for (k, step) in steps.iter().enumerate() {
                         assert!(step.history.iter().all(|&h| h < k));
-                        assert!(k == 0 || seed == SeedKind::Fresh || !step.history.is_empty());
+                        let fresh = k == 0 || seed == SeedKind::Fresh || step.pass == Pass::Probe;
+                        assert_eq!(fresh, step.history.is_empty());
                     }
                 }
             }
@@ -268,12 +314,27 @@ mod tests {
 
     #[test]
     fn the_way_back_starts_at_the_far_ends() {
-        let steps = plan(&Grid::new(&[5]), 2, SeedKind::Previous, true);
+        let steps = plan(&Grid::new(&[5]), 2, SeedKind::Previous, ALL);
         let back: Vec<usize> = steps
             .iter()
             .filter(|s| s.pass == Pass::Back)
             .map(|s| s.point)
             .collect();
         assert_eq!(back, [3, 2, 1, 2]);
+    }
+
+    #[test]
+    fn ends_and_corners_are_probed_once() {
+        let probed = |shape: &[usize], start: usize| -> Vec<usize> {
+            plan(&Grid::new(shape), start, SeedKind::Extrapolated, ALL)
+                .iter()
+                .filter(|s| s.pass == Pass::Probe)
+                .map(|s| s.point)
+                .collect()
+        };
+        assert_eq!(probed(&[7], 3), [0, 6]);
+        assert_eq!(probed(&[7], 0), [6]);
+        assert!(probed(&[1], 0).is_empty());
+        assert_eq!(probed(&[3, 4], 5), [0, 3, 8, 11]);
     }
 }
