@@ -43,7 +43,7 @@ impl Canonical {
     ) -> Result<Self, ScfError> {
         let mut inner = y.transpose() * (fock * y);
         symmetrise(&mut inner);
-        let (occupied_energies, turn) = symmetric_eigen(inner)?;
+        let (occupied_energies, turn) = symmetric_eigen(&inner)?;
         // Lifting the occupied space above everything else makes the empty orbitals the lowest.
         let lift = 10.0 + 2.0 * fock.amax() * fock.nrows() as f64;
         let fy = fock * y;

@@ -15,7 +15,7 @@ const LEAST_COSINE: f64 = 0.05;
 
 /// f(√M) for a positive symmetric matrix M, `f` given as a function of the root.
 fn root_function(gram: DMatrix<f64>, f: impl Fn(f64) -> f64) -> Result<DMatrix<f64>, ScfError> {
-    let (values, vectors) = symmetric_eigen(gram)?;
+    let (values, vectors) = symmetric_eigen(&gram)?;
     let mut scaled = vectors.clone();
     for (value, mut column) in values.iter().zip(scaled.column_iter_mut()) {
         column *= f(value.max(0.0).sqrt());
@@ -102,7 +102,7 @@ pub fn smallest_cosine(one: &DMatrix<f64>, other: &DMatrix<f64>) -> Result<f64, 
     } else {
         other.transpose() * one
     };
-    let (values, _) = symmetric_eigen(gram(&overlap))?;
+    let (values, _) = symmetric_eigen(&gram(&overlap))?;
     Ok(values[0].clamp(0.0, 1.0).sqrt())
 }
 

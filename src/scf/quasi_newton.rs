@@ -132,7 +132,7 @@ impl Frame {
     fn turned(&self, kappa: &DMatrix<f64>) -> Result<Self, ScfError> {
         let mut gram = kappa.transpose() * kappa;
         symmetrise(&mut gram);
-        let (squares, vectors) = symmetric_eigen(gram)?;
+        let (squares, vectors) = symmetric_eigen(&gram)?;
         let function = |f: &dyn Fn(f64) -> f64| {
             let mut scaled = vectors.clone();
             for (square, mut column) in squares.iter().zip(scaled.column_iter_mut()) {

@@ -193,7 +193,7 @@ pub fn lowest_eigenpairs(
         let m = space.len();
         let mut projected = DMatrix::from_fn(m, m, |i, j| inner(&space[i], &images[j]));
         symmetrise(&mut projected);
-        let (values, vectors) = symmetric_eigen(projected)?;
+        let (values, vectors) = symmetric_eigen(&projected)?;
         let combine = |from: &[Kappa], column: usize| -> Kappa {
             let mut sum = scaled(&from[0], vectors[(0, column)]);
             for (i, vector) in from.iter().enumerate().skip(1) {
