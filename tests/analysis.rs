@@ -2,12 +2,12 @@
 //! level against derivatives at the minimum.
 
 use std::path::Path;
-use std::sync::atomic::AtomicBool;
+use std::sync::atomic::{AtomicBool, Ordering};
 use thalweg::fit::Form as FitForm;
 use thalweg::job::analysis::{FitResult, PathKind};
-use thalweg::job::{self, JobRecord, JobResult, LevelSurfaces};
+use thalweg::job::{self, JobEvent, JobRecord, JobResult, LevelSurfaces};
 use thalweg::molecule::internal::Coordinate;
-use thalweg::scan::StationaryKind;
+use thalweg::scan::{Event, StationaryKind};
 use thalweg::spec::{Spec, parse};
 use thalweg::surface::model::{Form, ModelSurface};
 use thalweg::units::{
@@ -59,6 +59,39 @@ fn at_level(text: &str) -> JobResult {
     let record =
         job::run(&spec, &pool(), &AtomicBool::new(false), &mut |_| {}).expect("a finished job");
     job::assemble(&spec, &record).expect("a result")
+}
+
+#[test]
+fn a_stop_after_the_walk_ends_the_searches_too() {
+    let text = diatomic("H", "F", 0.95, "from = 0.8\nto = 1.2\nstep = 0.1");
+    let stop = AtomicBool::new(false);
+    let mut found = 0;
+    let ended = job::run(&spec(&text), &pool(), &stop, &mut |event| match event {
+        JobEvent::Walk {
+            event: Event::Finished,
+            ..
+        } => stop.store(true, Ordering::Relaxed),
+        JobEvent::Stationary(_) => found += 1,
+        _ => {}
+    });
+    assert!(ended.is_err_and(|error| error.is_interruption()));
+    assert_eq!(found, 0);
+}
+
+#[test]
+fn a_relaxed_point_counts_the_builds_of_all_its_calls() {
+    let result = at_level(
+        "[molecule]\nzmatrix = \"\"\"\nO\nH1 O 0.96\nH2 O 0.96 H1 104\n\"\"\"\n[[level]]\nmethod = \"rhf\"\nbasis = \"sto-3g\"\n\
+         [[sweep]]\nangle = [\"H1\", \"O\", \"H2\"]\nfrom = 98\nto = 106\nstep = 4\n[walk]\nothers = \"optimised\"\n",
+    );
+    for point in &result.levels[0].points {
+        let calls = point.record.relaxation.expect("relaxed").gradient_calls;
+        assert!(
+            point.record.fock_builds >= calls,
+            "{} < {calls}",
+            point.record.fock_builds
+        );
+    }
 }
 
 fn fit_of(result: &JobResult, form: FitForm) -> &FitResult {
@@ -328,9 +361,10 @@ fn a_tied_sweep_sums_constants_and_couplings_and_says_so() {
     let fit = fit_of(&result, FitForm::Polynomial);
     let sum = 2.0 * (own + coupling);
     assert!((fit.fit.force_constant - sum).abs() < 1e-3 * sum);
-    assert_eq!(fit.coordinates.len(), 2);
-    assert_eq!(fit.moves, ["H1", "H2"]);
-    assert_eq!(fit.path, PathKind::Rigid);
+    let sweep = &result.sweeps[0];
+    assert_eq!(sweep.coordinates.len(), 2);
+    assert_eq!(sweep.moves, ["H1", "H2"]);
+    assert_eq!(sweep.path, PathKind::Rigid);
     // (r₁ + r₂)/2 with all of H1 and H2 in it is the symmetric stretch, and its G element is (g₁₁ + g₁₂)/2 (Wilson,
     // Decius, Cross, appendix VI).
     let found = result.levels[0]
@@ -529,7 +563,7 @@ fn a_relaxed_scan_ends_in_the_settled_molecule() {
     assert_eq!(harmonic.wavenumbers_cm1.len(), 3);
     assert!(harmonic.wavenumbers_cm1.iter().all(|w| *w > 1000.0));
     let fit = fit_of(&result, FitForm::Polynomial);
-    assert_eq!(fit.path, PathKind::Relaxed);
+    assert_eq!(result.sweeps[0].path, PathKind::Relaxed);
     let off = (fit.fit.force_constant - harmonic.relaxed[0]).abs() / harmonic.relaxed[0];
     assert!(off < CONSTANT, "{off}");
     // Atoms that follow give way.

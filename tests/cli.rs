@@ -388,6 +388,10 @@ fn fits_minima_and_states_are_in_every_file() {
             .lines()
             .any(|l| l.starts_with("bond,H1 H2,0.71") && l.contains("kcal_per_mol_angstrom2"))
     );
+    assert!(
+        table.lines().any(|l| l.contains("mdyne_per_angstrom")
+            && l.contains(",second derivative from gradients,"))
+    );
     for file in ["vibration.png", "vibration.svg"] {
         assert!(place.path(&format!("run/{file}")).exists());
     }

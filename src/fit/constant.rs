@@ -127,6 +127,9 @@ pub struct Verdict {
 /// asked of a fitted force constant.
 pub const TOLERATED_DIFFERENCE: f64 = 3e-3;
 
+/// A spread above this confirms nothing: 3 %, ten times what is asked of a fitted force constant.
+pub const WIDE_SPREAD: f64 = 10.0 * TOLERATED_DIFFERENCE;
+
 /// Compares a fitted force constant with an independent second derivative at the minimum.
 ///
 /// `fitted` and `derivative` in the same unit; `spread` relative to `fitted`, as a fit states it.
@@ -152,7 +155,11 @@ pub fn verdict(fitted: f64, spread: f64, derivative: f64) -> Verdict {
         };
     }
     let agrees = difference.abs() <= spread.max(TOLERATED_DIFFERENCE);
-    let text = if difference.abs() <= spread {
+    let text = if difference.abs() <= spread && spread > WIDE_SPREAD {
+        format!(
+            "does not contradict: the fit differs from the second derivative by {percent}, but its spread of {spread_percent} is too wide to confirm anything"
+        )
+    } else if difference.abs() <= spread {
         format!(
             "agrees: the fit differs from the second derivative by {percent}, within its spread of {spread_percent}"
         )
@@ -208,6 +215,12 @@ mod tests {
         assert!(verdict(1.0, 0.0001, 0.998).agrees);
         assert!(!verdict(1.0, 0.001, 0.99).agrees);
         assert!(!verdict(1.0, 0.01, 0.0).agrees);
+        assert!(verdict(1.0, 0.02, 0.99).text.starts_with("agrees"));
+        assert!(
+            verdict(1.0, 0.2, 0.99)
+                .text
+                .starts_with("does not contradict")
+        );
         assert!(!verdict(1.0, 0.01, -1.0).agrees);
         assert!(verdict(1.0, 0.001, 0.99).text.contains("+1.01 %"));
     }

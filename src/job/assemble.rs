@@ -1,6 +1,6 @@
 //! Evaluations → results: the kept solution of every point, findings and cost.
 
-use super::analysis::{LevelAnalysis, Material, analyse};
+use super::analysis::{LevelAnalysis, Material, PathKind, analyse};
 use super::{JobRecord, Limit, Onset, pieces, scan_of};
 use crate::basis::Shell;
 use crate::scan::audit::{Audited, audit};
@@ -45,6 +45,13 @@ pub struct SweepResult {
     pub values: Vec<f64>,
     /// Name of its column, such as `bond_O_H1_angstrom`.
     pub column: String,
+    /// Labels of the atoms of its coordinate and of those tied to it: the force constant of the sweep sums theirs and
+    /// their couplings.
+    pub coordinates: Vec<Vec<String>>,
+    /// Labels of the atoms that move.
+    pub moves: Vec<String>,
+    /// What the other coordinates do meanwhile.
+    pub path: PathKind,
 }
 
 /// One level's results.
@@ -258,26 +265,35 @@ pub fn assemble(spec: &Spec, record: &JobRecord) -> Result<JobResult, super::Job
         sweeps: spec
             .sweeps
             .iter()
-            .map(|sweep| {
-                let coordinate = &sweep.motion.coordinate;
-                SweepResult {
-                    kind: coordinate.kind_word(),
-                    atoms: coordinate
-                        .atoms()
-                        .iter()
-                        .map(|&a| labels[a].clone())
-                        .collect(),
-                    unit: coordinate.unit_word(),
-                    values: sweep.values.clone(),
-                    column: sweep.column_name(&spec.molecule),
-                }
-            })
+            .map(|sweep| sweep_result(spec, sweep, &labels))
             .collect(),
         labels,
         grid: scan.grid,
         levels,
         cost: cost(record),
     })
+}
+
+fn sweep_result(spec: &Spec, sweep: &Sweep, labels: &[String]) -> SweepResult {
+    let named =
+        |atoms: &[usize]| -> Vec<String> { atoms.iter().map(|&a| labels[a].clone()).collect() };
+    let coordinate = &sweep.motion.coordinate;
+    let mut moving: Vec<usize> = sweep.motions().flat_map(|m| m.moves.clone()).collect();
+    moving.sort_unstable();
+    moving.dedup();
+    SweepResult {
+        kind: coordinate.kind_word(),
+        atoms: named(coordinate.atoms()),
+        unit: coordinate.unit_word(),
+        values: sweep.values.clone(),
+        column: sweep.column_name(&spec.molecule),
+        coordinates: sweep
+            .motions()
+            .map(|m| named(m.coordinate.atoms()))
+            .collect(),
+        moves: named(&moving),
+        path: PathKind::of(spec.walk.others),
+    }
 }
 
 fn cost(record: &JobRecord) -> Cost {

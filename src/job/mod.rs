@@ -23,12 +23,12 @@ use crate::scan::kept::{Kept, keep};
 use crate::scan::{Entry, Event, Grid, Others, Scan, ScanError, WalkStart, grid, runner};
 use crate::scf::Method;
 use crate::spec::{Level, Spec};
-use crate::surface::{HartreeFock, StabilityDemand, Surface};
+use crate::surface::{HartreeFock, StabilityDemand, Stoppable, Surface};
 use crate::{molecule::motion::MotionError, surface::SurfaceError};
 use journal::{LevelEnd, LevelEntry, LevelLimit, LevelOnset, LevelStationary};
 use rayon::ThreadPool;
 use stationary::{ScanPath, Search};
-use std::sync::atomic::AtomicBool;
+use std::sync::atomic::{AtomicBool, Ordering};
 use std::time::Instant;
 
 /// Why a job could not be finished.
@@ -72,13 +72,16 @@ impl JobError {
     /// Whether the job ended because it was asked to.
     #[must_use]
     pub fn is_interruption(&self) -> bool {
-        matches!(
-            self,
-            Self::Scan {
-                source: ScanError::Interrupted { .. },
-                ..
+        match self {
+            Self::Scan { source, .. } => {
+                matches!(source, ScanError::Interrupted { .. } | ScanError::Stopped)
             }
-        )
+            Self::Level { source, .. } => *source == SurfaceError::Stopped,
+            Self::Settle { source, .. } => {
+                matches!(source, MinimiseError::Surface(SurfaceError::Stopped))
+            }
+            Self::Geometry { .. } => false,
+        }
     }
 }
 
@@ -185,10 +188,14 @@ pub fn run(
             level: level.name.clone(),
             source,
         })?;
+        let surface = &Stoppable {
+            surface: &surface,
+            stop,
+        };
         let before = Instant::now();
         let mut end = match spec.walk.others {
             Others::Fixed => walk_level(
-                &LevelSurfaces::rigid(&surface),
+                &LevelSurfaces::rigid(surface),
                 spec,
                 &scan,
                 number,
@@ -201,7 +208,7 @@ pub fn run(
                 let relaxed = |settings| {
                     let swept = spec.sweeps.iter().flat_map(|s| s.motions());
                     Relaxed::new(
-                        &surface,
+                        surface,
                         &level.molecule(&spec.molecule),
                         swept.map(|m| m.coordinate).collect(),
                         settings,
@@ -211,7 +218,7 @@ pub fn run(
                     &LevelSurfaces {
                         walk: &relaxed(MinimiseSettings::default()),
                         polish: &relaxed(MinimiseSettings::tight()),
-                        unrelaxed: &surface,
+                        unrelaxed: surface,
                     },
                     spec,
                     &scan,
@@ -223,7 +230,7 @@ pub fn run(
                 )
             }
         }?;
-        beside_the_walk(spec, number, &scan, pool, observer, &mut record)?;
+        beside_the_walk(spec, number, &scan, pool, stop, observer, &mut record)?;
         end.wall_seconds = before.elapsed().as_secs_f64();
         end.peak_memory_mib = memory::peak_mib();
         observer(&JobEvent::LevelDone(&end));
@@ -238,6 +245,7 @@ fn beside_the_walk(
     number: usize,
     scan: &Scan,
     pool: &ThreadPool,
+    stop: &AtomicBool,
     observer: &mut dyn FnMut(&JobEvent<'_>),
     record: &mut JobRecord,
 ) -> Result<(), JobError> {
@@ -261,6 +269,12 @@ fn beside_the_walk(
         };
         observer(&JobEvent::Limit(&limit));
         record.limits.push(limit);
+    }
+    if stop.load(Ordering::Relaxed) {
+        return Err(JobError::Scan {
+            level: level.name.clone(),
+            source: ScanError::Stopped,
+        });
     }
     if level.method == Method::Rhf
         && let Some(onset) = pool.install(|| onset::find(spec, level, &entries, scan.start))?
@@ -401,7 +415,7 @@ pub fn walk_level<S: Surface, U: Surface>(
                 &mut stationary,
             )
         })
-        .map_err(|source| failed(ScanError::Point { point: 0, source }))?;
+        .map_err(|source| failed(ScanError::at(0, source)))?;
         let found = LevelStationary { level, stationary };
         observer(&JobEvent::Stationary(&found));
         record.stationary.push(found);

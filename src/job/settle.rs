@@ -9,7 +9,7 @@ use crate::molecule::internal::Coordinate;
 use crate::molecule::motion::Motion;
 use crate::scan::ScanError;
 use crate::spec::{Level, Spec};
-use crate::surface::{HartreeFock, PointRecord, StabilityDemand, Surface};
+use crate::surface::{HartreeFock, PointRecord, StabilityDemand, Stoppable, Surface};
 use rayon::ThreadPool;
 use serde::{Deserialize, Serialize};
 use std::sync::atomic::{AtomicBool, Ordering};
@@ -97,7 +97,7 @@ impl From<InternalConstant> for InternalRow {
 
 /// Settles the molecule at every level that `done` does not hold yet, telling `observer` of each.
 ///
-/// `leave_saddles`: saddle points are left along their imaginary modes. `stop` ends the work before the next level.
+/// `leave_saddles`: saddle points are left along their imaginary modes. `stop` ends the work before the next calculation.
 ///
 /// # Errors
 /// [`JobError`]; what was finished until then has been told.
@@ -133,6 +133,10 @@ pub fn run(
             level: level.name.clone(),
             source,
         })?;
+        let surface = Stoppable {
+            surface: &surface,
+            stop,
+        };
         let settled = settle_level(&surface, spec, number, level, leave_saddles, pool)?;
         observer(&settled);
         all.push(settled);

@@ -205,10 +205,7 @@ where
             let near = self.nearest(&candidate.place, &energies);
             let refined = self
                 .refine(&candidate, near)
-                .map_err(|source| ScanError::Point {
-                    point: near.unwrap_or(0),
-                    source,
-                })?;
+                .map_err(|source| ScanError::at(near.unwrap_or(0), source))?;
             found.extend(refined);
         }
         Ok(found)

@@ -26,7 +26,9 @@ struct Own<'a, S: Surface> {
 /// What all calls cost.
 #[derive(Debug, Clone, Copy, Default)]
 pub(super) struct Spent {
-    /// Fock builds
+    /// Fock builds of the solutions kept
+    pub(super) fock_builds: usize,
+    /// all Fock builds
     pub(super) all_builds: usize,
     /// wall time, s
     pub(super) seconds: f64,
@@ -100,6 +102,7 @@ impl<'a, S: Surface> Evaluator<'a, S> {
             follow: self.follow,
         };
         let outcome = self.surface.evaluate(&request, own.workspace)?;
+        own.spent.fock_builds += outcome.record.fock_builds;
         own.spent.all_builds += outcome.record.all_builds;
         own.spent.seconds += outcome.record.seconds;
         own.spent.scf_seconds += outcome.record.scf_seconds;

@@ -487,6 +487,7 @@ fn finish<S: Surface>(
         (None, Some(record)) => (started, record, None),
         (None, None) => return Err(MinimiseError::NotFinite),
     };
+    record.fock_builds = spent.fock_builds;
     record.all_builds = spent.all_builds;
     record.seconds = spent.seconds;
     record.scf_seconds = spent.scf_seconds;

@@ -191,7 +191,12 @@ fn dissociation(text: &mut String, result: &JobResult, level: &LevelResult, unit
         } else {
             ""
         };
-        let _ = writeln!(text, "De {value:.3} {word}{corrected}");
+        let what = if level.analysis.minima.iter().any(|m| m.interior) {
+            "De"
+        } else {
+            "energy of separation from the lowest point (no minimum lies inside the sweep)"
+        };
+        let _ = writeln!(text, "{what} {value:.3} {word}{corrected}");
         if let Some(d0) = level.dissociation_energy_from_zero_point() {
             let value = d0 * unit.per_hartree();
             let _ = writeln!(text, "D0 {value:.3} {word}{corrected}");

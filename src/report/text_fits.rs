@@ -96,6 +96,16 @@ fn stationary(text: &mut String, result: &JobResult, point: &MinimumResult) {
         ),
         None => writeln!(text),
     };
+    for (sweep, second) in result.sweeps.iter().zip(&point.second_derivatives) {
+        if point.kind == StationaryKind::Minimum {
+            let _ = writeln!(
+                text,
+                "  k along {} = {}, from gradients",
+                sweep.atoms.join("–"),
+                constants(sweep, *second)
+            );
+        }
+    }
     if let Some(harmonic) = point.refined.as_ref().and_then(|r| r.harmonic.as_ref()) {
         let waves: Vec<String> = harmonic
             .wavenumbers_cm1
@@ -139,6 +149,16 @@ fn without_negative_zero(value: f64) -> f64 {
     if value.abs() < 1e-6 { 0.0 } else { value }
 }
 
+/// A phase in degree, rounded as it is printed; −180° is 180°.
+fn phase_degrees(phase: f64) -> f64 {
+    let rounded = (10.0 * phase.to_degrees()).round() / 10.0;
+    match rounded {
+        r if r <= -180.0 => r + 360.0,
+        r if r.abs() < 0.05 => 0.0,
+        r => r,
+    }
+}
+
 /// Five significant digits.
 fn digits(value: f64) -> String {
     let size = value.abs().max(1e-99).log10().floor();
@@ -148,7 +168,7 @@ fn digits(value: f64) -> String {
 
 fn fit_lines(text: &mut String, sweep: &SweepResult, entry: &FitResult, with_terms: bool) {
     let fit = &entry.fit;
-    let names: Vec<String> = entry.coordinates.iter().map(|c| c.join("–")).collect();
+    let names: Vec<String> = sweep.coordinates.iter().map(|c| c.join("–")).collect();
     let decimals = if sweep.unit == "angstrom" { 5 } else { 3 };
     let of = match names.len() {
         1 => format!("{} {}", sweep.kind, names[0]),
@@ -157,8 +177,8 @@ fn fit_lines(text: &mut String, sweep: &SweepResult, entry: &FitResult, with_ter
             names.join(" and ")
         ),
     };
-    let path = match entry.path {
-        PathKind::Rigid => format!("rigid, moving {}", entry.moves.join(" ")),
+    let path = match sweep.path {
+        PathKind::Rigid => format!("rigid, moving {}", sweep.moves.join(" ")),
         PathKind::Relaxed => "relaxed".to_owned(),
     };
     let _ = writeln!(
@@ -186,7 +206,7 @@ fn fit_lines(text: &mut String, sweep: &SweepResult, entry: &FitResult, with_ter
                     text,
                     "  V{}/2 (1 + cos({0}q − {:.1}°)), V{0} = {kj:.3} kJ/mol",
                     term.multiple,
-                    without_negative_zero(term.phase.to_degrees())
+                    phase_degrees(term.phase)
                 );
             }
         }

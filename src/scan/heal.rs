@@ -77,10 +77,7 @@ pub(super) fn heal<S: Surface>(
                     before,
                     order,
                 )
-                .map_err(|source| ScanError::Point {
-                    point: neighbour,
-                    source,
-                })?;
+                .map_err(|source| ScanError::at(neighbour, source))?;
             observer(&Event::Evaluated(Box::new(entry.clone())));
             entries.push(entry);
             let Some(found) = found else { continue };

@@ -85,6 +85,19 @@ pub enum ScanError {
         /// evaluations planned
         planned: usize,
     },
+    /// The same, within an evaluation of several calculations or in the searches that follow the walk.
+    #[error("interrupted; what was finished is in the journal")]
+    Stopped,
+}
+
+impl ScanError {
+    /// What a surface's refusal at a point means.
+    pub(crate) fn at(point: usize, source: SurfaceError) -> Self {
+        match source {
+            SurfaceError::Stopped => Self::Stopped,
+            source => Self::Point { point, source },
+        }
+    }
 }
 
 /// Walks a surface. Every finished evaluation is told to `observer`, on the calling thread; `stop` ends the
@@ -286,10 +299,7 @@ impl<'a, S: Surface> Runner<'a, S> {
                 let _ = sender.send(entry);
             }
             Err(source) => {
-                let _ = self.failure.set(ScanError::Point {
-                    point: step.point,
-                    source,
-                });
+                let _ = self.failure.set(ScanError::at(step.point, source));
             }
         }
     }

@@ -6,11 +6,13 @@
 
 mod hartree_fock;
 pub mod model;
+mod stoppable;
 
 pub use crate::scf::StopReason;
 pub use hartree_fock::{HartreeFock, Workspace};
 use nalgebra::Vector3;
 use serde::{Deserialize, Serialize};
+pub use stoppable::Stoppable;
 
 /// A potential-energy surface at one level of theory.
 ///
@@ -175,7 +177,7 @@ pub struct PointRecord {
     pub energy: Option<f64>,
     /// Why it stopped.
     pub stop: StopReason,
-    /// Fock builds of the calculation that gave the kept solution.
+    /// Fock builds of the calculation that gave the kept solution; of a relaxed point, those of all its calls.
     pub fock_builds: usize,
     /// All Fock builds spent here, abandoned solutions and stability tests included.
     pub all_builds: usize,
@@ -253,6 +255,9 @@ pub enum SurfaceError {
         /// multiplicity asked for
         multiplicity: u32,
     },
+    /// The calculation was not begun because the program is to stop.
+    #[error("stopped on request")]
+    Stopped,
     /// The eigenvalue iteration did not end.
     #[error("a matrix of order {order} could not be diagonalised")]
     Eigenproblem {

@@ -3,7 +3,7 @@
 use super::lines::Line;
 use super::{LevelAnalysis, Material, MinimumResult};
 use crate::fit::{Coordinate, Fit, FitError, FitSettings, Form, Window, fit_curve};
-use crate::scan::Sweep;
+use crate::scan::{Others, Stationary, Sweep};
 use crate::spec::{FitForm, FitSpec, FitWindow};
 
 /// What the coordinates that are not swept do along a curve.
@@ -17,6 +17,15 @@ pub enum PathKind {
 }
 
 impl PathKind {
+    /// The path of a walk whose other coordinates do this.
+    #[must_use]
+    pub fn of(others: Others) -> Self {
+        match others {
+            Others::Fixed => Self::Rigid,
+            Others::Optimised => Self::Relaxed,
+        }
+    }
+
     /// The word used in files.
     #[must_use]
     pub fn word(self) -> &'static str {
@@ -27,20 +36,13 @@ impl PathKind {
     }
 }
 
-/// One fit and the path it belongs to.
+/// One fit and the sweep it belongs to.
 #[derive(Debug, Clone, PartialEq)]
 pub struct FitResult {
     /// Number of the sweep.
     pub sweep: usize,
     /// The fit, in atomic units.
     pub fit: Fit,
-    /// Labels of the coordinate's atoms; further ones are tied to it, and the force constant then sums theirs and
-    /// their couplings.
-    pub coordinates: Vec<Vec<String>>,
-    /// Labels of the atoms that move.
-    pub moves: Vec<String>,
-    /// Rigid or relaxed.
-    pub path: PathKind,
     /// Values of all sweeps at the fitted minimum, ångström or degree.
     pub values: Vec<f64>,
 }
@@ -200,34 +202,16 @@ fn result(
     minima: &[MinimumResult],
 ) -> FitResult {
     let sweep = &material.spec.sweeps[line.sweep];
-    let molecule = &material.spec.molecule;
     let mut values = line.others.clone();
     values[line.sweep] = sweep.motion.coordinate.to_reported(fit.equilibrium);
     if let Some(second) = material
         .minimum_at(minima, &values)
-        .and_then(|m| second_derivative(m, line.sweep, material.path_kind()))
+        .and_then(|m| m.second_derivatives.get(line.sweep).copied())
     {
         fit.check_against(second);
     }
-    let mut moving: Vec<usize> = sweep.motions().flat_map(|m| m.moves.clone()).collect();
-    moving.sort_unstable();
-    moving.dedup();
     FitResult {
         sweep: line.sweep,
-        coordinates: sweep
-            .motions()
-            .map(|m| {
-                crate::scan::sweep::labels(m.coordinate.atoms(), molecule)
-                    .into_iter()
-                    .map(str::to_owned)
-                    .collect()
-            })
-            .collect(),
-        moves: crate::scan::sweep::labels(&moving, molecule)
-            .into_iter()
-            .map(str::to_owned)
-            .collect(),
-        path: material.path_kind(),
         values,
         fit,
     }
@@ -235,12 +219,7 @@ fn result(
 
 /// The second derivative from gradients along a sweep at a minimum, hartree per bohr² or radian²: from the Hessian with
 /// all else following for a relaxed path, from differences of dE/dq for a rigid one.
-pub(super) fn second_derivative(
-    minimum: &MinimumResult,
-    sweep: usize,
-    path: PathKind,
-) -> Option<f64> {
-    let refined = minimum.refined.as_ref()?;
+pub(super) fn second_derivative(refined: &Stationary, sweep: usize, path: PathKind) -> Option<f64> {
     let relaxed = refined
         .harmonic
         .as_ref()

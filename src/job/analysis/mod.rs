@@ -14,7 +14,7 @@ pub use surface::{ForceField, Valley};
 
 use super::assemble::PointResult;
 use crate::fit::{Kind, Place, extrema};
-use crate::scan::{Finding, Grid, Others, Stationary, StationaryKind};
+use crate::scan::{Finding, Grid, Stationary, StationaryKind};
 use crate::spec::Spec;
 use nalgebra::Vector3;
 
@@ -52,6 +52,9 @@ pub struct MinimumResult {
     pub positions: Option<Vec<Vector3<f64>>>,
     /// What gradients say about it; none where it comes from the interpolated points alone.
     pub refined: Option<Stationary>,
+    /// Second derivatives along the sweeps from gradients, hartree per bohr² or radian², on the scan's own kind of path;
+    /// empty where gradients were not asked.
+    pub second_derivatives: Vec<f64>,
 }
 
 impl MinimumResult {
@@ -67,8 +70,12 @@ impl MinimumResult {
         )
     }
 
-    fn of(stationary: &Stationary) -> Option<Self> {
+    fn of(stationary: &Stationary, path: PathKind) -> Option<Self> {
+        let sweeps = 0..stationary.values.len();
         Some(Self {
+            second_derivatives: sweeps
+                .filter_map(|k| fits::second_derivative(stationary, k, path))
+                .collect(),
             kind: stationary.kind,
             interior: true,
             values: stationary.values.clone(),
@@ -114,10 +121,7 @@ impl Material<'_> {
     }
 
     fn path_kind(&self) -> PathKind {
-        match self.spec.walk.others {
-            Others::Fixed => PathKind::Rigid,
-            Others::Optimised => PathKind::Relaxed,
-        }
+        PathKind::of(self.spec.walk.others)
     }
 
     /// How far two values of a sweep are apart, bohr or radian.
@@ -164,7 +168,7 @@ pub(super) fn analyse(material: &Material<'_>) -> LevelAnalysis {
     let (mut minima, barriers): (Vec<_>, Vec<_>) = material
         .stationary
         .iter()
-        .filter_map(|s| MinimumResult::of(s))
+        .filter_map(|s| MinimumResult::of(s, material.path_kind()))
         .partition(|m| m.kind == StationaryKind::Minimum);
     analysis.barriers = barriers;
     match material.spec.sweeps.len() {
@@ -211,16 +215,18 @@ fn add_unrefined(
     barriers: &mut Vec<MinimumResult>,
 ) {
     let sweep = &material.spec.sweeps[0];
-    let energies = material.energies();
-    let (x, e): (Vec<f64>, Vec<f64>) = material
-        .path()
-        .axis(0)
-        .into_iter()
-        .zip(&energies)
-        .filter_map(|(x, e)| Some((x, (*e)?)))
-        .unzip();
-    let settings = super::stationary::curve_settings(sweep, &x, material.spec.scf.energy);
-    for found in extrema(&x, &e, &settings).unwrap_or_default() {
+    let pieces = lines::of_curve(material, &[]);
+    let last = pieces.len().saturating_sub(1);
+    let found = pieces.iter().enumerate().flat_map(|(k, piece)| {
+        let all = extrema(&piece.x, &piece.energies, &piece.settings).unwrap_or_default();
+        // Where another state goes on, a curve has no end that would mean anything.
+        all.into_iter().filter(move |found| match found.place {
+            Place::Interior => true,
+            Place::Start => k == 0,
+            Place::End => k == last,
+        })
+    });
+    for found in found {
         let interior = found.place == Place::Interior;
         let values = vec![sweep.motion.coordinate.to_reported(found.x)];
         let kind = match found.kind {
@@ -243,6 +249,7 @@ fn add_unrefined(
                 values,
                 energy: found.energy,
                 refined: None,
+                second_derivatives: Vec::new(),
             });
         }
     }

@@ -2,7 +2,7 @@
 
 use super::lines::Line;
 use super::{LevelAnalysis, Material, MinimumResult, PathKind};
-use crate::fit::{Fit, Form};
+use crate::fit::Fit;
 use crate::scan::Sweep;
 use crate::units::{ANGSTROM_PER_BOHR, ELECTRON_MASSES_PER_U, PER_CM_PER_HARTREE};
 use crate::vibration::diatomic::{
@@ -119,7 +119,8 @@ pub(super) fn of_curve(material: &Material<'_>, lines: &[Line], analysis: &mut L
     }
 }
 
-/// The fit at a minimum that knows most derivatives: a polynomial before other forms.
+/// The fit at a minimum that knows most derivatives, and of those the one whose force constant depends least on the
+/// choices made.
 fn best_fit<'a>(
     material: &Material<'_>,
     minimum: &MinimumResult,
@@ -130,11 +131,10 @@ fn best_fit<'a>(
         .iter()
         .filter(|f| f.sweep == 0 && material.is_same_place(&f.values, &minimum.values))
         .map(|f| &f.fit)
-        .min_by_key(|fit| {
-            (
-                fit.fourth_derivative.is_none(),
-                fit.form != Form::Polynomial,
-            )
+        .min_by(|a, b| {
+            let unknown = |fit: &Fit| fit.fourth_derivative.is_none();
+            let order = unknown(a).cmp(&unknown(b));
+            order.then(a.spread.total_cmp(&b.spread))
         })
 }
 
@@ -234,7 +234,7 @@ fn spectroscopy(
     let floor = minimum.energy;
     let curvature = fit
         .map(|f| f.force_constant)
-        .or_else(|| super::fits::second_derivative(minimum, 0, material.path_kind()));
+        .or_else(|| minimum.second_derivatives.first().copied());
     let omega = curvature.and_then(|k| wavenumber_per_cm(k, mass.inverse).ok());
     let dunham = fit.filter(|_| mass.exact).and_then(|fit| {
         let at = MinimumDerivatives {
@@ -245,6 +245,17 @@ fn spectroscopy(
         };
         dunham(&at, 1.0 / mass.inverse).ok()
     });
+    let from_states = if mass.exact {
+        from_states(&found, 1.0 / mass.inverse, floor)
+    } else {
+        None
+    };
+    notes.extend(
+        dunham
+            .as_ref()
+            .zip(from_states.as_ref())
+            .and_then(|(d, s)| differing(d, s)),
+    );
     let (wells, multiplets) = multiplets(&potential, &found);
     let zero_point = found
         .states
@@ -256,11 +267,7 @@ fn spectroscopy(
         minimum: minimum.values[0],
         minimum_energy: floor,
         omega_e_cm1: omega,
-        from_states: if mass.exact {
-            from_states(&found, 1.0 / mass.inverse, floor)
-        } else {
-            None
-        },
+        from_states,
         dunham,
         states: results(sweep, &found, floor),
         zero_point,
@@ -268,6 +275,26 @@ fn spectroscopy(
         multiplets,
         mass,
         notes,
+    })
+}
+
+/// Relative differences of ωe, and of the smaller constants, above which the two roads to them are told apart.
+const SAME_OMEGA: f64 = 5e-3;
+const SAME_SMALL: f64 = 0.2;
+
+/// What to know where the constants of the fitted bottom and those of the states are not the same.
+fn differing(fit: &DunhamConstants, states: &StateConstants) -> Option<String> {
+    let off = |a: f64, b: f64| (a - b).abs() / b.abs();
+    let omega = off(states.omega_e_cm1, fit.omega_e_cm1);
+    let small = off(states.omega_e_x_e_cm1, fit.omega_e_x_e_cm1)
+        .max(off(states.alpha_e_cm1, fit.alpha_e_cm1));
+    (omega > SAME_OMEGA || small > SAME_SMALL).then(|| {
+        format!(
+            "the two sets differ by {:.1} % in ωe and up to {:.0} % in the smaller constants: those from the fit describe the \
+             bottom of the well, those from the states the curve as far up as the lowest states reach",
+            100.0 * omega,
+            100.0 * small
+        )
     })
 }
 

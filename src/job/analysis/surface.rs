@@ -72,6 +72,7 @@ pub(super) fn add_edge(material: &Material<'_>, minima: &mut Vec<MinimumResult>)
             energy,
             positions: Some(point.positions.clone()),
             refined: None,
+            second_derivatives: Vec::new(),
         });
     }
 }
