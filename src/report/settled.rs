@@ -7,6 +7,7 @@ use crate::job::settle::{InternalRow, SettledLevel, basis_functions};
 use crate::minimise::MinimiseStop;
 use crate::minimise::settle::Character;
 use crate::molecule::inertia::Inertia;
+use crate::spec::counted;
 use crate::spec::{Level, Spec};
 use crate::units::ANGSTROM_PER_BOHR;
 use nalgebra::Vector3;
@@ -290,10 +291,10 @@ pub fn text(spec: &Spec, settled: &[SettledLevel]) -> String {
         };
         let _ = writeln!(
             text,
-            "\n{}   {} basis functions, {} electrons",
+            "\n{}   {}, {}",
             level.name,
-            basis_functions(level),
-            found.record.electrons.round()
+            counted(basis_functions(level), "basis function"),
+            counted(found.record.electrons.round() as usize, "electron")
         );
         write_level(&mut text, spec, found);
     }

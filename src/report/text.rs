@@ -3,6 +3,7 @@
 use super::text_fits;
 use crate::job::pieces;
 use crate::job::{JobResult, LevelResult, PointResult};
+use crate::spec::counted;
 use crate::units::{EnergyUnit, short};
 use std::fmt::Write;
 
@@ -16,8 +17,10 @@ pub fn render(result: &JobResult, unit: EnergyUnit) -> String {
     for level in &result.levels {
         let _ = writeln!(
             text,
-            "\n{}   {} basis functions, {} electrons",
-            level.name, level.basis_functions, level.electrons
+            "\n{}   {}, {}",
+            level.name,
+            counted(level.basis_functions, "basis function"),
+            counted(level.electrons, "electron")
         );
         table(&mut text, result, level, unit);
         summary(&mut text, result, level, unit);

@@ -294,7 +294,7 @@ pub(super) fn number(value: f64) -> String {
 }
 
 /// A count and its noun: 1 point, 2 points.
-pub(super) fn counted(count: usize, noun: &str) -> String {
+pub(crate) fn counted(count: usize, noun: &str) -> String {
     let plural = if count == 1 { "" } else { "s" };
     format!("{count} {noun}{plural}")
 }

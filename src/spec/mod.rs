@@ -13,6 +13,7 @@ mod resolved;
 mod schema;
 mod validate;
 
+pub(crate) use diagnostic::counted;
 pub use diagnostic::{Diagnostic, SpecErrors};
 pub use load::{MAX_BASIS_BYTES, MAX_SPEC_BYTES, load, parse};
 pub use schema::schema;
