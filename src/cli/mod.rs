@@ -3,6 +3,7 @@
 mod args;
 mod check;
 mod exit;
+mod occupied;
 mod progress;
 mod scan;
 mod settle;

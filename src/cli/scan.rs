@@ -1,32 +1,17 @@
 //! `thalweg scan` and `thalweg report`: from a spec, or from a journal, to files and a table.
 
 use super::args::{CommonArgs, ReportArgs, ScanArgs};
+use super::occupied::own_journal;
 use super::progress::Progress;
 use super::{Failure, Status, Streams, load};
 use crate::job::journal::{self, Journal, JournalError, LevelEntry, Line};
 use crate::job::{self, JobError, JobEvent, JobRecord, JobResult};
 use crate::plot::PlotError;
-use crate::report::folder::{FolderError, Occupant, RunFolder};
+use crate::report::folder::RunFolder;
 use crate::report::{self, figures};
 use crate::scan::Event;
 use crate::spec::Spec;
 use std::sync::atomic::AtomicBool;
-
-impl From<JournalError> for Failure {
-    fn from(error: JournalError) -> Self {
-        Self::system(error)
-    }
-}
-
-impl From<FolderError> for Failure {
-    fn from(error: FolderError) -> Self {
-        if error.is_refusal() {
-            Self::usage(error)
-        } else {
-            Self::system(error)
-        }
-    }
-}
 
 impl From<PlotError> for Failure {
     fn from(error: PlotError) -> Self {
@@ -99,51 +84,26 @@ pub(super) fn report(args: &ReportArgs, streams: &mut Streams<'_>) -> Result<Sta
     finish(&spec, &record, &folder, &args.common, streams)
 }
 
-/// What the folder already holds of this very run, if it is complete. A folder with anything else is refused, or moved
-/// aside if `fresh`.
+/// What the folder already holds of this very run, if it is complete.
 fn existing(
     folder: &RunFolder,
     spec: &Spec,
     fresh: bool,
     streams: &mut Streams<'_>,
 ) -> Result<Option<JobRecord>, Failure> {
-    let occupant = folder.occupant()?;
-    if fresh && occupant != Occupant::Nothing {
-        if let Some(aside) = folder.move_aside()? {
-            writeln!(
-                streams.err,
-                "moved {} to {}",
-                folder.path().display(),
-                aside.display()
-            )?;
-        }
+    let Some((header, lines)) = own_journal(folder, &spec.fingerprint(), fresh, streams)? else {
         return Ok(None);
+    };
+    let record = record_of(lines);
+    let complete = record.ends.len() == spec.levels.len() && header.is_of_this_version();
+    if !complete {
+        writeln!(
+            streams.err,
+            "{}: the run is not complete and starts again from its first point",
+            folder.path().display()
+        )?;
     }
-    let path = || folder.path().to_path_buf();
-    match occupant {
-        Occupant::Nothing => Ok(None),
-        Occupant::Other => Err(FolderError::NotARun { path: path() }.into()),
-        Occupant::Run => {
-            if journal::is_unwritten(&folder.journal()) {
-                return Ok(None);
-            }
-            let (header, lines) = journal::read(&folder.journal())?;
-            if header.fingerprint != spec.fingerprint() {
-                return Err(FolderError::OtherRun { path: path() }.into());
-            }
-            let record = record_of(lines);
-            let complete = record.ends.len() == spec.levels.len()
-                && header.version == env!("CARGO_PKG_VERSION");
-            if !complete {
-                let folder = folder.path().display();
-                writeln!(
-                    streams.err,
-                    "{folder}: the run is not complete and starts again from its first point"
-                )?;
-            }
-            Ok(complete.then_some(record))
-        }
-    }
+    Ok(complete.then_some(record))
 }
 
 fn record_of(lines: Vec<Line>) -> JobRecord {

@@ -1,11 +1,12 @@
 //! `thalweg settle`: equilibrium geometry, vibrations and force constants at each level of a spec.
 
 use super::args::{CommonArgs, SettleArgs};
+use super::occupied::own_journal;
 use super::{Failure, Status, Streams, load};
-use crate::job::journal::{self, Journal, JournalError, Line};
+use crate::job::journal::{Journal, JournalError, Line};
 use crate::job::settle::{self, SettledLevel};
 use crate::minimise::MinimiseStop;
-use crate::report::folder::{FolderError, Occupant, RunFolder};
+use crate::report::folder::RunFolder;
 use crate::report::settled;
 use crate::spec::Spec;
 use std::path::PathBuf;
@@ -81,42 +82,17 @@ fn settled_of(lines: &[Line]) -> Vec<SettledLevel> {
     settled
 }
 
-/// Levels that the folder already holds. A folder with anything else is refused, or moved aside if `fresh`.
+/// Levels that the folder already holds.
 fn existing(
     folder: &RunFolder,
     fingerprint: &str,
     fresh: bool,
     streams: &mut Streams<'_>,
 ) -> Result<Vec<SettledLevel>, Failure> {
-    let occupant = folder.occupant()?;
-    if fresh && occupant != Occupant::Nothing {
-        if let Some(aside) = folder.move_aside()? {
-            writeln!(
-                streams.err,
-                "moved {} to {}",
-                folder.path().display(),
-                aside.display()
-            )?;
-        }
-        return Ok(Vec::new());
-    }
-    let path = || folder.path().to_path_buf();
-    match occupant {
-        Occupant::Nothing => Ok(Vec::new()),
-        Occupant::Other => Err(FolderError::NotARun { path: path() }.into()),
-        Occupant::Run => {
-            let (header, lines) = journal::read(&folder.journal())?;
-            if header.fingerprint != fingerprint {
-                return Err(FolderError::OtherRun { path: path() }.into());
-            }
-            let current = header.version == env!("CARGO_PKG_VERSION");
-            Ok(if current {
-                settled_of(&lines)
-            } else {
-                Vec::new()
-            })
-        }
-    }
+    let found = own_journal(folder, fingerprint, fresh, streams)?;
+    Ok(found
+        .filter(|(header, _)| header.is_of_this_version())
+        .map_or_else(Vec::new, |(_, lines)| settled_of(&lines)))
 }
 
 fn work(

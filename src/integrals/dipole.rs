@@ -1,55 +1,32 @@
 //! Dipole integrals.
 
-use super::one_electron::{Operator, symmetric_matrices};
+use super::one_electron::symmetric_matrices;
 use super::recurrence::PrimitivePair;
+use super::separable::Separable;
 use crate::basis::Basis;
-use crate::basis::shell::cartesian_powers;
 use nalgebra::{DMatrix, Vector3};
-use std::f64::consts::PI;
 
 pub(crate) struct Dipole {
     origin: Vector3<f64>,
 }
 
-impl Operator for Dipole {
-    type Prepared = f64;
+impl Separable for Dipole {
     const COMPONENTS: usize = 3;
     const KET_RAISE: usize = 0;
 
-    fn prepare(&self, pair: &PrimitivePair, _degree: usize, volume: &mut f64) {
-        *volume = (PI / pair.exponent()).powf(1.5);
-    }
-
-    fn add(
-        &self,
-        pair: &PrimitivePair,
-        volume: &f64,
-        bra_l: usize,
-        ket_l: usize,
-        coefficient: f64,
-        out: &mut [f64],
-    ) {
-        let factor = coefficient * volume;
-        let centre = pair.centre - self.origin;
-        let size = out.len() / 3;
-        let mut place = 0;
-        for a in cartesian_powers(bra_l) {
-            for b in cartesian_powers(ket_l) {
-                let rows: [&[f64]; 3] = std::array::from_fn(|i| pair.hermite[i].row(a[i], b[i]));
-                for axis in 0..3 {
+    fn integral(&self, axis: usize, pair: &PrimitivePair, a: [usize; 3], b: [usize; 3]) -> f64 {
+        (0..3)
+            .map(|i| {
+                let row = pair.hermite[i].row(a[i], b[i]);
+                if i == axis {
                     // ∫ x Λ_0 = P, ∫ x Λ_1 = 1, all higher vanish (in units of √(π/p)).
-                    let first = rows[axis].get(1).copied().unwrap_or(0.0);
-                    let mut product = factor * (first + centre[axis] * rows[axis][0]);
-                    for other in 0..3 {
-                        if other != axis {
-                            product *= rows[other][0];
-                        }
-                    }
-                    out[axis * size + place] += product;
+                    let first = row.get(1).copied().unwrap_or(0.0);
+                    first + (pair.centre[i] - self.origin[i]) * row[0]
+                } else {
+                    row[0]
                 }
-                place += 1;
-            }
-        }
+            })
+            .product()
     }
 }
 

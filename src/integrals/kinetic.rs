@@ -1,11 +1,10 @@
 //! Kinetic-energy integrals.
 
-use super::one_electron::{Operator, symmetric_matrices};
+use super::one_electron::symmetric_matrices;
 use super::recurrence::{Hermite1d, PrimitivePair};
+use super::separable::Separable;
 use crate::basis::Basis;
-use crate::basis::shell::cartesian_powers;
 use nalgebra::DMatrix;
-use std::f64::consts::PI;
 
 pub(crate) struct Kinetic;
 
@@ -19,34 +18,14 @@ pub(crate) fn kinetic_1d(hermite: &Hermite1d, b: f64, i: usize, j: usize) -> f64
     value
 }
 
-impl Operator for Kinetic {
-    type Prepared = f64;
+impl Separable for Kinetic {
     const COMPONENTS: usize = 1;
     const KET_RAISE: usize = 2;
 
-    fn prepare(&self, pair: &PrimitivePair, _degree: usize, volume: &mut f64) {
-        *volume = (PI / pair.exponent()).powf(1.5);
-    }
-
-    fn add(
-        &self,
-        pair: &PrimitivePair,
-        volume: &f64,
-        bra_l: usize,
-        ket_l: usize,
-        coefficient: f64,
-        out: &mut [f64],
-    ) {
-        let factor = coefficient * volume;
-        let mut out = out.iter_mut();
-        for a in cartesian_powers(bra_l) {
-            for (b, out) in cartesian_powers(ket_l).zip(&mut out) {
-                let s: [f64; 3] = std::array::from_fn(|i| pair.hermite[i].row(a[i], b[i])[0]);
-                let t: [f64; 3] =
-                    std::array::from_fn(|i| kinetic_1d(&pair.hermite[i], pair.b, a[i], b[i]));
-                *out += factor * (t[0] * s[1] * s[2] + s[0] * (t[1] * s[2] + s[1] * t[2]));
-            }
-        }
+    fn integral(&self, _: usize, pair: &PrimitivePair, a: [usize; 3], b: [usize; 3]) -> f64 {
+        let s: [f64; 3] = std::array::from_fn(|i| pair.hermite[i].row(a[i], b[i])[0]);
+        let t: [f64; 3] = std::array::from_fn(|i| kinetic_1d(&pair.hermite[i], pair.b, a[i], b[i]));
+        t[0] * s[1] * s[2] + s[0] * (t[1] * s[2] + s[1] * t[2])
     }
 }
 

@@ -19,6 +19,7 @@ pub mod recurrence;
 pub mod reference;
 pub mod repulsion;
 pub mod screening;
+mod separable;
 pub mod values;
 
 pub use attraction::attraction;

@@ -1,40 +1,19 @@
 //! Overlap integrals.
 
-use super::one_electron::{Operator, matrices_between, symmetric_matrices};
+use super::one_electron::{matrices_between, symmetric_matrices};
 use super::recurrence::PrimitivePair;
+use super::separable::Separable;
 use crate::basis::Basis;
-use crate::basis::shell::cartesian_powers;
 use nalgebra::DMatrix;
-use std::f64::consts::PI;
 
 pub(crate) struct Overlap;
 
-impl Operator for Overlap {
-    type Prepared = f64;
+impl Separable for Overlap {
     const COMPONENTS: usize = 1;
     const KET_RAISE: usize = 0;
 
-    fn prepare(&self, pair: &PrimitivePair, _degree: usize, volume: &mut f64) {
-        *volume = (PI / pair.exponent()).powf(1.5);
-    }
-
-    fn add(
-        &self,
-        pair: &PrimitivePair,
-        volume: &f64,
-        bra_l: usize,
-        ket_l: usize,
-        coefficient: f64,
-        out: &mut [f64],
-    ) {
-        let factor = coefficient * volume;
-        let mut out = out.iter_mut();
-        for a in cartesian_powers(bra_l) {
-            for (b, out) in cartesian_powers(ket_l).zip(&mut out) {
-                let product: f64 = (0..3).map(|i| pair.hermite[i].row(a[i], b[i])[0]).product();
-                *out += factor * product;
-            }
-        }
+    fn integral(&self, _: usize, pair: &PrimitivePair, a: [usize; 3], b: [usize; 3]) -> f64 {
+        (0..3).map(|i| pair.hermite[i].row(a[i], b[i])[0]).product()
     }
 }
 

@@ -49,6 +49,14 @@ pub struct Header {
     pub fingerprint: String,
 }
 
+impl Header {
+    /// Whether this version of the program wrote it: another may count and compute otherwise.
+    #[must_use]
+    pub fn is_of_this_version(&self) -> bool {
+        self.version == env!("CARGO_PKG_VERSION")
+    }
+}
+
 /// A finished evaluation and the level it belongs to.
 #[derive(Debug, Clone, PartialEq, Serialize, Deserialize)]
 pub struct LevelEntry {
