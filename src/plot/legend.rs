@@ -13,8 +13,9 @@ const SAMPLE: f64 = 34.0;
 /// Longest words, px; longer ones end in an ellipsis.
 const LONGEST: f64 = 250.0;
 
-/// Radius of the dot at a computed point of a map.
-pub(super) const DOT: f64 = 0.7;
+/// Radius of the dot at a computed point of a map, and of the pale rim that shows it on dark tints.
+const DOT: f64 = 1.1;
+const DOT_RIM: f64 = 1.8;
 
 /// The sample shown beside the words.
 #[derive(Debug, Clone, Copy)]
@@ -121,13 +122,19 @@ pub(super) fn draw_sample(canvas: &mut Canvas, sample: Sample, (x, y): Px) {
             },
         ),
         Sample::Saddle => saddle(canvas, middle),
-        Sample::Dot => canvas.disc(middle, DOT, INK),
+        Sample::Dot => map_dot(canvas, middle),
     }
 }
 
 /// A tick for a point that did not converge, standing on `foot`.
 pub(super) fn failure_tick(canvas: &mut Canvas, foot: Px, colour: Rgb) {
     canvas.segment(foot, (foot.0, foot.1 - 8.0), Stroke::new(colour, 2.2));
+}
+
+/// The mark of a computed point of a map.
+pub(super) fn map_dot(canvas: &mut Canvas, centre: Px) {
+    canvas.disc(centre, DOT_RIM, PAPER);
+    canvas.disc(centre, DOT, INK);
 }
 
 /// The ring round a point with a finding.

@@ -270,7 +270,7 @@ impl SurfaceFigure {
         for (k, value) in sorted.energies.iter().enumerate() {
             let at = frame.px((sorted.x[k / sorted.y.len()], sorted.y[k % sorted.y.len()]));
             if value.is_some() && !lettered.iter().any(|r| r.grown(3.0).holds(at)) {
-                canvas.disc(at, legend::DOT, INK);
+                legend::map_dot(canvas, at);
             }
         }
     }
