@@ -22,6 +22,7 @@ use crate::surface::{
 use nalgebra::{DMatrix, DVector, Vector3};
 use rayon::ThreadPool;
 use rayon::prelude::*;
+use std::f64::consts::PI;
 
 /// Steps of Newton's method at most.
 const MOST_STEPS: usize = 12;
@@ -78,6 +79,66 @@ impl ScanPath<'_> {
     }
 }
 
+/// How near to a straight angle a place counts as one, radian.
+const STRAIGHT: f64 = 1e-6;
+
+impl ScanPath<'_> {
+    /// Whether the one sweep bends a molecule that is straight at 180°: a bend beyond is the bend before it turned about
+    /// the axis, so energies are even about 180°.
+    pub(super) fn bends_straight_molecule(&self) -> bool {
+        let [sweep] = self.sweeps else {
+            return false;
+        };
+        if sweep.kind() != "angle" {
+            return false;
+        }
+        let Ok(places) = positions_at(self.input, self.sweeps, &[180.0]) else {
+            return false;
+        };
+        let &[first, .., last] = &places[..] else {
+            return false;
+        };
+        let axis = (last - first).normalize();
+        places.iter().all(|p| {
+            let off = p - first;
+            (off - axis * off.dot(&axis)).norm() < STRAIGHT
+        })
+    }
+
+    /// Continues a curve that ends at the straight angle of a straight molecule by its mirror image; says whether it did.
+    pub(super) fn continue_straight(&self, x: &mut Vec<f64>, energies: &mut Vec<f64>) -> bool {
+        let ends = x.last().is_some_and(|last| (last - PI).abs() < STRAIGHT);
+        if !(ends && self.bends_straight_molecule()) {
+            return false;
+        }
+        let before = x.len() - 1;
+        x.extend_from_within(..before);
+        energies.extend_from_within(..before);
+        for q in &mut x[before + 1..] {
+            *q = 2.0 * PI - *q;
+        }
+        x[before + 1..].reverse();
+        energies[before + 1..].reverse();
+        true
+    }
+
+    /// Values (ångström or degree) at a place, and the sign that slopes have there: beyond the straight angle of a straight
+    /// molecule stands the mirror image of what is before it.
+    fn unfolded(&self, place: &[f64]) -> (Vec<f64>, f64) {
+        match place {
+            [q] if *q > PI && self.bends_straight_molecule() => {
+                (self.reported(&[2.0 * PI - q]), -1.0)
+            }
+            _ => (self.reported(place), 1.0),
+        }
+    }
+}
+
+/// Whether a place (bohr or radian) on a curve continued past 180° belongs to the curve itself.
+pub(super) fn is_before_straight(x: f64) -> bool {
+    x < PI + STRAIGHT
+}
+
 /// Extrema of a curve's converged points in bohr or radian, with the period of a dihedral that goes round.
 pub(super) fn curve_settings(sweep: &Sweep, x: &[f64], energy_threshold: f64) -> ExtremaSettings {
     let default = ExtremaSettings::default();
@@ -108,12 +169,13 @@ fn on_curve(
     energies: &[Option<f64>],
     energy_threshold: f64,
 ) -> Vec<Candidate> {
-    let (x, e): (Vec<f64>, Vec<f64>) = path
+    let (mut x, mut e): (Vec<f64>, Vec<f64>) = path
         .axis(0)
         .into_iter()
         .zip(energies)
         .filter_map(|(x, e)| Some((x, (*e)?)))
         .unzip();
+    let continued = path.continue_straight(&mut x, &mut e);
     let settings = curve_settings(sweep, &x, energy_threshold);
     // Points that make no curve have no extrema.
     let found = extrema(&x, &e, &settings).unwrap_or_default();
@@ -121,6 +183,7 @@ fn on_curve(
     found
         .into_iter()
         .filter(|f| f.place == Place::Interior && f.derivatives[1] != 0.0)
+        .filter(|f| !continued || is_before_straight(f.x))
         .map(|f| Candidate {
             kind: match f.kind {
                 Kind::Minimum => StationaryKind::Minimum,
@@ -241,7 +304,7 @@ where
         near: Option<(&[f64], &S::Seed)>,
         workspace: &mut S::Workspace,
     ) -> Result<Option<Answer<S::Seed>>, SurfaceError> {
-        let values = self.path.reported(place);
+        let (values, sign) = self.path.unfolded(place);
         let Ok(positions) = positions_at(self.path.input, self.path.sweeps, &values) else {
             return Ok(None);
         };
@@ -268,7 +331,7 @@ where
             Some(relaxed) => relaxed.iter().map(|&p| Vector3::from(p)).collect(),
             None => positions,
         };
-        let slopes = DVector::from_vec(slopes(self.path.sweeps, &positions, gradient));
+        let slopes = DVector::from_vec(slopes(self.path.sweeps, &positions, gradient)) * sign;
         if slopes.iter().any(|s| !s.is_finite()) {
             return Ok(None);
         }
@@ -332,7 +395,7 @@ where
         };
         Ok(Some(Stationary {
             kind: kind_of(&second, candidate.kind),
-            values: self.path.reported(&place),
+            values: self.path.unfolded(&place).0,
             positions: here.positions.iter().map(|p| [p.x, p.y, p.z]).collect(),
             slopes: here.slopes.iter().copied().collect(),
             curvature: second

@@ -7,6 +7,7 @@ use crate::job::{JobResult, LevelResult};
 use crate::plot::{Axis, CurveFit, CurveMark, SurfaceMark, VibrationFigure, VibrationState};
 use crate::scan::StationaryKind;
 use crate::spec::Spec;
+use std::f64::consts::PI;
 
 /// Points that a fitted curve is drawn with.
 const DRAWN: usize = 121;
@@ -26,7 +27,11 @@ pub(super) fn fits(
     });
     drawn
         .map(|(_, f)| {
-            let (from, to) = (f.fit.window.from, f.fit.window.to);
+            let (from, mut to) = (f.fit.window.from, f.fit.window.to);
+            if sweep.kind == "angle" {
+                // A fit may use the mirror image beyond a straight angle, which the figure does not show.
+                to = to.min(PI);
+            }
             let own_place = |g: &&FitResult| g.fit.form == f.fit.form && g.fit.model != f.fit.model;
             let name = if all.iter().any(|g| own_place(&g)) {
                 // Several wells, each with its own fit.

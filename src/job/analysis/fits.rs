@@ -94,7 +94,8 @@ fn fit_form(
         );
         match fits {
             Ok(fits) => {
-                let results = fits.fits.into_iter();
+                let own = |fit: &Fit| line.owns(fit.equilibrium);
+                let results = fits.fits.into_iter().filter(own);
                 found
                     .fits
                     .extend(results.map(|fit| result(material, line, fit, minima)));
@@ -204,6 +205,11 @@ fn result(
     let sweep = &material.spec.sweeps[line.sweep];
     let mut values = line.others.clone();
     values[line.sweep] = sweep.motion.coordinate.to_reported(fit.equilibrium);
+    if !line.owns(fit.window.to) {
+        fit.notes.push(
+            "the curve is continued past 180° by its mirror image, which a straight molecule has there".to_owned(),
+        );
+    }
     if let Some(second) = material
         .minimum_at(minima, &values)
         .and_then(|m| m.second_derivatives.get(line.sweep).copied())

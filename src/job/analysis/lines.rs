@@ -1,5 +1,6 @@
 //! Curves to be fitted: the whole of a sweep, or its pieces between changes of the electronic state.
 
+use super::super::stationary::is_before_straight;
 use super::Material;
 use crate::fit::ExtremaSettings;
 use crate::scan::FindingKind;
@@ -17,6 +18,22 @@ pub(super) struct Line {
     pub(super) settings: ExtremaSettings,
     /// Values of all sweeps along it, ångström or degree; the swept one's entry is of no meaning.
     pub(super) others: Vec<f64>,
+    /// Whether its mirror image beyond a straight angle has been added.
+    pub(super) continued: bool,
+}
+
+impl Line {
+    /// The line with its mirror image, where it ends at the straight angle of a straight molecule.
+    pub(super) fn continued(mut self, material: &Material<'_>) -> Self {
+        let path = material.path();
+        self.continued = path.continue_straight(&mut self.x, &mut self.energies);
+        self
+    }
+
+    /// Whether a place (bohr or radian) lies on the line itself and not on its mirror image.
+    pub(super) fn owns(&self, x: f64) -> bool {
+        !self.continued || is_before_straight(x)
+    }
 }
 
 /// An excess of ⟨S²⟩ over that of the pure spin state below which orbitals count as not broken.
@@ -73,6 +90,7 @@ pub(super) fn of_curve(material: &Material<'_>, further: &[usize]) -> Vec<Line> 
             x,
             energies,
             others: vec![0.0],
+            continued: false,
         })
         .collect()
 }

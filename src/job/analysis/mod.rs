@@ -176,10 +176,13 @@ pub(super) fn analyse(material: &Material<'_>) -> LevelAnalysis {
             add_unrefined(material, &mut minima, &mut analysis.barriers);
             analysis.minima = minima;
             let kinks = lines::kinks(material);
-            let smooth = lines::of_curve(material, &kinks);
             let whole = lines::of_curve(material, &[]);
+            let to_fit = |lines: Vec<lines::Line>| -> Vec<lines::Line> {
+                lines.into_iter().map(|l| l.continued(material)).collect()
+            };
+            let smooth = to_fit(lines::of_curve(material, &kinks));
             // Where a minimum is too close to a kink for a fit of its side, one across it still tells its wide spread.
-            fits::fit_lines(material, &smooth, &whole, &mut analysis);
+            fits::fit_lines(material, &smooth, &to_fit(whole.clone()), &mut analysis);
             spectroscopy::of_curve(material, &whole, &mut analysis);
             let sweep = &material.spec.sweeps[0];
             let unit = if sweep.unit() == "degree" {
@@ -215,12 +218,16 @@ fn add_unrefined(
     barriers: &mut Vec<MinimumResult>,
 ) {
     let sweep = &material.spec.sweeps[0];
-    let pieces = lines::of_curve(material, &[]);
+    let pieces: Vec<lines::Line> = lines::of_curve(material, &[])
+        .into_iter()
+        .map(|l| l.continued(material))
+        .collect();
     let last = pieces.len().saturating_sub(1);
     let found = pieces.iter().enumerate().flat_map(|(k, piece)| {
         let all = extrema(&piece.x, &piece.energies, &piece.settings).unwrap_or_default();
         // Where another state goes on, a curve has no end that would mean anything.
         all.into_iter().filter(move |found| match found.place {
+            _ if !piece.owns(found.x) => false,
             Place::Interior => true,
             Place::Start => k == 0,
             Place::End => k == last,

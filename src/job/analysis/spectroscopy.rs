@@ -13,6 +13,7 @@ use crate::vibration::{
     Potential, States, StatesSettings, VibrationError, states, wavenumber_per_cm,
 };
 use nalgebra::Vector3;
+use std::f64::consts::PI;
 
 /// The inverse mass that a coordinate vibrates with.
 #[derive(Debug, Clone, Copy, PartialEq)]
@@ -97,6 +98,14 @@ pub(super) fn of_curve(material: &Material<'_>, lines: &[Line], analysis: &mut L
     };
     let sweep = &material.spec.sweeps[0];
     let place = sweep.motion.coordinate.from_reported(minimum.values[0]);
+    if place > PI - material.half_step(0) && material.path().bends_straight_molecule() {
+        analysis.notes.push(
+            "no vibrational states: a straight molecule bends in two directions at once, and its states are not those of \
+             one coordinate"
+                .to_owned(),
+        );
+        return;
+    }
     let holds = |line: &&Line| {
         let (first, last) = (line.x[0], line.x[line.x.len() - 1]);
         line.settings.period.is_some() || (first..=last).contains(&place)

@@ -184,6 +184,7 @@ fn cut(
         material.spec.scf.energy,
     );
     (!x.is_empty()).then(|| Line {
+        continued: false,
         sweep,
         x,
         energies: cut,
