@@ -91,7 +91,7 @@ fn existing(
     fresh: bool,
     streams: &mut Streams<'_>,
 ) -> Result<Option<JobRecord>, Failure> {
-    let Some((header, lines)) = own_journal(folder, &spec.fingerprint(), fresh, streams)? else {
+    let Some((header, lines)) = own_journal(folder, spec.fingerprint(), fresh, streams)? else {
         return Ok(None);
     };
     let record = record_of(lines);

@@ -7,6 +7,7 @@ pub mod dissociation;
 pub mod journal;
 pub mod memory;
 pub mod onset;
+mod path;
 pub mod pieces;
 pub mod settle;
 pub mod stationary;
@@ -26,8 +27,9 @@ use crate::spec::{Level, Spec};
 use crate::surface::{HartreeFock, StabilityDemand, Stoppable, Surface};
 use crate::{molecule::motion::MotionError, surface::SurfaceError};
 use journal::{LevelEnd, LevelEntry, LevelLimit, LevelOnset, LevelStationary};
+use path::ScanPath;
 use rayon::ThreadPool;
-use stationary::{ScanPath, Search};
+use stationary::Search;
 use std::sync::atomic::{AtomicBool, Ordering};
 use std::time::Instant;
 

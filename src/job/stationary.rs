@@ -4,6 +4,7 @@
 //! dE/dq goes on from there, and second derivatives at the end come from central differences of dE/dq. They are
 //! an independent check of every fitted force constant.
 
+use super::path::{ScanPath, is_before_straight};
 use crate::fit::{ExtremaSettings, Kind, Place, dihedral_period, extrema};
 use crate::minimise::MinimiseError;
 use crate::minimise::landscape::{GridAxis, Landscape};
@@ -22,7 +23,6 @@ use crate::surface::{
 use nalgebra::{DMatrix, DVector, Vector3};
 use rayon::ThreadPool;
 use rayon::prelude::*;
-use std::f64::consts::PI;
 
 /// Steps of Newton's method at most.
 const MOST_STEPS: usize = 12;
@@ -47,96 +47,6 @@ pub(super) struct Candidate {
     curvature: DMatrix<f64>,
     /// Farthest that a search may go from the place, bohr or radian of each sweep.
     reach: Vec<f64>,
-}
-
-/// The path through configuration space that a scan goes along.
-#[derive(Debug, Clone, Copy)]
-pub struct ScanPath<'a> {
-    /// The sweeps.
-    pub sweeps: &'a [Sweep],
-    /// Positions that they start from, bohr.
-    pub input: &'a [Vector3<f64>],
-}
-
-impl ScanPath<'_> {
-    /// Values in ångström or degree.
-    pub(super) fn reported(&self, place: &[f64]) -> Vec<f64> {
-        self.sweeps
-            .iter()
-            .zip(place)
-            .map(|(s, &q)| s.motion.coordinate.to_reported(q))
-            .collect()
-    }
-
-    /// Values of one sweep in bohr or radian.
-    pub(super) fn axis(&self, sweep: usize) -> Vec<f64> {
-        let sweep = &self.sweeps[sweep];
-        sweep
-            .values
-            .iter()
-            .map(|&v| sweep.motion.coordinate.from_reported(v))
-            .collect()
-    }
-}
-
-/// How near to a straight angle a place counts as one, radian.
-const STRAIGHT: f64 = 1e-6;
-
-impl ScanPath<'_> {
-    /// Whether the one sweep bends a molecule that is straight at 180°: a bend beyond is the bend before it turned about
-    /// the axis, so energies are even about 180°.
-    pub(super) fn bends_straight_molecule(&self) -> bool {
-        let [sweep] = self.sweeps else {
-            return false;
-        };
-        if sweep.kind() != "angle" {
-            return false;
-        }
-        let Ok(places) = positions_at(self.input, self.sweeps, &[180.0]) else {
-            return false;
-        };
-        let &[first, .., last] = &places[..] else {
-            return false;
-        };
-        let axis = (last - first).normalize();
-        places.iter().all(|p| {
-            let off = p - first;
-            (off - axis * off.dot(&axis)).norm() < STRAIGHT
-        })
-    }
-
-    /// Continues a curve that ends at the straight angle of a straight molecule by its mirror image; says whether it did.
-    pub(super) fn continue_straight(&self, x: &mut Vec<f64>, energies: &mut Vec<f64>) -> bool {
-        let ends = x.last().is_some_and(|last| (last - PI).abs() < STRAIGHT);
-        if !(ends && self.bends_straight_molecule()) {
-            return false;
-        }
-        let before = x.len() - 1;
-        x.extend_from_within(..before);
-        energies.extend_from_within(..before);
-        for q in &mut x[before + 1..] {
-            *q = 2.0 * PI - *q;
-        }
-        x[before + 1..].reverse();
-        energies[before + 1..].reverse();
-        true
-    }
-
-    /// Values (ångström or degree) at a place, and the sign that slopes have there: beyond the straight angle of a straight
-    /// molecule stands the mirror image of what is before it.
-    fn unfolded(&self, place: &[f64]) -> (Vec<f64>, f64) {
-        match place {
-            [q] if *q > PI && self.bends_straight_molecule() => {
-                (self.reported(&[2.0 * PI - q]), -1.0)
-            }
-            _ => (self.reported(place), 1.0),
-        }
-    }
-}
-
-/// Whether a place (bohr or radian) on a curve continued past 180° belongs to the curve itself.
-pub(super) fn is_before_straight(x: f64) -> bool {
-    x < PI + STRAIGHT
 }
 
 /// Extrema of a curve's converged points in bohr or radian, with the period of a dihedral that goes round.

@@ -1,6 +1,6 @@
 //! Curves to be fitted: the whole of a sweep, or its pieces between changes of the electronic state.
 
-use super::super::stationary::is_before_straight;
+use super::super::path::is_before_straight;
 use super::Material;
 use crate::fit::ExtremaSettings;
 use crate::scan::FindingKind;

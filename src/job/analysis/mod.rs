@@ -113,8 +113,8 @@ impl Material<'_> {
         energies
     }
 
-    fn path(&self) -> super::stationary::ScanPath<'_> {
-        super::stationary::ScanPath {
+    fn path(&self) -> super::path::ScanPath<'_> {
+        super::path::ScanPath {
             sweeps: &self.spec.sweeps,
             input: &self.spec.molecule.positions,
         }
