@@ -498,3 +498,70 @@ fn a_molecule_is_settled_without_a_sweep() {
     let refused = place.run(&["scan", "water.toml", "--out", folder]);
     assert_eq!(refused.status, 2);
 }
+
+#[test]
+fn complete_levels_of_an_interrupted_run_are_taken_over() {
+    let two = HYDROGEN.replace(
+        "[[sweep]]",
+        "[[level]]\nmethod = \"uhf\"\nbasis = \"sto-3g\"\n[[sweep]]",
+    );
+    let place = Place::new().with("h2.toml", two);
+    assert_eq!(place.run(&["scan", "h2.toml", "--out", "run"]).status, 0);
+    let whole = place.summary("run");
+    let journal = place.read("run/journal.jsonl");
+    let lines: Vec<&str> = journal.lines().collect();
+    // The first level's end, and a few points of the second.
+    let end = lines
+        .iter()
+        .position(|l| l.contains("wall_seconds"))
+        .unwrap();
+    let cut = lines[..end + 4].join("\n") + "\n";
+    std::fs::write(place.path("run/journal.jsonl"), cut).unwrap();
+
+    let ran = place.run(&["scan", "h2.toml", "--out", "run"]);
+    assert_eq!(ran.status, 0, "{}", ran.err);
+    assert!(
+        ran.err.contains("1 of 2 levels are complete"),
+        "{}",
+        ran.err
+    );
+    let again = place.summary("run");
+    for level in 0..2 {
+        assert_eq!(
+            whole["levels"][level]["points"],
+            again["levels"][level]["points"]
+        );
+    }
+    let rewritten = place.read("run/journal.jsonl");
+    assert!(lines[1..=end].iter().all(|line| rewritten.contains(line)));
+}
+
+#[test]
+fn a_report_takes_a_spec_of_reporting_tables_alone() {
+    let place = Place::new()
+        .with("h2.toml", HYDROGEN)
+        .with("fits.toml", "[[fit]]\nform = \"morse\"\n")
+        .with("wrong.toml", "# a comment\n[[fit]]\nform = \"moose\"\n")
+        .with("other.toml", HYDROGEN.replace("0.74", "0.80"));
+    assert_eq!(place.run(&["scan", "h2.toml", "--out", "run"]).status, 0);
+    let ran = place.run(&["report", "run", "--spec", "fits.toml", "--out", "again"]);
+    assert_eq!(ran.status, 0, "{}", ran.err);
+    let fits = &place.summary("again")["levels"][0]["fits"];
+    assert_eq!(fits.as_array().unwrap().len(), 1);
+    assert_eq!(fits[0]["form"], "morse");
+    let ran = place.run(&["report", "run", "--spec", "wrong.toml", "--out", "third"]);
+    assert_eq!(ran.status, 2);
+    assert!(ran.err.contains("wrong.toml:3:8"), "{}", ran.err);
+    let ran = place.run(&["report", "run", "--spec", "other.toml", "--out", "fourth"]);
+    assert_eq!(ran.status, 0);
+    assert!(ran.err.contains("another calculation"), "{}", ran.err);
+}
+
+#[test]
+fn settling_with_and_without_pushing_are_told_apart() {
+    let place = Place::new().with("water.toml", WATER);
+    assert_eq!(place.run(&["settle", "water.toml"]).status, 0);
+    let ran = place.run(&["settle", "water.toml", "--push"]);
+    assert_eq!(ran.status, 2);
+    assert!(ran.err.contains("--push"), "{}", ran.err);
+}

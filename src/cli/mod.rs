@@ -11,7 +11,7 @@ mod settle;
 pub use exit::Status;
 
 use crate::basis::describe;
-use crate::spec::{self, Spec};
+use crate::spec::{self, Spec, SpecErrors};
 use args::{Arguments, Command};
 use clap::{CommandFactory, Parser};
 use std::ffi::OsString;
@@ -128,7 +128,12 @@ impl From<std::io::Error> for Failure {
 
 /// Reads and validates a spec; its errors are already complete messages. What is allowed but may surprise is told.
 fn load(path: &Path, streams: &mut Streams<'_>) -> Result<Spec, Failure> {
-    let spec = spec::load(path).map_err(|errors| Failure {
+    told(spec::load(path), streams)
+}
+
+/// The spec, its notes told, or its errors as the failure they are.
+fn told(read: Result<Spec, SpecErrors>, streams: &mut Streams<'_>) -> Result<Spec, Failure> {
+    let spec = read.map_err(|errors| Failure {
         message: errors.to_string().trim_end().to_owned(),
         status: Status::WrongInput,
     })?;

@@ -47,8 +47,15 @@ pub(super) fn own_journal(
         Occupant::Run if journal::is_unwritten(&folder.journal()) => Ok(None),
         Occupant::Run => {
             let (header, lines) = journal::read(&folder.journal())?;
+            let spec = |fingerprint: &str| fingerprint.split('-').next().map(str::to_owned);
             if header.fingerprint == fingerprint {
                 Ok(Some((header, lines)))
+            } else if spec(&header.fingerprint) == spec(fingerprint) {
+                Err(Failure::usage(format!(
+                    "{}: holds this spec treated by another command or with another option (settle with or without \
+                     --push); give another folder with --out, or move this one aside with --fresh",
+                    folder.path().display()
+                )))
             } else {
                 Err(FolderError::OtherRun { path: path() }.into())
             }

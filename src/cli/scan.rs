@@ -3,14 +3,14 @@
 use super::args::{CommonArgs, ReportArgs, ScanArgs};
 use super::occupied::own_journal;
 use super::progress::Progress;
-use super::{Failure, Status, Streams, load};
+use super::{Failure, Status, Streams, load, told};
 use crate::job::journal::{self, Journal, JournalError, LevelEntry, Line};
 use crate::job::{self, JobError, JobEvent, JobRecord, JobResult};
 use crate::plot::PlotError;
 use crate::report::folder::RunFolder;
 use crate::report::{self, figures};
 use crate::scan::Event;
-use crate::spec::Spec;
+use crate::spec::{Spec, load_reporting};
 use std::sync::atomic::AtomicBool;
 
 impl From<PlotError> for Failure {
@@ -39,9 +39,11 @@ pub(super) fn run(
 ) -> Result<Status, Failure> {
     let spec = load(&args.spec, streams)?;
     let folder = RunFolder::at(args.common.out.as_deref().unwrap_or(&spec.output.folder));
-    let record = match existing(&folder, &spec, args.fresh, streams)? {
-        Some(record) => record,
-        None => walk(&spec, &folder, &args.common, stop, streams)?,
+    let known = existing(&folder, &spec, args.fresh, streams)?;
+    let record = if known.ends.len() == spec.levels.len() {
+        known
+    } else {
+        walk(&spec, known, &folder, &args.common, stop, streams)?
     };
     finish(&spec, &record, &folder, &args.common, streams)
 }
@@ -69,7 +71,15 @@ pub(super) fn report(args: &ReportArgs, streams: &mut Streams<'_>) -> Result<Sta
         )));
     }
     if let Some(path) = &args.spec {
-        spec.take_reporting_from(load(path, streams)?);
+        let other = told(load_reporting(path, &spec.text), streams)?;
+        if other.fingerprint() != spec.fingerprint() {
+            writeln!(
+                streams.err,
+                "{}: describes another calculation than the run; only title, [[fit]], [vibration] and [output] are taken from it",
+                path.display()
+            )?;
+        }
+        spec.take_reporting_from(other);
     }
     let record = record_of(lines);
     if record.ends.len() < spec.levels.len() {
@@ -84,26 +94,31 @@ pub(super) fn report(args: &ReportArgs, streams: &mut Streams<'_>) -> Result<Sta
     finish(&spec, &record, &folder, &args.common, streams)
 }
 
-/// What the folder already holds of this very run, if it is complete.
+/// The complete levels that the folder already holds of this very run.
 fn existing(
     folder: &RunFolder,
     spec: &Spec,
     fresh: bool,
     streams: &mut Streams<'_>,
-) -> Result<Option<JobRecord>, Failure> {
+) -> Result<JobRecord, Failure> {
     let Some((header, lines)) = own_journal(folder, spec.fingerprint(), fresh, streams)? else {
-        return Ok(None);
+        return Ok(JobRecord::default());
     };
-    let record = record_of(lines);
-    let complete = record.ends.len() == spec.levels.len() && header.is_of_this_version();
-    if !complete {
+    let mut record = if header.is_of_this_version() {
+        record_of(lines)
+    } else {
+        JobRecord::default()
+    };
+    record.keep_complete_levels();
+    let (complete, all) = (record.ends.len(), spec.levels.len());
+    if complete < all {
         writeln!(
             streams.err,
-            "{}: the run is not complete and starts again from its first point",
+            "{}: {complete} of {all} levels are complete and taken over; the others start from their first point",
             folder.path().display()
         )?;
     }
-    Ok(complete.then_some(record))
+    Ok(record)
 }
 
 fn record_of(lines: Vec<Line>) -> JobRecord {
@@ -122,9 +137,24 @@ fn record_of(lines: Vec<Line>) -> JobRecord {
     record
 }
 
-/// Runs the spec, keeping the journal as it goes.
+/// The lines of a record, as they stand in its journal.
+fn lines_of(record: &JobRecord) -> impl Iterator<Item = Line> {
+    let entries = record.entries.iter().cloned().map(Line::Point);
+    let limits = record.limits.iter().cloned().map(Line::Limit);
+    let onsets = record.onsets.iter().cloned().map(Line::Onset);
+    let stationary = record.stationary.iter().cloned().map(Line::Stationary);
+    let ends = record.ends.iter().cloned().map(Line::Complete);
+    entries
+        .chain(limits)
+        .chain(onsets)
+        .chain(stationary)
+        .chain(ends)
+}
+
+/// Runs what is left of the spec, keeping the journal as it goes.
 fn walk(
     spec: &Spec,
+    known: JobRecord,
     folder: &RunFolder,
     common: &CommonArgs,
     stop: &AtomicBool,
@@ -133,13 +163,16 @@ fn walk(
     folder.create()?;
     folder.write("spec.toml", spec.text.as_bytes())?;
     let mut journal = Journal::create(&folder.journal(), spec.fingerprint())?;
+    for line in lines_of(&known) {
+        journal.append(&line)?;
+    }
     let pool = rayon::ThreadPoolBuilder::new()
         .num_threads(common.threads.map_or(0, usize::from))
         .build()
         .map_err(Failure::system)?;
     let mut progress = Progress::new(streams, common.quiet);
     let mut lost_journal: Option<JournalError> = None;
-    let result = job::run(spec, &pool, stop, &mut |event| {
+    let result = job::run_rest(spec, known, &pool, stop, &mut |event| {
         let line = match event {
             JobEvent::Walk {
                 level,

@@ -9,6 +9,7 @@
 
 use super::Window;
 use super::extrema::Extremum;
+use super::least_squares::LinearFit;
 use std::ops::Range;
 
 /// A trial is acceptable when its predicted error of k is below this share of k …
@@ -37,6 +38,18 @@ pub(super) struct Choice {
     /// Half range of k over the acceptable trials, or the model error of the best where that is
     /// larger, divided by the best k.
     pub(super) spread: f64,
+}
+
+/// A fit whose residuals exceed this share of the energies it spans does not follow its points, however little its k
+/// moves when one of them is left out.
+const FOLLOWED: f64 = 0.05;
+
+/// Whether a fit follows its points: the root mean square of the residuals is below a share of the range of `energies`, or
+/// of the size of their noise (all in hartree).
+pub(super) fn follows(linear: &LinearFit, energies: &[f64], noise: f64) -> bool {
+    let high = energies.iter().copied().fold(f64::MIN, f64::max);
+    let low = energies.iter().copied().fold(f64::MAX, f64::min);
+    linear.rms() <= (FOLLOWED * (high - low)).max(10.0 * noise)
 }
 
 fn sound<M>(trial: &Trial<M>) -> bool {

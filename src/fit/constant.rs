@@ -130,6 +130,9 @@ pub const TOLERATED_DIFFERENCE: f64 = 3e-3;
 /// A spread above this confirms nothing: 3 %, ten times what is asked of a fitted force constant.
 pub const WIDE_SPREAD: f64 = 10.0 * TOLERATED_DIFFERENCE;
 
+/// A spread above this leaves the constant itself open.
+pub const USELESS_SPREAD: f64 = 0.3;
+
 /// Compares a fitted force constant with an independent second derivative at the minimum.
 ///
 /// `fitted` and `derivative` in the same unit; `spread` relative to `fitted`, as a fit states it.
@@ -154,8 +157,12 @@ pub fn verdict(fitted: f64, spread: f64, derivative: f64) -> Verdict {
                 .to_owned(),
         };
     }
-    let agrees = difference.abs() <= spread.max(TOLERATED_DIFFERENCE);
-    let text = if difference.abs() <= spread && spread > WIDE_SPREAD {
+    let agrees = difference.abs() <= spread.min(USELESS_SPREAD).max(TOLERATED_DIFFERENCE);
+    let text = if spread > USELESS_SPREAD {
+        format!(
+            "tells nothing: the fit differs from the second derivative by {percent}, and its spread of {spread_percent} leaves the constant open; the points do not hold a fit of this minimum"
+        )
+    } else if difference.abs() <= spread && spread > WIDE_SPREAD {
         format!(
             "does not contradict: the fit differs from the second derivative by {percent}, but its spread of {spread_percent} is too wide to confirm anything"
         )
@@ -216,6 +223,8 @@ mod tests {
         assert!(!verdict(1.0, 0.001, 0.99).agrees);
         assert!(!verdict(1.0, 0.01, 0.0).agrees);
         assert!(verdict(1.0, 0.02, 0.99).text.starts_with("agrees"));
+        assert!(!verdict(1.0, 4.0, 50.0).agrees);
+        assert!(verdict(1.0, 4.0, 50.0).text.starts_with("tells nothing"));
         assert!(
             verdict(1.0, 0.2, 0.99)
                 .text

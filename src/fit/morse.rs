@@ -10,7 +10,7 @@
 //! off at E₀ + D, contains the plain function (no further terms), keeps k = 2Dβ₀² whatever the
 //! further terms, and adds one parameter at a time, so leaving points out can say how many are warranted.
 
-use super::choice::{Growth, Trial, choose};
+use super::choice::{Growth, Trial, choose, follows};
 use super::constant::Coordinate;
 use super::curve::Curve;
 use super::extrema::Extremum;
@@ -235,7 +235,12 @@ fn attempt(
     gradient[LOG_K] = k;
     let error = linear.model_error(&gradient, settings.noise_hartree);
     morse.floor += floor;
-    error.is_finite().then_some(Trial {
+    let followed = follows(
+        &linear,
+        &curve.energies[range.clone()],
+        settings.noise_hartree,
+    );
+    (error.is_finite() && followed).then_some(Trial {
         order: terms,
         range,
         force_constant: k,

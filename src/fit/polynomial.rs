@@ -1,6 +1,6 @@
 //! Polynomials of a window, in a Chebyshev basis.
 
-use super::choice::{Growth, Trial, choose};
+use super::choice::{Growth, Trial, choose, follows};
 use super::constant::Coordinate;
 use super::curve::Curve;
 use super::extrema::Extremum;
@@ -192,7 +192,8 @@ fn attempt(
     // k is taken at the fit's own minimum, which moves with the data: δk = δf″ − (f‴/f″) δf′.
     let gradient = series.gradient(equilibrium, 2) - series.gradient(equilibrium, 1) * (third / k);
     let error = linear.model_error(&gradient, noise);
-    (k > 0.0 && error.is_finite()).then_some(Trial {
+    let followed = follows(&linear, &curve.energies[range.clone()], noise);
+    (k > 0.0 && error.is_finite() && followed).then_some(Trial {
         order,
         range,
         force_constant: k,

@@ -31,6 +31,9 @@ pub struct Limit {
     /// Sum of the energies of the parts in their lowest states, hartree, where those cannot be reached because their
     /// spin projections do not add up to the whole's.
     pub unreachable: Option<f64>,
+    /// States of parts that did not converge and might have been lower than those proposed; the limit then has no energy.
+    #[serde(default, skip_serializing_if = "Vec::is_empty")]
+    pub missing: Vec<LimitPart>,
 }
 
 /// One separated part.
@@ -109,6 +112,7 @@ pub fn given(
         counterpoise: None,
         proposed: false,
         unreachable: None,
+        missing: Vec::new(),
     })
 }
 
@@ -131,6 +135,7 @@ pub fn proposed(
     let unpaired_of_whole = level.multiplicity as i32 - 1;
     let mut best: Option<(f64, Vec<LimitPart>)> = None;
     let mut lowest = f64::INFINITY;
+    let mut failed: Vec<LimitPart> = Vec::new();
     for charges in charge_patterns(parts.len(), level.charge) {
         let mut candidates = Vec::with_capacity(parts.len());
         for (atoms, &charge) in parts.iter().zip(&charges) {
@@ -143,8 +148,10 @@ pub fn proposed(
                     Err(error) => return Err(error),
                 }
             }
-            states.retain(|s| s.energy.is_some());
-            candidates.push(states);
+            let (found, without): (Vec<_>, Vec<_>) =
+                states.into_iter().partition(|s| s.energy.is_some());
+            failed.extend(without);
+            candidates.push(found);
         }
         for choice in products(&candidates) {
             let energy: f64 = choice.iter().filter_map(|p| p.energy).sum();
@@ -163,6 +170,12 @@ pub fn proposed(
         return Ok(None);
     };
     let unreachable = (lowest < energy - 1e-6).then_some(lowest);
+    // States of higher spin than the next are hardly ever the lowest (Hund's rules, common practice).
+    failed.retain(|state| {
+        parts
+            .iter()
+            .any(|p| p.atoms == state.atoms && state.multiplicity <= p.multiplicity + 2)
+    });
     // A restricted level keeps its own closed-shell parts restricted.
     let parts = if level.method == Method::Rhf {
         parts
@@ -172,13 +185,18 @@ pub fn proposed(
     } else {
         parts
     };
-    let energy = parts.iter().map(|p| p.energy).sum();
+    let energy = if failed.is_empty() {
+        parts.iter().map(|p| p.energy).sum()
+    } else {
+        None
+    };
     Ok(Some(Limit {
         parts,
         energy,
         counterpoise: None,
         proposed: true,
         unreachable,
+        missing: failed,
     }))
 }
 

@@ -124,6 +124,23 @@ pub struct JobRecord {
     pub ends: Vec<LevelEnd>,
 }
 
+impl JobRecord {
+    /// Whether a level is complete.
+    #[must_use]
+    pub fn holds(&self, level: usize) -> bool {
+        self.ends.iter().any(|e| e.level == level)
+    }
+
+    /// Drops what belongs to levels that are not complete.
+    pub fn keep_complete_levels(&mut self) {
+        let complete: Vec<usize> = self.ends.iter().map(|e| e.level).collect();
+        self.entries.retain(|e| complete.contains(&e.level));
+        self.limits.retain(|e| complete.contains(&e.level));
+        self.onsets.retain(|e| complete.contains(&e.level));
+        self.stationary.retain(|e| complete.contains(&e.level));
+    }
+}
+
 /// The walk that a spec asks for.
 ///
 /// # Errors
@@ -177,9 +194,25 @@ pub fn run(
     stop: &AtomicBool,
     observer: &mut dyn FnMut(&JobEvent<'_>),
 ) -> Result<JobRecord, JobError> {
+    run_rest(spec, JobRecord::default(), pool, stop, observer)
+}
+
+/// Runs the levels of a spec that `record` does not hold complete, and adds them to it.
+///
+/// # Errors
+/// As [`run`].
+pub fn run_rest(
+    spec: &Spec,
+    mut record: JobRecord,
+    pool: &ThreadPool,
+    stop: &AtomicBool,
+    observer: &mut dyn FnMut(&JobEvent<'_>),
+) -> Result<JobRecord, JobError> {
     let scan = scan_of(spec)?;
-    let mut record = JobRecord::default();
     for (number, level) in spec.levels.iter().enumerate() {
+        if record.holds(number) {
+            continue;
+        }
         let surface = HartreeFock::new(
             &level.molecule(&spec.molecule),
             level.shells_of_atom.clone(),

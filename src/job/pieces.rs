@@ -117,8 +117,9 @@ pub fn sentence(level: &LevelResult, labels: &[String]) -> Option<String> {
         described.join("; ")
     );
     let excess = format!(
-        "{:.0} kJ/mol above the separated parts",
-        above * KJ_PER_MOL_PER_HARTREE
+        "{:.0} kJ/mol {} the separated parts",
+        above.abs() * KJ_PER_MOL_PER_HARTREE,
+        if above < 0.0 { "below" } else { "above" }
     );
     if level.method == Method::Rhf.name().to_lowercase() && open {
         text += &format!(
@@ -130,7 +131,12 @@ pub fn sentence(level: &LevelResult, labels: &[String]) -> Option<String> {
             }
         );
     } else if above.abs() > OFF_LIMIT {
-        text += &format!("The energy there still lies {excess}. ");
+        text += &format!("The energy there still lies {excess}");
+        text += if above < 0.0 {
+            ": either the pieces still attract each other, or the parts have lower states than those computed. "
+        } else {
+            ". "
+        };
     }
     if limit.unreachable.is_some() {
         text += "The parts' lowest states cannot be reached by one determinant of this spin projection; the limit \

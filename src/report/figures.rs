@@ -135,7 +135,14 @@ fn curve_level(spec: &Spec, result: &JobResult, level: &LevelResult) -> CurveLev
                 // The zero is a grid point, the dissociation energy counts from the refined minimum.
                 text: level
                     .dissociation_energy()
-                    .map(|de| format!("separated parts, De {}", energy_words(spec, de))),
+                    .filter(|_| level.analysis.minima.iter().any(|m| m.interior))
+                    .map(|de| {
+                        let corrected = match level.limit.as_ref().and_then(|l| l.counterpoise) {
+                            Some(_) => ", counterpoise-corrected",
+                            None => "",
+                        };
+                        format!("separated parts, De {}{corrected}", energy_words(spec, de))
+                    }),
             }),
         onset: level.onset.map(|o| o.value),
         findings: (0..level.points.len())

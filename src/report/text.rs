@@ -187,6 +187,20 @@ fn dissociation(text: &mut String, result: &JobResult, level: &LevelResult, unit
         .energy
         .map_or_else(|| "not converged".to_owned(), |e| format!("{e:.9} hartree"));
     let _ = writeln!(text, "{origin}: {}, together {energy}", parts.join(", "));
+    for state in &limit.missing {
+        let names: Vec<&str> = state
+            .atoms
+            .iter()
+            .map(|&a| result.labels[a].as_str())
+            .collect();
+        let _ = writeln!(
+            text,
+            "no limit: {} with multiplicity {} did not converge and might be lower; give the parts in [dissociation], or \
+             compute that part by itself",
+            names.join("+"),
+            state.multiplicity
+        );
+    }
     if let Some(de) = level.dissociation_energy() {
         let (value, word) = (de * unit.per_hartree(), unit.symbol());
         let corrected = if limit.counterpoise.is_some() {

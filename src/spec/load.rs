@@ -27,6 +27,28 @@ pub fn load(path: &Path) -> Result<Spec, SpecErrors> {
     parse(&text, path)
 }
 
+/// Tables and keys of a spec that change a report and no calculation.
+const REPORTING: [&str; 4] = ["title", "fit", "vibration", "output"];
+
+/// Reads a spec for its reporting tables. Where it has neither a molecule nor levels, all else comes from `run`, the text of
+/// the spec of a run.
+///
+/// # Errors
+/// As [`load`].
+pub fn load_reporting(path: &Path, run: &str) -> Result<Spec, SpecErrors> {
+    let mut text = read_text(path, MAX_SPEC_BYTES).map_err(|d| SpecErrors(vec![*d]))?;
+    let is_whole =
+        |table: toml::Table| table.contains_key("molecule") || table.contains_key("level");
+    if !text.parse().is_ok_and(is_whole)
+        && let Ok(mut rest) = run.parse::<toml::Table>()
+    {
+        rest.retain(|key, _| !REPORTING.contains(&key));
+        // After the user's own lines, whose numbers so stay what they are in messages.
+        text = format!("{text}\n{rest}");
+    }
+    parse(&text, path)
+}
+
 /// Validates the text of a spec; `path` names it in messages, gives the default folder and title, and is where
 /// relative paths start.
 ///

@@ -15,7 +15,7 @@ mod validate;
 
 pub(crate) use diagnostic::counted;
 pub use diagnostic::{Diagnostic, SpecErrors};
-pub use load::{MAX_BASIS_BYTES, MAX_SPEC_BYTES, load, parse};
+pub use load::{MAX_BASIS_BYTES, MAX_SPEC_BYTES, load, load_reporting, parse};
 pub use schema::schema;
 
 use crate::basis::{Basis, FunctionKind, Shell};

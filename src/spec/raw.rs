@@ -134,7 +134,7 @@ table! {
         cartesian: String,
         /// Geometry from an XYZ file; a relative path starts at the spec's folder.
         file: String,
-        /// Isotope masses in u by atom label; default: the most abundant isotope.
+        /// Isotope masses in u by atom label, or by element symbol for all atoms of an element that have no mass of their own; default: the most abundant isotope.
         isotopes: Entries<f64>,
     }
 }

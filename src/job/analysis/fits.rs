@@ -3,8 +3,9 @@
 use super::lines::Line;
 use super::{LevelAnalysis, Material, MinimumResult};
 use crate::fit::{Coordinate, Fit, FitError, FitSettings, Form, Window, fit_curve};
-use crate::scan::{Others, Stationary, Sweep};
+use crate::scan::{Others, Stationary, StationaryKind, Sweep};
 use crate::spec::{FitForm, FitSpec, FitWindow};
+use crate::units::short;
 
 /// What the coordinates that are not swept do along a curve.
 #[derive(Debug, Clone, Copy, PartialEq, Eq, serde::Serialize)]
@@ -47,7 +48,7 @@ pub struct FitResult {
     pub values: Vec<f64>,
 }
 
-/// Fits every form of the spec to lines; where a form finds nothing on them, to those of `instead`.
+/// Fits every form of the spec to lines; minima that find no fit on them are fitted on those of `instead`.
 pub(super) fn fit_lines(
     material: &Material<'_>,
     lines: &[Line],
@@ -56,19 +57,68 @@ pub(super) fn fit_lines(
 ) {
     for wanted in &material.spec.fits {
         let mut found = fit_form(material, wanted, lines, &analysis.minima);
-        if found.fits.is_empty() && !instead.is_empty() && instead != lines {
-            found = fit_form(material, wanted, instead, &analysis.minima);
+        let suits = |sweep: &Sweep| wanted.form.suits(sweep.kind());
+        if !material.spec.sweeps.iter().any(suits) {
+            continue;
         }
+        if found.fits.is_empty() || !bare(material, &found, &analysis.minima).is_empty() {
+            for fit in fit_form(material, wanted, instead, &analysis.minima).fits {
+                let same = |f: &FitResult| material.is_same_place(&f.values, &fit.values);
+                if !found.fits.iter().any(same) {
+                    found.unfitted.retain(|(place, _)| {
+                        material.apart(fit.sweep, *place, fit.values[fit.sweep])
+                            > material.half_step(fit.sweep)
+                    });
+                    found.fits.push(fit);
+                }
+            }
+        }
+        for place in bare(material, &found, &analysis.minima) {
+            let sweep = &material.spec.sweeps[0];
+            found.unfitted.push((
+                place,
+                format!(
+                    "no {} fit of the minimum at {}{}: too few points around it are on one smooth piece of the curve",
+                    wanted.form.word(),
+                    short(place),
+                    unit_sign(sweep)
+                ),
+            ));
+        }
+        // That a piece of a curve has no minimum is worth a word only where no other has one.
+        if found.fits.is_empty() && found.unfitted.is_empty() {
+            analysis.notes.extend(found.refusal);
+        }
+        analysis
+            .notes
+            .extend(found.unfitted.into_iter().map(|(_, note)| note));
         analysis.fits.extend(found.fits);
-        analysis.notes.extend(found.notes);
     }
+}
+
+/// Minima of a curve (ångström or degree) that have neither a fit nor a word on why.
+fn bare(material: &Material<'_>, found: &Found, minima: &[MinimumResult]) -> Vec<f64> {
+    if material.spec.sweeps.len() != 1 {
+        return Vec::new();
+    }
+    let near = |a: f64, b: f64| material.apart(0, a, b) <= material.half_step(0);
+    minima
+        .iter()
+        .filter(|m| m.interior && m.kind == StationaryKind::Minimum)
+        .map(|m| m.values[0])
+        .filter(|&q| !found.fits.iter().any(|f| near(q, f.values[0])))
+        .filter(|&q| !found.unfitted.iter().any(|(place, _)| near(q, *place)))
+        .collect()
 }
 
 /// What came of one form.
 #[derive(Default)]
 struct Found {
     fits: Vec<FitResult>,
-    notes: Vec<String>,
+    /// Minima (ångström or degree) on which no order and window holds, with a sentence each.
+    unfitted: Vec<(f64, String)>,
+    /// Why a line has no fit at all.
+    refusal: Option<String>,
 }
 
 fn fit_form(
@@ -78,61 +128,69 @@ fn fit_form(
     minima: &[MinimumResult],
 ) -> Found {
     let mut found = Found::default();
-    let mut refusal = None;
     for line in lines {
         let sweep = &material.spec.sweeps[line.sweep];
         if !wanted.form.suits(sweep.kind()) {
             continue;
         }
+        let word = wanted.form.word();
+        let mut unfitted = |failure: &FitError| {
+            let FitError::NoFit { at, .. } = failure else {
+                return false;
+            };
+            let place = sweep.motion.coordinate.to_reported(*at);
+            if line.owns(*at) {
+                let note = format!("no {word} fit of one minimum: {}", reason(failure, sweep));
+                found.unfitted.push((place, note));
+            }
+            true
+        };
         let settings = settings(material, wanted, sweep, line);
-        let fits = fit_curve(
+        match fit_curve(
             &line.x,
             &line.energies,
             form(wanted.form),
             coordinate(sweep),
             &settings,
-        );
-        match fits {
+        ) {
             Ok(fits) => {
+                for failure in &fits.failures {
+                    unfitted(failure);
+                }
                 let own = |fit: &Fit| line.owns(fit.equilibrium);
                 let results = fits.fits.into_iter().filter(own);
                 found
                     .fits
                     .extend(results.map(|fit| result(material, line, fit, minima)));
-                found.notes.extend(fits.failures.iter().map(|failure| {
-                    format!(
-                        "no {} fit of one minimum: {}",
-                        wanted.form.word(),
-                        reason(failure, sweep)
-                    )
-                }));
             }
-            Err(error) => refusal = Some((line.sweep, error)),
+            Err(error) => {
+                if !unfitted(&error) {
+                    found.refusal = Some(format!(
+                        "no {word} fit of the {} {}: {}",
+                        sweep.kind(),
+                        sweep.labels(&material.spec.molecule).join("–"),
+                        reason(&error, sweep)
+                    ));
+                }
+            }
         }
     }
-    // That one piece of a curve has no minimum is worth a word only where no other has one.
-    if let (true, Some((sweep, error))) = (found.fits.is_empty(), refusal) {
-        let sweep = &material.spec.sweeps[sweep];
-        found.notes.push(format!(
-            "no {} fit of the {} {}: {}",
-            wanted.form.word(),
-            sweep.kind(),
-            sweep.labels(&material.spec.molecule).join("–"),
-            reason(&error, sweep)
-        ));
-    }
     found
+}
+
+fn unit_sign(sweep: &Sweep) -> &'static str {
+    if sweep.unit() == "degree" {
+        "°"
+    } else {
+        " Å"
+    }
 }
 
 /// A refusal with its place in the sweep's own unit.
 fn reason(error: &FitError, sweep: &Sweep) -> String {
     match error {
         FitError::NoFit { at, points, needed } => {
-            let unit = if sweep.unit() == "degree" {
-                "°"
-            } else {
-                " Å"
-            };
+            let unit = unit_sign(sweep);
             format!(
                 "near {:.3}{unit} no order and window holds; {points} points are there and the lowest order needs \
                  {needed}",

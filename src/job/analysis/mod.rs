@@ -16,6 +16,7 @@ use super::assemble::PointResult;
 use crate::fit::{Kind, Place, extrema};
 use crate::scan::{Finding, Grid, Stationary, StationaryKind};
 use crate::spec::Spec;
+use crate::units::short;
 use nalgebra::Vector3;
 
 /// Everything made from one level's points.
@@ -194,7 +195,7 @@ pub(super) fn analyse(material: &Material<'_>) -> LevelAnalysis {
                 analysis.notes.push(format!(
                     "unrestricted orbitals set in or cease just before {}{unit}: the second derivative of the curve jumps \
                      there, so each side is fitted by itself where it holds enough points, and states that reach it are those of both sides",
-                    sweep.values[point]
+                    short(sweep.values[point])
                 ));
             }
         }

@@ -4,6 +4,7 @@ use super::lines::Line;
 use super::{LevelAnalysis, Material, MinimumResult, PathKind};
 use crate::fit::Fit;
 use crate::scan::Sweep;
+use crate::scan::sweep::tangents;
 use crate::units::{ANGSTROM_PER_BOHR, ELECTRON_MASSES_PER_U, PER_CM_PER_HARTREE};
 use crate::vibration::diatomic::{
     DunhamConstants, MinimumDerivatives, StateConstants, dunham, from_states,
@@ -12,7 +13,7 @@ use crate::vibration::states::Multiplet;
 use crate::vibration::{
     Potential, States, StatesSettings, VibrationError, states, wavenumber_per_cm,
 };
-use nalgebra::Vector3;
+use nalgebra::{Matrix3, Vector3};
 use std::f64::consts::PI;
 
 /// The inverse mass that a coordinate vibrates with.
@@ -65,7 +66,7 @@ pub struct Spectroscopy {
     pub minimum_energy: f64,
     /// What vibrates.
     pub mass: VibratingMass,
-    /// Harmonic wavenumber of the fitted curve, cm⁻¹.
+    /// Harmonic wavenumber, cm⁻¹, from gradients at the minimum, or without them from the fitted curve.
     pub omega_e_cm1: Option<f64>,
     /// Dunham's constants of the fitted curve, for a molecule of two atoms.
     pub dunham: Option<DunhamConstants>,
@@ -82,6 +83,9 @@ pub struct Spectroscopy {
     /// What a reader must know.
     pub notes: Vec<String>,
 }
+
+/// Share by which the two masses of a coordinate may differ before both are told.
+const UNLIKE_MASSES: f64 = 0.1;
 
 /// Energies (hartree) of wells that count as equal.
 const EQUAL_WELLS: f64 = 1e-6;
@@ -174,6 +178,36 @@ fn mass_of(
     })
 }
 
+/// The mass of the motion along the path itself, all other coordinates rigid: Σ m |dx/dq|² less what translation and rotation
+/// of the whole take (E. B. Wilson, J. C. Decius, P. C. Cross, Molecular Vibrations, 1955, chapter 11), in electron masses
+/// (times bohr² for an angle).
+fn path_mass(material: &Material<'_>, positions: &[Vector3<f64>]) -> Option<f64> {
+    let tangent = tangents(&material.spec.sweeps, positions).swap_remove(0);
+    let masses = &material.spec.masses_u;
+    let total: f64 = masses.iter().sum();
+    let mean = |of: &dyn Fn(usize) -> Vector3<f64>| -> Vector3<f64> {
+        (0..positions.len())
+            .map(|i| of(i) * masses[i])
+            .sum::<Vector3<f64>>()
+            / total
+    };
+    let centre = mean(&|i| positions[i]);
+    let drift = mean(&|i| tangent[i]);
+    let mut inertia = Matrix3::zeros();
+    let mut angular = Vector3::zeros();
+    let mut along = 0.0;
+    for ((position, step), &mass) in positions.iter().zip(&tangent).zip(masses) {
+        let (r, t) = (position - centre, step - drift);
+        inertia += (Matrix3::identity() * r.norm_squared() - r * r.transpose()) * mass;
+        angular += r.cross(&t) * mass;
+        along += mass * t.norm_squared();
+    }
+    // A straight molecule has no inertia about its axis, and no angular momentum there either.
+    let turned = inertia.pseudo_inverse(1e-8 * inertia.amax()).ok()?;
+    let mass = (along - angular.dot(&(turned * angular))) * ELECTRON_MASSES_PER_U;
+    (mass.is_finite() && mass > 0.0).then_some(mass)
+}
+
 /// The potential of a line, and how often each of its wells stands on the whole circle.
 fn potential<'a>(
     sweep: &Sweep,
@@ -227,6 +261,26 @@ fn spectroscopy(
             }
         });
     }
+    if !mass.exact
+        && material.path_kind() == PathKind::Rigid
+        && let Some(rigid) = minimum
+            .positions
+            .as_ref()
+            .and_then(|p| path_mass(material, p))
+        && (rigid * mass.inverse - 1.0).abs() > UNLIKE_MASSES
+    {
+        let other = VibratingMass {
+            inverse: 1.0 / rigid,
+            ..mass
+        };
+        notes.push(format!(
+            "moving along the path with all else rigid has the mass {:.4} {} instead, and wavenumbers {:.2} times as high: \
+             where whole groups move, that is the better of the two",
+            other.reduced(),
+            if mass.is_length { "u" } else { "u Å²" },
+            (other.inverse / mass.inverse).sqrt()
+        ));
+    }
     let potential = potential(sweep, line, &mut notes)?;
     let settings = StatesSettings {
         count: material.spec.vibration.states,
@@ -241,9 +295,12 @@ fn spectroscopy(
         ));
     }
     let floor = minimum.energy;
-    let curvature = fit
-        .map(|f| f.force_constant)
-        .or_else(|| minimum.second_derivatives.first().copied());
+    // Gradients know the bottom of the well better than any fit.
+    let curvature = minimum
+        .second_derivatives
+        .first()
+        .copied()
+        .or_else(|| fit.map(|f| f.force_constant));
     let omega = curvature.and_then(|k| wavenumber_per_cm(k, mass.inverse).ok());
     let dunham = fit.filter(|_| mass.exact).and_then(|fit| {
         let at = MinimumDerivatives {
@@ -266,11 +323,17 @@ fn spectroscopy(
             .and_then(|(d, s)| differing(d, s)),
     );
     let (wells, multiplets) = multiplets(&potential, &found);
-    let zero_point = found
-        .states
-        .first()
-        .map(|s| s.energy - floor)
-        .or(dunham.map(|d| d.zero_point_cm1 / PER_CM_PER_HARTREE));
+    let zero_point = found.states.first().map(|s| s.energy - floor).or_else(|| {
+        Some(dunham.as_ref().filter(|d| holds(d))?.zero_point_cm1 / PER_CM_PER_HARTREE)
+    });
+    if let Some(check) = fit.and_then(|f| f.derivative_check.as_ref())
+        && !check.verdict.agrees
+    {
+        notes.push(
+            "the fit disagrees with the gradients at the minimum, and the constants from it with the wavenumber ω"
+                .to_owned(),
+        );
+    }
     Ok(Spectroscopy {
         sweep: 0,
         minimum: minimum.values[0],
@@ -285,6 +348,12 @@ fn spectroscopy(
         mass,
         notes,
     })
+}
+
+/// Whether Dunham's constants belong to a well with bound states: its levels G(v) turn back at v + ½ = ωe/(2 ωexe), which
+/// must leave room for a few.
+fn holds(constants: &DunhamConstants) -> bool {
+    constants.zero_point_cm1 > 0.0 && constants.omega_e_x_e_cm1 < 0.1 * constants.omega_e_cm1
 }
 
 /// Relative differences of ωe, and of the smaller constants, above which the two roads to them are told apart.

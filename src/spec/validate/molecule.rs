@@ -2,6 +2,7 @@
 
 use super::electrons;
 use super::{atom, whole};
+use crate::elements::Element;
 use crate::molecule::cartesian::{
     Entry, atoms_of, check_distances, parse_cartesian, parse_xyz, positions_of, row_spans,
 };
@@ -121,8 +122,31 @@ fn masses_u(raw: &RawMolecule, molecule: &Molecule, problems: &mut Problems<'_>)
         problems.at(&given.span, format!("{} masses", given.value.0.len()));
         return masses;
     }
-    for (label, mass) in raw.isotopes.get().map_or(&[][..], |e| &e.value.0) {
-        let index = atom(label, molecule, problems);
+    // A symbol that is no label stands for all atoms of its element; labels go before it.
+    let symbol = |name: &str| {
+        let is_label = molecule.atoms.iter().any(|a| a.label == name);
+        let element = Element::from_symbol(name).filter(|_| !is_label)?;
+        molecule
+            .atoms
+            .iter()
+            .any(|a| a.element == element)
+            .then_some(element)
+    };
+    let given = raw.isotopes.get().map_or(&[][..], |e| &e.value.0);
+    for (name, mass) in given {
+        if let Some(element) = symbol(&name.value) {
+            for (own, atom) in masses.iter_mut().zip(&molecule.atoms) {
+                if atom.element == element && mass.value > 0.0 && mass.value <= MAX_MASS_U {
+                    *own = mass.value;
+                }
+            }
+        }
+    }
+    for (label, mass) in given {
+        let index = match symbol(&label.value) {
+            Some(_) => None,
+            None => atom(label, molecule, problems),
+        };
         if !(mass.value > 0.0 && mass.value <= MAX_MASS_U) {
             problems
                 .at(

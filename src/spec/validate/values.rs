@@ -295,6 +295,17 @@ fn range(
     }
 }
 
+/// from + i·step without the rounding of the sum: 0.8, not 0.7999999999999999.
+fn value_at(from: f64, step: f64, i: usize) -> f64 {
+    const DECIMALS: f64 = 1e10;
+    let value = from + i as f64 * step;
+    if i == 0 || step * DECIMALS < 1e4 {
+        value
+    } else {
+        (value * DECIMALS).round() / DECIMALS
+    }
+}
+
 impl SweepValues {
     /// All values in the unit in which they were written. Value i is from + i·step; none lies beyond `to`, though the sum
     /// may by rounding.
@@ -306,7 +317,7 @@ impl SweepValues {
                 // At most MAX_POINTS, checked when it was read.
                 let steps = steps.min(MAX_POINTS as f64) as usize;
                 (0..=steps)
-                    .map(|i| (from + i as f64 * step).min(*to))
+                    .map(|i| value_at(*from, *step, i).min(*to))
                     .collect()
             }
             Self::Points { from, to, points } => {
@@ -317,7 +328,7 @@ impl SweepValues {
                         if i == last && last > 0 {
                             *to
                         } else {
-                            from + i as f64 * step
+                            value_at(*from, step, i)
                         }
                     })
                     .collect()
