@@ -5,6 +5,7 @@ use super::class::{ClassKey, PairClass};
 use super::lanes::Four;
 use super::pairs::{PairBlock, ShellPair, Side, largest_bound};
 use super::quartets::{QuartetEngine, QuartetPlan};
+use super::segments::segmented;
 use crate::basis::Basis;
 use rayon::prelude::*;
 use std::collections::{BTreeMap, HashMap};
@@ -71,6 +72,7 @@ pub(super) trait QuartetSink {
 
 impl PairSet {
     pub(super) fn new(basis: &Basis) -> Self {
+        let basis = &segmented(basis);
         let shells: Vec<[usize; 2]> = (0..basis.shells().len())
             .flat_map(|s| (0..=s).map(move |t| [s, t]))
             .collect();
@@ -89,6 +91,7 @@ impl PairSet {
 
     /// Prepares again the pairs that touch a moved atom.
     pub(super) fn update(&mut self, basis: &Basis, moved: &[bool]) {
+        let basis = &segmented(basis);
         let mut touched: Vec<(&mut ShellPair, [usize; 2])> = self
             .pairs
             .iter_mut()

@@ -20,6 +20,7 @@ pub mod peak;
 pub(in crate::integrals) mod primitives;
 mod products;
 mod quartets;
+mod segments;
 
 pub use digestion::{CoulombExchange, CoulombExchangePair};
 pub use direct::DirectRepulsion;
