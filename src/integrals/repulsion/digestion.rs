@@ -21,16 +21,25 @@ pub trait CoulombExchange: Sync {
 }
 
 /// Integrals that one task handles at least: a fixed number, for the same bits on any machine.
-const INTEGRALS_PER_TASK: usize = 1 << 20;
+const INTEGRALS_PER_TASK: usize = 1 << 18;
 /// Most tasks: each holds matrices of its own.
 const MOST_TASKS: usize = 16;
 
-/// What whole vectors may read and write beyond the end of a row.
+/// How far ahead of their use integrals are asked for, in numbers: about the time that memory takes to answer.
+/// The processor's own look-ahead does not cross pages.
+const AHEAD: usize = 512;
+
+/// What whole vectors may read and write beyond the end of packed places.
 const PADDING: usize = 3;
+
+/// Distance of the rows of square matrices: whole vectors stay inside a row.
+const fn row_stride(n: usize) -> usize {
+    n.next_multiple_of(4)
+}
 
 /// A density in the forms that the pass over the list needs.
 struct Density {
-    /// P, rows contiguous.
+    /// P, rows contiguous, [`row_stride`] apart.
     full: Vec<f64>,
     /// (2 − δ_cd) P_cd at packed place cd.
     packed: Vec<f64>,
@@ -40,20 +49,26 @@ struct Density {
 struct Sums {
     /// J at packed places.
     coulomb: Vec<f64>,
-    /// Half of the exchange matrix: K is this plus its transpose.
+    /// Half of the exchange matrix, rows [`row_stride`] apart: K is this plus its transpose.
     exchange: Vec<f64>,
 }
 
 impl Density {
     fn new(density: &DMatrix<f64>) -> Self {
         let n = density.nrows();
-        let mut full = density.as_slice().to_vec();
+        let stride = row_stride(n);
+        let mut full = vec![0.0; n * stride];
+        for (row, column) in full.chunks_exact_mut(stride).zip(density.column_iter()) {
+            // Symmetric: a column is a row.
+            for (to, from) in row.iter_mut().zip(column.iter()) {
+                *to = *from;
+            }
+        }
         let mut packed = Vec::with_capacity(pair_count(n) + PADDING);
         for c in 0..n {
             packed.extend((0..c).map(|d| 2.0 * density[(c, d)]));
             packed.push(density[(c, c)]);
         }
-        full.extend([0.0; PADDING]);
         packed.extend([0.0; PADDING]);
         Self { full, packed }
     }
@@ -92,18 +107,19 @@ pub(super) fn coulomb_exchange_packed(
 /// Adds the sums of all tasks in order.
 fn add_up<'a>(n: usize, parts: impl Iterator<Item = &'a Sums>) -> CoulombExchangePair {
     let mut coulomb = vec![0.0; pair_count(n)];
-    let mut half = DMatrix::zeros(n, n);
+    let stride = row_stride(n);
+    let mut half = vec![0.0; n * stride];
     for part in parts {
         for (sum, term) in coulomb.iter_mut().zip(&part.coulomb) {
             *sum += term;
         }
-        for (sum, term) in half.as_mut_slice().iter_mut().zip(&part.exchange) {
+        for (sum, term) in half.iter_mut().zip(&part.exchange) {
             *sum += term;
         }
     }
     CoulombExchangePair {
         coulomb: DMatrix::from_fn(n, n, |a, b| coulomb[pair_count(a.max(b)) + a.min(b)]),
-        exchange: &half + half.transpose(),
+        exchange: DMatrix::from_fn(n, n, |a, b| half[a * stride + b] + half[b * stride + a]),
     }
 }
 
@@ -121,17 +137,17 @@ impl Kernel for Rows<'_> {
     #[inline(always)]
     fn run<V: Lanes>(self) -> Vec<Sums> {
         let n = self.n;
+        let stride = row_stride(n);
         let mut all: Vec<Sums> = self
             .densities
             .iter()
             .map(|_| Sums {
                 coulomb: vec![0.0; pair_count(n) + PADDING],
-                exchange: vec![0.0; n * n],
+                exchange: vec![0.0; n * stride],
             })
             .collect();
-        // Rows a and b of K while row ab is at work: a = b is possible, so they are kept apart.
-        let mut exchange_a = vec![0.0; n + PADDING];
-        let mut exchange_b = vec![0.0; n + PADDING];
+        // The two rows of K where they are one, a = b.
+        let mut twins = [vec![0.0; stride], vec![0.0; stride]];
         // Row ab: a is the largest with a(a+1)/2 ≤ ab.
         let mut a = ((8 * self.rows.start + 1).isqrt() - 1) / 2;
         let mut b = self.rows.start - pair_count(a);
@@ -139,25 +155,33 @@ impl Kernel for Rows<'_> {
             // The row is read from memory once and then, for further densities, from the cache.
             let integrals = &self.list[pair_count(ab)..][..=ab];
             for (density, sums) in self.densities.iter().zip(&mut all) {
+                let [twin_a, twin_b] = &mut twins;
+                let (exchange_a, exchange_b) = if a == b {
+                    (twin_a.as_mut_slice(), twin_b.as_mut_slice())
+                } else {
+                    let (earlier, later) = sums.exchange.split_at_mut(a * stride);
+                    (&mut later[..stride], &mut earlier[b * stride..][..stride])
+                };
                 let coulomb_ab = Row {
                     integrals,
                     a,
                     b,
-                    density_a: &density.full[a * n..],
-                    density_b: &density.full[b * n..],
+                    density_a: &density.full[a * stride..][..stride],
+                    density_b: &density.full[b * stride..][..stride],
                     packed: &density.packed,
-                    exchange_a: &mut exchange_a,
-                    exchange_b: &mut exchange_b,
+                    exchange_a,
+                    exchange_b,
                     coulomb: &mut sums.coulomb,
                 }
                 .add::<V>();
                 sums.coulomb[ab] += coulomb_ab;
-                let weight = if a == b { 0.5 } else { 1.0 };
-                for (row, from) in [(a, &mut exchange_a), (b, &mut exchange_b)] {
-                    let to = &mut sums.exchange[row * n..][..=a];
-                    for (to, from) in to.iter_mut().zip(&mut from[..=a]) {
-                        *to += weight * *from;
-                        *from = 0.0;
+                if a == b {
+                    let to = &mut sums.exchange[a * stride..][..stride];
+                    for twin in &mut twins {
+                        for (to, from) in to.iter_mut().zip(twin) {
+                            *to += 0.5 * *from;
+                            *from = 0.0;
+                        }
                     }
                 }
             }
@@ -174,7 +198,8 @@ impl Kernel for Rows<'_> {
 /// One row ab of the list with one density.
 ///
 /// A stretch of a row with fixed c is contiguous over d, and serves two dot products (K_ac, K_bc) and
-/// two updates (rows a and b of K) besides the two of J. For K, integrals with c = d or ab = cd
+/// two updates (rows a and b of K) besides the two of J. Two stretches share what they read and write
+/// of rows a and b. For K, integrals with c = d or ab = cd
 /// count half for each of these (a = b is dealt with by the caller).
 struct Row<'a> {
     integrals: &'a [f64],
@@ -205,8 +230,15 @@ impl Row<'_> {
     #[inline(always)]
     fn add<V: Lanes>(mut self) -> f64 {
         let density_ab = V::splat(self.packed[self.integrals.len() - 1]);
-        let mut coulomb_ab = 0.0;
-        for c in 0..self.a {
+        let mut coulomb = V::zero();
+        // Two stretches at a time while whole vectors stay inside the row.
+        let mut c = 0;
+        while c + 1 < self.a && pair_count(c + 1) + c / 4 * 4 + 4 <= self.integrals.len() {
+            self.two_stretches::<V>(c, density_ab, &mut coulomb);
+            c += 2;
+        }
+        let mut coulomb_ab = sum(coulomb);
+        for c in c..self.a {
             let start = pair_count(c);
             let whole = c / 4 * 4;
             let mut dots = self.whole_fours::<V>(c, start, whole, density_ab);
@@ -228,6 +260,98 @@ impl Row<'_> {
         let whole = self.b / 4 * 4;
         let dots = self.whole_fours::<V>(self.a, start, whole, density_ab);
         coulomb_ab + self.last_singly(self.a, start, whole, self.b, dots.sums())
+    }
+
+    /// The stretches c, even, and c + 1; adds to the lanes of J_ab.
+    #[inline(always)]
+    fn two_stretches<V: Lanes>(&mut self, c: usize, density_ab: V, coulomb_ab: &mut V) {
+        let factor_a0 = V::splat(self.density_b[c]);
+        let factor_a1 = V::splat(self.density_b[c + 1]);
+        let factor_b0 = V::splat(self.density_a[c]);
+        let factor_b1 = V::splat(self.density_a[c + 1]);
+        let [mut dot_a0, mut dot_a1] = [V::zero(); 2];
+        let [mut dot_b0, mut dot_b1] = [V::zero(); 2];
+        let mut total = *coulomb_ab;
+        let (start0, start1) = (pair_count(c), pair_count(c + 1));
+        let whole = c / 4 * 4;
+        {
+            let values0 = fours(self.integrals, start0, whole);
+            let count = values0.len();
+            let values1 = &fours(self.integrals, start1, whole)[..count];
+            let packed0 = &fours(self.packed, start0, whole)[..count];
+            let packed1 = &fours(self.packed, start1, whole)[..count];
+            let density_a = &fours(self.density_a, 0, whole)[..count];
+            let density_b = &fours(self.density_b, 0, whole)[..count];
+            let exchange_a = &mut self.exchange_a[..whole].as_chunks_mut::<4>().0[..count];
+            let exchange_b = &mut self.exchange_b[..whole].as_chunks_mut::<4>().0[..count];
+            let (first, second) = self.coulomb.split_at_mut(start1);
+            let coulomb0 = &mut first[start0..][..whole].as_chunks_mut::<4>().0[..count];
+            let coulomb1 = &mut second[..whole].as_chunks_mut::<4>().0[..count];
+            let coming = &self.integrals[start0..];
+            for k in 0..count {
+                V::prefetch(coming, 8 * k + AHEAD);
+                let value0 = V::from_array(&values0[k]);
+                let value1 = V::from_array(&values1[k]);
+                let p_a = V::from_array(&density_a[k]);
+                let p_b = V::from_array(&density_b[k]);
+                dot_a0 = value0.mul_add(p_b, dot_a0);
+                dot_a1 = value1.mul_add(p_b, dot_a1);
+                dot_b0 = value0.mul_add(p_a, dot_b0);
+                dot_b1 = value1.mul_add(p_a, dot_b1);
+                total = value0.mul_add(V::from_array(&packed0[k]), total);
+                total = value1.mul_add(V::from_array(&packed1[k]), total);
+                let k_a = value0.mul_add(factor_a0, V::from_array(&exchange_a[k]));
+                exchange_a[k] = value1.mul_add(factor_a1, k_a).to_array();
+                let k_b = value0.mul_add(factor_b0, V::from_array(&exchange_b[k]));
+                exchange_b[k] = value1.mul_add(factor_b1, k_b).to_array();
+                let j = value0.mul_add(density_ab, V::from_array(&coulomb0[k]));
+                coulomb0[k] = j.to_array();
+                let j = value1.mul_add(density_ab, V::from_array(&coulomb1[k]));
+                coulomb1[k] = j.to_array();
+            }
+        }
+        // The two ends, up to c = d.
+        let p_a = V::from_array(four(self.density_a, whole));
+        let p_b = V::from_array(four(self.density_b, whole));
+        let value = V::from_array(four(self.integrals, start0 + whole));
+        let [weight_j, weight_k] = &LAST_FOUR[c - whole];
+        let value_j0 = value.mul(V::from_array(weight_j));
+        let value0 = value.mul(V::from_array(weight_k));
+        let value = V::from_array(four(self.integrals, start1 + whole));
+        let [weight_j, weight_k] = &LAST_FOUR[c + 1 - whole];
+        let value_j1 = value.mul(V::from_array(weight_j));
+        let value1 = value.mul(V::from_array(weight_k));
+        dot_a0 = value0.mul_add(p_b, dot_a0);
+        dot_a1 = value1.mul_add(p_b, dot_a1);
+        dot_b0 = value0.mul_add(p_a, dot_b0);
+        dot_b1 = value1.mul_add(p_a, dot_b1);
+        total = value_j0.mul_add(V::from_array(four(self.packed, start0 + whole)), total);
+        total = value_j1.mul_add(V::from_array(four(self.packed, start1 + whole)), total);
+        add_two(
+            self.exchange_a,
+            whole,
+            [value0, value1],
+            [factor_a0, factor_a1],
+        );
+        add_two(
+            self.exchange_b,
+            whole,
+            [value0, value1],
+            [factor_b0, factor_b1],
+        );
+        if let Some(to) = self.coulomb[start0 + whole..].first_chunk_mut::<4>() {
+            *to = value_j0.mul_add(density_ab, V::from_array(to)).to_array();
+        }
+        if let Some(to) = self.coulomb[start1 + whole..].first_chunk_mut::<4>() {
+            *to = value_j1.mul_add(density_ab, V::from_array(to)).to_array();
+        }
+        let [p, q, r, s] = V::transposed_square([dot_a0, dot_a1, dot_b0, dot_b1]);
+        let [k_ac0, k_ac1, k_bc0, k_bc1] = p.add(q).add(r.add(s)).to_array();
+        self.exchange_a[c] += k_ac0;
+        self.exchange_a[c + 1] += k_ac1;
+        self.exchange_b[c] += k_bc0;
+        self.exchange_b[c + 1] += k_bc1;
+        *coulomb_ab = total;
     }
 
     /// The integrals d < `whole` of a stretch.
@@ -325,13 +449,25 @@ impl Row<'_> {
 impl<V: Lanes> Dots<V> {
     #[inline(always)]
     fn sums(self) -> [f64; 3] {
-        let mut sums = [0.0; 3];
-        for (sum, dot) in sums.iter_mut().zip(self.0) {
-            let [p, q, r, s] = dot.to_array();
-            *sum = (p + q) + (r + s);
-        }
-        sums
+        let [a, b, j] = self.0;
+        [sum(a), sum(b), sum(j)]
     }
+}
+
+/// Adds Σ values · factors to the four numbers from `at` on.
+#[inline(always)]
+fn add_two<V: Lanes>(to: &mut [f64], at: usize, values: [V; 2], factors: [V; 2]) {
+    if let Some(to) = to[at..].first_chunk_mut::<4>() {
+        let first = values[0].mul_add(factors[0], V::from_array(to));
+        *to = values[1].mul_add(factors[1], first).to_array();
+    }
+}
+
+/// The lanes added up.
+#[inline(always)]
+fn sum<V: Lanes>(lanes: V) -> f64 {
+    let [p, q, r, s] = lanes.to_array();
+    (p + q) + (r + s)
 }
 
 /// The four numbers from `at` on.

@@ -1,9 +1,10 @@
 //! Coulomb and exchange matrices with no integral stored.
 
 use super::digestion::{CoulombExchange, CoulombExchangePair};
-use super::groups::{PairSet, QuartetSink};
+use super::groups::PairSet;
 use super::lanes::Four;
 use super::pairs::ShellPair;
+use super::walk::{QuartetSink, walk};
 use super::{IntegralCounts, RepulsionSettings, pair_count};
 use crate::basis::Basis;
 use nalgebra::DMatrix;
@@ -62,18 +63,17 @@ impl CoulombExchange for DirectRepulsion {
                     .collect()
             })
             .collect();
-        let sinks = self
-            .set
-            .walk(&self.set.all_moved(), &self.settings, Some(SINKS), || {
-                DigestSink {
-                    n,
-                    densities,
-                    packed: &packed,
-                    blocks: &blocks,
-                    sums: densities.iter().map(|_| Sums::new(n)).collect(),
-                    computed: 0,
-                }
-            });
+        let moved = self.set.all_moved();
+        let sinks = walk(&self.set, &moved, &self.settings, Some(SINKS), || {
+            DigestSink {
+                n,
+                densities,
+                packed: &packed,
+                blocks: &blocks,
+                sums: densities.iter().map(|_| Sums::new(n)).collect(),
+                computed: 0,
+            }
+        });
         let mut totals: Vec<Sums> = densities.iter().map(|_| Sums::new(n)).collect();
         for sink in &sinks {
             for (total, part) in totals.iter_mut().zip(&sink.sums) {

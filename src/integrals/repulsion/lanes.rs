@@ -11,7 +11,6 @@
     reason = "vector instructions, and disjoint writes from several threads"
 )]
 
-use super::pair_count;
 use crate::integrals::boys::CellPolynomial;
 
 /// Four doubles in memory, one per lane.
@@ -34,6 +33,14 @@ pub(in crate::integrals) trait Lanes: Copy {
     /// # Safety
     /// `to` must be valid for writes.
     unsafe fn write(self, to: *mut [f64; 4]);
+    /// Writes four doubles to memory past the caches, if the instruction set can.
+    ///
+    /// # Safety
+    /// `to` must be valid for writes and aligned to 32 bytes, and nobody may read it before
+    /// [`Self::finish_streams`].
+    unsafe fn stream(self, to: *mut [f64; 4]);
+    /// Makes visible what was streamed.
+    fn finish_streams();
     fn add(self, other: Self) -> Self;
     fn sub(self, other: Self) -> Self;
     fn mul(self, other: Self) -> Self;
@@ -56,6 +63,9 @@ pub(in crate::integrals) trait Lanes: Copy {
     fn transposed(rows: [&CellPolynomial; 4]) -> [Self; 8];
     /// Element l of the four goes to lane of its place in vector l.
     fn transposed_square(square: [Self; 4]) -> [Self; 4];
+    /// Asks for the line of memory with number `index` of a list, which may lie beyond its end, in time
+    /// for its use.
+    fn prefetch(list: &[f64], index: usize);
     /// Runs a kernel compiled for these lanes.
     fn call<K: Kernel>(kernel: K) -> K::Output;
     /// Zero in all lanes.
@@ -128,6 +138,13 @@ impl Lanes for Portable {
         unsafe { *to = self.0 }
     }
     #[inline(always)]
+    unsafe fn stream(self, to: *mut [f64; 4]) {
+        // SAFETY: promised by the caller.
+        unsafe { *to = self.0 }
+    }
+    #[inline(always)]
+    fn finish_streams() {}
+    #[inline(always)]
     fn add(self, other: Self) -> Self {
         self.zip(other, |a, b| a + b)
     }
@@ -193,6 +210,8 @@ impl Lanes for Portable {
         std::array::from_fn(|l| Self(square.map(|v| v.0[l])))
     }
     #[inline(always)]
+    fn prefetch(_list: &[f64], _index: usize) {}
+    #[inline(always)]
     fn call<K: Kernel>(kernel: K) -> K::Output {
         kernel.run::<Self>()
     }
@@ -243,6 +262,16 @@ mod avx2 {
         unsafe fn write(self, to: *mut [f64; 4]) {
             // SAFETY: features as said at the type; the place is promised by the caller.
             unsafe { _mm256_storeu_pd(to.cast(), self.0) }
+        }
+        #[inline(always)]
+        unsafe fn stream(self, to: *mut [f64; 4]) {
+            // SAFETY: features as said at the type; place and alignment are promised by the caller.
+            unsafe { _mm256_stream_pd(to.cast(), self.0) }
+        }
+        #[inline(always)]
+        fn finish_streams() {
+            // SAFETY: features as said at the type.
+            unsafe { _mm_sfence() }
         }
         #[inline(always)]
         fn add(self, other: Self) -> Self {
@@ -348,6 +377,12 @@ mod avx2 {
             }
         }
         #[inline(always)]
+        fn prefetch(list: &[f64], index: usize) {
+            let place = list.as_ptr().wrapping_add(index);
+            // SAFETY: features as said at the type; nothing is read, and any address may be named.
+            unsafe { _mm_prefetch::<_MM_HINT_T0>(place.cast()) }
+        }
+        #[inline(always)]
         fn call<K: Kernel>(kernel: K) -> K::Output {
             // SAFETY: features as said at the type.
             unsafe { super::run_avx2(kernel) }
@@ -396,8 +431,8 @@ pub(super) struct Run {
 /// Four quartets on their way from lanes to the packed list.
 pub(super) struct Scatter<'a> {
     pub(super) list: SharedList<'a>,
-    /// For each lane the places of the later pairs.
-    pub(super) rows: [&'a [u32]; 4],
+    /// For each lane where the rows of the later pair start in the list.
+    pub(super) rows: [&'a [usize]; 4],
     /// For each lane the earlier pairs in runs, which differ by their places only.
     pub(super) runs: [&'a [Run]; 4],
     /// Distance of the function pairs of a run.
@@ -419,12 +454,12 @@ impl Kernel for Scatter<'_> {
         let row_count = self.rows[0].len();
         let mut last_value = 0;
         for lane in 0..self.lanes {
-            let rows = self.rows[lane].iter().copied().max().unwrap_or(0) as usize;
+            let last_row = self.rows[lane].iter().copied().max().unwrap_or(0);
             assert_eq!(self.rows[lane].len(), row_count);
             assert_eq!(self.runs[lane].len(), self.runs[0].len());
             for (run, first) in self.runs[lane].iter().zip(self.runs[0]) {
                 assert!(run.len == first.len && run.len > 0);
-                assert!(pair_count(rows) + run.place + run.len <= self.list.len);
+                assert!(last_row + run.place + run.len <= self.list.len);
                 last_value = last_value.max(first.first * column_stride + (run.len - 1) * step);
             }
         }
@@ -458,8 +493,7 @@ impl Scatter<'_> {
             for lane in 0..LANES {
                 // SAFETY: promised by the caller.
                 unsafe {
-                    let row = *self.rows[lane].get_unchecked(r) as usize;
-                    starts[lane] = starts[lane].add(pair_count(row));
+                    starts[lane] = starts[lane].add(*self.rows[lane].get_unchecked(r));
                 }
             }
             for k in 0..self.runs[0].len() {
@@ -509,7 +543,7 @@ impl Scatter<'_> {
         for (r, &row) in self.rows[lane].iter().enumerate() {
             for run in self.runs[lane] {
                 let value = r * row_stride + run.first * column_stride;
-                let place = pair_count(row as usize) + run.place;
+                let place = row + run.place;
                 for i in 0..run.len {
                     // SAFETY: promised by the caller.
                     unsafe {
@@ -546,15 +580,19 @@ impl<'a> SharedList<'a> {
         }
     }
 
+    pub(super) fn len(&self) -> usize {
+        self.len
+    }
+
     /// Writes one lane of a block of values: the one for row r and column c, at r · strides[0] +
-    /// c · strides[1] of `values`, to place rows[r](rows[r] + 1)/2 + columns[c].
+    /// c · strides[1] of `values`, to place rows[r] + columns[c].
     ///
     /// # Panics
     /// If a place is beyond the end of the list, or `values` is too short.
     #[inline]
     pub(super) fn scatter(
         &self,
-        rows: &[u32],
+        rows: &[usize],
         columns: &[u32],
         values: &[Four],
         lane: usize,
@@ -564,17 +602,16 @@ impl<'a> SharedList<'a> {
         else {
             return;
         };
-        assert!(pair_count(last_row as usize) + (last_column as usize) < self.len);
+        assert!(last_row + (last_column as usize) < self.len);
         assert!((rows.len() - 1) * strides[0] + (columns.len() - 1) * strides[1] < values.len());
         assert!(lane < 4);
         for (r, &row) in rows.iter().enumerate() {
-            let start = pair_count(row as usize);
             for (c, &column) in columns.iter().enumerate() {
                 // SAFETY: the largest place and the largest index were checked above; places are
                 // disjoint between threads.
                 unsafe {
                     let value = values.get_unchecked(r * strides[0] + c * strides[1]);
-                    *self.start.add(start + column as usize) = *value.0.get_unchecked(lane);
+                    *self.start.add(row + column as usize) = *value.0.get_unchecked(lane);
                 }
             }
         }
@@ -589,5 +626,57 @@ impl<'a> SharedList<'a> {
         assert!(index < self.len);
         // SAFETY: inside the list, which is borrowed for 'a; places are disjoint between threads.
         unsafe { *self.start.add(index) = value }
+    }
+}
+
+/// Stretches of numbers on their way from a buffer to the list, past the caches.
+pub(super) struct Streams<'a> {
+    pub(super) list: SharedList<'a>,
+    pub(super) from: &'a [f64],
+    pub(super) stretches: &'a [Stretch],
+}
+
+/// Numbers that stay together.
+#[derive(Debug, Clone, Copy)]
+pub(super) struct Stretch {
+    /// Where they start in the buffer.
+    pub(super) from: usize,
+    /// Where they start in the list.
+    pub(super) to: usize,
+    pub(super) len: usize,
+}
+
+impl Kernel for Streams<'_> {
+    type Output = ();
+
+    #[inline(always)]
+    fn run<V: Lanes>(self) {
+        for &Stretch { from, to, len } in self.stretches {
+            let numbers = &self.from[from..][..len];
+            assert!(to + len <= self.list.len);
+            // SAFETY: inside the list, as just checked; places are disjoint between threads. The streams
+            // begin at a multiple of 64 bytes.
+            unsafe {
+                let mut to = self.list.start.add(to);
+                let head = to.align_offset(64).min(len);
+                let (head, rest) = numbers.split_at(head);
+                for &number in head {
+                    *to = number;
+                    to = to.add(1);
+                }
+                let (lines, rest) = rest.as_chunks::<8>();
+                for line in lines {
+                    let (fours, _) = line.as_chunks::<4>();
+                    V::from_array(&fours[0]).stream(to.cast());
+                    V::from_array(&fours[1]).stream(to.add(4).cast());
+                    to = to.add(8);
+                }
+                for &number in rest {
+                    *to = number;
+                    to = to.add(1);
+                }
+            }
+        }
+        V::finish_streams();
     }
 }

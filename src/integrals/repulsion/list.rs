@@ -1,13 +1,15 @@
 //! The packed list of all unique integrals of one geometry.
 
 use super::digestion::{CoulombExchange, CoulombExchangePair, coulomb_exchange_packed};
-use super::groups::{PairSet, QuartetSink};
-use super::lanes::{Four, Scatter, SharedList, dispatch};
+use super::groups::PairSet;
+use super::lanes::{Four, Scatter, SharedList, Streams, Stretch, dispatch};
 use super::pairs::ShellPair;
+use super::walk::{QuartetSink, walk};
 use super::{IntegralCounts, RepulsionSettings, pair_count};
 use crate::basis::Basis;
 use nalgebra::DMatrix;
 use std::cmp::Ordering;
+use std::sync::{Mutex, PoisonError};
 
 /// All unique integrals of one geometry, packed with their eight-fold symmetry.
 ///
@@ -109,9 +111,14 @@ impl RepulsionList {
 
     fn fill(&mut self, moved: &[bool], erase_skipped: bool) {
         let list = SharedList::new(&mut self.integrals);
-        self.set.walk(moved, &self.settings, None, || ListSink {
+        let buffers = Mutex::default();
+        walk(&self.set, moved, &self.settings, None, || ListSink {
             list,
+            moved,
             erase_skipped,
+            buffers: &buffers,
+            staging: None,
+            zeros: Vec::new(),
         });
     }
 }
@@ -122,27 +129,74 @@ impl CoulombExchange for RepulsionList {
     }
 }
 
+/// Lists of at least so many integrals do not fit the caches.
+const STAGED_FROM: usize = 1 << 20;
+/// Most numbers in a buffer, so that it stays in the second cache.
+const STAGED_AT_MOST: usize = 1 << 17;
+
 /// Writes quartets to their places in the list.
 struct ListSink<'a> {
     list: SharedList<'a>,
+    moved: &'a [bool],
     /// Whether skipped quartets may hold integrals of an earlier geometry.
     erase_skipped: bool,
+    /// Buffers not in use.
+    buffers: &'a Mutex<Vec<Staging>>,
+    staging: Option<Staging>,
+    /// What skipped quartets have.
+    zeros: Vec<Four>,
+}
+
+/// The rows of one outer pair, as far as their columns belong to earlier shells, on their way to a list
+/// that does not fit the caches: written here piece by piece, they go to memory in long streams.
+#[derive(Default)]
+struct Staging {
+    /// Where the rows begin in `numbers`.
+    rows: Vec<usize>,
+    stretches: Vec<Stretch>,
+    numbers: Vec<f64>,
+}
+
+impl Staging {
+    fn prepare(&mut self, outer: &ShellPair) {
+        self.rows.clear();
+        self.stretches.clear();
+        let mut from = 0;
+        for &to in &outer.rows {
+            let len = outer.earlier_places;
+            self.rows.push(from);
+            self.stretches.push(Stretch { from, to, len });
+            from += len.next_multiple_of(4);
+        }
+        if self.numbers.len() < from {
+            self.numbers.resize(from, 0.0);
+        }
+    }
 }
 
 impl ListSink<'_> {
+    /// Where the rows of a pair go that meets pairs with an earlier first shell.
+    #[inline]
+    fn target<'b>(&'b mut self, pair: &'b ShellPair) -> (SharedList<'b>, &'b [usize]) {
+        match &mut self.staging {
+            Some(staging) => (SharedList::new(&mut staging.numbers), &staging.rows),
+            None => (self.list, &pair.rows),
+        }
+    }
+
     /// Writes the quartet of a bra and a ket: `values` row by row, of which one lane counts.
     #[inline]
-    fn write(&self, bra: &ShellPair, ket: &ShellPair, values: &[Four], lane: usize) {
+    fn write(&mut self, bra: &ShellPair, ket: &ShellPair, values: &[Four], lane: usize) {
         let width = ket.places.len();
         // Pairs are ordered by their higher shell first, as are the places of their functions.
         match bra.shells[0].cmp(&ket.shells[0]) {
             Ordering::Greater => {
-                self.list
-                    .scatter(&bra.places, &ket.places, values, lane, [width, 1]);
+                let (list, rows) = self.target(bra);
+                list.scatter(rows, &ket.places, values, lane, [width, 1]);
             }
             Ordering::Less => {
-                self.list
-                    .scatter(&ket.places, &bra.places, values, lane, [1, width]);
+                let (list, rows) = self.target(ket);
+                list.scatter(rows, &bra.places, values, lane, [1, width]);
             }
             Ordering::Equal => {
                 // A pair with itself has every integral twice, and the two may differ by rounding.
@@ -161,6 +215,19 @@ impl ListSink<'_> {
 }
 
 impl QuartetSink for ListSink<'_> {
+    fn begin(&mut self, outer: &ShellPair) {
+        // The rows of a moved pair are written whole, other rows only in part.
+        let staged = self.list.len() >= STAGED_FROM
+            && outer.rows.len() * outer.earlier_places <= STAGED_AT_MOST
+            && outer.touches(self.moved);
+        self.staging = staged.then(|| {
+            let mut buffers = self.buffers.lock().unwrap_or_else(PoisonError::into_inner);
+            let mut staging = buffers.pop().unwrap_or_default();
+            staging.prepare(outer);
+            staging
+        });
+    }
+
     fn take(&mut self, bra: &[&ShellPair], ket: &[&ShellPair], result: &[Four]) {
         let width = ket[0].places.len();
         let lanes = bra.len();
@@ -183,9 +250,19 @@ impl QuartetSink for ListSink<'_> {
         let alike = |columns: &[&ShellPair]| columns.iter().all(|c| order(c) == order(columns[0]));
         if let Some((rows, columns, strides)) = sides.filter(|(_, columns, _)| alike(columns)) {
             let lane = |l: usize| l.min(lanes - 1);
+            let (list, rows) = match &mut self.staging {
+                Some(staging) => {
+                    let rows = [staging.rows.as_slice(); 4];
+                    (SharedList::new(&mut staging.numbers), rows)
+                }
+                None => (
+                    self.list,
+                    [0, 1, 2, 3].map(|l| rows[lane(l)].rows.as_slice()),
+                ),
+            };
             dispatch(Scatter {
-                list: self.list,
-                rows: [0, 1, 2, 3].map(|l| rows[lane(l)].places.as_slice()),
+                list,
+                rows,
                 runs: [0, 1, 2, 3].map(|l| columns[lane(l)].runs.as_slice()),
                 run_stride: columns[0].run_stride,
                 values: result,
@@ -200,9 +277,27 @@ impl QuartetSink for ListSink<'_> {
     }
 
     fn skip(&mut self, bra: &ShellPair, ket: &ShellPair) {
-        if self.erase_skipped {
+        // A buffer holds what the pair before left there.
+        if self.erase_skipped || self.staging.is_some() {
             let count = bra.places.len() * ket.places.len();
-            self.write(bra, ket, &vec![Four::default(); count], 0);
+            let mut zeros = std::mem::take(&mut self.zeros);
+            if zeros.len() < count {
+                zeros.resize(count, Four::default());
+            }
+            self.write(bra, ket, &zeros, 0);
+            self.zeros = zeros;
+        }
+    }
+
+    fn end(&mut self) {
+        if let Some(staging) = self.staging.take() {
+            dispatch(Streams {
+                list: self.list,
+                from: &staging.numbers,
+                stretches: &staging.stretches,
+            });
+            let mut buffers = self.buffers.lock().unwrap_or_else(PoisonError::into_inner);
+            buffers.push(staging);
         }
     }
 }

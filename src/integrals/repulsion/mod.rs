@@ -1,8 +1,8 @@
 //! Electron-repulsion integrals (ab|cd): the fast kernel, the packed list, and Coulomb and exchange
 //! matrices from it.
 //!
-//! Shell pairs are prepared once per geometry ([`pairs`]), their quartets evaluated four at a time in
-//! vector lanes ([`quartets`]). [`RepulsionList`] keeps all unique integrals of one geometry and, when
+//! Shell pairs are prepared once per geometry ([`pairs`]), their quartets visited ([`walk`]) and evaluated
+//! four at a time in vector lanes ([`quartets`]). [`RepulsionList`] keeps all unique integrals of one geometry and, when
 //! atoms move, evaluates again only what touches them; [`DirectRepulsion`] keeps none.
 //! Both give the same bits for any number of threads.
 
@@ -20,6 +20,8 @@ pub mod peak;
 pub(in crate::integrals) mod primitives;
 mod products;
 mod quartets;
+mod segments;
+mod walk;
 
 pub use digestion::{CoulombExchange, CoulombExchangePair};
 pub use direct::DirectRepulsion;

@@ -2,6 +2,7 @@
 
 use super::class::{ClassKey, PairClass, Scalar, ShellType};
 use super::lanes::{Four, Kernel, Lanes, Run, dispatch};
+use super::pair_count;
 use super::primitives::field;
 use crate::basis::{Basis, Shell};
 use crate::integrals::recurrence::{hermite_count, hermite_powers};
@@ -17,7 +18,11 @@ pub(super) struct ShellPair {
     pub(super) class: Arc<PairClass>,
     /// Packed index a(a+1)/2 + b of each function pair, in the order of the class.
     pub(super) places: Vec<u32>,
-    /// The same in runs of places that follow one another, and the distance of the function pairs in a
+    /// Where the row of each function pair starts in the packed list.
+    pub(super) rows: Vec<usize>,
+    /// How many places of the list's rows belong to pairs with an earlier first shell: the first so many.
+    pub(super) earlier_places: usize,
+    /// The function pairs in runs of places that follow one another, and the distance of the function pairs in a
     /// run: 1, or the number of functions of shell B where A's functions come first.
     pub(super) runs: Vec<Run>,
     pub(super) run_stride: usize,
@@ -111,10 +116,12 @@ impl ShellPair {
         }
         primitives.sort_by(|x, y| y.bound.total_cmp(&x.bound));
         Self {
+            earlier_places: pair_count(basis.offset(s)),
             shells: [s, t],
             atoms: [shell_a.atom, shell_b.atom],
             runs: runs(&places, run_stride),
             run_stride,
+            rows: places.iter().map(|&ab| pair_count(ab as usize)).collect(),
             places,
             functions,
             primitives: primitives.len(),

@@ -214,16 +214,15 @@ fn reserve(buffer: &mut Vec<Four>, len: usize) {
 }
 
 impl QuartetEngine {
-    /// Evaluates the integrals of four quartets, for [`Self::result`].
+    /// Evaluates the integrals of four quartets: element f · ket functions + g, one quartet in each lane.
     ///
     /// Primitives are left out as [`crate::integrals::screening`] says, with `budget` the error allowed.
     pub(super) fn evaluate(
         &mut self,
         plan: &QuartetPlan,
-        bra: &PairBlock,
-        ket: &PairBlock,
+        [bra, ket]: [&PairBlock; 2],
         budget: f64,
-    ) {
+    ) -> &[Four] {
         let nherm = hermite_count(plan.degree);
         let (bra_functions, ket_functions) = plan.shape();
         reserve(&mut self.hermites, plan.ket_batch * nherm);
@@ -240,11 +239,6 @@ impl QuartetEngine {
             ket,
             cut: Four([budget; 4]),
         });
-    }
-
-    /// What [`Self::evaluate`] found last: element f · ket functions + g, one quartet in each lane.
-    pub(super) fn result(&self, plan: &QuartetPlan) -> &[Four] {
-        let (bra_functions, ket_functions) = plan.shape();
         &self.result[..bra_functions * ket_functions]
     }
 }
