@@ -85,7 +85,7 @@ impl<'a, S: Surface> Evaluator<'a, S> {
         let nearest = known.last();
         let here = &self.scan.coordinates[point];
         let tests = nearest.map_or(&[][..], |k| &k.left.tests);
-        let demand = self.demand(here, tests, before);
+        let demand = self.demand(here, nearest.is_none(), tests, before);
         let follow = match self.scan.settings.state {
             StateChoice::Follow => nearest.map(|k| &k.left.seed),
             StateChoice::Lowest => None,
@@ -153,11 +153,18 @@ impl<'a, S: Surface> Evaluator<'a, S> {
     }
 
     /// What is asked about stability on the first try.
-    fn demand(&self, here: &[f64], tests: &[Test], before: Option<f64>) -> StabilityDemand {
+    fn demand(
+        &self,
+        here: &[f64],
+        is_fresh: bool,
+        tests: &[Test],
+        before: Option<f64>,
+    ) -> StabilityDemand {
         let settings = &self.scan.settings;
         if !settings.stability || before.is_some() || !testing::is_due(here, tests, &self.longest) {
             StabilityDemand::None
-        } else if settings.state == StateChoice::Follow {
+        } else if settings.state == StateChoice::Follow && !is_fresh {
+            // The start itself is left downhill: a saddle point is no state to follow.
             StabilityDemand::Report
         } else {
             StabilityDemand::Leave
