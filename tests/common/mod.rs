@@ -2,6 +2,8 @@
 
 #![allow(dead_code, reason = "each test binary uses its own part")]
 
+pub(crate) mod starts;
+
 use nalgebra::Vector3;
 use thalweg::basis::{FunctionKind, library};
 use thalweg::elements::Element;
