@@ -25,7 +25,7 @@ struct Case {
 const ETHYLENE_ZMATRIX: &str = "C1\nC2 C1 1.32\nH1 C1 1.08 C2 121.5\nH2 C1 1.08 C2 121.5 H1 180\nH3 C2 1.08 C1 121.5 H1 0\nH4 C2 1.08 C1 121.5 H1 180";
 
 /// The scans of which every kept point must be the lowest, in order of the table.
-const CASES: [Case; 22] = [
+const CASES: [Case; 23] = [
     Case {
         name: "N2",
         zmatrix: "N1\nN2 N1 1.1",
@@ -157,6 +157,12 @@ const CASES: [Case; 22] = [
         zmatrix: "Li\nF Li 1.6",
         level: "basis = \"6-31g\"",
         sweep: "bond = [\"Li\", \"F\"]\nfrom = 1.4\nto = 5.0\nstep = 0.2",
+    },
+    Case {
+        name: "NaCl",
+        zmatrix: "Na\nCl Na 2.4",
+        level: "basis = \"6-31g\"",
+        sweep: "bond = [\"Na\", \"Cl\"]\nfrom = 2.2\nto = 8.2\nstep = 0.6",
     },
 ];
 

@@ -22,6 +22,17 @@ pub(super) struct Left<T> {
     tests: Vec<Test>,
 }
 
+impl<T> Left<T> {
+    /// A start that is no solution of any point.
+    pub(super) fn untested(seed: T) -> Self {
+        Self {
+            energy: f64::INFINITY,
+            seed,
+            tests: Vec::new(),
+        }
+    }
+}
+
 /// A solution known at another point.
 #[derive(Debug)]
 pub(super) struct Known<'a, T> {
@@ -69,6 +80,12 @@ impl<'a, S: Surface> Evaluator<'a, S> {
     /// Whether the memory allows every thread a workspace of its own.
     pub(super) fn side_by_side(&self) -> bool {
         self.side_by_side
+    }
+
+    /// A start from free atoms at a point, where the molecule has fallen apart.
+    pub(super) fn apart(&self, point: usize) -> Option<S::Seed> {
+        let positions = &self.scan.positions[point];
+        self.pool.install(|| self.surface.apart(positions))
     }
 
     /// Evaluates a point from the solutions in `known`, nearest last. `before` is the energy of a solution already
