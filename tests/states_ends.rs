@@ -2,14 +2,15 @@
 
 mod common;
 
-use common::{diatomic, evaluate, surface};
+use common::{charged, diatomic, evaluate, surface};
 use std::path::Path;
 use std::sync::atomic::AtomicBool;
-use thalweg::job::{self, JobResult, LevelResult, pieces};
+use thalweg::job::{self, JobResult, LevelResult, PointResult, pieces};
+use thalweg::molecule::Molecule;
 use thalweg::scan::FindingKind;
 use thalweg::scf::Method;
 use thalweg::spec::{Spec, parse};
-use thalweg::surface::StabilityDemand;
+use thalweg::surface::{StabilityDemand, Surface};
 use thalweg::units::ANGSTROM_PER_BOHR;
 
 fn scan(zmatrix: &str, level: &str, sweep: &str, extra: &str) -> Spec {
@@ -38,6 +39,9 @@ const F2: &str = "F1\nF2 F1 1.4";
 const HF: &str = "F\nH F 0.92";
 const LIH: &str = "Li\nH Li 1.6";
 const O2: &str = "O1\nO2 O1 1.2";
+const WATER: &str = "O\nH1 O 0.96\nH2 O 0.96 H1 104.5";
+const ETHYLENE: &str = "C1\nC2 C1 1.32\nH1 C1 1.08 C2 121.5\nH2 C1 1.08 C2 121.5 H1 180\nH3 C2 1.08 C1 121.5 H1 0\nH4 C2 1.08 C1 121.5 H1 180";
+
 #[test]
 fn far_apart_energies_are_those_of_the_parts() {
     for (zmatrix, one, other) in [
@@ -92,6 +96,56 @@ fn two_triplet_atoms_are_out_of_reach_of_triplet_oxygen_and_a_finding_says_so() 
     assert!(finding.text.contains("multiplicity"), "{}", finding.text);
     let sentence = pieces::sentence(&level, &labels).expect("far enough");
     assert!(sentence.contains("cannot be reached"), "{sentence}");
+}
+
+/// Ionic and neutral NaCl cross near 5.5 Å, and either curve is stable far beyond: walks from both ends and fresh starts stay on
+/// the ionic one. Without the starts from free atoms 8 Å was 99 kJ/mol too high (−621.2518 hartree), and no finding said so.
+#[test]
+fn sodium_chloride_leaves_as_atoms() {
+    for start in ["geometry", "last"] {
+        let (level, _) = level_of(
+            "Na\nCl Na 2.4",
+            "method = \"uhf\"\nbasis = \"6-31g*\"",
+            "bond = [\"Na\", \"Cl\"]\nfrom = 2.4\nto = 8.0\nstep = 0.4",
+            &format!("[walk]\nstart = \"{start}\""),
+        );
+        let limit = level.limit.as_ref().and_then(|l| l.energy).unwrap();
+        let (near, far) = (level.points.first().unwrap(), level.points.last().unwrap());
+        let apart = far.record.energy.unwrap() - limit;
+        assert!(apart.abs() < 1e-3, "{start}: {apart}");
+        assert!(far.record.charges_loewdin[0].abs() < 0.05);
+        assert!(near.record.charges_mulliken[0] > 0.5);
+        // The curve is the lower of two smooth ones: it never falls again.
+        let energies = level.points.iter().map(|p| p.record.energy.unwrap());
+        let energies: Vec<f64> = energies.collect();
+        assert!(energies.windows(2).all(|w| w[1] > w[0] - 1e-4), "{start}");
+    }
+}
+
+#[test]
+fn only_what_has_fallen_apart_starts_from_its_atoms() {
+    let start = |molecule: Molecule, method: Method| {
+        let surface = surface(&molecule, "6-31g", method);
+        surface.apart(&molecule.positions)
+    };
+    let salt = |length: f64| diatomic("Na", "Cl", length);
+    assert!(start(salt(2.4), Method::Uhf).is_none());
+    assert!(start(salt(8.0), Method::Rhf).is_none());
+    let electrons = |molecule: Molecule| -> Vec<usize> {
+        let seed = start(molecule, Method::Uhf).expect("apart");
+        let occupied = &seed.state().occupied;
+        for block in occupied {
+            let unit = block.transpose() * block;
+            assert!(
+                (&unit - nalgebra::DMatrix::identity(unit.nrows(), unit.ncols())).amax() < 1e-10
+            );
+        }
+        occupied.iter().map(|y| y.ncols()).collect()
+    };
+    assert_eq!(electrons(salt(8.0)), [14, 14]);
+    assert_eq!(electrons(charged(diatomic("N", "N", 4.0), 1, 2)), [7, 6]);
+    assert_eq!(electrons(charged(diatomic("H", "H", 4.0), 1, 2)), [1, 0]);
+    assert_eq!(electrons(charged(diatomic("O", "O", 4.0), 0, 3)), [9, 7]);
 }
 
 /// Where RHF H₂ becomes unstable towards UHF, bohr: zero of the lowest eigenvalue of ε_a − ε_i − (ii|ab) − (ia|ib)
@@ -179,13 +233,127 @@ fn restricted_hydrogen_fluoride_keeps_a_spurious_charge() {
     assert!((0.3..0.4).contains(&loewdin), "{loewdin}");
     assert!(sentence.contains("charges are spurious"), "{sentence}");
     assert!(sentence.contains(&format!("{loewdin:+.2}")), "{sentence}");
+    assert!(sentence.contains("(Löwdin populations)"), "{sentence}");
     let (mulliken, loewdin, sentence) = end("uhf");
     assert!(mulliken.abs() < 0.01 && loewdin.abs() < 0.01);
     assert!(!sentence.contains("spurious"), "{sentence}");
 }
 
+/// Mayer's bond order between the atoms of the swept bond.
+fn order(point: &PointResult, one: usize, other: usize) -> f64 {
+    let orders = &point.record.bond_orders;
+    let found = orders.iter().find(|&&(i, j, _)| (i, j) == (one, other));
+    found.expect("every pair").2
+}
+
+/// Bond orders count electron pairs at equilibrium (common practice: near 3, 2 and 1), and vanish in UHF far out.
+/// The count is that of RHF: UHF ethylene is spin-polarised at 1.32 Å already (RHF is unstable towards it in this basis), which
+/// takes part of the π bond away; N₂ at 1.1 Å and water at 0.96 Å are not.
+#[test]
+fn bond_orders_count_bonds_and_vanish() {
+    let cases = [
+        (N2, "\"N1\", \"N2\"", 1.1, "", 3.0),
+        (
+            ETHYLENE,
+            "\"C1\", \"C2\"",
+            1.32,
+            "\nmoves = [\"C2\", \"H3\", \"H4\"]",
+            2.0,
+        ),
+        (WATER, "\"O\", \"H1\"", 0.96, "", 1.0),
+    ];
+    for (zmatrix, bond, equilibrium, moves, bonds) in cases {
+        let along = |method: &str, values: &str| {
+            level_of(
+                zmatrix,
+                &format!("method = \"{method}\"\nbasis = \"sto-3g\""),
+                &format!("bond = [{bond}]\nvalues = [{equilibrium}{values}]{moves}"),
+                "",
+            )
+            .0
+        };
+        let restricted = along("rhf", ", 1.4");
+        let near = order(&restricted.points[0], 0, 1);
+        assert!((near - bonds).abs() < 0.06 * bonds, "{bond}: {near}");
+        let unrestricted = along("uhf", ", 1.5, 1.8, 2.2, 3.0, 4.5, 8.0");
+        let far = order(unrestricted.points.last().unwrap(), 0, 1);
+        assert!(far.abs() < 1e-3, "{bond}: {far}");
+        let start = &unrestricted.points[0];
+        let polarised = start.record.s_squared > 1e-3;
+        assert_eq!(polarised, zmatrix == ETHYLENE, "{bond}");
+        let lowered = near - order(start, 0, 1);
+        if polarised {
+            assert!((0.05..0.6).contains(&lowered), "{bond}: {lowered}");
+        } else {
+            assert!(lowered.abs() < 1e-5, "{bond}: {lowered}");
+        }
+    }
+}
+
+/// Charges add up to the molecule's and spin populations to twice its spin at every point, through an onset, for ions and
+/// radicals and several parts.
+#[test]
+fn charges_and_spins_of_every_point_add_up() {
+    let scans = [
+        ("O\nH O 0.96", "\"O\", \"H\"", "uhf", 0, 2),
+        ("O\nH O 0.96", "\"O\", \"H\"", "rhf", -1, 1),
+        (O2, "\"O1\", \"O2\"", "uhf", 0, 3),
+        (N2, "\"N1\", \"N2\"", "uhf", 1, 2),
+        (F2, "\"F1\", \"F2\"", "uhf", 0, 1),
+        (WATER, "\"O\", \"H1\"", "uhf", 0, 1),
+    ];
+    for (zmatrix, bond, method, charge, multiplicity) in scans {
+        let (level, _) = level_of(
+            zmatrix,
+            &format!(
+                "method = \"{method}\"\nbasis = \"6-31g\"\ncharge = {charge}\nmultiplicity = {multiplicity}"
+            ),
+            &format!("bond = [{bond}]\nfrom = 0.9\nto = 2.7\nstep = 0.2"),
+            "",
+        );
+        let sum = |values: &[f64]| values.iter().sum::<f64>();
+        let unpaired = f64::from(multiplicity - 1);
+        for point in &level.points {
+            let record = &point.record;
+            let at = format!("{zmatrix} {charge} {multiplicity}: {:?}", point.values);
+            assert!(record.energy.is_some(), "{at}");
+            let (mulliken, loewdin) = (sum(&record.charges_mulliken), sum(&record.charges_loewdin));
+            assert!((mulliken - f64::from(charge)).abs() < 1e-9, "{at}");
+            assert!((loewdin - f64::from(charge)).abs() < 1e-9, "{at}");
+            assert!((sum(&record.spins_loewdin) - unpaired).abs() < 1e-9, "{at}");
+        }
+    }
+}
+
+/// RHF N₂ has two solutions beyond 1.5 Å, −108.3190 and −108.4562 hartree at 2.0 Å in 6-31G* (a numerical trial with
+/// other code). A walk outwards that carries densities stays on the higher one, unless tests of stability leave it.
+#[test]
+fn val_restricted_nitrogen_needs_its_guard_beyond_1_5_angstrom() {
+    let sweep = "bond = [\"N1\", \"N2\"]\nfrom = 1.1\nto = 2.1\nstep = 0.1";
+    let curve = |walk: &str| -> Vec<f64> {
+        let (level, _) = level_of(
+            N2,
+            "method = \"rhf\"\nbasis = \"6-31g*\"",
+            sweep,
+            &format!("[walk]\nstart = \"first\"\n{walk}"),
+        );
+        let energies = level.points.iter().map(|p| p.record.energy);
+        energies.map(|e| e.expect("converges")).collect()
+    };
+    let bare = curve("seed = \"previous\"\npasses = \"one\"\nstability = false");
+    let guarded = curve("seed = \"previous\"\npasses = \"one\"");
+    let default = curve("");
+    assert!((bare[9] - -108.3190).abs() < 1e-4, "{}", bare[9]);
+    assert!((guarded[9] - -108.4562).abs() < 1e-4, "{}", guarded[9]);
+    for ((bare, guarded), default) in bare.iter().zip(&guarded).zip(&default) {
+        assert!(*guarded < bare + 1e-8, "{guarded} {bare}");
+        assert!((guarded - default).abs() < 1e-7, "{guarded} {default}");
+    }
+}
+
 /// The onset of spin polarisation crossed outwards and inwards: without tests of stability a walk outwards never
-/// leaves the symmetric solution; with them both directions give one curve, symmetric before the onset.
+/// leaves the symmetric solution (at 1.55 Å −108.5873 instead of −108.7563 hartree); with them both directions give one
+/// curve, symmetric before the onset.
 #[test]
 fn the_onset_is_crossed_in_both_directions() {
     let sweep = "bond = [\"N1\", \"N2\"]\nfrom = 0.95\nto = 1.55\nstep = 0.05";
@@ -209,5 +377,5 @@ fn the_onset_is_crossed_in_both_directions() {
         assert!((o.1 - n.1).abs() < 1e-2, "point {i}: {} {}", o.1, n.1);
     }
     assert!(inwards[0].1.abs() < 1e-6 && outwards[12].1 > 0.5);
-    assert!(bare[12].0 > outwards[12].0 + 1e-3);
+    assert!(bare[12].0 > outwards[12].0 + 0.1);
 }

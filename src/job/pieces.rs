@@ -112,7 +112,7 @@ pub fn sentence(level: &LevelResult, labels: &[String]) -> Option<String> {
         .zip(&expected)
         .any(|(p, &charge)| (p.charge - f64::from(charge)).abs() > NEUTRAL);
     let mut text = format!(
-        "at {} Å the pieces are {}. ",
+        "at {} Å the pieces are {} (Löwdin populations). ",
         short(distance),
         described.join("; ")
     );

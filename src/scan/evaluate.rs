@@ -22,6 +22,17 @@ pub(super) struct Left<T> {
     tests: Vec<Test>,
 }
 
+impl<T> Left<T> {
+    /// A start that is no solution of any point.
+    pub(super) fn untested(seed: T) -> Self {
+        Self {
+            energy: f64::INFINITY,
+            seed,
+            tests: Vec::new(),
+        }
+    }
+}
+
 /// A solution known at another point.
 #[derive(Debug)]
 pub(super) struct Known<'a, T> {
@@ -71,6 +82,12 @@ impl<'a, S: Surface> Evaluator<'a, S> {
         self.side_by_side
     }
 
+    /// A start from free atoms at a point, where the molecule has fallen apart.
+    pub(super) fn apart(&self, point: usize) -> Option<S::Seed> {
+        let positions = &self.scan.positions[point];
+        self.pool.install(|| self.surface.apart(positions))
+    }
+
     /// Evaluates a point from the solutions in `known`, nearest last. `before` is the energy of a solution already
     /// found here: only one that is lower is worth a test.
     pub(super) fn evaluate(
@@ -85,7 +102,7 @@ impl<'a, S: Surface> Evaluator<'a, S> {
         let nearest = known.last();
         let here = &self.scan.coordinates[point];
         let tests = nearest.map_or(&[][..], |k| &k.left.tests);
-        let demand = self.demand(here, tests, before);
+        let demand = self.demand(here, nearest.is_none(), tests, before);
         let follow = match self.scan.settings.state {
             StateChoice::Follow => nearest.map(|k| &k.left.seed),
             StateChoice::Lowest => None,
@@ -153,11 +170,18 @@ impl<'a, S: Surface> Evaluator<'a, S> {
     }
 
     /// What is asked about stability on the first try.
-    fn demand(&self, here: &[f64], tests: &[Test], before: Option<f64>) -> StabilityDemand {
+    fn demand(
+        &self,
+        here: &[f64],
+        is_fresh: bool,
+        tests: &[Test],
+        before: Option<f64>,
+    ) -> StabilityDemand {
         let settings = &self.scan.settings;
         if !settings.stability || before.is_some() || !testing::is_due(here, tests, &self.longest) {
             StabilityDemand::None
-        } else if settings.state == StateChoice::Follow {
+        } else if settings.state == StateChoice::Follow && !is_fresh {
+            // The start itself is left downhill: a saddle point is no state to follow.
             StabilityDemand::Report
         } else {
             StabilityDemand::Leave

@@ -2,11 +2,12 @@
 //! pool, and what happens goes through one channel to one observer.
 
 use super::Grid;
+use super::apart;
 use super::evaluate::{Evaluator, Known, Left};
 use super::event::{Entry, Event, Likeness};
 use super::heal;
 use super::kept::keep;
-use super::settings::{Passes, StateChoice, WalkSettings};
+use super::settings::{Passes, SeedKind, StateChoice, WalkSettings};
 use super::walk::{self, Extras, Pass, Step};
 use crate::surface::{Surface, SurfaceError};
 use nalgebra::Vector3;
@@ -44,14 +45,18 @@ impl Scan {
         self.settings.passes == Passes::Both && self.settings.state == StateChoice::Lowest
     }
 
-    /// The steps of the walk, healing not counted.
+    /// Whether the ends are also started from nothing and from free atoms. A fresh solution of unknown stability is no
+    /// better than the walk's.
+    fn probes(&self) -> bool {
+        self.walks_back() && self.settings.stability
+    }
+
+    /// The steps of the walk; starts from free atoms and healing not counted.
     #[must_use]
     pub fn plan(&self) -> Vec<Step> {
-        let back = self.walks_back();
         let extras = Extras {
-            back,
-            // A fresh solution of unknown stability is no better than the walk's.
-            probes: back && self.settings.stability,
+            back: self.walks_back(),
+            probes: self.probes(),
         };
         walk::plan(&self.grid, self.start, self.settings.seed, extras)
     }
@@ -149,6 +154,9 @@ pub fn run_keeping<S: Surface>(
     runner.outcome(entries.len())?;
     entries.sort_by_key(|e: &Entry| e.order);
     let mut left = runner.left();
+    if scan.probes() && scan.settings.seed != SeedKind::Fresh {
+        apart::probe(&evaluator, &mut entries, &mut left, stop, observer)?;
+    }
     if scan.walks_back() {
         heal::heal(&evaluator, &mut entries, &mut left, stop, observer)?;
     }
@@ -329,7 +337,6 @@ impl<'a, S: Surface> Runner<'a, S> {
 mod tests {
     use super::*;
     use crate::molecule::internal::Coordinate;
-    use crate::scan::SeedKind;
     use crate::surface::model::{Form, ModelState, ModelSurface};
 
     const BOND: Coordinate = Coordinate::Bond([0, 1]);

@@ -80,6 +80,19 @@ pub fn plan(grid: &Grid, start: usize, seed: SeedKind, extras: Extras) -> Vec<St
     planner.steps
 }
 
+/// Both ends of a curve, or the corners of a surface: points and their rows.
+pub(super) fn ends(grid: &Grid) -> Vec<(usize, usize)> {
+    let ends = |n: usize| if n > 1 { vec![0, n - 1] } else { vec![0] };
+    match *grid.shape() {
+        [n] => ends(n).into_iter().map(|i| (i, 0)).collect(),
+        [rows, columns] => ends(rows)
+            .into_iter()
+            .flat_map(|i| ends(columns).into_iter().map(move |j| (i * columns + j, i)))
+            .collect(),
+        _ => Vec::new(),
+    }
+}
+
 struct Planner<'a> {
     grid: &'a Grid,
     seed: SeedKind,
@@ -205,16 +218,7 @@ impl Planner<'_> {
 
     /// A fresh start at both ends of a curve, or at the corners of a surface.
     fn probes(&mut self, start: usize) {
-        let ends = |n: usize| if n > 1 { vec![0, n - 1] } else { vec![0] };
-        let places: Vec<(usize, usize)> = match *self.grid.shape() {
-            [n] => ends(n).into_iter().map(|i| (i, 0)).collect(),
-            [rows, columns] => ends(rows)
-                .into_iter()
-                .flat_map(|i| ends(columns).into_iter().map(move |j| (i * columns + j, i)))
-                .collect(),
-            _ => Vec::new(),
-        };
-        for (point, row) in places {
+        for (point, row) in ends(self.grid) {
             if point != start {
                 self.push(point, Pass::Probe, Vec::new(), row);
             }

@@ -185,7 +185,7 @@ pub fn atomic_densities(
 }
 
 /// The same exponents and coefficients, wherever the shells sit.
-fn same_shells(one: &[Shell], other: &[Shell]) -> bool {
+pub(crate) fn same_shells(one: &[Shell], other: &[Shell]) -> bool {
     one.len() == other.len()
         && one.iter().zip(other).all(|(a, b)| {
             a.exponents == b.exponents && a.contractions == b.contractions && a.kind == b.kind

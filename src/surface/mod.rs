@@ -45,6 +45,12 @@ pub trait Surface: Sync {
     /// principal angles between the spaces carried to one orthonormal frame (1: the same space, 0: an electron
     /// moved to an orthogonal orbital).
     fn likeness(&self, one: &Self::Seed, other: &Self::Seed) -> [f64; 2];
+
+    /// A start for positions (bohr) at which the molecule has fallen apart, made of its free atoms. Nothing where it has
+    /// not, or where the method has no such start.
+    fn apart(&self, _positions: &[Vector3<f64>]) -> Option<Self::Seed> {
+        None
+    }
 }
 
 impl<S: Surface> Surface for &S {
@@ -69,6 +75,10 @@ impl<S: Surface> Surface for &S {
 
     fn likeness(&self, one: &Self::Seed, other: &Self::Seed) -> [f64; 2] {
         (**self).likeness(one, other)
+    }
+
+    fn apart(&self, positions: &[Vector3<f64>]) -> Option<Self::Seed> {
+        (**self).apart(positions)
     }
 }
 

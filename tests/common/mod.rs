@@ -3,6 +3,7 @@
 #![allow(dead_code, reason = "each test binary uses its own part")]
 
 pub(crate) mod jobs;
+pub(crate) mod starts;
 
 use nalgebra::Vector3;
 use thalweg::basis::{FunctionKind, library};

@@ -1,5 +1,6 @@
 //! Hartree–Fock as a potential-energy surface.
 
+mod apart;
 mod record;
 
 use super::{
@@ -9,6 +10,7 @@ use super::{
 use crate::basis::{Basis, Shell};
 use crate::integrals;
 use crate::integrals::repulsion::{DirectRepulsion, RepulsionList, RepulsionSettings};
+use crate::molecule::connectivity::Connectivity;
 use crate::molecule::{ElectronCountError, Molecule, nuclear};
 use crate::scf::canonical::Canonical;
 use crate::scf::fock::{Evaluation, Field, Occupation, Repulsion, Rotation};
@@ -442,6 +444,14 @@ impl Surface for HartreeFock {
         } else {
             RepulsionList::bytes_needed(self.functions())
         }
+    }
+
+    fn apart(&self, positions: &[Vector3<f64>]) -> Option<Seed> {
+        let pieces = Connectivity::of(&self.molecule.at(positions)).components();
+        if self.occupation.method == Method::Rhf || pieces.len() < 2 {
+            return None;
+        }
+        self.atoms_side_by_side(positions)
     }
 
     fn evaluate(
