@@ -15,6 +15,7 @@ use super::settings::ScfSettings;
 use super::stability::CarriedVectors;
 use crate::scf::StopReason;
 use nalgebra::DMatrix;
+use std::sync::Arc;
 
 /// Commutator above which the energy is minimised over combinations of iterates, hartree, and below which the
 /// error alone decides; in between both are mixed (A. J. Garza, G. E. Scuseria, J. Chem. Phys. 137, 054110 (2012)).
@@ -81,7 +82,7 @@ pub struct Plan<'a> {
     /// Builds and Hessian products allowed in all.
     pub limit: usize,
     /// Differences carried over from earlier geometries, the most trusted first.
-    pub carried: Vec<Difference>,
+    pub carried: Vec<Arc<Difference>>,
     /// Occupied orbitals (frame) to keep to by overlap, instead of filling the lowest.
     pub follow: Option<&'a [DMatrix<f64>]>,
     /// Eigenvectors of the orbital Hessian of a neighbouring geometry: where the energy is soft.
@@ -99,8 +100,8 @@ pub struct Solution {
     pub refined: Vec<DMatrix<f64>>,
     /// Why it stopped.
     pub stop: StopReason,
-    /// Differences made on the way, newest first.
-    pub differences: Vec<Difference>,
+    /// Differences to carry over: those made on the way, newest first, then those taken over that proved good.
+    pub differences: Vec<Arc<Difference>>,
 }
 
 /// Occupied orbitals of Fock matrices: the lowest, or those that overlap most with `follow` (A. T. B.
@@ -253,7 +254,7 @@ pub fn converge(
                 evaluation: here,
                 refined,
                 stop: StopReason::Converged,
-                differences: history.own().to_vec(),
+                differences: history.differences().to_vec(),
             });
         }
         if lowest.as_ref().is_none_or(|l| here.energy < l.energy) {

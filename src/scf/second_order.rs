@@ -92,7 +92,9 @@ fn path(
     let mut points = Vec::new();
     for _ in 0..INNER_STEPS.min(budget.max(1)) {
         let Some(image) =
-            hessian_products(field, orbitals, std::slice::from_ref(&direction), kind).pop()
+            hessian_products(field, orbitals, std::slice::from_ref(&direction), &[kind])
+                .pop()
+                .and_then(|mut images| images.pop())
         else {
             break;
         };

@@ -20,8 +20,10 @@ const ORDER: usize = 5;
 const LARGEST_WEIGHTS: f64 = 80.0;
 /// An estimated error (norm of the tangent) above which the newest point alone is safer.
 const LARGEST_ERROR: f64 = 0.4;
+/// Differences of earlier points that a seed holds.
+const HELD: usize = 30;
 /// Differences of earlier points taken over.
-const CARRIED: usize = 30;
+const CARRIED: usize = 36;
 /// ‖Pα − Pβ‖² above which a solution counts as spin-polarised.
 const POLARISED: f64 = 1e-6;
 
@@ -37,8 +39,8 @@ pub struct SeedState {
     pub occupied: Vec<DMatrix<f64>>,
     /// Independent functions kept in the frame.
     pub kept: usize,
-    /// Differences of Fock matrices and errors, newest first.
-    pub differences: Vec<Difference>,
+    /// Differences of Fock matrices and errors, newest first, with what earlier points left.
+    pub differences: Vec<Arc<Difference>>,
     /// Lowest eigenvectors of the internal orbital Hessian.
     pub internal: Option<CarriedVectors>,
     /// Lowest eigenvectors of the triplet orbital Hessian.
@@ -50,7 +52,8 @@ pub struct SeedState {
 impl Seed {
     /// Wraps what a solution leaves behind.
     #[must_use]
-    pub fn new(state: SeedState) -> Self {
+    pub fn new(mut state: SeedState) -> Self {
+        state.differences.truncate(HELD);
         Self(Arc::new(state))
     }
 
@@ -121,7 +124,7 @@ pub struct Prediction {
     /// Occupied orbitals of the frame, one matrix per spin block.
     pub occupied: Vec<DMatrix<f64>>,
     /// Differences to carry over, the most trusted first.
-    pub differences: Vec<Difference>,
+    pub differences: Vec<Arc<Difference>>,
     /// Order of the polynomial that was used.
     pub order: usize,
     /// Estimated error: norm of the tangent between this order and the one below.
@@ -255,7 +258,7 @@ pub fn predict(points: &[(&[f64], &Seed)], target: &[f64]) -> Result<Option<Pred
     let polarised = newest.is_polarised();
     let mut coordinates: Vec<&[f64]> = vec![newest_at];
     let mut gammas: Vec<Vec<DMatrix<f64>>> = vec![base.iter().map(|y| y * 0.0).collect()];
-    let mut differences: Vec<Difference> = newest.state().differences.clone();
+    let mut differences = newest.state().differences.clone();
     for (at, seed) in older.iter().rev() {
         let state = seed.state();
         let fits = at.len() == target.len()
@@ -288,7 +291,12 @@ pub fn predict(points: &[(&[f64], &Seed)], target: &[f64]) -> Result<Option<Pred
         coordinates.push(at);
         gammas.push(tangent);
         if !swapped {
-            differences.extend(state.differences.iter().cloned());
+            for difference in &state.differences {
+                // Points along one chain hold what those behind them left.
+                if !differences.iter().any(|d| Arc::ptr_eq(d, difference)) {
+                    differences.push(Arc::clone(difference));
+                }
+            }
         }
     }
     differences.truncate(CARRIED);
@@ -412,7 +420,7 @@ impl From<Seed> for StoredSeed {
         Self {
             occupied: store(&state.occupied),
             kept: state.kept,
-            differences: state.differences.clone(),
+            differences: state.differences.iter().map(|d| (**d).clone()).collect(),
             internal: state.internal.as_ref().map(Into::into),
             triplet: state.triplet.as_ref().map(Into::into),
             lowest_eigenvalue: state.lowest_eigenvalue,
@@ -425,7 +433,7 @@ impl From<StoredSeed> for Seed {
         Self::new(SeedState {
             occupied: restore(stored.occupied),
             kept: stored.kept,
-            differences: stored.differences,
+            differences: stored.differences.into_iter().map(Arc::new).collect(),
             internal: stored.internal.map(Into::into),
             triplet: stored.triplet.map(Into::into),
             lowest_eigenvalue: stored.lowest_eigenvalue,
