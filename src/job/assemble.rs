@@ -291,9 +291,7 @@ fn cost(record: &JobRecord) -> Cost {
     for entry in &record.entries {
         let record = &entry.entry.record;
         cost.scf_wall_s += record.scf_seconds;
-        let (products, passes) = record
-            .stability
-            .map_or((0, 0), |s| (s.products, s.passes));
+        let (products, passes) = record.stability.map_or((0, 0), |s| (s.products, s.passes));
         cost.fock_builds += record.all_builds.saturating_sub(products);
         cost.stability_products += products;
         cost.stability_passes += passes;

@@ -162,16 +162,12 @@ pub fn audit(audited: &Audited<'_>) -> Vec<Finding> {
             .into_iter()
             .filter(|&p| audited.is_triplet_unstable(p))
             .collect();
-        add(
-            FindingKind::Unstable,
-            unstable,
-            &|places| {
-                format!(
-                    "unrestricted orbitals give a lower energy {places}: restricted Hartree–Fock is not to be trusted \
+        add(FindingKind::Unstable, unstable, &|places| {
+            format!(
+                "unrestricted orbitals give a lower energy {places}: restricted Hartree–Fock is not to be trusted \
                  there. A uhf level shows by how much"
-                )
-            },
-        );
+            )
+        });
     }
     let contaminated = |r: &PointRecord| r.s_squared - audited.pure_s_squared > CONTAMINATION;
     add(

@@ -11,6 +11,8 @@ use crate::surface::StabilityRecord;
 const LONGEST_ANGSTROM: f64 = 0.2;
 /// Longest distance from the last test, degree.
 const LONGEST_DEGREE: f64 = 10.0;
+/// Eigenvalue (hartree) below which every solution is tested.
+const SOFT: f64 = 5e-4;
 /// Factor by which the change of an eigenvalue may exceed its prediction.
 const CAUTION: f64 = 2.0;
 /// A change over the longest distance (hartree) assumed where only one test is known: large enough to ask for a second
@@ -27,6 +29,8 @@ pub(super) struct Test {
     pub(super) at: Vec<f64>,
     /// Lowest eigenvalue of each kind that may change its sign: internal, triplet.
     pub(super) values: [f64; 2],
+    /// Lowest eigenvalue within the method itself, zero or not.
+    pub(super) lowest: f64,
 }
 
 impl Test {
@@ -37,6 +41,7 @@ impl Test {
                 record.internal_next.unwrap_or(f64::INFINITY),
                 record.triplet.unwrap_or(f64::INFINITY),
             ],
+            lowest: record.internal,
         }
     }
 }
@@ -68,6 +73,10 @@ pub(super) fn is_due(here: &[f64], tests: &[Test], longest: &[f64]) -> bool {
     let ahead = apart(here, &last.at);
     // A step that just fills the longest distance must not depend on rounding.
     if ahead > 1.0 - 1e-9 {
+        return true;
+    }
+    if last.lowest < SOFT {
+        // Where several solutions lie side by side straight lines say little.
         return true;
     }
     let behind = tests.len().checked_sub(2).map(|k| &tests[k]);
@@ -102,6 +111,7 @@ mod tests {
         Test {
             at: vec![at],
             values: [value, f64::INFINITY],
+            lowest: value,
         }
     }
 
@@ -129,6 +139,7 @@ mod tests {
         let triplet = |at: f64, value: f64| Test {
             at: vec![at],
             values: [0.3, value],
+            lowest: 0.3,
         };
         let growing = [triplet(1.0, -0.05), triplet(1.1, -0.10)];
         assert!(!is_due(&[1.25], &growing, &[0.2]));
@@ -144,7 +155,7 @@ mod tests {
         for i in 0..80 {
             let q = 0.05 * f64::from(i);
             if is_due(&[q], &known, &[0.2]) {
-                known.push(test(q, 0.1 * (-3.0 * q).exp()));
+                known.push(test(q, 0.1 * (-1.2 * q).exp()));
             }
         }
         assert!(known.len() < 35, "{} tests", known.len());

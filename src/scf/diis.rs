@@ -30,6 +30,23 @@ pub struct Difference {
     error: Vec<f64>,
 }
 
+impl Difference {
+    /// The part that is alike in both spins, of a difference with two spin blocks of one size: near a solution with
+    /// α = β changes that are alike cause errors that are alike.
+    #[must_use]
+    pub fn alike_in_both_spins(&self) -> Self {
+        let mean = |values: &[f64]| {
+            let (alpha, beta) = values.split_at(values.len() / 2);
+            let half: Vec<f64> = alpha.iter().zip(beta).map(|(a, b)| 0.5 * (a + b)).collect();
+            half.repeat(2)
+        };
+        Self {
+            fock: mean(&self.fock),
+            error: mean(&self.error),
+        }
+    }
+}
+
 /// Lower triangles with the diagonal of all blocks, one after another.
 fn pack_symmetric(blocks: &[DMatrix<f64>]) -> Vec<f64> {
     pack(blocks, 0)

@@ -154,6 +154,12 @@ impl<'a> Field<'a> {
         self.products
     }
 
+    /// Passes over the integrals so far, for Fock builds and for Hessian products.
+    #[must_use]
+    pub fn passes(&self) -> usize {
+        self.builds + self.product_passes
+    }
+
     /// Passes over the integrals that the Hessian products took; one serves all rotations at once.
     #[must_use]
     pub fn product_passes(&self) -> usize {

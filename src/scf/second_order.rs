@@ -158,8 +158,8 @@ fn cut(
     here
 }
 
-/// Minimises the energy from a determinant until the thresholds are met or `limit` builds and products
-/// have been spent by `field` in all. Returns the lowest determinant found.
+/// Minimises the energy from a determinant until the thresholds are met or `limit` passes over the
+/// integrals have been spent by `field` in all. Returns the lowest determinant found.
 ///
 /// # Errors
 /// [`ScfError::Eigenproblem`].
@@ -184,7 +184,7 @@ pub fn minimise(
             .map(|(o, f)| o.off_diagonal(f))
             .collect();
         let metric = preconditioner(&orbitals);
-        let spent = field.builds() + field.products();
+        let spent = field.passes();
         if spent >= limit {
             return Ok((here, StopReason::IterationLimit));
         }
@@ -220,7 +220,7 @@ pub fn minimise(
                 here = trial;
                 break;
             }
-            if field.builds() + field.products() >= limit {
+            if field.passes() >= limit {
                 return Ok((here, StopReason::IterationLimit));
             }
             if radius < 1e-7 {

@@ -17,7 +17,7 @@ use crate::scf::iteration::{self, Beginning, Plan, Solution, Thresholds};
 use crate::scf::orthogonal::Orthogonal;
 use crate::scf::seed::{self, Seed, SeedState};
 use crate::scf::stability::{self, CarriedVectors, Eigenpairs, Precision};
-use crate::scf::{FirstDensity, Method, ScfError, ScfSettings, StopReason, guess};
+use crate::scf::{FirstDensity, Method, ScfError, ScfSettings, guess};
 use nalgebra::{DMatrix, Vector3};
 use std::sync::Arc;
 use std::time::Instant;
@@ -266,12 +266,7 @@ impl HartreeFock {
             .iter()
             .map(|y| geometry.frame.nearest(y))
             .collect::<Result<_, _>>()?;
-        let differences = if single {
-            Vec::new()
-        } else {
-            prediction.differences
-        };
-        Ok((Beginning::Occupied(occupied), differences))
+        Ok((Beginning::Occupied(occupied), prediction.differences))
     }
 
     /// Solves for self-consistency and, where asked, tests and leaves unstable solutions.
@@ -297,7 +292,7 @@ impl HartreeFock {
         };
         let mut solution = iteration::converge(field, beginning, &plan)?;
         let mut settled = Settled {
-            fock_builds: field.builds() + field.products(),
+            fock_builds: field.passes(),
             stability: None,
             // Vectors of an earlier point still tell where the energy is soft, and where the next test may begin.
             internal: newest.and_then(|s| s.internal.clone()),
@@ -321,7 +316,7 @@ impl HartreeFock {
             Some(_) => Precision::Sufficient,
             None => Precision::Full,
         };
-        while solution.stop == StopReason::Converged {
+        while solution.stop.is_converged() {
             let clock = Instant::now();
             let before = (field.products(), field.product_passes());
             let orbitals = Canonical::of(field, &solution.evaluation)?;
@@ -351,7 +346,7 @@ impl HartreeFock {
             };
             left += 1;
             let saddle = solution.evaluation.energy;
-            let before = field.builds() + field.products();
+            let before = field.passes();
             let mut onwards = Plan {
                 thresholds: plan.thresholds,
                 limit: before + self.settings.iterations,
@@ -361,7 +356,7 @@ impl HartreeFock {
                 downhill: false,
             };
             solution = self.descend(field, &lower, saddle, &mut onwards)?;
-            settled.fock_builds = field.builds() + field.products() - before;
+            settled.fock_builds = field.passes() - before;
         }
         settled.stability = found.first().map(|pairs| StabilityRecord {
             internal: pairs.values[0],
@@ -393,12 +388,12 @@ impl HartreeFock {
         let mut below = lower.energy.min(saddle) + 1e-9;
         let mut rounds = 0;
         loop {
-            plan.limit = field.builds() + field.products() + self.settings.iterations;
+            plan.limit = field.passes() + self.settings.iterations;
             let beginning = Beginning::Occupied(start.clone());
             let solution = iteration::converge(field, beginning, plan)?;
             rounds += 1;
             let better = solution.evaluation.energy <= below;
-            if (better && solution.stop == StopReason::Converged) || rounds == DESCENTS {
+            if (better && solution.stop.is_converged()) || rounds == DESCENTS {
                 return Ok(solution);
             }
             plan.downhill = true;
