@@ -538,66 +538,6 @@ fn a_workspace_never_changes_a_bit() {
 }
 
 #[test]
-fn gradients_match_energy_differences() {
-    // Central differences of energies converged to 1e-11 hartree.
-    let settings = ScfSettings {
-        energy: 1e-12,
-        commutator: 1e-10,
-        ..ScfSettings::default()
-    };
-    let bent = water(0.96, 1.5, 100.0);
-    let radical = charged(diatomic("N", "O", 1.15), 0, 2);
-    for (molecule, method, basis) in [
-        (&bent, Method::Rhf, "6-31G*"),
-        (&bent, Method::Uhf, "6-31G*"),
-        (&radical, Method::Uhf, "cc-pVDZ"),
-    ] {
-        let surface = surface_with(molecule, basis, method, settings.clone(), None);
-        let mut workspace = surface.workspace();
-        let mut at = |positions: &[Vector3<f64>], gradient: bool| {
-            let request = PointRequest {
-                positions,
-                coordinates: &[],
-                start: Start::Fresh,
-                gradient,
-                stability: StabilityDemand::Leave,
-                follow: None,
-            };
-            surface
-                .evaluate(&request, &mut workspace)
-                .expect("sound")
-                .record
-        };
-        let gradient = at(&molecule.positions, true).gradient.expect("asked for");
-        let sum: Vector3<f64> = gradient.iter().map(|g| Vector3::from(*g)).sum();
-        assert!(sum.norm() < 1e-8);
-        for (atom, axis) in [(0, 1), (1, 1), (1, 2), (0, 2)] {
-            let step = 1e-3;
-            let energy = |sign: f64,
-                          at: &mut dyn FnMut(
-                &[Vector3<f64>],
-                bool,
-            ) -> thalweg::surface::PointRecord| {
-                let mut positions = molecule.positions.clone();
-                positions[atom][axis] += sign * step;
-                at(&positions, false).energy.expect("converges")
-            };
-            let (one, two) = (
-                (energy(1.0, &mut at) - energy(-1.0, &mut at)) / (2.0 * step),
-                (energy(2.0, &mut at) - energy(-2.0, &mut at)) / (4.0 * step),
-            );
-            // Richardson's combination removes the error quadratic in the step.
-            let difference = (4.0 * one - two) / 3.0;
-            assert!(
-                (difference - gradient[atom][axis]).abs() < 1e-7,
-                "{method:?} {difference} {}",
-                gradient[atom][axis]
-            );
-        }
-    }
-}
-
-#[test]
 fn populations_and_bond_orders_add_up() {
     let peroxide = peroxide();
     let found = evaluate(

@@ -116,6 +116,8 @@ pub struct Cost {
     pub integrals_reused: u64,
     /// Threads.
     pub threads: usize,
+    /// Largest resident memory of the process, MiB; none where the system does not say.
+    pub peak_memory_mib: Option<f64>,
 }
 
 impl JobResult {
@@ -286,6 +288,11 @@ fn cost(record: &JobRecord) -> Cost {
     let mut cost = Cost {
         wall_s: record.ends.iter().map(|e| e.wall_seconds).sum(),
         threads: record.ends.iter().map(|e| e.threads).max().unwrap_or(1),
+        peak_memory_mib: record
+            .ends
+            .iter()
+            .filter_map(|e| e.peak_memory_mib)
+            .max_by(f64::total_cmp),
         ..Cost::default()
     };
     for entry in &record.entries {

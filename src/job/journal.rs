@@ -94,6 +94,8 @@ pub struct LevelEnd {
     pub wall_seconds: f64,
     /// Threads it ran on.
     pub threads: usize,
+    /// Largest resident memory of the process until then, MiB; none where the system does not say.
+    pub peak_memory_mib: Option<f64>,
     /// How alike the kept solutions of neighbouring points are.
     pub likeness: Vec<Likeness>,
 }

@@ -5,6 +5,7 @@ pub mod analysis;
 pub mod assemble;
 pub mod dissociation;
 pub mod journal;
+pub mod memory;
 pub mod onset;
 pub mod pieces;
 pub mod settle;
@@ -224,6 +225,7 @@ pub fn run(
         }?;
         beside_the_walk(spec, number, &scan, pool, observer, &mut record)?;
         end.wall_seconds = before.elapsed().as_secs_f64();
+        end.peak_memory_mib = memory::peak_mib();
         observer(&JobEvent::LevelDone(&end));
         record.ends.push(end);
     }
@@ -414,6 +416,7 @@ pub fn walk_level<S: Surface, U: Surface>(
         level,
         wall_seconds: begin.elapsed().as_secs_f64(),
         threads: pool.current_num_threads(),
+        peak_memory_mib: None,
         likeness: walked.likeness,
     })
 }

@@ -210,9 +210,12 @@ fn cost(text: &mut String, result: &JobResult) {
     } else {
         100.0 * cost.integrals_reused as f64 / all as f64
     };
+    let memory = cost.peak_memory_mib.map_or_else(String::new, |mib| {
+        format!(", {mib:.0} MiB of memory at most")
+    });
     let _ = writeln!(
         text,
-        "\n{:.2} s, {} threads, {} Fock builds, {:.3e} repulsion integrals computed, {share:.0} % of all taken over",
+        "\n{:.2} s, {} threads{memory}, {} Fock builds, {:.3e} repulsion integrals computed, {share:.0} % of all taken over",
         cost.wall_s, cost.threads, cost.fock_builds, cost.integrals_computed as f64
     );
 }
