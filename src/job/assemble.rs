@@ -111,8 +111,12 @@ pub struct Cost {
     pub wall_s: f64,
     /// Wall time of integrals and SCF, summed over the evaluations, s.
     pub scf_wall_s: f64,
-    /// Fock builds of all evaluations.
+    /// Fock builds of all evaluations, each one pass over the integrals; stability tests apart.
     pub fock_builds: usize,
+    /// Hessian products of the stability tests, each at most the work of one Fock build.
+    pub stability_products: usize,
+    /// Passes over the integrals that the stability tests took: one serves several products.
+    pub stability_passes: usize,
     /// Unique repulsion integrals computed.
     pub integrals_computed: u64,
     /// Unique repulsion integrals taken over from the point before.
@@ -310,7 +314,10 @@ fn cost(record: &JobRecord) -> Cost {
     for entry in &record.entries {
         let record = &entry.entry.record;
         cost.scf_wall_s += record.scf_seconds;
-        cost.fock_builds += record.all_builds;
+        let (products, passes) = record.stability.map_or((0, 0), |s| (s.products, s.passes));
+        cost.fock_builds += record.all_builds.saturating_sub(products);
+        cost.stability_products += products;
+        cost.stability_passes += passes;
         cost.integrals_computed += record.integrals.computed;
         cost.integrals_reused += record.integrals.reused;
     }

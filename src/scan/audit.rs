@@ -60,6 +60,26 @@ impl Audited<'_> {
         self.points(|r| r.energy.is_some() && test(r))
     }
 
+    /// Whether unrestricted orbitals lie lower at a point: by its own test, or by the last one on the way to it, which
+    /// vouches for it.
+    fn is_triplet_unstable(&self, point: usize) -> bool {
+        let mut here = point;
+        // Ways back may lead in a circle.
+        for _ in 0..self.kept.len() {
+            let Some(kept) = &self.kept[here] else {
+                return false;
+            };
+            if let Some(stability) = kept.entry.record.stability {
+                return stability.triplet.is_some_and(|t| t < UNSTABLE);
+            }
+            match kept.entry.seeded_from.last() {
+                Some(&behind) => here = behind,
+                None => return false,
+            }
+        }
+        false
+    }
+
     /// Points in words: how many, and from where to where if they are few.
     fn places(&self, points: &[usize]) -> String {
         let place = |p: usize| {
@@ -137,20 +157,17 @@ pub fn audit(audited: &Audited<'_>) -> Vec<Finding> {
         },
     );
     if audited.restricted {
-        let triplet = |r: &PointRecord| {
-            r.stability
-                .is_some_and(|s| s.triplet.is_some_and(|t| t < UNSTABLE))
-        };
-        add(
-            FindingKind::Unstable,
-            audited.converged(triplet),
-            &|places| {
-                format!(
-                    "unrestricted orbitals give a lower energy {places}: restricted Hartree–Fock is not to be trusted \
+        let unstable = audited
+            .converged(|_| true)
+            .into_iter()
+            .filter(|&p| audited.is_triplet_unstable(p))
+            .collect();
+        add(FindingKind::Unstable, unstable, &|places| {
+            format!(
+                "unrestricted orbitals give a lower energy {places}: restricted Hartree–Fock is not to be trusted \
                  there. A uhf level shows by how much"
-                )
-            },
-        );
+            )
+        });
     }
     let contaminated = |r: &PointRecord| r.s_squared - audited.pure_s_squared > CONTAMINATION;
     add(

@@ -1,34 +1,47 @@
 //! Where solutions are tested for stability, and where a test nearby vouches for them.
 //!
 //! The lowest eigenvalue of an orbital Hessian changes smoothly along a sweep. Between tests it is predicted by a
-//! straight line through the last two; a point is tested when the prediction, its fall doubled, reaches zero, and
+//! straight line through the last two; a point is tested when the prediction, its change doubled, changes sign, and
 //! at the latest every 0.2 Å or 10° (distances that a numerical trial on N₂ found to miss no onset).
 
+use crate::scf::stability::UNSTABLE;
 use crate::surface::StabilityRecord;
 
 /// Longest distance from the last test, Å.
 const LONGEST_ANGSTROM: f64 = 0.2;
 /// Longest distance from the last test, degree.
 const LONGEST_DEGREE: f64 = 10.0;
-/// Factor by which the fall of an eigenvalue may exceed its prediction.
+/// Eigenvalue (hartree) below which every solution is tested.
+const SOFT: f64 = 5e-4;
+/// Factor by which the change of an eigenvalue may exceed its prediction.
 const CAUTION: f64 = 2.0;
-/// A fall per unit step assumed where only one test is known: large enough to ask for a second soon.
-const UNKNOWN_FALL_PER_LONGEST: f64 = 0.1;
+/// A change over the longest distance (hartree) assumed where only one test is known: large enough to ask for a second
+/// soon.
+const UNKNOWN_CHANGE: f64 = 0.1;
+
+/// Place of the eigenvalue within the method itself in [`Test::values`].
+const INTERNAL: usize = 0;
 
 /// A test that was made: where, and its lowest eigenvalue over all kinds of instability, hartree.
 #[derive(Debug, Clone, PartialEq)]
 pub(super) struct Test {
     /// Swept coordinates, ångström or degree.
     pub(super) at: Vec<f64>,
-    /// Lowest eigenvalue of each kind: internal, triplet.
+    /// Lowest eigenvalue of each kind that may change its sign: internal, triplet.
     pub(super) values: [f64; 2],
+    /// Lowest eigenvalue within the method itself, zero or not.
+    pub(super) lowest: f64,
 }
 
 impl Test {
     pub(super) fn new(at: &[f64], record: &StabilityRecord) -> Self {
         Self {
             at: at.to_vec(),
-            values: [record.internal, record.triplet.unwrap_or(f64::INFINITY)],
+            values: [
+                record.internal_next.unwrap_or(f64::INFINITY),
+                record.triplet.unwrap_or(f64::INFINITY),
+            ],
+            lowest: record.internal,
         }
     }
 }
@@ -62,21 +75,31 @@ pub(super) fn is_due(here: &[f64], tests: &[Test], longest: &[f64]) -> bool {
     if ahead > 1.0 - 1e-9 {
         return true;
     }
+    if last.lowest < SOFT {
+        // Where several solutions lie side by side straight lines say little.
+        return true;
+    }
     let behind = tests.len().checked_sub(2).map(|k| &tests[k]);
     (0..2).any(|kind| {
         let value = last.values[kind];
         if !value.is_finite() {
             return false;
         }
-        let fall = match behind {
+        let unstable = value < UNSTABLE;
+        if unstable && kind == INTERNAL {
+            // Such a solution is to be left wherever it is met.
+            return true;
+        }
+        // Towards zero and beyond.
+        let sign = if unstable { 1.0 } else { -1.0 };
+        let change = match behind {
             Some(before) if apart(&last.at, &before.at) > 1e-9 => {
-                let slope = (before.values[kind] - value) / apart(&last.at, &before.at);
-                // A rise now may turn into a fall soon.
-                slope.max(0.1 * UNKNOWN_FALL_PER_LONGEST)
+                sign * (value - before.values[kind]) / apart(&last.at, &before.at)
             }
-            _ => UNKNOWN_FALL_PER_LONGEST,
+            _ => UNKNOWN_CHANGE,
         };
-        value - CAUTION * fall * ahead <= 0.0
+        let expected = value + sign * CAUTION * change.max(0.0) * ahead;
+        (expected < UNSTABLE) != unstable
     })
 }
 
@@ -88,6 +111,7 @@ mod tests {
         Test {
             at: vec![at],
             values: [value, f64::INFINITY],
+            lowest: value,
         }
     }
 
@@ -108,6 +132,33 @@ mod tests {
     #[test]
     fn a_negative_eigenvalue_is_tested_everywhere() {
         assert!(is_due(&[1.01], &[test(1.0, -0.01)], &[0.2]));
+    }
+
+    #[test]
+    fn an_instability_that_is_only_reported_is_tested_where_it_may_end() {
+        let triplet = |at: f64, value: f64| Test {
+            at: vec![at],
+            values: [0.3, value],
+            lowest: 0.3,
+        };
+        let growing = [triplet(1.0, -0.05), triplet(1.1, -0.10)];
+        assert!(!is_due(&[1.25], &growing, &[0.2]));
+        let ending = [triplet(1.0, -0.10), triplet(1.1, -0.05)];
+        assert!(!is_due(&[1.12], &ending, &[0.2]));
+        assert!(is_due(&[1.16], &ending, &[0.2]));
+    }
+
+    #[test]
+    fn a_slowly_vanishing_eigenvalue_asks_for_few_tests() {
+        // Parts drift apart: λ falls to zero exponentially and never crosses it.
+        let mut known: Vec<Test> = Vec::new();
+        for i in 0..80 {
+            let q = 0.05 * f64::from(i);
+            if is_due(&[q], &known, &[0.2]) {
+                known.push(test(q, 0.1 * (-1.2 * q).exp()));
+            }
+        }
+        assert!(known.len() < 35, "{} tests", known.len());
     }
 
     #[test]

@@ -96,7 +96,8 @@ pub fn scaled(a: &[DMatrix<f64>], factor: f64) -> Kappa {
     a.iter().map(|x| x * factor).collect()
 }
 
-/// Products of the real orbital Hessian A + B with sets of rotations, in one pass over the integrals.
+/// Products of the real orbital Hessians A + B of several kinds with sets of rotations, in one pass over the integrals:
+/// one list per kind.
 ///
 /// To second order E(κ) = E + w (2 g·κ + κ·(A+B)κ) with g the empty–occupied Fock block and w the electrons per orbital.
 /// J. Čížek, J. Paldus, J. Chem. Phys. 47, 3976 (1967); R. Seeger, J. A. Pople, J. Chem. Phys. 66, 3045 (1977).
@@ -105,26 +106,32 @@ pub fn hessian_products(
     field: &mut Field<'_>,
     orbitals: &[Canonical],
     rotations: &[Kappa],
-    kind: super::fock::Rotation,
-) -> Vec<Kappa> {
+    kinds: &[super::fock::Rotation],
+) -> Vec<Vec<Kappa>> {
     if rotations.is_empty() {
-        return Vec::new();
+        return vec![Vec::new(); kinds.len()];
     }
     let occupied: Vec<_> = orbitals.iter().map(|o| o.occupied.clone()).collect();
     let tangents: Vec<Vec<_>> = rotations
         .iter()
         .map(|kappa| tangents(orbitals, kappa))
         .collect();
-    let responses = field.response(&occupied, &tangents, kind);
-    responses
+    let gaps: Vec<_> = orbitals.iter().map(Canonical::gaps).collect();
+    field
+        .response(&occupied, &tangents, kinds)
         .iter()
-        .zip(rotations)
-        .map(|(response, kappa)| {
-            orbitals
+        .map(|responses| {
+            responses
                 .iter()
-                .zip(response)
-                .zip(kappa)
-                .map(|((o, r), k)| o.empty.transpose() * r + o.gaps().component_mul(k))
+                .zip(rotations)
+                .map(|(response, kappa)| {
+                    orbitals
+                        .iter()
+                        .zip(response)
+                        .zip(kappa.iter().zip(&gaps))
+                        .map(|((o, r), (k, gap))| o.empty.transpose() * r + gap.component_mul(k))
+                        .collect()
+                })
                 .collect()
         })
         .collect()

@@ -11,6 +11,7 @@
 
 use nalgebra::{DMatrix, DVector};
 use serde::{Deserialize, Serialize};
+use std::sync::Arc;
 
 /// An own difference is left out if less than this fraction of it is new.
 const OWN_NOVELTY: f64 = 1e-5;
@@ -27,6 +28,23 @@ const ENERGY_LIMIT: usize = 6;
 pub struct Difference {
     fock: Vec<f64>,
     error: Vec<f64>,
+}
+
+impl Difference {
+    /// The part that is alike in both spins, of a difference with two spin blocks of one size: near a solution with
+    /// α = β changes that are alike cause errors that are alike.
+    #[must_use]
+    pub fn alike_in_both_spins(&self) -> Self {
+        let mean = |values: &[f64]| {
+            let (alpha, beta) = values.split_at(values.len() / 2);
+            let half: Vec<f64> = alpha.iter().zip(beta).map(|(a, b)| 0.5 * (a + b)).collect();
+            half.repeat(2)
+        };
+        Self {
+            fock: mean(&self.fock),
+            error: mean(&self.error),
+        }
+    }
 }
 
 /// Lower triangles with the diagonal of all blocks, one after another.
@@ -96,35 +114,46 @@ fn subtract_multiple(from: &mut [f64], factor: f64, what: &[f64]) {
 #[derive(Debug, Clone, Default)]
 pub struct Extrapolation {
     last: Option<(Vec<f64>, Vec<f64>)>,
-    own: Vec<Difference>,
-    carried: Vec<Difference>,
+    /// Own differences, newest first, then the carried ones, the most trusted first.
+    differences: Vec<Arc<Difference>>,
+    own: usize,
+    /// Inner products of the errors of all differences.
+    gram: DMatrix<f64>,
 }
 
 impl Extrapolation {
     /// Starts with differences of earlier geometries, the most trusted first.
     #[must_use]
-    pub fn with_carried(carried: Vec<Difference>) -> Self {
+    pub fn with_carried(carried: Vec<Arc<Difference>>) -> Self {
         Self {
-            carried,
+            gram: gram(&carried),
+            differences: carried,
             ..Self::default()
         }
     }
 
     /// The differences made by this calculation, newest first.
     #[must_use]
-    pub fn own(&self) -> &[Difference] {
-        &self.own
+    pub fn own(&self) -> &[Arc<Difference>] {
+        &self.differences[..self.own]
+    }
+
+    /// All differences in use: those of this calculation, then those taken over.
+    #[must_use]
+    pub fn differences(&self) -> &[Arc<Difference>] {
+        &self.differences
     }
 
     /// Whether differences of earlier geometries are still in use.
     #[must_use]
     pub fn has_carried(&self) -> bool {
-        !self.carried.is_empty()
+        self.differences.len() > self.own
     }
 
     /// Forgets what earlier geometries left.
     pub fn drop_carried(&mut self) {
-        self.carried.clear();
+        self.differences.truncate(self.own);
+        self.gram = self.gram.view((0, 0), (self.own, self.own)).into_owned();
     }
 
     /// Forgets everything, own differences too.
@@ -135,17 +164,48 @@ impl Extrapolation {
     /// Takes in an iterate: symmetric Fock matrices and antisymmetric errors, one per spin block.
     pub fn record(&mut self, focks: &[DMatrix<f64>], errors: &[DMatrix<f64>]) {
         let (fock, error) = (pack_symmetric(focks), pack_antisymmetric(errors));
-        if let Some((last_fock, last_error)) = &self.last {
-            let mut difference = Difference {
-                fock: fock.clone(),
-                error: error.clone(),
-            };
-            subtract_multiple(&mut difference.fock, 1.0, last_fock);
-            subtract_multiple(&mut difference.error, 1.0, last_error);
-            self.own.insert(0, difference);
-            self.own.truncate(OWN_LIMIT);
+        match &self.last {
+            None => {
+                // Differences of another size are of no use.
+                let fits = |d: &Arc<Difference>| {
+                    d.error.len() == error.len() && d.fock.len() == fock.len()
+                };
+                if !self.differences.iter().all(fits) {
+                    self.differences.retain(fits);
+                    self.gram = gram(&self.differences);
+                }
+            }
+            Some((last_fock, last_error)) => {
+                let mut difference = Difference {
+                    fock: fock.clone(),
+                    error: error.clone(),
+                };
+                subtract_multiple(&mut difference.fock, 1.0, last_fock);
+                subtract_multiple(&mut difference.error, 1.0, last_error);
+                self.insert(difference);
+            }
         }
         self.last = Some((fock, error));
+    }
+
+    fn insert(&mut self, difference: Difference) {
+        if self.own == OWN_LIMIT {
+            self.own -= 1;
+            self.differences.remove(self.own);
+            self.gram = std::mem::take(&mut self.gram)
+                .remove_row(self.own)
+                .remove_column(self.own);
+        }
+        let mut products = vec![dot(&difference.error, &difference.error)];
+        let with_others = |d: &Arc<Difference>| dot(&difference.error, &d.error);
+        products.extend(self.differences.iter().map(with_others));
+        let old = &self.gram;
+        self.gram = DMatrix::from_fn(products.len(), products.len(), |i, j| match (i, j) {
+            (0, k) | (k, 0) => products[k],
+            _ => old[(i - 1, j - 1)],
+        });
+        self.differences.insert(0, Arc::new(difference));
+        self.own += 1;
     }
 
     /// The Fock matrices (one per spin block, shaped like `focks`) that the history suggests for the
@@ -156,41 +216,73 @@ impl Extrapolation {
             return focks.to_vec();
         };
         let mut best = fock.clone();
-        let mut rest = error.clone();
-        // Orthonormal error directions with the Fock changes that cause them (modified Gram–Schmidt, twice).
-        let mut directions: Vec<(Vec<f64>, Vec<f64>)> = Vec::new();
-        let own = self.own.iter().map(|d| (d, OWN_NOVELTY));
-        let carried = self.carried.iter().map(|d| (d, CARRIED_NOVELTY));
-        for (difference, novelty) in own.chain(carried) {
-            if difference.error.len() != error.len() || difference.fock.len() != fock.len() {
-                continue;
-            }
-            let size = dot(&difference.error, &difference.error).sqrt();
-            if size <= 0.0 || !size.is_finite() {
-                continue;
-            }
-            let mut direction: Vec<f64> = difference.error.iter().map(|x| x / size).collect();
-            let mut cause: Vec<f64> = difference.fock.iter().map(|x| x / size).collect();
-            for _ in 0..2 {
-                for (known, known_cause) in &directions {
-                    let share = dot(known, &direction);
-                    subtract_multiple(&mut direction, share, known);
-                    subtract_multiple(&mut cause, share, known_cause);
-                }
-            }
-            let new = dot(&direction, &direction).sqrt();
-            if new < novelty {
-                continue;
-            }
-            direction.iter_mut().for_each(|x| *x /= new);
-            cause.iter_mut().for_each(|x| *x /= new);
-            let share = dot(&direction, &rest);
-            subtract_multiple(&mut rest, share, &direction);
-            subtract_multiple(&mut best, share, &cause);
-            directions.push((direction, cause));
+        for (place, factor) in self.factors(error) {
+            subtract_multiple(&mut best, factor, &self.differences[place].fock);
         }
         unpack_symmetric(&best, focks)
     }
+
+    /// Differences to subtract, with their factors: ‖error − Σ factor · δe‖ is least over the differences that add something
+    /// new to those trusted more.
+    ///
+    /// Cholesky's decomposition of the normalised inner products, row by row; a row whose diagonal is too small is
+    /// left out.
+    fn factors(&self, error: &[f64]) -> Vec<(usize, f64)> {
+        let mut used: Vec<usize> = Vec::new();
+        let mut rows: Vec<Vec<f64>> = Vec::new();
+        let mut shares: Vec<f64> = Vec::new();
+        let size = |k: usize| self.gram[(k, k)].sqrt();
+        for (k, difference) in self.differences.iter().enumerate() {
+            let norm = size(k);
+            if norm <= 0.0 || !norm.is_finite() {
+                continue;
+            }
+            let mut row: Vec<f64> = Vec::with_capacity(used.len() + 1);
+            for (j, &other) in used.iter().enumerate() {
+                let known = dot(&row, &rows[j][..j]);
+                row.push((self.gram[(k, other)] / (norm * size(other)) - known) / rows[j][j]);
+            }
+            let new = (1.0 - dot(&row, &row)).max(0.0).sqrt();
+            let novelty = if k < self.own {
+                OWN_NOVELTY
+            } else {
+                CARRIED_NOVELTY
+            };
+            if new < novelty {
+                continue;
+            }
+            let share = (dot(&difference.error, error) / norm - dot(&row, &shares)) / new;
+            row.push(new);
+            used.push(k);
+            rows.push(row);
+            shares.push(share);
+        }
+        // Back substitution with the transposed triangle.
+        for i in (0..used.len()).rev() {
+            let known: f64 = (i + 1..used.len()).map(|j| rows[j][i] * shares[j]).sum();
+            shares[i] = (shares[i] - known) / rows[i][i];
+        }
+        used.into_iter()
+            .zip(shares)
+            .map(|(k, share)| (k, share / size(k)))
+            .collect()
+    }
+}
+
+/// Inner products of the errors of differences of one size; those of another size count as zero.
+fn gram(differences: &[Arc<Difference>]) -> DMatrix<f64> {
+    let m = differences.len();
+    let mut products = DMatrix::zeros(m, m);
+    for i in 0..m {
+        for j in 0..=i {
+            let (one, other) = (&differences[i].error, &differences[j].error);
+            if one.len() == other.len() {
+                products[(i, j)] = dot(one, other);
+                products[(j, i)] = products[(i, j)];
+            }
+        }
+    }
+    products
 }
 
 /// One iterate as the energy sees it.

@@ -8,7 +8,7 @@ use super::diis::dot;
 use super::grassmann::tangent_part;
 use super::orthogonal::Orthogonal;
 use super::settings::Method;
-use crate::integrals::repulsion::CoulombExchange;
+use crate::integrals::repulsion::{CoulombExchange, CoulombExchangePair};
 use nalgebra::DMatrix;
 
 /// Direct builds add up density differences at most this often before everything is computed afresh, so that what
@@ -102,6 +102,7 @@ pub struct Field<'a> {
     since_fresh: usize,
     builds: usize,
     products: usize,
+    product_passes: usize,
 }
 
 impl<'a> Field<'a> {
@@ -125,6 +126,7 @@ impl<'a> Field<'a> {
             since_fresh: 0,
             builds: 0,
             products: 0,
+            product_passes: 0,
         }
     }
 
@@ -146,10 +148,22 @@ impl<'a> Field<'a> {
         self.builds
     }
 
-    /// Hessian products so far, each the work of one Fock build.
+    /// Trial rotations whose Hessian products were made so far, each at most the work of one Fock build.
     #[must_use]
     pub fn products(&self) -> usize {
         self.products
+    }
+
+    /// Passes over the integrals so far, for Fock builds and for Hessian products.
+    #[must_use]
+    pub fn passes(&self) -> usize {
+        self.builds + self.product_passes
+    }
+
+    /// Passes over the integrals that the Hessian products took; one serves all rotations at once.
+    #[must_use]
+    pub fn product_passes(&self) -> usize {
+        self.product_passes
     }
 
     /// Density matrices in the basis, one per spin block, of occupied orbitals of the frame.
@@ -259,14 +273,16 @@ impl<'a> Field<'a> {
     /// Two-electron response of the Fock matrices to orbital rotations, frame, tangent part only.
     ///
     /// `tangents` are sets of tangents Γ (one per spin block) at `occupied`; the density changes by
-    /// Γ Yᵀ + Y Γᵀ. For each set returns (1 − Y Yᵀ) δF Y per block. All sets share one pass over the integrals.
+    /// Γ Yᵀ + Y Γᵀ. For each kind of rotation and each set returns (1 − Y Yᵀ) δF Y per block. All sets share one
+    /// pass over the integrals, and so do kinds that differ only in what they make of J and K.
     pub fn response(
         &mut self,
         occupied: &[DMatrix<f64>],
         tangents: &[Vec<DMatrix<f64>>],
-        rotation: Rotation,
-    ) -> Vec<Vec<DMatrix<f64>>> {
+        rotations: &[Rotation],
+    ) -> Vec<Vec<Vec<DMatrix<f64>>>> {
         self.products += tangents.len();
+        self.product_passes += 1;
         let root = self.frame.inverse_half();
         let orbitals: Vec<_> = occupied.iter().map(|y| root * y).collect();
         let mut densities = Vec::new();
@@ -279,9 +295,8 @@ impl<'a> Field<'a> {
         let (Repulsion::Stored(integrals) | Repulsion::Direct(integrals)) = &self.repulsion;
         let pairs = integrals.coulomb_exchange(&densities);
         let blocks = occupied.len();
-        pairs
-            .chunks(blocks)
-            .map(|set| {
+        let one_kind = |rotation: Rotation| {
+            let of_set = |set: &[CoulombExchangePair]| {
                 let matrices: Vec<DMatrix<f64>> = match rotation {
                     Rotation::Singlet => vec![&set[0].coulomb * 2.0 - &set[0].exchange],
                     Rotation::Triplet => vec![-&set[0].exchange],
@@ -299,8 +314,10 @@ impl<'a> Field<'a> {
                     .zip(&orbitals)
                     .map(|((g, y), c)| tangent_part(y, &(root * (g * c))))
                     .collect()
-            })
-            .collect()
+            };
+            pairs.chunks(blocks).map(of_set).collect()
+        };
+        rotations.iter().map(|&r| one_kind(r)).collect()
     }
 
     /// Orbital energies and orbitals of Fock matrices.

@@ -5,6 +5,7 @@
 //! from the lowest determinant so far.
 
 use super::ScfError;
+use super::canonical::{Canonical, Kappa, combined, inner};
 use super::diis::{Difference, EnergyInterpolation, Extrapolation};
 use super::fock::{Evaluation, Field};
 use super::grassmann;
@@ -12,9 +13,10 @@ use super::orthogonal::Orbitals;
 use super::quasi_newton;
 use super::second_order;
 use super::settings::ScfSettings;
-use super::stability::CarriedVectors;
+use super::stability::{self, CarriedVectors, Precision};
 use crate::scf::StopReason;
 use nalgebra::DMatrix;
+use std::sync::Arc;
 
 /// Commutator above which the energy is minimised over combinations of iterates, hartree, and below which the
 /// error alone decides; in between both are mixed (A. J. Garza, G. E. Scuseria, J. Chem. Phys. 137, 054110 (2012)).
@@ -40,6 +42,17 @@ const RISE: f64 = 1e-5;
 const NEARBY: f64 = 0.02;
 /// Commutator below which a seed counts as good, hartree.
 const GOOD_SEED: f64 = 0.05;
+
+/// Commutator below which a calculation that makes no progress any more is asked for the error of its energy, hartree:
+/// along a soft mode the gradient vanishes long before the orbitals settle.
+const FLAT: f64 = 1e-5;
+/// Eigenvalue of the orbital Hessian (hartree, absolute) below which a mode is soft.
+const SOFT: f64 = 0.01;
+/// Curvatures below this are raised to it, hartree: rotations of a symmetry-broken state as a whole have none, and
+/// no gradient either.
+const LEAST_CURVATURE: f64 = 1e-6;
+/// Error of the energy that is accepted in the end where a mode is soft, hartree.
+const FLAT_ENERGY: f64 = 3e-7;
 
 /// Quasi-Newton steps before exact ones.
 const DESCENT: usize = 45;
@@ -78,10 +91,10 @@ pub enum Beginning {
 pub struct Plan<'a> {
     /// When it counts as converged.
     pub thresholds: Thresholds,
-    /// Builds and Hessian products allowed in all.
+    /// Passes over the integrals allowed in all: Fock builds, and passes for Hessian products.
     pub limit: usize,
     /// Differences carried over from earlier geometries, the most trusted first.
-    pub carried: Vec<Difference>,
+    pub carried: Vec<Arc<Difference>>,
     /// Occupied orbitals (frame) to keep to by overlap, instead of filling the lowest.
     pub follow: Option<&'a [DMatrix<f64>]>,
     /// Eigenvectors of the orbital Hessian of a neighbouring geometry: where the energy is soft.
@@ -99,8 +112,8 @@ pub struct Solution {
     pub refined: Vec<DMatrix<f64>>,
     /// Why it stopped.
     pub stop: StopReason,
-    /// Differences made on the way, newest first.
-    pub differences: Vec<Difference>,
+    /// Differences to carry over: those made on the way, newest first, then those taken over that proved good.
+    pub differences: Vec<Arc<Difference>>,
 }
 
 /// Occupied orbitals of Fock matrices: the lowest, or those that overlap most with `follow` (A. T. B.
@@ -253,14 +266,14 @@ pub fn converge(
                 evaluation: here,
                 refined,
                 stop: StopReason::Converged,
-                differences: history.own().to_vec(),
+                differences: history.differences().to_vec(),
             });
         }
         if lowest.as_ref().is_none_or(|l| here.energy < l.energy) {
             lowest = Some(here.clone());
         }
         let lowest_energy = lowest.as_ref().map_or(here.energy, |l| l.energy);
-        if field.builds() + field.products() >= plan.limit {
+        if field.passes() >= plan.limit {
             return Ok(unconverged(lowest.unwrap_or(here)));
         }
         if here.commutator < 0.8 * best {
@@ -359,7 +372,7 @@ fn descend(
     start: Evaluation,
     plan: &Plan<'_>,
 ) -> Result<Solution, ScfError> {
-    let left = plan.limit.saturating_sub(field.builds() + field.products());
+    let left = plan.limit.saturating_sub(field.passes());
     let mut history = Extrapolation::default();
     history.record(&start.focks, &start.errors);
     let descent = quasi_newton::descend(
@@ -378,14 +391,62 @@ fn descend(
             differences: history.own().to_vec(),
         });
     }
-    let (evaluation, stop) =
+    let (evaluation, mut stop) =
         second_order::minimise(field, descent.evaluation, &plan.thresholds, plan.limit)?;
+    if stop == StopReason::IterationLimit && is_certain(field, &evaluation, plan)? {
+        stop = StopReason::SoftMode;
+    }
     Ok(Solution {
         refined: evaluation.occupied.clone(),
         evaluation,
         stop,
         differences: history.own().to_vec(),
     })
+}
+
+/// Whether the energy of a determinant is certain although a soft mode keeps its commutator from the threshold.
+fn is_certain(
+    field: &mut Field<'_>,
+    evaluation: &Evaluation,
+    plan: &Plan<'_>,
+) -> Result<bool, ScfError> {
+    Ok(evaluation.commutator < FLAT && energy_left(field, evaluation, plan.soft)? < FLAT_ENERGY)
+}
+
+/// Bound of the energy between a determinant and the stationary one nearby, hartree: w g·|H|⁻¹·g with the lowest
+/// eigenpairs of the orbital Hessian, and for what of the gradient lies outside them the highest of their eigenvalues. Infinite where no mode is soft:
+/// such a calculation has no excuse.
+fn energy_left(
+    field: &mut Field<'_>,
+    evaluation: &Evaluation,
+    soft: Option<&CarriedVectors>,
+) -> Result<f64, ScfError> {
+    let orbitals = Canonical::of(field, evaluation)?;
+    let gradient: Kappa = orbitals
+        .iter()
+        .zip(&evaluation.focks)
+        .map(|(o, f)| o.off_diagonal(f))
+        .collect();
+    let kind = second_order::internal_rotation(field.occupation().method);
+    let carried: Vec<&CarriedVectors> = soft.into_iter().collect();
+    let found =
+        stability::lowest_eigenpairs(field, &orbitals, &[kind], &carried, Precision::Sufficient)?;
+    let Some(pairs) = found.first() else {
+        return Ok(0.0);
+    };
+    if pairs.values.iter().all(|v| v.abs() > SOFT) {
+        return Ok(f64::INFINITY);
+    }
+    let mut rest = gradient.clone();
+    let mut sum = 0.0;
+    for (value, vector) in pairs.values.iter().zip(&pairs.vectors) {
+        let share = inner(vector, &gradient);
+        rest = combined(&rest, -share, vector);
+        sum += share * share / value.abs().max(LEAST_CURVATURE);
+    }
+    let highest = pairs.values.last().map_or(LEAST_CURVATURE, |v| v.abs());
+    sum += inner(&rest, &rest) / highest.max(LEAST_CURVATURE);
+    Ok(field.occupation().weight() * sum)
 }
 
 fn unconverged(evaluation: Evaluation) -> Solution {

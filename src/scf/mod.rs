@@ -28,10 +28,21 @@ pub use settings::{FirstDensity, Method, ScfSettings};
 pub enum StopReason {
     /// both thresholds met
     Converged,
+    /// the commutator threshold not met along a soft mode, but the energy right to 3e-7 hartree by a bound from the
+    /// gradient and the lowest eigenvalues of the orbital Hessian
+    SoftMode,
     /// as many Fock builds as allowed
     IterationLimit,
     /// energy or density stopped being finite numbers
     NotFinite,
+}
+
+impl StopReason {
+    /// Whether the energy can be trusted.
+    #[must_use]
+    pub fn is_converged(self) -> bool {
+        matches!(self, Self::Converged | Self::SoftMode)
+    }
 }
 
 /// Why a calculation could not be carried out.

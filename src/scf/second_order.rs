@@ -92,7 +92,9 @@ fn path(
     let mut points = Vec::new();
     for _ in 0..INNER_STEPS.min(budget.max(1)) {
         let Some(image) =
-            hessian_products(field, orbitals, std::slice::from_ref(&direction), kind).pop()
+            hessian_products(field, orbitals, std::slice::from_ref(&direction), &[kind])
+                .pop()
+                .and_then(|mut images| images.pop())
         else {
             break;
         };
@@ -156,8 +158,8 @@ fn cut(
     here
 }
 
-/// Minimises the energy from a determinant until the thresholds are met or `limit` builds and products
-/// have been spent by `field` in all. Returns the lowest determinant found.
+/// Minimises the energy from a determinant until the thresholds are met or `limit` passes over the
+/// integrals have been spent by `field` in all. Returns the lowest determinant found.
 ///
 /// # Errors
 /// [`ScfError::Eigenproblem`].
@@ -182,7 +184,7 @@ pub fn minimise(
             .map(|(o, f)| o.off_diagonal(f))
             .collect();
         let metric = preconditioner(&orbitals);
-        let spent = field.builds() + field.products();
+        let spent = field.passes();
         if spent >= limit {
             return Ok((here, StopReason::IterationLimit));
         }
@@ -218,7 +220,7 @@ pub fn minimise(
                 here = trial;
                 break;
             }
-            if field.builds() + field.products() >= limit {
+            if field.passes() >= limit {
                 return Ok((here, StopReason::IterationLimit));
             }
             if radius < 1e-7 {

@@ -6,8 +6,9 @@
 //! point, extrapolated as a polynomial of the swept coordinates.
 
 use super::ScfError;
+use super::canonical::inner;
 use super::diis::Difference;
-use super::grassmann::{exponential, logarithm, smallest_cosine};
+use super::grassmann::{exponential, logarithm, smallest_cosine, tangent_part};
 use super::onset;
 use super::stability::CarriedVectors;
 use nalgebra::{DMatrix, DVector};
@@ -20,8 +21,14 @@ const ORDER: usize = 5;
 const LARGEST_WEIGHTS: f64 = 80.0;
 /// An estimated error (norm of the tangent) above which the newest point alone is safer.
 const LARGEST_ERROR: f64 = 0.4;
+/// Differences of earlier points that a seed holds.
+const HELD: usize = 30;
 /// Differences of earlier points taken over.
-const CARRIED: usize = 30;
+const CARRIED: usize = 36;
+/// Eigenvalues of the orbital Hessian (hartree, absolute) below which a direction is extrapolated linearly at most.
+const SOFT: f64 = 3e-3;
+/// The same below which the newest point alone says where it is.
+const FLAT: f64 = 1e-5;
 /// ‖Pα − Pβ‖² above which a solution counts as spin-polarised.
 const POLARISED: f64 = 1e-6;
 
@@ -37,8 +44,8 @@ pub struct SeedState {
     pub occupied: Vec<DMatrix<f64>>,
     /// Independent functions kept in the frame.
     pub kept: usize,
-    /// Differences of Fock matrices and errors, newest first.
-    pub differences: Vec<Difference>,
+    /// Differences of Fock matrices and errors, newest first, with what earlier points left.
+    pub differences: Vec<Arc<Difference>>,
     /// Lowest eigenvectors of the internal orbital Hessian.
     pub internal: Option<CarriedVectors>,
     /// Lowest eigenvectors of the triplet orbital Hessian.
@@ -50,7 +57,8 @@ pub struct SeedState {
 impl Seed {
     /// Wraps what a solution leaves behind.
     #[must_use]
-    pub fn new(state: SeedState) -> Self {
+    pub fn new(mut state: SeedState) -> Self {
+        state.differences.truncate(HELD);
         Self(Arc::new(state))
     }
 
@@ -121,7 +129,7 @@ pub struct Prediction {
     /// Occupied orbitals of the frame, one matrix per spin block.
     pub occupied: Vec<DMatrix<f64>>,
     /// Differences to carry over, the most trusted first.
-    pub differences: Vec<Difference>,
+    pub differences: Vec<Arc<Difference>>,
     /// Order of the polynomial that was used.
     pub order: usize,
     /// Estimated error: norm of the tangent between this order and the one below.
@@ -232,6 +240,49 @@ fn combination(
     Some(sum)
 }
 
+/// Orthonormal tangents at the occupied space of a point along which the energy is soft, and whether it is flat.
+///
+/// A gradient that counts as converged leaves the place along such a direction open, the more the smaller the
+/// curvature is, and a polynomial of high order would magnify that by its weights.
+fn soft_directions(state: &SeedState) -> Vec<(Vec<DMatrix<f64>>, bool)> {
+    let mut directions: Vec<(Vec<DMatrix<f64>>, bool)> = Vec::new();
+    let Some(vectors) = &state.internal else {
+        return directions;
+    };
+    let fits = vectors.occupied.len() == state.occupied.len()
+        && vectors
+            .occupied
+            .iter()
+            .zip(&state.occupied)
+            .all(|(a, b)| a.shape() == b.shape());
+    if !fits {
+        return directions;
+    }
+    for (value, tangents) in vectors.values.iter().zip(&vectors.tangents) {
+        if value.abs() > SOFT {
+            continue;
+        }
+        let mut direction: Vec<DMatrix<f64>> = tangents
+            .iter()
+            .zip(&vectors.occupied)
+            .zip(&state.occupied)
+            .map(|((gamma, from), y)| tangent_part(y, &(gamma * (from.transpose() * y))))
+            .collect();
+        for (known, _) in &directions {
+            let share = inner(known, &direction);
+            for (d, k) in direction.iter_mut().zip(known) {
+                *d -= k * share;
+            }
+        }
+        let size = inner(&direction, &direction).sqrt();
+        if size > 0.5 {
+            direction.iter_mut().for_each(|d| *d /= size);
+            directions.push((direction, value.abs() < FLAT));
+        }
+    }
+    directions
+}
+
 fn distance(a: &[DMatrix<f64>], b: &[DMatrix<f64>]) -> f64 {
     a.iter()
         .zip(b)
@@ -255,7 +306,7 @@ pub fn predict(points: &[(&[f64], &Seed)], target: &[f64]) -> Result<Option<Pred
     let polarised = newest.is_polarised();
     let mut coordinates: Vec<&[f64]> = vec![newest_at];
     let mut gammas: Vec<Vec<DMatrix<f64>>> = vec![base.iter().map(|y| y * 0.0).collect()];
-    let mut differences: Vec<Difference> = newest.state().differences.clone();
+    let mut differences = newest.state().differences.clone();
     for (at, seed) in older.iter().rev() {
         let state = seed.state();
         let fits = at.len() == target.len()
@@ -288,7 +339,12 @@ pub fn predict(points: &[(&[f64], &Seed)], target: &[f64]) -> Result<Option<Pred
         coordinates.push(at);
         gammas.push(tangent);
         if !swapped {
-            differences.extend(state.differences.iter().cloned());
+            for difference in &state.differences {
+                // Points along one chain hold what those behind them left.
+                if !differences.iter().any(|d| Arc::ptr_eq(d, difference)) {
+                    differences.push(Arc::clone(difference));
+                }
+            }
         }
     }
     differences.truncate(CARRIED);
@@ -296,14 +352,28 @@ pub fn predict(points: &[(&[f64], &Seed)], target: &[f64]) -> Result<Option<Pred
     let dimensions = (0..target.len())
         .filter(|&d| coordinates.iter().any(|c| (c[d] - target[d]).abs() > 0.0))
         .count();
+    let soft = soft_directions(newest.state());
     let mut below = gammas[0].clone();
+    let mut linear = below.clone();
     let mut best = (0, f64::INFINITY, below.clone());
     if dimensions > 0 {
         for degree in 1..=ORDER {
-            let Some(tangent) = combination(&coordinates, &gammas, target, degree, dimensions)
+            let Some(mut tangent) = combination(&coordinates, &gammas, target, degree, dimensions)
             else {
                 break;
             };
+            for (direction, is_flat) in &soft {
+                let steady = if *is_flat { &gammas[0] } else { &linear };
+                let excess = inner(direction, &tangent) - inner(direction, steady);
+                if degree > 1 || *is_flat {
+                    for (t, d) in tangent.iter_mut().zip(direction) {
+                        *t -= d * excess;
+                    }
+                }
+            }
+            if degree == 1 {
+                linear.clone_from(&tangent);
+            }
             let estimate = distance(&tangent, &below);
             if estimate < best.1 {
                 best = (degree, estimate, tangent.clone());
@@ -319,24 +389,44 @@ pub fn predict(points: &[(&[f64], &Seed)], target: &[f64]) -> Result<Option<Pred
     if let Some(near_onset) = onset::predict(points, target)?
         && near_onset.estimate < estimate
     {
+        let alike = matches!(near_onset.occupied.as_slice(), [a, b] if a == b);
         return Ok(Some(Prediction {
             occupied: near_onset.occupied,
-            differences,
+            differences: if alike {
+                alike_in_both_spins(&differences)
+            } else {
+                differences
+            },
             order: 1,
             estimate: near_onset.estimate,
         }));
     }
-    let occupied = base
+    let mut occupied: Vec<DMatrix<f64>> = base
         .iter()
         .zip(&tangent)
         .map(|(y, gamma)| exponential(y, gamma))
         .collect::<Result<_, _>>()?;
+    if let ([alpha, beta], false) = (occupied.as_mut_slice(), polarised) {
+        if alpha.shape() == beta.shape() {
+            // What little the spins differ is noise along a soft mode, and would be extrapolated. Where the symmetric
+            // solution is no longer the lowest, only a test of stability tells.
+            beta.copy_from(alpha);
+            differences = alike_in_both_spins(&differences);
+        }
+    }
     Ok(Some(Prediction {
         occupied,
         differences,
         order,
         estimate,
     }))
+}
+
+fn alike_in_both_spins(differences: &[Arc<Difference>]) -> Vec<Arc<Difference>> {
+    differences
+        .iter()
+        .map(|d| Arc::new(d.alike_in_both_spins()))
+        .collect()
 }
 
 /// A matrix as plain numbers, column after column.
@@ -412,7 +502,7 @@ impl From<Seed> for StoredSeed {
         Self {
             occupied: store(&state.occupied),
             kept: state.kept,
-            differences: state.differences.clone(),
+            differences: state.differences.iter().map(|d| (**d).clone()).collect(),
             internal: state.internal.as_ref().map(Into::into),
             triplet: state.triplet.as_ref().map(Into::into),
             lowest_eigenvalue: state.lowest_eigenvalue,
@@ -425,7 +515,7 @@ impl From<StoredSeed> for Seed {
         Self::new(SeedState {
             occupied: restore(stored.occupied),
             kept: stored.kept,
-            differences: stored.differences,
+            differences: stored.differences.into_iter().map(Arc::new).collect(),
             internal: stored.internal.map(Into::into),
             triplet: stored.triplet.map(Into::into),
             lowest_eigenvalue: stored.lowest_eigenvalue,

@@ -15,16 +15,33 @@ use nalgebra::DMatrix;
 
 /// Eigenvectors that are sought: one alone misses crossings of symmetries.
 const VECTORS: usize = 6;
+/// Singlet eigenvectors that are carried: with the triplet ones beside them fewer are enough.
+const SINGLET_VECTORS: usize = 4;
 /// Residual norm of the lowest eigenvector, hartree; its eigenvalue is then good to the square of this over the gap.
 const RESIDUAL: f64 = 5e-4;
 /// Residual norm of the others, hartree: they only have to be there when they become the lowest.
 const OTHER_RESIDUAL: f64 = 3e-2;
+/// Relative error of an eigenvalue that is enough to tell its sign and to predict where it may reach zero.
+const SUFFICIENT: f64 = 0.03;
+/// The same for the eigenvectors above the lowest.
+const OTHER_SUFFICIENT: f64 = 0.2;
+/// An error of the lowest eigenvalue that is always small enough (hartree): well below [`UNSTABLE`].
+const SMALL_ERROR: f64 = 2e-6;
+/// An error of the others that is always small enough, hartree.
+const OTHER_SMALL_ERROR: f64 = 5e-3;
+/// Eigenvalues nearer to each other than this are one cluster where errors are estimated, hartree.
+const CLUSTER: f64 = 0.02;
+/// Distance to the next cluster where none is known yet, hartree.
+const UNKNOWN_GAP: f64 = 0.1;
 /// Passes over the integrals.
 const PASSES: usize = 24;
 /// The trial space is collapsed to the best vectors at this size.
 const LARGEST_SPACE: usize = 60;
 /// A trial vector is left out if less than this fraction of it is new.
 const NOVELTY: f64 = 1e-4;
+/// A carried vector is left out if less than this fraction of it is new: what little it adds comes with the
+/// residuals if it is needed.
+const CARRIED_NOVELTY: f64 = 0.25;
 /// Share of a deterministic noise in fresh trial vectors, so that no symmetry is shut out.
 const NOISE: f64 = 0.02;
 
@@ -138,32 +155,128 @@ fn fresh_vectors(gaps: &[DMatrix<f64>], count: usize) -> Vec<Kappa> {
         .collect()
 }
 
-/// Lowest eigenpairs of the orbital Hessian for the given kind of rotation; nothing if there are no rotations.
+/// How well eigenpairs have to be known.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub enum Precision {
+    /// To all digits that are worth printing.
+    Full,
+    /// So well that the sign of the lowest eigenvalue is certain, and its size good to a few per cent.
+    Sufficient,
+}
+
+impl Precision {
+    /// Whether root `root` of the ascending Ritz values `values` is good enough with a residual of this norm.
+    ///
+    /// The error of a Ritz value is at most the residual norm, and at most its square over the distance to the rest
+    /// of the spectrum (T. Kato, J. Phys. Soc. Jpn. 4, 334 (1949)), here taken from the Ritz values.
+    fn is_reached(self, residual: f64, root: usize, values: &[f64]) -> bool {
+        let lowest = root == 0;
+        match self {
+            Self::Full if lowest => residual <= RESIDUAL,
+            Self::Full => residual <= OTHER_RESIDUAL,
+            Self::Sufficient => {
+                let value = values[root];
+                let distances = values[root..].iter().map(|v| v - value);
+                let gap = distances
+                    .into_iter()
+                    .find(|&d| d > CLUSTER)
+                    .unwrap_or(UNKNOWN_GAP);
+                let error = residual.min(residual * residual / gap);
+                if lowest {
+                    error <= (SUFFICIENT * value.abs()).max(SMALL_ERROR)
+                } else {
+                    error <= (OTHER_SUFFICIENT * value.abs()).max(OTHER_SMALL_ERROR)
+                }
+            }
+        }
+    }
+}
+
+/// One Hessian on the common trial space.
+struct Projection {
+    kind: Rotation,
+    images: Vec<Kappa>,
+    /// Ritz values, ascending.
+    values: Vec<f64>,
+    /// Coefficients of the Ritz vectors, one column each.
+    coefficients: DMatrix<f64>,
+}
+
+impl Projection {
+    fn new(kind: Rotation) -> Self {
+        Self {
+            kind,
+            images: Vec::new(),
+            values: Vec::new(),
+            coefficients: DMatrix::zeros(0, 0),
+        }
+    }
+
+    fn solve(&mut self, space: &[Kappa]) -> Result<(), ScfError> {
+        let m = space.len();
+        let mut projected = DMatrix::from_fn(m, m, |i, j| inner(&space[i], &self.images[j]));
+        symmetrise(&mut projected);
+        let (values, coefficients) = symmetric_eigen(&projected)?;
+        self.values = values.iter().copied().collect();
+        self.coefficients = coefficients;
+        Ok(())
+    }
+
+    /// Eigenvectors that must be good before the search may end.
+    fn wanted(&self, dimension: usize) -> usize {
+        self.carried().min(dimension)
+    }
+
+    /// Eigenvectors that are handed on.
+    fn carried(&self) -> usize {
+        match self.kind {
+            Rotation::Singlet => SINGLET_VECTORS,
+            Rotation::Triplet | Rotation::Unrestricted => VECTORS,
+        }
+    }
+}
+
+/// Σ coefficientᵢ vectorᵢ.
+fn combination<'c>(vectors: &[Kappa], coefficients: impl Iterator<Item = &'c f64>) -> Kappa {
+    let mut sum = scaled(&vectors[0], 0.0);
+    for (vector, &coefficient) in vectors.iter().zip(coefficients) {
+        for (s, v) in sum.iter_mut().zip(vector) {
+            s.zip_apply(v, |s, v| *s += coefficient * v);
+        }
+    }
+    sum
+}
+
+/// Lowest eigenpairs of the orbital Hessians of the given kinds, one entry per kind; nothing if there are no rotations.
+///
+/// All kinds share one trial space and, in each step, one pass over the integrals. `carried` are eigenvectors of a
+/// neighbouring geometry to start from.
 ///
 /// # Errors
 /// [`ScfError::Eigenproblem`].
 pub fn lowest_eigenpairs(
     field: &mut Field<'_>,
     orbitals: &[Canonical],
-    kind: Rotation,
-    carried: Option<&CarriedVectors>,
-) -> Result<Option<Eigenpairs>, ScfError> {
+    kinds: &[Rotation],
+    carried: &[&CarriedVectors],
+    precision: Precision,
+) -> Result<Vec<Eigenpairs>, ScfError> {
     let gaps: Vec<_> = orbitals.iter().map(Canonical::gaps).collect();
     let dimension: usize = gaps.iter().map(DMatrix::len).sum();
     if dimension == 0 {
-        return Ok(None);
+        return Ok(Vec::new());
     }
-    let wanted = VECTORS.min(dimension);
-    let mut proposals = carried.map_or_else(Vec::new, |c| c.carried_to(orbitals));
-    if proposals.len() < wanted {
-        proposals = fresh_vectors(&gaps, wanted + 2);
+    let mut novelty = CARRIED_NOVELTY;
+    let mut proposals: Vec<Kappa> = carried
+        .iter()
+        .flat_map(|c| c.carried_to(orbitals))
+        .collect();
+    if proposals.len() < VECTORS.min(dimension) {
+        proposals = fresh_vectors(&gaps, VECTORS.min(dimension) + 2);
+        novelty = NOVELTY;
     }
     let mut space: Vec<Kappa> = Vec::new();
-    let mut images: Vec<Kappa> = Vec::new();
-    let mut pairs = Eigenpairs {
-        values: Vec::new(),
-        vectors: Vec::new(),
-    };
+    let mut projections: Vec<Projection> = kinds.iter().map(|&k| Projection::new(k)).collect();
     for _ in 0..PASSES {
         let known = space.len();
         for proposal in proposals.drain(..) {
@@ -178,59 +291,80 @@ pub fn lowest_eigenpairs(
                 }
             }
             let rest = inner(&vector, &vector).sqrt();
-            if rest > NOVELTY && space.len() < dimension {
+            if rest > novelty && space.len() < dimension {
                 space.push(scaled(&vector, 1.0 / rest));
             }
         }
+        novelty = NOVELTY;
         if space.len() == known {
             break;
         }
-        images.extend(hessian_products(field, orbitals, &space[known..], kind));
+        let images = hessian_products(field, orbitals, &space[known..], kinds);
         let m = space.len();
-        let mut projected = DMatrix::from_fn(m, m, |i, j| inner(&space[i], &images[j]));
-        symmetrise(&mut projected);
-        let (values, vectors) = symmetric_eigen(&projected)?;
-        let combine = |from: &[Kappa], column: usize| -> Kappa {
-            let mut sum = scaled(&from[0], vectors[(0, column)]);
-            for (i, vector) in from.iter().enumerate().skip(1) {
-                sum = combined(&sum, vectors[(i, column)], vector);
-            }
-            sum
-        };
-        let roots = wanted.min(m);
-        pairs.values = values.iter().take(roots).copied().collect();
-        pairs.vectors = (0..roots).map(|r| combine(&space, r)).collect();
-        let mut converged = roots == wanted;
-        for root in 0..roots {
-            let value = values[root];
-            let residual = combined(&combine(&images, root), -value, &pairs.vectors[root]);
-            let size = inner(&residual, &residual).sqrt();
-            let limit = if root == 0 { RESIDUAL } else { OTHER_RESIDUAL };
-            if size > limit {
-                converged = false;
-                proposals.push(
-                    residual
-                        .iter()
-                        .zip(&gaps)
-                        .map(|(r, g)| r.zip_map(g, |r, gap| r / (gap - value).max(0.05)))
-                        .collect(),
-                );
+        let mut converged = true;
+        for (projection, images) in projections.iter_mut().zip(images) {
+            projection.images.extend(images);
+            projection.solve(&space)?;
+            let wanted = projection.wanted(dimension);
+            converged &= m >= wanted;
+            for root in 0..wanted.min(m) {
+                let value = projection.values[root];
+                let column = projection.coefficients.column(root);
+                let vector = combination(&space, column.iter());
+                let image = combination(&projection.images, column.iter());
+                let residual = combined(&image, -value, &vector);
+                let size = inner(&residual, &residual).sqrt();
+                if !precision.is_reached(size, root, &projection.values) {
+                    converged = false;
+                    proposals.push(
+                        residual
+                            .iter()
+                            .zip(&gaps)
+                            .map(|(r, g)| r.zip_map(g, |r, gap| r / (gap - value).max(0.05)))
+                            .collect(),
+                    );
+                }
             }
         }
         if converged || m == dimension {
             break;
         }
         if m + proposals.len() > LARGEST_SPACE {
-            let keep = (2 * wanted).min(m);
-            let (collapsed, collapsed_images) = (
-                (0..keep).map(|r| combine(&space, r)).collect(),
-                (0..keep).map(|r| combine(&images, r)).collect(),
-            );
-            space = collapsed;
-            images = collapsed_images;
+            collapse(&mut space, &mut projections);
         }
     }
-    Ok(Some(pairs))
+    Ok(projections
+        .iter()
+        .map(|projection| {
+            let roots = projection.carried().min(space.len());
+            Eigenpairs {
+                values: projection.values[..roots].to_vec(),
+                vectors: (0..roots)
+                    .map(|r| combination(&space, projection.coefficients.column(r).iter()))
+                    .collect(),
+            }
+        })
+        .collect())
+}
+
+/// Reduces the trial space to the best vectors of every kind.
+fn collapse(space: &mut Vec<Kappa>, projections: &mut [Projection]) {
+    let m = space.len();
+    let best: Vec<_> = projections
+        .iter()
+        .flat_map(|p| (0..(2 * p.carried()).min(m)).map(|r| p.coefficients.column(r)))
+        .collect();
+    let basis = DMatrix::from_columns(&best).qr().q();
+    let reduced = |from: &[Kappa]| -> Vec<Kappa> {
+        basis
+            .column_iter()
+            .map(|column| combination(from, column.iter()))
+            .collect()
+    };
+    for projection in projections {
+        projection.images = reduced(&projection.images);
+    }
+    *space = reduced(space);
 }
 
 /// A determinant lower in energy along an unstable direction, with the energy it has; nothing if none is found.

@@ -145,10 +145,18 @@ pub struct PointOutcome<S> {
 pub struct StabilityRecord {
     /// Within the method itself (RHF singlet, or UHF).
     pub internal: f64,
+    /// The lowest within the method that is not zero: a state that breaks a symmetry can be turned as a whole at
+    /// no cost, and only the next eigenvalue tells when another state comes near.
+    #[serde(default)]
+    pub internal_next: Option<f64>,
     /// Towards unrestricted orbitals (RHF triplet); none for UHF.
     pub triplet: Option<f64>,
-    /// Fock-like builds that the tests took.
-    pub builds: usize,
+    /// Trial rotations whose Hessian products the tests took.
+    #[serde(alias = "builds")]
+    pub products: usize,
+    /// Passes over the integrals that these took.
+    #[serde(default)]
+    pub passes: usize,
     /// How often an unstable solution was left.
     pub left: usize,
 }

@@ -13,13 +13,15 @@ use crate::integrals::repulsion::{DirectRepulsion, RepulsionList, RepulsionSetti
 use crate::molecule::connectivity::Connectivity;
 use crate::molecule::{ElectronCountError, Molecule, nuclear};
 use crate::scf::canonical::Canonical;
+use crate::scf::diis::Difference;
 use crate::scf::fock::{Evaluation, Field, Occupation, Repulsion, Rotation};
 use crate::scf::iteration::{self, Beginning, Plan, Solution, Thresholds};
 use crate::scf::orthogonal::Orthogonal;
 use crate::scf::seed::{self, Seed, SeedState};
-use crate::scf::stability::{self, CarriedVectors};
-use crate::scf::{FirstDensity, Method, ScfError, ScfSettings, StopReason, guess, second_order};
+use crate::scf::stability::{self, CarriedVectors, Eigenpairs, Precision};
+use crate::scf::{FirstDensity, Method, ScfError, ScfSettings, guess};
 use nalgebra::{DMatrix, Vector3};
+use std::sync::Arc;
 use std::time::Instant;
 
 /// Nuclei nearer than this (bohr) count as being on one spot.
@@ -242,7 +244,7 @@ impl HartreeFock {
         &self,
         request: &PointRequest<'_, Seed>,
         geometry: &Geometry,
-    ) -> Result<(Beginning, Vec<crate::scf::diis::Difference>), SurfaceError> {
+    ) -> Result<(Beginning, Vec<Arc<Difference>>), SurfaceError> {
         let functions = geometry.basis.len();
         let points = start_points(&request.start);
         let usable: Vec<(&[f64], &Seed)> = points
@@ -266,12 +268,7 @@ impl HartreeFock {
             .iter()
             .map(|y| geometry.frame.nearest(y))
             .collect::<Result<_, _>>()?;
-        let differences = if single {
-            Vec::new()
-        } else {
-            prediction.differences
-        };
-        Ok((Beginning::Occupied(occupied), differences))
+        Ok((Beginning::Occupied(occupied), prediction.differences))
     }
 
     /// Solves for self-consistency and, where asked, tests and leaves unstable solutions.
@@ -297,7 +294,7 @@ impl HartreeFock {
         };
         let mut solution = iteration::converge(field, beginning, &plan)?;
         let mut settled = Settled {
-            fock_builds: field.builds() + field.products(),
+            fock_builds: field.passes(),
             stability: None,
             // Vectors of an earlier point still tell where the energy is soft, and where the next test may begin.
             internal: newest.and_then(|s| s.internal.clone()),
@@ -310,56 +307,48 @@ impl HartreeFock {
         }
         let mut internal = settled.internal.take();
         let mut triplet = settled.triplet.take();
-        let mut products = 0;
-        let mut left = 0;
-        let mut triplet_value = None;
-        let mut internal_value = None;
-        while solution.stop == StopReason::Converged {
+        let (mut products, mut passes, mut left) = (0, 0, 0);
+        let mut found: Vec<Eigenpairs> = Vec::new();
+        let kinds: &[Rotation] = match self.occupation.method {
+            Method::Rhf => &[Rotation::Singlet, Rotation::Triplet],
+            Method::Uhf => &[Rotation::Unrestricted],
+        };
+        // On the way along a sweep a test has to tell the sign, and where it may change.
+        let precision = match newest {
+            Some(_) => Precision::Sufficient,
+            None => Precision::Full,
+        };
+        while solution.stop.is_converged() {
             let clock = Instant::now();
-            let before = field.products();
+            let before = (field.products(), field.product_passes());
             let orbitals = Canonical::of(field, &solution.evaluation)?;
-            let kind = second_order::internal_rotation(self.occupation.method);
-            let pairs = stability::lowest_eigenpairs(field, &orbitals, kind, internal.as_ref())?;
+            // Triplet eigenvectors are the lower ones: they come first where both are alike.
+            let carried: Vec<&CarriedVectors> = triplet.iter().chain(&internal).collect();
+            found = stability::lowest_eigenpairs(field, &orbitals, kinds, &carried, precision)?;
             settled.stability_seconds += clock.elapsed().as_secs_f64();
-            products += field.products() - before;
-            let Some(pairs) = pairs else {
+            products += field.products() - before.0;
+            passes += field.product_passes() - before.1;
+            let Some(pairs) = found.first() else {
                 break;
             };
-            internal = Some(CarriedVectors::of(&orbitals, &pairs));
-            internal_value = pairs.values.first().copied();
-            let unstable = internal_value.is_some_and(|v| v < stability::UNSTABLE);
+            internal = Some(CarriedVectors::of(&orbitals, pairs));
+            triplet = found.get(1).map(|p| CarriedVectors::of(&orbitals, p));
+            let unstable = pairs.values[0] < stability::UNSTABLE;
             let leave = unstable
                 && request.stability == StabilityDemand::Leave
                 && follow.is_none()
                 && left < LEAVES;
-            let lower = if leave {
-                let energy = solution.evaluation.energy;
-                stability::downhill(field, &orbitals, energy, &pairs.vectors[0])?
-            } else {
-                None
-            };
-            let Some(lower) = lower else {
-                if self.occupation.method == Method::Rhf {
-                    let clock = Instant::now();
-                    let before = field.products();
-                    let pairs = stability::lowest_eigenpairs(
-                        field,
-                        &orbitals,
-                        Rotation::Triplet,
-                        triplet.as_ref(),
-                    )?;
-                    settled.stability_seconds += clock.elapsed().as_secs_f64();
-                    products += field.products() - before;
-                    if let Some(pairs) = pairs {
-                        triplet = Some(CarriedVectors::of(&orbitals, &pairs));
-                        triplet_value = pairs.values.first().copied();
-                    }
-                }
+            if !leave {
+                break;
+            }
+            let energy = solution.evaluation.energy;
+            let Some(lower) = stability::downhill(field, &orbitals, energy, &pairs.vectors[0])?
+            else {
                 break;
             };
             left += 1;
             let saddle = solution.evaluation.energy;
-            let before = field.builds() + field.products();
+            let before = field.passes();
             let mut onwards = Plan {
                 thresholds: plan.thresholds,
                 limit: before + self.settings.iterations,
@@ -369,16 +358,20 @@ impl HartreeFock {
                 downhill: false,
             };
             solution = self.descend(field, &lower, saddle, &mut onwards)?;
-            settled.fock_builds = field.builds() + field.products() - before;
+            settled.fock_builds = field.passes() - before;
         }
-        if let Some(internal) = internal_value {
-            settled.stability = Some(StabilityRecord {
-                internal,
-                triplet: triplet_value,
-                builds: products,
-                left,
-            });
-        }
+        settled.stability = found.first().map(|pairs| StabilityRecord {
+            internal: pairs.values[0],
+            internal_next: pairs
+                .values
+                .iter()
+                .copied()
+                .find(|v| v.abs() > -stability::UNSTABLE),
+            triplet: found.get(1).map(|p| p.values[0]),
+            products,
+            passes,
+            left,
+        });
         settled.internal = internal;
         settled.triplet = triplet;
         settled.solution = solution;
@@ -397,12 +390,12 @@ impl HartreeFock {
         let mut below = lower.energy.min(saddle) + 1e-9;
         let mut rounds = 0;
         loop {
-            plan.limit = field.builds() + field.products() + self.settings.iterations;
+            plan.limit = field.passes() + self.settings.iterations;
             let beginning = Beginning::Occupied(start.clone());
             let solution = iteration::converge(field, beginning, plan)?;
             rounds += 1;
             let better = solution.evaluation.energy <= below;
-            if (better && solution.stop == StopReason::Converged) || rounds == DESCENTS {
+            if (better && solution.stop.is_converged()) || rounds == DESCENTS {
                 return Ok(solution);
             }
             plan.downhill = true;

@@ -63,7 +63,7 @@ pub(super) fn point_record(
     let origin = properties::charge_centre(&geometry.molecule);
     let moments = integrals::dipole(&geometry.basis, &origin);
     let dipole = properties::dipole(&geometry.molecule, &origin, &total, &moments);
-    let converged = settled.solution.stop == StopReason::Converged;
+    let converged = settled.solution.stop.is_converged();
     Ok(PointRecord {
         energy: converged.then_some(evaluation.energy),
         stop: settled.solution.stop,
