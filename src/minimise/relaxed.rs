@@ -306,6 +306,11 @@ impl<S: Surface> Surface for Relaxed<S> {
     fn likeness(&self, one: &Self::Seed, other: &Self::Seed) -> [f64; 2] {
         self.inner.likeness(&one.inner, &other.inner)
     }
+
+    /// Nothing: where the pieces relax to is not known beforehand.
+    fn apart(&self, _: &[Vector3<f64>]) -> Option<Self::Seed> {
+        None
+    }
 }
 
 #[cfg(test)]

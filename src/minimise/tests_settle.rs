@@ -53,6 +53,10 @@ impl Surface for Charged {
     fn likeness(&self, one: &usize, other: &usize) -> [f64; 2] {
         self.model.likeness(one, other)
     }
+
+    fn apart(&self, _: &[Vector3<f64>]) -> Option<Self::Seed> {
+        None
+    }
 }
 
 fn masses(molecule: &Molecule) -> Vec<f64> {

@@ -37,7 +37,7 @@ pub(super) fn probe<S: Surface>(
         }];
         let (mut entry, found) = evaluator
             .evaluate(point, Pass::Probe, row, &known, None, order)
-            .map_err(|source| ScanError::Point { point, source })?;
+            .map_err(|source| ScanError::at(point, source))?;
         // Free atoms are no point of the grid.
         entry.seeded_from.clear();
         entry.likeness = None;

@@ -89,7 +89,7 @@ impl<'a, S: Surface> Evaluator<'a, S> {
     }
 
     /// Evaluates a point from the solutions in `known`, nearest last. `before` is the energy of a solution already
-    /// found here: only one that is lower is worth a test.
+    /// found here: the same once more needs no test.
     pub(super) fn evaluate(
         &self,
         point: usize,
@@ -108,7 +108,8 @@ impl<'a, S: Surface> Evaluator<'a, S> {
             StateChoice::Lowest => None,
         };
         let mut outcome = self.ask(point, row, self.start(known), demand, follow)?;
-        if let Some(again) = self.again(&outcome, before, demand)
+        let is_due = testing::is_due(here, tests, &self.longest);
+        if let Some(again) = self.again(&outcome, before, demand, is_due)
             && let Some(seed) = &outcome.seed
         {
             let start = Start::Previous(SeedPoint {
@@ -188,15 +189,20 @@ impl<'a, S: Surface> Evaluator<'a, S> {
         }
     }
 
-    /// What is asked on a second try: a solution lower than the one known here has not been tested yet.
+    /// What is asked on a second try, where the solution is another than the one known here: a lower one has not been
+    /// tested yet, and a higher one may be a saddle point beside one that is lower than both.
     fn again(
         &self,
         outcome: &PointOutcome<S::Seed>,
         before: Option<f64>,
         asked: StabilityDemand,
+        is_due: bool,
     ) -> Option<StabilityDemand> {
-        let lower = outcome.record.energy? < before? - SAME_SOLUTION;
-        (self.scan.settings.stability && asked == StabilityDemand::None && lower)
+        let settings = &self.scan.settings;
+        let above = outcome.record.energy? - before?;
+        let lower = above < -SAME_SOLUTION;
+        let saddle = above > SAME_SOLUTION && is_due && settings.state == StateChoice::Lowest;
+        (settings.stability && asked == StabilityDemand::None && (lower || saddle))
             .then_some(StabilityDemand::Leave)
     }
 

@@ -68,6 +68,19 @@ impl Grid {
             .fold(0, |sum, (&i, &n)| sum * n + i)
     }
 
+    /// The point as far beyond `over` as `over` is from `from`, if the grid goes on there.
+    #[must_use]
+    pub fn beyond(&self, from: usize, over: usize) -> Option<usize> {
+        let (from, over) = (self.index(from), self.index(over));
+        let index: Vec<usize> = from
+            .iter()
+            .zip(&over)
+            .zip(&self.shape)
+            .map(|((&f, &o), &n)| (2 * o).checked_sub(f).filter(|&i| i < n))
+            .collect::<Option<_>>()?;
+        Some(self.point(&index))
+    }
+
     /// The points one step away along one sweep, in order of their number.
     #[must_use]
     pub fn neighbours(&self, point: usize) -> Vec<usize> {
@@ -114,6 +127,10 @@ mod tests {
         }
         assert_eq!(grid.neighbours(5), [1, 4, 6, 9]);
         assert_eq!(grid.neighbours(0), [1, 4]);
+        assert_eq!(grid.beyond(4, 5), Some(6));
+        assert_eq!(grid.beyond(5, 1), None);
+        assert_eq!(grid.beyond(1, 5), Some(9));
+        assert_eq!(grid.beyond(6, 7), None);
     }
 
     #[test]

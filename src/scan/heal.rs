@@ -54,38 +54,42 @@ pub(super) fn heal<S: Surface>(
             continue;
         };
         for neighbour in grid.neighbours(point) {
-            if stop.load(Ordering::Relaxed) {
-                let finished = entries.len();
-                return Err(ScanError::Interrupted {
-                    finished,
-                    planned: finished + 1,
-                });
+            // Where nothing converges the lower solution may still go on beyond.
+            let mut target = Some((point, neighbour));
+            while let Some((from, here)) = target.take() {
+                if stop.load(Ordering::Relaxed) {
+                    let finished = entries.len();
+                    return Err(ScanError::Interrupted {
+                        finished,
+                        planned: finished + 1,
+                    });
+                }
+                observer(&Event::Extended { added: 1 });
+                let order = entries.len();
+                let before = best.get(&here).map(|&(energy, _)| energy);
+                let known = [Known {
+                    point,
+                    left: &source,
+                }];
+                let row = grid.index(here)[0];
+                let (entry, found) = evaluator
+                    .evaluate(here, Pass::Heal, row, &known, before, order)
+                    .map_err(|source| ScanError::at(here, source))?;
+                observer(&Event::Evaluated(Box::new(entry.clone())));
+                entries.push(entry);
+                let Some(found) = found else {
+                    target = grid
+                        .beyond(from, here)
+                        .filter(|_| from == point)
+                        .map(|next| (here, next));
+                    continue;
+                };
+                if before.is_none_or(|energy| found.energy < energy - SAME_SOLUTION) {
+                    best.insert(here, (found.energy, order));
+                    disputed.insert(here);
+                }
+                left.insert(order, found);
             }
-            observer(&Event::Extended { added: 1 });
-            let order = entries.len();
-            let before = best.get(&neighbour).map(|&(energy, _)| energy);
-            let known = [Known {
-                point,
-                left: &source,
-            }];
-            let (entry, found) = evaluator
-                .evaluate(
-                    neighbour,
-                    Pass::Heal,
-                    grid.index(neighbour)[0],
-                    &known,
-                    before,
-                    order,
-                )
-                .map_err(|source| ScanError::at(neighbour, source))?;
-            observer(&Event::Evaluated(Box::new(entry.clone())));
-            entries.push(entry);
-            let Some(found) = found else { continue };
-            if before.is_none_or(|energy| found.energy < energy - SAME_SOLUTION) {
-                best.insert(neighbour, (found.energy, order));
-                disputed.insert(neighbour);
-            }
-            left.insert(order, found);
         }
     }
     Ok(())

@@ -48,9 +48,7 @@ pub trait Surface: Sync {
 
     /// A start for positions (bohr) at which the molecule has fallen apart, made of its free atoms. Nothing where it has
     /// not, or where the method has no such start.
-    fn apart(&self, _positions: &[Vector3<f64>]) -> Option<Self::Seed> {
-        None
-    }
+    fn apart(&self, positions: &[Vector3<f64>]) -> Option<Self::Seed>;
 }
 
 impl<S: Surface> Surface for &S {

@@ -231,4 +231,8 @@ impl Surface for ModelSurface {
         let same = if one == other { 1.0 } else { 0.0 };
         [same, same]
     }
+
+    fn apart(&self, _: &[Vector3<f64>]) -> Option<Self::Seed> {
+        None
+    }
 }

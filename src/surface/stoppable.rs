@@ -1,6 +1,7 @@
 //! A surface that answers no more once it is asked to stop.
 
 use super::{PointOutcome, PointRequest, Surface, SurfaceError};
+use nalgebra::Vector3;
 use std::sync::atomic::{AtomicBool, Ordering};
 
 /// Passes every question on to a surface until a flag is raised, then refuses with [`SurfaceError::Stopped`]. Optimisers,
@@ -38,5 +39,9 @@ impl<S: Surface> Surface for Stoppable<'_, S> {
 
     fn likeness(&self, one: &Self::Seed, other: &Self::Seed) -> [f64; 2] {
         self.surface.likeness(one, other)
+    }
+
+    fn apart(&self, positions: &[Vector3<f64>]) -> Option<Self::Seed> {
+        self.surface.apart(positions)
     }
 }
