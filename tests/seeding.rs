@@ -18,12 +18,10 @@ use thalweg::spec::parse;
 use thalweg::surface::{PointOutcome, StabilityDemand};
 use thalweg::units::ANGSTROM_PER_BOHR;
 
-fn chain(
-    count: usize,
-    from: f64,
-    step: f64,
-    at: impl Fn(f64) -> Molecule,
-) -> Vec<(Vec<f64>, Molecule)> {
+/// Geometries along a sweep with their swept value.
+type Chain = Vec<(Vec<f64>, Molecule)>;
+
+fn chain(count: usize, from: f64, step: f64, at: impl Fn(f64) -> Molecule) -> Chain {
     (0..count)
         .map(|i| {
             let x = from + step * i as f64;
@@ -76,7 +74,7 @@ fn seeded_builds(
 }
 
 /// The chains by which seeds are measured; `step` in ångström, a hundred times as many degrees.
-fn chains(step: f64, count: usize) -> [(&'static str, Vec<(Vec<f64>, Molecule)>); 4] {
+fn chains(step: f64, count: usize) -> [(&'static str, Chain); 4] {
     let degrees = 100.0 * step;
     [
         ("H–F", chain(count, 0.75, step, |x| diatomic("F", "H", x))),

@@ -406,13 +406,13 @@ pub fn predict(points: &[(&[f64], &Seed)], target: &[f64]) -> Result<Option<Pred
         .zip(&tangent)
         .map(|(y, gamma)| exponential(y, gamma))
         .collect::<Result<_, _>>()?;
-    if let ([alpha, beta], false) = (occupied.as_mut_slice(), polarised) {
-        if alpha.shape() == beta.shape() {
-            // What little the spins differ is noise along a soft mode, and would be extrapolated. Where the symmetric
-            // solution is no longer the lowest, only a test of stability tells.
-            beta.copy_from(alpha);
-            differences = alike_in_both_spins(&differences);
-        }
+    if let ([alpha, beta], false) = (occupied.as_mut_slice(), polarised)
+        && alpha.shape() == beta.shape()
+    {
+        // What little the spins differ is noise along a soft mode, and would be extrapolated. Where the symmetric
+        // solution is no longer the lowest, only a test of stability tells.
+        beta.copy_from(alpha);
+        differences = alike_in_both_spins(&differences);
     }
     Ok(Some(Prediction {
         occupied,
