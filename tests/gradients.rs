@@ -143,13 +143,14 @@ impl Walker {
         positions: &[Vector3<f64>],
         start: Start<'_, Seed>,
         gradient: bool,
+        stability: StabilityDemand,
     ) -> PointOutcome<Seed> {
         let request = PointRequest {
             positions,
             coordinates: &[],
             start,
             gradient,
-            stability: StabilityDemand::None,
+            stability,
             follow: None,
         };
         self.surface
@@ -193,7 +194,13 @@ fn compare(chosen: Method) {
         let surface = surface_with(&molecule, basis, method, settings.clone(), None);
         let workspace = surface.workspace();
         let mut walker = Walker { surface, workspace };
-        let middle = walker.at(&molecule.positions, Start::Fresh, true);
+        // A saddle point would be left by the displaced calculations.
+        let middle = walker.at(
+            &molecule.positions,
+            Start::Fresh,
+            true,
+            StabilityDemand::Leave,
+        );
         let seed = middle.seed.expect("converges");
         let gradient: Vec<Vector3<f64>> = middle
             .record
@@ -221,7 +228,9 @@ fn compare(chosen: Method) {
                     seed: &seed,
                     coordinates: &[],
                 });
-                let record = walker.at(&positions, start, false).record;
+                let record = walker
+                    .at(&positions, start, false, StabilityDemand::None)
+                    .record;
                 record.energy.expect("converges")
             };
             let difference = (8.0 * (displaced(1.0) - displaced(-1.0))

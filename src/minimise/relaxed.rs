@@ -132,6 +132,7 @@ fn inner_start<'a, T>(start: &Start<'a, RelaxedSeed<T>>) -> Start<'a, T> {
     };
     match start {
         Start::Fresh => Start::Fresh,
+        Start::Plain => Start::Plain,
         Start::Previous(point) => Start::Previous(inner(point)),
         Start::Extrapolated(points) => Start::Extrapolated(points.iter().map(inner).collect()),
     }
@@ -140,7 +141,7 @@ fn inner_start<'a, T>(start: &Start<'a, RelaxedSeed<T>>) -> Start<'a, T> {
 /// The geometry that the seeds' geometries lead to at `coordinates`.
 fn begin<'a, T>(start: &Start<'a, RelaxedSeed<T>>, coordinates: &[f64]) -> Option<Begin<'a>> {
     let points: Vec<(&'a [f64], &'a RelaxedSeed<T>)> = match start {
-        Start::Fresh => Vec::new(),
+        Start::Fresh | Start::Plain => Vec::new(),
         Start::Previous(point) => vec![(point.coordinates, point.seed)],
         Start::Extrapolated(points) => points.iter().map(|p| (p.coordinates, p.seed)).collect(),
     };
@@ -310,6 +311,10 @@ impl<S: Surface> Surface for Relaxed<S> {
     /// Nothing: where the pieces relax to is not known beforehand.
     fn apart(&self, _: &[Vector3<f64>]) -> Option<Self::Seed> {
         None
+    }
+
+    fn has_plain_start(&self) -> bool {
+        self.inner.has_plain_start()
     }
 }
 

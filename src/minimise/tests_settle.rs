@@ -57,6 +57,10 @@ impl Surface for Charged {
     fn apart(&self, _: &[Vector3<f64>]) -> Option<Self::Seed> {
         None
     }
+
+    fn has_plain_start(&self) -> bool {
+        false
+    }
 }
 
 fn masses(molecule: &Molecule) -> Vec<f64> {

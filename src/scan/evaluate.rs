@@ -82,6 +82,11 @@ impl<'a, S: Surface> Evaluator<'a, S> {
         self.side_by_side
     }
 
+    /// Whether a probe is another start than that of the walk.
+    pub(super) fn has_plain_start(&self) -> bool {
+        self.surface.has_plain_start()
+    }
+
     /// A start from free atoms at a point, where the molecule has fallen apart.
     pub(super) fn apart(&self, point: usize) -> Option<S::Seed> {
         let positions = &self.scan.positions[point];
@@ -107,7 +112,7 @@ impl<'a, S: Surface> Evaluator<'a, S> {
             StateChoice::Follow => nearest.map(|k| &k.left.seed),
             StateChoice::Lowest => None,
         };
-        let mut outcome = self.ask(point, row, self.start(known), demand, follow)?;
+        let mut outcome = self.ask(point, row, self.start(pass, known), demand, follow)?;
         let is_due = testing::is_due(here, tests, &self.longest);
         if let Some(again) = self.again(&outcome, before, demand, is_due)
             && let Some(seed) = &outcome.seed
@@ -156,12 +161,14 @@ impl<'a, S: Surface> Evaluator<'a, S> {
         Ok((entry, left))
     }
 
-    fn start<'k>(&'k self, known: &[Known<'k, S::Seed>]) -> Start<'k, S::Seed> {
+    fn start<'k>(&'k self, pass: Pass, known: &[Known<'k, S::Seed>]) -> Start<'k, S::Seed> {
         let place = |k: &Known<'k, S::Seed>| SeedPoint {
             coordinates: &self.scan.coordinates[k.point],
             seed: &k.left.seed,
         };
         match (self.scan.settings.seed, known.last()) {
+            // What a chosen first density missed must not be missed again.
+            (_, None) if pass == Pass::Probe => Start::Plain,
             (SeedKind::Fresh, _) | (_, None) => Start::Fresh,
             (SeedKind::Previous, Some(last)) => Start::Previous(place(last)),
             (SeedKind::Extrapolated, Some(_)) => {

@@ -1,10 +1,10 @@
 //! Scans: grids of points, the order in which they are walked, and what is known of each.
 
-mod apart;
 pub mod audit;
 mod evaluate;
 pub mod event;
 pub mod finding;
+mod further;
 pub mod grid;
 mod heal;
 pub mod kept;

@@ -2,9 +2,9 @@
 //! pool, and what happens goes through one channel to one observer.
 
 use super::Grid;
-use super::apart;
 use super::evaluate::{Evaluator, Known, Left};
 use super::event::{Entry, Event, Likeness};
+use super::further;
 use super::heal;
 use super::kept::keep;
 use super::settings::{Passes, SeedKind, StateChoice, WalkSettings};
@@ -155,7 +155,7 @@ pub fn run_keeping<S: Surface>(
     entries.sort_by_key(|e: &Entry| e.order);
     let mut left = runner.left();
     if scan.probes() && scan.settings.seed != SeedKind::Fresh {
-        apart::probe(&evaluator, &mut entries, &mut left, stop, observer)?;
+        further::probe(&evaluator, &mut entries, &mut left, stop, observer)?;
     }
     if scan.walks_back() {
         heal::heal(&evaluator, &mut entries, &mut left, stop, observer)?;

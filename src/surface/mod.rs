@@ -49,6 +49,9 @@ pub trait Surface: Sync {
     /// A start for positions (bohr) at which the molecule has fallen apart, made of its free atoms. Nothing where it has
     /// not, or where the method has no such start.
     fn apart(&self, positions: &[Vector3<f64>]) -> Option<Self::Seed>;
+
+    /// Whether [`Start::Plain`] is another start than [`Start::Fresh`].
+    fn has_plain_start(&self) -> bool;
 }
 
 impl<S: Surface> Surface for &S {
@@ -78,6 +81,10 @@ impl<S: Surface> Surface for &S {
     fn apart(&self, positions: &[Vector3<f64>]) -> Option<Self::Seed> {
         (**self).apart(positions)
     }
+
+    fn has_plain_start(&self) -> bool {
+        (**self).has_plain_start()
+    }
 }
 
 /// A point already computed that the next may start from.
@@ -94,6 +101,8 @@ pub struct SeedPoint<'a, S> {
 pub enum Start<'a, S> {
     /// Nothing.
     Fresh,
+    /// Nothing, and from superposed atomic densities whatever first density is asked for.
+    Plain,
     /// The solution of the last point listed, carried to the new geometry.
     Previous(SeedPoint<'a, S>),
     /// An extrapolation through several points, nearest last; never empty.

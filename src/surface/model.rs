@@ -167,7 +167,7 @@ impl Surface for ModelSurface {
         let positions = request.positions;
         let energy = |s: usize| self.states[s].energy(positions);
         let seeded = match &request.start {
-            Start::Fresh => 0,
+            Start::Fresh | Start::Plain => 0,
             Start::Previous(point) => *point.seed,
             Start::Extrapolated(points) => points.last().map_or(0, |p| *p.seed),
         };
@@ -179,7 +179,7 @@ impl Surface for ModelSurface {
             seeded
         };
         let converged = !(self.fails)(positions);
-        let builds = if matches!(request.start, Start::Fresh) {
+        let builds = if matches!(request.start, Start::Fresh | Start::Plain) {
             10
         } else {
             5
@@ -234,5 +234,9 @@ impl Surface for ModelSurface {
 
     fn apart(&self, _: &[Vector3<f64>]) -> Option<Self::Seed> {
         None
+    }
+
+    fn has_plain_start(&self) -> bool {
+        false
     }
 }

@@ -44,4 +44,8 @@ impl<S: Surface> Surface for Stoppable<'_, S> {
     fn apart(&self, positions: &[Vector3<f64>]) -> Option<Self::Seed> {
         self.surface.apart(positions)
     }
+
+    fn has_plain_start(&self) -> bool {
+        self.surface.has_plain_start()
+    }
 }

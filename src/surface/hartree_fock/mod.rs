@@ -125,12 +125,7 @@ impl HartreeFock {
                 occupied: alpha,
             });
         }
-        let atoms = match settings.first_density {
-            FirstDensity::Atoms => {
-                guess::atomic_densities(molecule, &shells_of_atom, settings.dependence)?
-            }
-            FirstDensity::CoreHamiltonian => Vec::new(),
-        };
+        let atoms = guess::atomic_densities(molecule, &shells_of_atom, settings.dependence)?;
         Ok(Self {
             molecule: molecule.clone(),
             shells_of_atom,
@@ -218,8 +213,8 @@ impl HartreeFock {
     }
 
     /// What a calculation without a seed starts from.
-    fn fresh(&self, functions: usize) -> Beginning {
-        match self.settings.first_density {
+    fn fresh(&self, first_density: FirstDensity, functions: usize) -> Beginning {
+        match first_density {
             FirstDensity::CoreHamiltonian => Beginning::Core,
             FirstDensity::Atoms => {
                 let density = guess::superposed(&self.atoms, functions);
@@ -261,7 +256,11 @@ impl HartreeFock {
             Some(_) => seed::predict(&usable, request.coordinates)?,
         };
         let Some(prediction) = prediction else {
-            return Ok((self.fresh(functions), Vec::new()));
+            let first_density = match request.start {
+                Start::Plain => FirstDensity::Atoms,
+                _ => self.settings.first_density,
+            };
+            return Ok((self.fresh(first_density, functions), Vec::new()));
         };
         let occupied = prediction
             .occupied
@@ -417,7 +416,7 @@ fn counts(counts: integrals::repulsion::IntegralCounts) -> IntegralCounts {
 /// The points of a start, nearest last.
 fn start_points<'r, 's>(start: &'r Start<'s, Seed>) -> Vec<&'r SeedPoint<'s, Seed>> {
     match start {
-        Start::Fresh => Vec::new(),
+        Start::Fresh | Start::Plain => Vec::new(),
         Start::Previous(point) => vec![point],
         Start::Extrapolated(points) => points.iter().collect(),
     }
@@ -437,6 +436,10 @@ impl Surface for HartreeFock {
         } else {
             RepulsionList::bytes_needed(self.functions())
         }
+    }
+
+    fn has_plain_start(&self) -> bool {
+        self.settings.first_density != FirstDensity::Atoms
     }
 
     fn apart(&self, positions: &[Vector3<f64>]) -> Option<Seed> {

@@ -1,5 +1,6 @@
-//! Starts from free atoms at the ends of a walk, where the molecule has fallen apart: the state that belongs there may be
-//! reached neither along the walk nor from atomic densities, because every state on the way is stable.
+//! Further starts beside a walk. From free atoms at its ends, where the molecule has fallen apart: the state that belongs
+//! there may be reached neither along the walk nor from atomic densities, because every state on the way is stable. And
+//! from atomic densities at its beginning, where the walk itself set out from another first density.
 
 use super::evaluate::{Evaluator, Known, Left};
 use super::event::{Entry, Event};
@@ -17,10 +18,18 @@ pub(super) fn probe<S: Surface>(
     stop: &AtomicBool,
     observer: &mut dyn FnMut(&Event),
 ) -> Result<(), ScanError> {
-    for (point, row) in ends(&evaluator.scan.grid) {
-        let Some(seed) = evaluator.apart(point) else {
-            continue;
-        };
+    let grid = &evaluator.scan.grid;
+    let mut further: Vec<(usize, usize, Option<Left<S::Seed>>)> = Vec::new();
+    if evaluator.has_plain_start() && !grid.shape().is_empty() {
+        let start = evaluator.scan.start;
+        further.push((start, grid.index(start)[0], None));
+    }
+    for (point, row) in ends(grid) {
+        if let Some(seed) = evaluator.apart(point) {
+            further.push((point, row, Some(Left::untested(seed))));
+        }
+    }
+    for (point, row, atoms) in further {
         if stop.load(Ordering::Relaxed) {
             let finished = entries.len();
             return Err(ScanError::Interrupted {
@@ -30,11 +39,8 @@ pub(super) fn probe<S: Surface>(
         }
         observer(&Event::Extended { added: 1 });
         let order = entries.len();
-        let atoms = Left::untested(seed);
-        let known = [Known {
-            point,
-            left: &atoms,
-        }];
+        let known: Vec<Known<'_, S::Seed>> =
+            atoms.iter().map(|left| Known { point, left }).collect();
         let (mut entry, found) = evaluator
             .evaluate(point, Pass::Probe, row, &known, None, order)
             .map_err(|source| ScanError::at(point, source))?;
