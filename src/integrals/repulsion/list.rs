@@ -3,6 +3,7 @@
 use super::digestion::{CoulombExchange, CoulombExchangePair, coulomb_exchange_packed};
 use super::groups::PairSet;
 use super::lanes::{Four, Scatter, SharedList, Streams, Stretch, dispatch};
+use super::numbers::Numbers;
 use super::pairs::ShellPair;
 use super::walk::{QuartetSink, walk};
 use super::{IntegralCounts, RepulsionSettings, pair_count};
@@ -19,7 +20,7 @@ pub struct RepulsionList {
     basis: Basis,
     settings: RepulsionSettings,
     set: PairSet,
-    integrals: Vec<f64>,
+    integrals: Numbers,
     counts: IntegralCounts,
 }
 
@@ -41,7 +42,7 @@ impl RepulsionList {
             basis: basis.clone(),
             settings: *settings,
             set: PairSet::new(basis),
-            integrals: vec![0.0; total],
+            integrals: Numbers::zeros(total),
             counts: IntegralCounts {
                 computed: total as u64,
                 reused: 0,

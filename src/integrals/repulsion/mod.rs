@@ -15,6 +15,7 @@ mod groups;
 mod hermite;
 pub(in crate::integrals) mod lanes;
 mod list;
+mod numbers;
 mod pairs;
 pub mod peak;
 pub(in crate::integrals) mod primitives;
