@@ -309,8 +309,8 @@ impl<S: Surface> Surface for Relaxed<S> {
     }
 
     /// Nothing: where the pieces relax to is not known beforehand.
-    fn apart(&self, _: &[Vector3<f64>]) -> Option<Self::Seed> {
-        None
+    fn apart(&self, _: &[Vector3<f64>]) -> Vec<Self::Seed> {
+        Vec::new()
     }
 
     fn has_plain_start(&self) -> bool {

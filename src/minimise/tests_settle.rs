@@ -54,8 +54,8 @@ impl Surface for Charged {
         self.model.likeness(one, other)
     }
 
-    fn apart(&self, _: &[Vector3<f64>]) -> Option<Self::Seed> {
-        None
+    fn apart(&self, _: &[Vector3<f64>]) -> Vec<Self::Seed> {
+        Vec::new()
     }
 
     fn has_plain_start(&self) -> bool {

@@ -87,8 +87,8 @@ impl<'a, S: Surface> Evaluator<'a, S> {
         self.surface.has_plain_start()
     }
 
-    /// A start from free atoms at a point, where the molecule has fallen apart.
-    pub(super) fn apart(&self, point: usize) -> Option<S::Seed> {
+    /// Starts from free atoms at a point, where the molecule has fallen apart.
+    pub(super) fn apart(&self, point: usize) -> Vec<S::Seed> {
         let positions = &self.scan.positions[point];
         self.pool.install(|| self.surface.apart(positions))
     }

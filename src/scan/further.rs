@@ -25,7 +25,7 @@ pub(super) fn probe<S: Surface>(
         further.push((start, grid.index(start)[0], None));
     }
     for (point, row) in ends(grid) {
-        if let Some(seed) = evaluator.apart(point) {
+        for seed in evaluator.apart(point) {
             further.push((point, row, Some(Left::untested(seed))));
         }
     }

@@ -46,9 +46,9 @@ pub trait Surface: Sync {
     /// moved to an orthogonal orbital).
     fn likeness(&self, one: &Self::Seed, other: &Self::Seed) -> [f64; 2];
 
-    /// A start for positions (bohr) at which the molecule has fallen apart, made of its free atoms. Nothing where it has
+    /// Starts for positions (bohr) at which the molecule has fallen apart, made of its free atoms. None where it has
     /// not, or where the method has no such start.
-    fn apart(&self, positions: &[Vector3<f64>]) -> Option<Self::Seed>;
+    fn apart(&self, positions: &[Vector3<f64>]) -> Vec<Self::Seed>;
 
     /// Whether [`Start::Plain`] is another start than [`Start::Fresh`].
     fn has_plain_start(&self) -> bool;
@@ -78,7 +78,7 @@ impl<S: Surface> Surface for &S {
         (**self).likeness(one, other)
     }
 
-    fn apart(&self, positions: &[Vector3<f64>]) -> Option<Self::Seed> {
+    fn apart(&self, positions: &[Vector3<f64>]) -> Vec<Self::Seed> {
         (**self).apart(positions)
     }
 

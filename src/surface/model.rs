@@ -232,8 +232,8 @@ impl Surface for ModelSurface {
         [same, same]
     }
 
-    fn apart(&self, _: &[Vector3<f64>]) -> Option<Self::Seed> {
-        None
+    fn apart(&self, _: &[Vector3<f64>]) -> Vec<Self::Seed> {
+        Vec::new()
     }
 
     fn has_plain_start(&self) -> bool {

@@ -41,7 +41,7 @@ impl<S: Surface> Surface for Stoppable<'_, S> {
         self.surface.likeness(one, other)
     }
 
-    fn apart(&self, positions: &[Vector3<f64>]) -> Option<Self::Seed> {
+    fn apart(&self, positions: &[Vector3<f64>]) -> Vec<Self::Seed> {
         self.surface.apart(positions)
     }
 

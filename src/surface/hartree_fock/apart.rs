@@ -1,4 +1,4 @@
-//! A start for a molecule that has fallen apart: determinants of its free atoms side by side.
+//! Starts for a molecule that has fallen apart: determinants of its free atoms side by side.
 //!
 //! Where an ionic and a neutral curve have crossed, both are stable, and a superposition of atomic densities may lead to
 //! the ionic one: the lowest empty orbital of one atom lies below the highest occupied of the other. Only a determinant
@@ -31,6 +31,15 @@ struct AtomState {
     occupied: [DMatrix<f64>; 2],
 }
 
+/// Where open p shells point.
+#[derive(Clone, Copy)]
+enum Towards {
+    /// to the nearest other atom
+    Along,
+    /// at a right angle to it
+    Across,
+}
+
 /// Choices made so far for the first atoms: sum of energies, and the states.
 type Choice = (f64, Vec<AtomState>);
 
@@ -38,9 +47,20 @@ impl HartreeFock {
     /// Determinants of the free atoms side by side: of the ways to reach the numbers of α and β electrons with neutral atoms
     /// (in an ion also with singly charged ones) the one of lowest energy. Nothing if there is none.
     ///
-    /// Open p shells are turned to the nearest other atom: an atom by itself has no preferred direction, and from an
-    /// arbitrary one the iteration would creep along a flat valley.
-    pub(super) fn atoms_side_by_side(&self, positions: &[Vector3<f64>]) -> Option<Seed> {
+    /// Open p shells are turned to the nearest other atom, and in a second start across: an atom by itself has no
+    /// preferred direction, and from an arbitrary one the iteration would creep along a flat valley.
+    pub(super) fn atoms_side_by_side(&self, positions: &[Vector3<f64>]) -> Vec<Seed> {
+        let Some(chosen) = self.lowest_choice() else {
+            return Vec::new();
+        };
+        [Towards::Along, Towards::Across]
+            .into_iter()
+            .filter_map(|towards| self.placed(chosen.clone(), positions, towards))
+            .collect()
+    }
+
+    /// The states of the atoms of lowest energy that together have the molecule's numbers of electrons.
+    fn lowest_choice(&self) -> Option<Vec<AtomState>> {
         let mut known: Vec<(usize, Vec<AtomState>)> = Vec::new();
         let mut choices: BTreeMap<(usize, usize), Choice> = BTreeMap::new();
         choices.insert((0, 0), (0.0, Vec::new()));
@@ -69,21 +89,31 @@ impl HartreeFock {
             }
             choices = next;
         }
-        let (_, mut chosen) = choices.remove(&wanted)?;
+        choices.remove(&wanted).map(|(_, chosen)| chosen)
+    }
+
+    /// The determinant of atoms in these states, turned.
+    fn placed(
+        &self,
+        mut chosen: Vec<AtomState>,
+        positions: &[Vector3<f64>],
+        towards: Towards,
+    ) -> Option<Seed> {
         for (atom, state) in chosen.iter_mut().enumerate() {
             let nearest = positions
                 .iter()
                 .map(|other| other - positions[atom])
                 .filter(|between| between.norm() > 0.0)
-                .min_by(|a, b| a.norm().total_cmp(&b.norm()))?;
+                .min_by(|a, b| a.norm().total_cmp(&b.norm()))?
+                .normalize();
+            let direction = match towards {
+                Towards::Along => nearest,
+                Towards::Across => nearest
+                    .cross(&Vector3::ith(nearest.iamin(), 1.0))
+                    .normalize(),
+            };
             let light = self.molecule.atoms[atom].element.atomic_number() <= LAST_WITHOUT_D;
-            turn(
-                state,
-                &self.shells_of_atom[atom],
-                &nearest.normalize(),
-                light,
-            )
-            .ok()?;
+            turn(state, &self.shells_of_atom[atom], &direction, light).ok()?;
         }
         let functions = self.functions();
         let occupied = [0, 1].map(|spin| {

@@ -442,10 +442,10 @@ impl Surface for HartreeFock {
         self.settings.first_density != FirstDensity::Atoms
     }
 
-    fn apart(&self, positions: &[Vector3<f64>]) -> Option<Seed> {
+    fn apart(&self, positions: &[Vector3<f64>]) -> Vec<Seed> {
         let pieces = Connectivity::of(&self.molecule.at(positions)).components();
         if self.occupation.method == Method::Rhf || pieces.len() < 2 {
-            return None;
+            return Vec::new();
         }
         self.atoms_side_by_side(positions)
     }
