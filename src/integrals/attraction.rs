@@ -7,59 +7,68 @@ use crate::basis::shell::cartesian_powers;
 use nalgebra::{DMatrix, Vector3};
 use std::f64::consts::PI;
 
-struct Attraction<'a> {
-    charges: &'a [(f64, Vector3<f64>)],
+/// One matrix per charge.
+pub(super) struct Attraction<'a> {
+    /// Charges in units of e, and where they are, bohr.
+    pub(super) charges: &'a [(f64, Vector3<f64>)],
 }
 
-/// Potential of all charges in the Hermite functions of one primitive pair.
+/// Potentials of the charges in the Hermite functions of one primitive pair, one charge after another.
 #[derive(Default)]
-struct Potential {
+pub(super) struct Potentials {
     values: Vec<f64>,
     work: HermiteCoulomb,
 }
 
 impl Operator for Attraction<'_> {
-    type Prepared = Potential;
-    const COMPONENTS: usize = 1;
+    type Prepared = Potentials;
     const KET_RAISE: usize = 0;
 
-    fn prepare(&self, pair: &PrimitivePair, degree: usize, potential: &mut Potential) {
+    fn components(&self) -> usize {
+        self.charges.len()
+    }
+
+    fn prepare(&self, pair: &PrimitivePair, degree: usize, potentials: &mut Potentials) {
         let p = pair.exponent();
-        potential.values.clear();
-        potential.values.resize(hermite_count(degree), 0.0);
+        potentials.values.clear();
         for (charge, position) in self.charges {
             let factor = -2.0 * PI / p * charge;
-            let r = potential.work.compute(degree, p, &(pair.centre - position));
-            for (sum, r) in potential.values.iter_mut().zip(r) {
-                *sum += factor * r;
-            }
+            let r = potentials
+                .work
+                .compute(degree, p, &(pair.centre - position));
+            potentials
+                .values
+                .extend(r[..hermite_count(degree)].iter().map(|r| factor * r));
         }
     }
 
     fn add(
         &self,
         pair: &PrimitivePair,
-        potential: &Potential,
+        potentials: &Potentials,
         bra_l: usize,
         ket_l: usize,
         coefficient: f64,
         out: &mut [f64],
     ) {
+        let each = potentials.values.len() / self.charges.len().max(1);
         let mut out = out.iter_mut();
-        for a in cartesian_powers(bra_l) {
-            for (b, out) in cartesian_powers(ket_l).zip(&mut out) {
-                let [x, y, z] = std::array::from_fn(|i| pair.hermite[i].row(a[i], b[i]));
-                let mut sum = 0.0;
-                for (t, ex) in x.iter().enumerate() {
-                    for (u, ey) in y.iter().enumerate() {
-                        let mut inner = 0.0;
-                        for (v, ez) in z.iter().enumerate() {
-                            inner += ez * potential.values[hermite_index(t, u, v)];
+        for potential in potentials.values.chunks_exact(each.max(1)) {
+            for a in cartesian_powers(bra_l) {
+                for (b, out) in cartesian_powers(ket_l).zip(&mut out) {
+                    let [x, y, z] = std::array::from_fn(|i| pair.hermite[i].row(a[i], b[i]));
+                    let mut sum = 0.0;
+                    for (t, ex) in x.iter().enumerate() {
+                        for (u, ey) in y.iter().enumerate() {
+                            let mut inner = 0.0;
+                            for (v, ez) in z.iter().enumerate() {
+                                inner += ez * potential[hermite_index(t, u, v)];
+                            }
+                            sum += ex * ey * inner;
                         }
-                        sum += ex * ey * inner;
                     }
+                    *out += coefficient * sum;
                 }
-                *out += coefficient * sum;
             }
         }
     }
@@ -69,12 +78,24 @@ impl Operator for Attraction<'_> {
 /// negative for positive charges. Zero charges cost nothing.
 #[must_use]
 pub fn attraction(basis: &Basis, charges: &[(f64, Vector3<f64>)]) -> DMatrix<f64> {
-    let charges: Vec<_> = charges
+    let charges = charged(charges);
+    let potentials = symmetric_matrices(&Attraction { charges: &charges }, basis);
+    sum(&potentials, basis.len())
+}
+
+/// Those that attract or repel at all.
+pub(super) fn charged(charges: &[(f64, Vector3<f64>)]) -> Vec<(f64, Vector3<f64>)> {
+    let is_charged = |(z, _): &&(f64, Vector3<f64>)| z.abs() > 0.0;
+    charges.iter().filter(is_charged).copied().collect()
+}
+
+/// The sum of potentials, in their order.
+pub(super) fn sum(potentials: &[DMatrix<f64>], order: usize) -> DMatrix<f64> {
+    potentials
         .iter()
-        .filter(|(z, _)| z.abs() > 0.0)
-        .copied()
-        .collect();
-    symmetric_matrices(&Attraction { charges: &charges }, basis).swap_remove(0)
+        .fold(DMatrix::zeros(order, order), |sum, potential| {
+            sum + potential
+        })
 }
 
 #[cfg(test)]

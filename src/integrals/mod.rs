@@ -9,6 +9,7 @@
 
 pub mod attraction;
 pub mod boys;
+mod core;
 pub mod derivative;
 pub mod dipole;
 pub mod harmonics;
@@ -23,6 +24,7 @@ mod separable;
 pub mod values;
 
 pub use attraction::attraction;
+pub use core::OneElectronIntegrals;
 pub use dipole::dipole;
 pub use kinetic::kinetic;
 pub use overlap::{overlap, overlap_between};

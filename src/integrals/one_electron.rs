@@ -13,7 +13,7 @@ pub(crate) trait Operator: Sync {
     type Prepared: Default;
 
     /// Number of matrices.
-    const COMPONENTS: usize;
+    fn components(&self) -> usize;
 
     /// How much higher than the ket's angular momentum the expansion must reach.
     const KET_RAISE: usize;
@@ -41,7 +41,9 @@ fn shell_block<O: Operator>(
     (ket, ket_centre): (&Shell, &Vector3<f64>),
 ) -> Vec<f64> {
     let mut monomials: Vec<Vec<f64>> = pairs_of(bra, ket)
-        .map(|(c, d)| vec![0.0; O::COMPONENTS * cartesian_count(c.l) * cartesian_count(d.l)])
+        .map(|(c, d)| {
+            vec![0.0; operator.components() * cartesian_count(c.l) * cartesian_count(d.l)]
+        })
         .collect();
     let mut pair = PrimitivePair::default();
     let mut prepared = O::Prepared::default();
@@ -63,14 +65,14 @@ fn shell_block<O: Operator>(
     }
     let columns = ket.functions();
     let size = bra.functions() * columns;
-    let mut block = vec![0.0; O::COMPONENTS * size];
+    let mut block = vec![0.0; operator.components() * size];
     let mut monomials = monomials.iter();
     let mut row = 0;
     for c in &bra.contractions {
         let mut column = 0;
         for (d, values) in ket.contractions.iter().zip(&mut monomials) {
             let values_of_one = cartesian_count(c.l) * cartesian_count(d.l);
-            for component in 0..O::COMPONENTS {
+            for component in 0..operator.components() {
                 transform(
                     (c.l, bra.kind),
                     (d.l, ket.kind),
@@ -122,16 +124,27 @@ fn transform(
 
 /// Symmetric matrices of an operator in one basis.
 pub(crate) fn symmetric_matrices<O: Operator>(operator: &O, basis: &Basis) -> Vec<DMatrix<f64>> {
-    let count = basis.shells().len();
-    let pairs: Vec<_> = (0..count)
+    let mut matrices = vec![DMatrix::zeros(basis.len(), basis.len()); operator.components()];
+    renew_symmetric(operator, basis, |_, _| true, &mut matrices);
+    matrices
+}
+
+/// Evaluates the elements of symmetric matrices anew that belong to the `wanted` pairs of shells (first index not the
+/// smaller). Every element has the bits that [`symmetric_matrices`] gives it.
+pub(crate) fn renew_symmetric<O: Operator>(
+    operator: &O,
+    basis: &Basis,
+    wanted: impl Fn(usize, usize) -> bool,
+    matrices: &mut [DMatrix<f64>],
+) {
+    let pairs: Vec<_> = (0..basis.shells().len())
         .flat_map(|s| (0..=s).map(move |t| (s, t)))
+        .filter(|&(s, t)| wanted(s, t))
         .collect();
-    let mut matrices = vec![DMatrix::zeros(basis.len(), basis.len()); O::COMPONENTS];
     place_blocks(operator, basis, basis, &pairs, |component, i, j, value| {
         matrices[component][(i, j)] = value;
         matrices[component][(j, i)] = value;
     });
-    matrices
 }
 
 /// Matrices of an operator between two bases (rows: bra functions).
@@ -143,7 +156,7 @@ pub(crate) fn matrices_between<O: Operator>(
     let pairs: Vec<_> = (0..bra.shells().len())
         .flat_map(|s| (0..ket.shells().len()).map(move |t| (s, t)))
         .collect();
-    let mut matrices = vec![DMatrix::zeros(bra.len(), ket.len()); O::COMPONENTS];
+    let mut matrices = vec![DMatrix::zeros(bra.len(), ket.len()); operator.components()];
     place_blocks(operator, bra, ket, &pairs, |component, i, j, value| {
         matrices[component][(i, j)] = value;
     });
@@ -172,7 +185,7 @@ fn place_blocks<O: Operator>(
         .collect();
     for (&(s, t), block) in pairs.iter().zip(&blocks) {
         let mut values = block.iter();
-        for component in 0..O::COMPONENTS {
+        for component in 0..operator.components() {
             for i in bra.range(s) {
                 for (j, &value) in ket.range(t).zip(&mut values) {
                     place(component, i, j, value);

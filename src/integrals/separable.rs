@@ -20,8 +20,11 @@ pub(crate) trait Separable: Sync {
 impl<S: Separable> Operator for S {
     /// (π/p)^³⁄², the integral of the product of two s primitives but for its prefactor.
     type Prepared = f64;
-    const COMPONENTS: usize = <S as Separable>::COMPONENTS;
     const KET_RAISE: usize = <S as Separable>::KET_RAISE;
+
+    fn components(&self) -> usize {
+        S::COMPONENTS
+    }
 
     fn prepare(&self, pair: &PrimitivePair, _degree: usize, volume: &mut f64) {
         *volume = (PI / pair.exponent()).powf(1.5);
@@ -38,7 +41,7 @@ impl<S: Separable> Operator for S {
     ) {
         let factor = coefficient * volume;
         let mut out = out.iter_mut();
-        for component in 0..<S as Separable>::COMPONENTS {
+        for component in 0..S::COMPONENTS {
             for a in cartesian_powers(bra_l) {
                 for (b, out) in cartesian_powers(ket_l).zip(&mut out) {
                     *out += factor * self.integral(component, pair, a, b);

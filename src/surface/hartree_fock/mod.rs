@@ -8,8 +8,8 @@ use super::{
     Surface, SurfaceError,
 };
 use crate::basis::{Basis, Shell};
-use crate::integrals;
 use crate::integrals::repulsion::{DirectRepulsion, RepulsionList, RepulsionSettings};
+use crate::integrals::{self, OneElectronIntegrals};
 use crate::molecule::connectivity::Connectivity;
 use crate::molecule::{ElectronCountError, Molecule, nuclear};
 use crate::scf::canonical::Canonical;
@@ -43,14 +43,32 @@ pub struct HartreeFock {
     atoms: Vec<DMatrix<f64>>,
 }
 
-/// Repulsion integrals kept from one point to the next.
+/// Integrals kept from one point to the next.
 #[derive(Debug, Clone, Default)]
 pub struct Workspace {
+    one_electron: Option<OneElectronIntegrals>,
     list: Option<(Vec<Shell>, RepulsionList)>,
 }
 
 impl Workspace {
-    /// The integrals of a basis, those of atoms that stayed in place taken over.
+    /// The one-electron integrals of a basis in the field of charges, those of what stayed in place taken over.
+    fn one_electron_of(
+        &mut self,
+        basis: &Basis,
+        charges: &[(f64, Vector3<f64>)],
+    ) -> &OneElectronIntegrals {
+        match self.one_electron.take() {
+            Some(mut kept) => {
+                kept.update(basis, charges);
+                self.one_electron.insert(kept)
+            }
+            None => self
+                .one_electron
+                .insert(OneElectronIntegrals::compute(basis, charges)),
+        }
+    }
+
+    /// The repulsion integrals of a basis, those of atoms that stayed in place taken over.
     fn list_of(&mut self, basis: &Basis) -> &RepulsionList {
         // A list of other shells (the workspace of another surface) is of no use.
         let kept = self
@@ -182,6 +200,7 @@ impl HartreeFock {
         &self,
         positions: &[Vector3<f64>],
         keep: Option<usize>,
+        workspace: &mut Workspace,
     ) -> Result<Geometry, SurfaceError> {
         let molecule = self.molecule.at(positions);
         let basis = Basis::of_molecule(&self.shells_of_atom, &molecule);
@@ -191,10 +210,8 @@ impl HartreeFock {
             .zip(&molecule.positions)
             .map(|(atom, position)| (atom.charge(), *position))
             .collect();
-        let overlap = integrals::overlap(&basis);
-        let kinetic = integrals::kinetic(&basis);
-        let core = &kinetic + integrals::attraction(&basis, &charges);
-        let frame = Orthogonal::new(&overlap, self.settings.dependence, keep)?;
+        let integrals = workspace.one_electron_of(&basis, &charges);
+        let frame = Orthogonal::new(integrals.overlap(), self.settings.dependence, keep)?;
         if frame.kept() < self.occupation.alpha {
             return Err(SurfaceError::TooFewFunctions {
                 functions: frame.kept(),
@@ -204,10 +221,10 @@ impl HartreeFock {
         Ok(Geometry {
             nuclear: nuclear::repulsion_energy(&molecule),
             molecule,
+            overlap: integrals.overlap().clone(),
+            kinetic: integrals.kinetic().clone(),
+            core: integrals.core(),
             basis,
-            overlap,
-            kinetic,
-            core,
             frame,
         })
     }
@@ -459,7 +476,7 @@ impl Surface for HartreeFock {
         self.check_positions(request.positions)?;
         let points = start_points(&request.start);
         let keep = points.last().map(|p| p.seed.state().kept);
-        let geometry = self.geometry(request.positions, keep)?;
+        let geometry = self.geometry(request.positions, keep, workspace)?;
         let direct = self
             .is_direct()
             .then(|| DirectRepulsion::new(&geometry.basis, &RepulsionSettings::default()));
