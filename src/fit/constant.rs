@@ -157,7 +157,7 @@ pub fn verdict(fitted: f64, spread: f64, derivative: f64) -> Verdict {
                 .to_owned(),
         };
     }
-    let agrees = difference.abs() <= spread.min(USELESS_SPREAD).max(TOLERATED_DIFFERENCE);
+    let agrees = difference.abs() <= spread.clamp(TOLERATED_DIFFERENCE, USELESS_SPREAD);
     let text = if spread > USELESS_SPREAD {
         format!(
             "tells nothing: the fit differs from the second derivative by {percent}, and its spread of {spread_percent} leaves the constant open; the points do not hold a fit of this minimum"

@@ -10,6 +10,13 @@ use crate::surface::Surface;
 use std::collections::BTreeMap;
 use std::sync::atomic::{AtomicBool, Ordering};
 
+/// One further start: where, and from which free atoms, or from atomic densities.
+struct Further<T> {
+    point: usize,
+    row: usize,
+    atoms: Option<Left<T>>,
+}
+
 /// Adds these evaluations to `entries`, and what they left to `left`.
 pub(super) fn probe<S: Surface>(
     evaluator: &Evaluator<'_, S>,
@@ -19,17 +26,25 @@ pub(super) fn probe<S: Surface>(
     observer: &mut dyn FnMut(&Event),
 ) -> Result<(), ScanError> {
     let grid = &evaluator.scan.grid;
-    let mut further: Vec<(usize, usize, Option<Left<S::Seed>>)> = Vec::new();
+    let mut further: Vec<Further<S::Seed>> = Vec::new();
     if evaluator.has_plain_start() && !grid.shape().is_empty() {
         let start = evaluator.scan.start;
-        further.push((start, grid.index(start)[0], None));
+        further.push(Further {
+            point: start,
+            row: grid.index(start)[0],
+            atoms: None,
+        });
     }
     for (point, row) in ends(grid) {
         for seed in evaluator.apart(point) {
-            further.push((point, row, Some(Left::untested(seed))));
+            further.push(Further {
+                point,
+                row,
+                atoms: Some(Left::untested(seed)),
+            });
         }
     }
-    for (point, row, atoms) in further {
+    for Further { point, row, atoms } in further {
         if stop.load(Ordering::Relaxed) {
             let finished = entries.len();
             return Err(ScanError::Interrupted {

@@ -448,10 +448,13 @@ impl Surface for HartreeFock {
     }
 
     fn workspace_bytes(&self) -> u64 {
+        // Overlap, kinetic energy and a matrix per nucleus.
+        let matrices = self.molecule.atoms.len() as u64 + 2;
+        let one_electron = 8 * matrices * (self.functions() as u64).pow(2);
         if self.is_direct() {
-            0
+            one_electron
         } else {
-            RepulsionList::bytes_needed(self.functions())
+            one_electron.saturating_add(RepulsionList::bytes_needed(self.functions()))
         }
     }
 
