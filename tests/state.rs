@@ -1,35 +1,16 @@
 //! The right electronic state at every point: clean scans stay silent, forced failures do not.
 
-use std::path::Path;
-use std::sync::atomic::AtomicBool;
-use thalweg::job::{self, JobResult, LevelResult};
+mod common;
+
+use common::jobs::{run, scan};
+use thalweg::job::LevelResult;
 use thalweg::scan::FindingKind;
 use thalweg::scf::{FirstDensity, ScfSettings};
-use thalweg::spec::{Spec, parse};
+use thalweg::spec::Spec;
 use thalweg::surface::{HartreeFock, PointRequest, StabilityDemand, Start, Surface};
 
 /// Energies that differ by less (hartree) belong to one solution.
 const SAME: f64 = 1e-6;
-
-fn spec(text: &str) -> Spec {
-    parse(text, Path::new("test.toml")).unwrap_or_else(|errors| panic!("{errors}"))
-}
-
-fn run(spec: &Spec) -> JobResult {
-    let pool = rayon::ThreadPoolBuilder::new()
-        .num_threads(2)
-        .build()
-        .unwrap();
-    let record = job::run(spec, &pool, &AtomicBool::new(false), &mut |_| {}).unwrap();
-    job::assemble(spec, &record).unwrap()
-}
-
-/// A spec of one level and one sweep; `extra` holds further tables.
-fn scan(zmatrix: &str, level: &str, sweep: &str, extra: &str) -> Spec {
-    spec(&format!(
-        "[molecule]\nzmatrix = \"\"\"\n{zmatrix}\n\"\"\"\n[[level]]\n{level}\n[[sweep]]\n{sweep}\n{extra}\n"
-    ))
-}
 
 /// Energy of a start without a seed, if it converges.
 fn fresh(

@@ -2,33 +2,15 @@
 
 mod common;
 
+use common::jobs::{run, scan};
 use common::{charged, diatomic, evaluate, surface, surface_with};
-use std::path::Path;
-use std::sync::atomic::AtomicBool;
-use thalweg::job::{self, JobResult, LevelResult, PointResult, pieces};
+use thalweg::job::{LevelResult, PointResult, pieces};
 use thalweg::molecule::Molecule;
 use thalweg::scan::FindingKind;
 use thalweg::scf::seed::Seed;
 use thalweg::scf::{FirstDensity, Method, ScfSettings};
-use thalweg::spec::{Spec, parse};
 use thalweg::surface::{StabilityDemand, Surface};
 use thalweg::units::ANGSTROM_PER_BOHR;
-
-fn scan(zmatrix: &str, level: &str, sweep: &str, extra: &str) -> Spec {
-    let text = format!(
-        "[molecule]\nzmatrix = \"\"\"\n{zmatrix}\n\"\"\"\n[[level]]\n{level}\n[[sweep]]\n{sweep}\n{extra}\n"
-    );
-    parse(&text, Path::new("test.toml")).unwrap_or_else(|errors| panic!("{errors}"))
-}
-
-fn run(spec: &Spec) -> JobResult {
-    let pool = rayon::ThreadPoolBuilder::new()
-        .num_threads(2)
-        .build()
-        .unwrap();
-    let record = job::run(spec, &pool, &AtomicBool::new(false), &mut |_| {}).unwrap();
-    job::assemble(spec, &record).unwrap()
-}
 
 fn level_of(zmatrix: &str, level: &str, sweep: &str, extra: &str) -> (LevelResult, Vec<String>) {
     let mut result = run(&scan(zmatrix, level, sweep, extra));

@@ -3,11 +3,11 @@
 
 mod common;
 
+use common::jobs::{run, scan};
 use common::starts::{STARTS, Starts};
-use std::path::Path;
-use std::sync::atomic::AtomicBool;
-use thalweg::job::{self, LevelResult};
-use thalweg::spec::{Spec, parse};
+use rayon::prelude::*;
+use thalweg::job::LevelResult;
+use thalweg::spec::Spec;
 
 /// Energies that differ by less (hartree) belong to one solution.
 const SAME: f64 = 1e-6;
@@ -166,21 +166,13 @@ fn case(name: &str) -> &'static Case {
 
 impl Case {
     fn spec(&self, extra: &str) -> Spec {
-        let text = format!(
-            "[molecule]\nzmatrix = \"\"\"\n{}\n\"\"\"\n[[level]]\nmethod = \"uhf\"\n{}\n[[sweep]]\n{}\n{extra}\n",
-            self.zmatrix, self.level, self.sweep
-        );
-        parse(&text, Path::new("test.toml")).unwrap_or_else(|errors| panic!("{errors}"))
+        let level = format!("method = \"uhf\"\n{}", self.level);
+        scan(self.zmatrix, &level, self.sweep, extra)
     }
 }
 
-fn run(spec: &Spec) -> LevelResult {
-    let pool = rayon::ThreadPoolBuilder::new()
-        .num_threads(2)
-        .build()
-        .unwrap();
-    let record = job::run(spec, &pool, &AtomicBool::new(false), &mut |_| {}).unwrap();
-    job::assemble(spec, &record).unwrap().levels.remove(0)
+fn level_of(spec: &Spec) -> LevelResult {
+    run(spec).levels.remove(0)
 }
 
 /// A point of a scan beside what twenty starts find there.
@@ -202,20 +194,17 @@ struct Compared {
     findings: Vec<&'static str>,
 }
 
-/// Compares every `step`-th point of a scan, the last included, with twenty starts.
-fn compared(case: &Case, step: usize) -> Vec<Compared> {
+/// Compares every point of a scan with twenty starts.
+fn compared(case: &Case) -> Vec<Compared> {
     let spec = case.spec("");
-    let level = run(&spec);
+    let level = level_of(&spec);
     let mut starts = Starts::new(&spec);
     let values = &spec.sweeps[0].values;
     let ends = [values[0], values[values.len() - 1]];
-    let last = level.points.len() - 1;
     level
         .points
         .iter()
-        .enumerate()
-        .filter(|(i, _)| (last - i).is_multiple_of(step))
-        .map(|(_, point)| {
+        .map(|point| {
             let value = point.values[0];
             let kept = point.record.energy.expect("converges");
             let found = starts.energies(value, ends);
@@ -262,7 +251,7 @@ fn assert_lowest(case: &Case, points: &[Compared]) {
 fn both_ends_give_one_curve(case: &Case) {
     let curve = |start: &str| -> Vec<f64> {
         let spec = case.spec(&format!("[walk]\nstart = \"{start}\""));
-        let level = run(&spec);
+        let level = level_of(&spec);
         let energies = level.points.iter().map(|p| p.record.energy);
         energies.map(|e| e.expect("converges")).collect()
     };
@@ -273,46 +262,39 @@ fn both_ends_give_one_curve(case: &Case) {
     }
 }
 
-macro_rules! cases {
-    ($($lowest:ident, $ends:ident: $name:expr;)*) => {$(
+macro_rules! both_ends {
+    ($($test:ident: $name:expr;)*) => {$(
         #[test]
-        fn $lowest() {
-            let case = case($name);
-            assert_lowest(case, &compared(case, 2));
-        }
-
-        #[test]
-        fn $ends() {
+        fn $test() {
             both_ends_give_one_curve(case($name));
         }
     )*};
 }
 
-cases! {
-    nitrogen_is_lowest, nitrogen_from_both_ends: "N2";
-    fluorine_is_lowest, fluorine_from_both_ends: "F2";
-    hydrogen_fluoride_is_lowest, hydrogen_fluoride_from_both_ends: "HF";
-    lithium_hydride_is_lowest, lithium_hydride_from_both_ends: "LiH";
-    oxygen_is_lowest, oxygen_from_both_ends: "O2 triplet";
-    cyanogen_radical_is_lowest, cyanogen_radical_from_both_ends: "CN";
-    water_one_bond_is_lowest, water_one_bond_from_both_ends: "water one";
-    water_both_bonds_is_lowest, water_both_bonds_from_both_ends: "water both";
-    ethylene_is_lowest, ethylene_from_both_ends: "ethylene";
+both_ends! {
+    nitrogen_from_both_ends: "N2";
+    fluorine_from_both_ends: "F2";
+    hydrogen_fluoride_from_both_ends: "HF";
+    lithium_hydride_from_both_ends: "LiH";
+    oxygen_from_both_ends: "O2 triplet";
+    cyanogen_radical_from_both_ends: "CN";
+    water_one_bond_from_both_ends: "water one";
+    water_both_bonds_from_both_ends: "water both";
+    ethylene_from_both_ends: "ethylene";
 }
 
 const TABLE: &str = "tests/data/lowest_states.csv";
 const HEAD: &str =
     "scan,value,kept_hartree,lowest_start_hartree,converged,reached,solutions,first_by,findings";
 
-/// Every point of every scan against twenty starts, and against the table in the tree. Takes minutes:
-/// `cargo test --release --test states_lowest every_point -- --ignored`; with `THALWEG_WRITE_EXPECTED=1` it writes the table.
+/// Every point of every scan against twenty starts, and against the table in the tree (with `THALWEG_WRITE_EXPECTED=1` it
+/// is written).
 #[test]
-#[ignore = "takes minutes"]
-fn regress_every_point_of_every_scan() {
+fn regress_every_point_of_every_scan_is_the_lowest() {
     let mut lines = vec![HEAD.to_owned()];
-    for case in &CASES {
-        let points = compared(case, 1);
-        assert_lowest(case, &points);
+    let all: Vec<Vec<Compared>> = CASES.par_iter().map(compared).collect();
+    for (case, points) in CASES.iter().zip(&all) {
+        assert_lowest(case, points);
         lines.extend(points.iter().map(|p| {
             format!(
                 "{},{:.3},{:.7},{:.7},{},{},{},{},{}",

@@ -1,29 +1,21 @@
 //! Spreads lower solutions: where an evaluation found a lower energy than another at the same point, the point's
 //! neighbours are computed again from the lower solution, until nothing changes.
 
-use super::evaluate::{Evaluator, Known, Left};
-use super::event::{Entry, Event};
+use super::added::Added;
+use super::evaluate::Known;
 use super::kept::SAME_SOLUTION;
 use super::runner::ScanError;
 use super::walk::Pass;
 use crate::surface::Surface;
 use std::collections::{BTreeMap, BTreeSet};
-use std::sync::atomic::{AtomicBool, Ordering};
 
-/// Adds evaluations to `entries`, and what they left to `left`, until every point holds the lowest solution that its
-/// neighbours lead to.
-pub(super) fn heal<S: Surface>(
-    evaluator: &Evaluator<'_, S>,
-    entries: &mut Vec<Entry>,
-    left: &mut BTreeMap<usize, Left<S::Seed>>,
-    stop: &AtomicBool,
-    observer: &mut dyn FnMut(&Event),
-) -> Result<(), ScanError> {
-    let grid = &evaluator.scan.grid;
+/// Adds evaluations until every point holds the lowest solution that its neighbours lead to.
+pub(super) fn heal<S: Surface>(added: &mut Added<'_, '_, S>) -> Result<(), ScanError> {
+    let grid = &added.evaluator.scan.grid;
     // For each point with a solution its lowest energy and the evaluation that found it.
     let mut best: BTreeMap<usize, (f64, usize)> = BTreeMap::new();
     let mut disputed = BTreeSet::new();
-    for entry in entries.iter() {
+    for entry in added.entries.iter() {
         let Some(energy) = entry.record.energy else {
             continue;
         };
@@ -48,7 +40,7 @@ pub(super) fn heal<S: Surface>(
     while let Some(point) = disputed.pop_first() {
         let Some(source) = best
             .get(&point)
-            .and_then(|&(_, order)| left.get(&order))
+            .and_then(|&(_, order)| added.left.get(&order))
             .cloned()
         else {
             continue;
@@ -57,38 +49,23 @@ pub(super) fn heal<S: Surface>(
             // Where nothing converges the lower solution may still go on beyond.
             let mut target = Some((point, neighbour));
             while let Some((from, here)) = target.take() {
-                if stop.load(Ordering::Relaxed) {
-                    let finished = entries.len();
-                    return Err(ScanError::Interrupted {
-                        finished,
-                        planned: finished + 1,
-                    });
-                }
-                observer(&Event::Extended { added: 1 });
-                let order = entries.len();
                 let before = best.get(&here).map(|&(energy, _)| energy);
                 let known = [Known {
                     point,
                     left: &source,
                 }];
-                let row = grid.index(here)[0];
-                let (entry, found) = evaluator
-                    .evaluate(here, Pass::Heal, row, &known, before, order)
-                    .map_err(|source| ScanError::at(here, source))?;
-                observer(&Event::Evaluated(Box::new(entry.clone())));
-                entries.push(entry);
-                let Some(found) = found else {
+                let Some((energy, order)) = added.evaluate(here, Pass::Heal, &known, before)?
+                else {
                     target = grid
                         .beyond(from, here)
                         .filter(|_| from == point)
                         .map(|next| (here, next));
                     continue;
                 };
-                if before.is_none_or(|energy| found.energy < energy - SAME_SOLUTION) {
-                    best.insert(here, (found.energy, order));
+                if before.is_none_or(|before| energy < before - SAME_SOLUTION) {
+                    best.insert(here, (energy, order));
                     disputed.insert(here);
                 }
-                left.insert(order, found);
             }
         }
     }

@@ -1,5 +1,6 @@
 //! Scans: grids of points, the order in which they are walked, and what is known of each.
 
+mod added;
 pub mod audit;
 mod evaluate;
 pub mod event;

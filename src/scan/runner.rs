@@ -2,6 +2,7 @@
 //! pool, and what happens goes through one channel to one observer.
 
 use super::Grid;
+use super::added::Added;
 use super::evaluate::{Evaluator, Known, Left};
 use super::event::{Entry, Event, Likeness};
 use super::further;
@@ -154,11 +155,18 @@ pub fn run_keeping<S: Surface>(
     runner.outcome(entries.len())?;
     entries.sort_by_key(|e: &Entry| e.order);
     let mut left = runner.left();
+    let mut added = Added {
+        evaluator: &evaluator,
+        entries: &mut entries,
+        left: &mut left,
+        stop,
+        observer: &mut *observer,
+    };
     if scan.probes() && scan.settings.seed != SeedKind::Fresh {
-        further::probe(&evaluator, &mut entries, &mut left, stop, observer)?;
+        further::probe(&mut added)?;
     }
     if scan.walks_back() {
-        heal::heal(&evaluator, &mut entries, &mut left, stop, observer)?;
+        heal::heal(&mut added)?;
     }
     let seeds: Vec<Option<S::Seed>> = keep(&entries, scan.grid.len(), scan.settings.state)
         .iter()

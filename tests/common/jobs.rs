@@ -20,12 +20,23 @@ pub(crate) fn pool() -> rayon::ThreadPool {
         .expect("threads")
 }
 
+/// The whole job of a spec.
+pub(crate) fn run(spec: &Spec) -> JobResult {
+    let record =
+        job::run(spec, &pool(), &AtomicBool::new(false), &mut |_| {}).expect("a finished job");
+    job::assemble(spec, &record).expect("a result")
+}
+
 /// The whole job at Hartree–Fock level.
 pub(crate) fn at_level(text: &str) -> JobResult {
-    let spec = spec(text);
-    let record =
-        job::run(&spec, &pool(), &AtomicBool::new(false), &mut |_| {}).expect("a finished job");
-    job::assemble(&spec, &record).expect("a result")
+    run(&spec(text))
+}
+
+/// A spec of one level and one sweep; `extra` holds further tables.
+pub(crate) fn scan(zmatrix: &str, level: &str, sweep: &str, extra: &str) -> Spec {
+    spec(&format!(
+        "[molecule]\nzmatrix = \"\"\"\n{zmatrix}\n\"\"\"\n[[level]]\n{level}\n[[sweep]]\n{sweep}\n{extra}\n"
+    ))
 }
 
 /// The first fit of a form.
