@@ -54,6 +54,14 @@ impl Basis {
         &self.shells
     }
 
+    /// For every centre whether it differs in any bit from where it was in `before`, a basis with as many centres.
+    #[must_use]
+    pub fn moved_since(&self, before: &Self) -> Vec<bool> {
+        let bits = |r: &Vector3<f64>| [r.x, r.y, r.z].map(f64::to_bits);
+        let centres = before.centres().iter().zip(self.centres());
+        centres.map(|(old, new)| bits(old) != bits(new)).collect()
+    }
+
     /// Centres in bohr, one per atom of the molecule.
     #[must_use]
     pub fn centres(&self) -> &[Vector3<f64>] {

@@ -47,14 +47,8 @@ impl OneElectronIntegrals {
             *self = Self::compute(basis, &charges);
             return;
         }
+        let moved = basis.moved_since(&self.basis);
         let bits = |r: &Vector3<f64>| [r.x, r.y, r.z].map(f64::to_bits);
-        let moved: Vec<bool> = self
-            .basis
-            .centres()
-            .iter()
-            .zip(basis.centres())
-            .map(|(old, new)| bits(old) != bits(new))
-            .collect();
         let touches =
             |s: usize, t: usize| moved[basis.shells()[s].atom] || moved[basis.shells()[t].atom];
         renew_symmetric(

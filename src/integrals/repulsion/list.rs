@@ -59,14 +59,7 @@ impl RepulsionList {
     /// If the shells differ.
     pub fn update(&mut self, moved: &Basis) -> IntegralCounts {
         assert_eq!(self.basis.shells(), moved.shells());
-        let bits = |r: &nalgebra::Vector3<f64>| [r.x, r.y, r.z].map(f64::to_bits);
-        let touched: Vec<bool> = self
-            .basis
-            .centres()
-            .iter()
-            .zip(moved.centres())
-            .map(|(old, new)| bits(old) != bits(new))
-            .collect();
+        let touched = moved.moved_since(&self.basis);
         self.basis = moved.clone();
         let still = self
             .basis
