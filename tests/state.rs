@@ -274,6 +274,7 @@ fn forced_failures_end_on_the_lower_curve_or_in_a_finding() {
                 f.points.contains(&point.point)
                     && f.kind != FindingKind::SpinContaminated
                     && f.kind != FindingKind::SmallGap
+                    && f.kind != FindingKind::SoftMode
             });
             let Some(energy) = point.record.energy else {
                 assert!(named);

@@ -9,7 +9,7 @@ use thalweg::molecule::Molecule;
 use thalweg::scan::FindingKind;
 use thalweg::scf::seed::Seed;
 use thalweg::scf::{FirstDensity, Method, ScfSettings};
-use thalweg::surface::{StabilityDemand, Surface};
+use thalweg::surface::{StabilityDemand, StopReason, Surface};
 use thalweg::units::ANGSTROM_PER_BOHR;
 
 fn level_of(zmatrix: &str, level: &str, sweep: &str, extra: &str) -> (LevelResult, Vec<String>) {
@@ -309,6 +309,29 @@ fn charges_and_spins_of_every_point_add_up() {
             assert!((sum(&record.spins_loewdin) - unpaired).abs() < 1e-9, "{at}");
         }
     }
+}
+
+/// Far out the hole of a fluorine atom turns almost freely: what ends on a plateau is named, and nothing else.
+#[test]
+fn energies_along_a_soft_mode_are_named() {
+    let (level, _) = level_of(
+        "O\nF O 1.40\nH O 0.96 F 98",
+        "method = \"uhf\"\nbasis = \"6-31g*\"",
+        "bond = [\"O\", \"F\"]\nfrom = 1.2\nto = 2.6\nstep = 0.1",
+        "[walk]\npasses = \"one\"",
+    );
+    let soft: Vec<usize> = level
+        .points
+        .iter()
+        .filter(|p| p.record.stop == StopReason::SoftMode)
+        .map(|p| p.point)
+        .collect();
+    assert!(!soft.is_empty() && soft.len() < level.points.len());
+    let named = level
+        .findings
+        .iter()
+        .find(|f| f.kind == FindingKind::SoftMode);
+    assert_eq!(named.expect("a finding").points, soft);
 }
 
 /// RHF N₂ has several solutions beyond 1.5 Å; the two lowest have −108.3190 and −108.4562 hartree at 2.0 Å in 6-31G* (a numerical

@@ -7,7 +7,8 @@ use super::finding::{Finding, FindingKind};
 use super::grid::Grid;
 use super::kept::Kept;
 use super::smooth;
-use crate::surface::PointRecord;
+use crate::scf::iteration::FLAT_ENERGY;
+use crate::surface::{PointRecord, StopReason};
 use crate::units::short;
 
 /// Smallest cosine between occupied spaces below which neighbours are not on one state, whatever the energy does: an
@@ -187,6 +188,13 @@ pub fn audit(audited: &Audited<'_>) -> Vec<Finding> {
         format!(
             "the gap between occupied and empty orbitals is below {SMALL_GAP} hartree {places}: another state is \
              near, and one determinant may describe neither"
+        )
+    });
+    let soft = |r: &PointRecord| r.stop == StopReason::SoftMode;
+    add(FindingKind::SoftMode, audited.converged(soft), &|places| {
+        format!(
+            "the energy hardly changes along a rotation of orbitals {places}, and the iteration was ended before all \
+             thresholds were met: energies there are right to {FLAT_ENERGY:e} hartree, other properties less well"
         )
     });
     let dependent = audited.points(|r| r.functions_kept < audited.functions);

@@ -18,6 +18,8 @@ pub enum FindingKind {
     SpinContaminated,
     /// The highest occupied and the lowest empty orbital come close.
     SmallGap,
+    /// The energy is flat along some rotation of orbitals, and less exact than asked for.
+    SoftMode,
     /// Near-dependent combinations of basis functions were dropped.
     NearDependentBasis,
     /// The lowest states of the separated parts cannot be reached by one determinant of the molecule's spin.
@@ -35,18 +37,20 @@ impl FindingKind {
             Self::Unstable => "unstable",
             Self::SpinContaminated => "spin-contaminated",
             Self::SmallGap => "small-gap",
+            Self::SoftMode => "soft-mode",
             Self::NearDependentBasis => "near-dependent-basis",
             Self::UnreachableParts => "unreachable-parts",
         }
     }
 
     /// Whether it casts doubt on a single point's place on the curve, so that the point is ringed on figures. Spin
-    /// contamination, an instability that the method was asked to ignore and a limit out of reach belong to whole regions.
+    /// contamination, soft modes, an instability that the method was asked to ignore and a limit out of reach belong to
+    /// whole regions.
     #[must_use]
     pub fn is_ringed(self) -> bool {
         !matches!(
             self,
-            Self::SpinContaminated | Self::Unstable | Self::UnreachableParts
+            Self::SpinContaminated | Self::SoftMode | Self::Unstable | Self::UnreachableParts
         )
     }
 }

@@ -52,7 +52,7 @@ const SOFT: f64 = 0.01;
 /// no gradient either.
 const LEAST_CURVATURE: f64 = 1e-6;
 /// Error of the energy that is accepted in the end where a mode is soft, hartree.
-const FLAT_ENERGY: f64 = 3e-7;
+pub const FLAT_ENERGY: f64 = 3e-7;
 
 /// Quasi-Newton steps before exact ones.
 const DESCENT: usize = 45;

@@ -1,10 +1,12 @@
 //! Fits of curves as the spec asks for them, each with the derivative-based force constant beside it.
 
 use super::lines::Line;
-use super::{LevelAnalysis, Material, MinimumResult};
+use super::{LevelAnalysis, Material, MinimumResult, PointResult};
 use crate::fit::{Coordinate, Fit, FitError, FitSettings, Form, Window, fit_curve};
 use crate::scan::{Others, Stationary, StationaryKind, Sweep};
+use crate::scf::iteration::FLAT_ENERGY;
 use crate::spec::{FitForm, FitSpec, FitWindow};
+use crate::surface::StopReason;
 use crate::units::short;
 
 /// What the coordinates that are not swept do along a curve.
@@ -248,9 +250,15 @@ const RELAXED_NOISE: f64 = 2e-8;
 
 /// Scatter of the energies, hartree.
 pub(super) fn noise(material: &Material<'_>) -> f64 {
-    match material.path_kind() {
+    let threshold = match material.path_kind() {
         PathKind::Rigid => material.spec.scf.energy,
         PathKind::Relaxed => material.spec.scf.energy.max(RELAXED_NOISE),
+    };
+    let is_soft = |p: &PointResult| p.record.stop == StopReason::SoftMode;
+    if material.points.iter().any(is_soft) {
+        threshold.max(FLAT_ENERGY)
+    } else {
+        threshold
     }
 }
 
